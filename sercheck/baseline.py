@@ -1,0 +1,71 @@
+"""What a feed's history teaches, for all series of a block at once; depends only on ``serial`` and ``grid``."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from sercheck.grid import Axis, Panel
+from sercheck.serial.arrays import Floats
+from sercheck.serial.season import phase_means
+
+FEWEST_CYCLES = 4
+"""Cycles below which no profile is taken out (methods: phase means need at least four cycles)."""
+
+
+@dataclass(frozen=True)
+class Residual:
+    """A panel's values with the seasonal profile taken out.
+
+    Attributes:
+        values: shape (S, T); history's part is left-one-cycle-out, so that it scatters like new rows do.
+        profile: what was taken out, shape (S, T); 0 where nothing was.
+        seasons: names of the seasons taken out.
+    """
+
+    values: Floats
+    profile: Floats
+    seasons: tuple[str, ...]
+
+
+def chosen_seasons(axis: Axis, steps: int) -> tuple[str, ...]:
+    """The seasons whose profile ``steps`` steps of history can teach, shortest first.
+
+    A season needs ``FEWEST_CYCLES`` cycles; one whose length divides that of a longer chosen one is inside it and left
+    out.
+    """
+    able = sorted((s for s in axis.lengths if axis.lengths[s] * FEWEST_CYCLES <= steps), key=axis.lengths.__getitem__)
+    return tuple(
+        name
+        for place, name in enumerate(able)
+        if not any(axis.lengths[longer] % axis.lengths[name] == 0 for longer in able[place + 1 :])
+    )
+
+
+def residual(panel: Panel) -> Residual:
+    """Take out the phase means that history teaches (closed days do not teach), computed once a panel.
+
+    History's own residuals are those of a profile without the cycle itself (factor C/(C-1) at a phase seen C times):
+    in-sample ones scatter too little and would make every new batch look wide.
+    """
+    return panel.remember("residual", lambda: _residual(panel))
+
+
+def _residual(panel: Panel) -> Residual:
+    names = chosen_seasons(panel.axis, panel.start)
+    values = panel.values.copy()
+    profile = np.zeros_like(values)
+    teaches = ~panel.axis.closed[: panel.start]
+    for name in names:
+        phase, length = panel.phase(name), panel.axis.lengths[name]
+        history = np.where(teaches, values[:, : panel.start], np.nan)
+        means, counts = phase_means(history, phase[: panel.start], length)
+        own = means[:, phase]
+        seen = counts[:, phase[: panel.start]]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            widen = np.where(seen > 1, seen / (seen - 1), np.nan)
+        profile += own
+        values = values - own
+        values[:, : panel.start] *= np.where(teaches, widen, 1.0)
+    return Residual(values, profile, names)
