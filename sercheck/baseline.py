@@ -54,18 +54,27 @@ def residual(panel: Panel) -> Residual:
 
 def _residual(panel: Panel) -> Residual:
     names = chosen_seasons(panel.axis, panel.start)
-    values = panel.values.copy()
+    values = panel.values
     profile = np.zeros_like(values)
-    teaches = ~panel.axis.closed[: panel.start]
     for name in names:
-        phase, length = panel.phase(name), panel.axis.lengths[name]
-        history = np.where(teaches, values[:, : panel.start], np.nan)
-        means, counts = phase_means(history, phase[: panel.start], length)
-        own = means[:, phase]
-        seen = counts[:, phase[: panel.start]]
-        with np.errstate(divide="ignore", invalid="ignore"):
-            widen = np.where(seen > 1, seen / (seen - 1), np.nan)
+        values, own = leave_one_cycle_out(values, panel, name)
         profile += own
-        values = values - own
-        values[:, : panel.start] *= np.where(teaches, widen, 1.0)
     return Residual(values, profile, names)
+
+
+def leave_one_cycle_out(values: Floats, panel: Panel, season: str) -> tuple[Floats, Floats]:
+    """Values less the phase means of one season that ``panel``'s history teaches, and those means at every step.
+
+    A phase that history saw once or never leaves missing values: there is nothing to compare with.
+    """
+    phase = panel.phase(season)
+    teaches = ~panel.axis.closed[: panel.start]
+    history = np.where(teaches, values[:, : panel.start], np.nan)
+    means, counts = phase_means(history, phase[: panel.start], panel.axis.lengths[season])
+    profile = means[:, phase]
+    without = values - profile
+    seen = counts[:, phase[: panel.start]]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        widen = np.where(seen > 1, seen / (seen - 1), np.nan)
+    without[:, : panel.start] *= np.where(teaches, widen, 1.0)
+    return without, profile

@@ -113,6 +113,8 @@ class Panel:
         axis: the time axis, length T.
         delivered: a row was delivered, shape (S, T).
         column: name of the value column.
+        unable: why a transform of ``after`` could not be carried out (every answer is then undecided), or empty.
+        notes: what a transform had to leave out, for the reader.
         shared: memo for what several measures need from the same arrays (autocovariances, models).
     """
 
@@ -121,6 +123,8 @@ class Panel:
     axis: Axis
     delivered: Bools
     column: str = ""
+    unable: str = ""
+    notes: tuple[str, ...] = ()
     shared: dict[object, object] = field(default_factory=dict, compare=False, repr=False)
 
     @property

@@ -80,6 +80,7 @@ class Measurement:
         lags: the lag of each column, or None.
         season: name of the season the measure looked at, or None.
         integer: the observed value is a count (shown without decimals).
+        certify: the p-value is that of 'there is nothing': small means the rule is kept (``stays: {present: true}``).
     """
 
     observed: Floats
@@ -96,6 +97,7 @@ class Measurement:
     lags: tuple[int, ...] | None = None
     season: str | None = None
     integer: bool = False
+    certify: bool = False
 
 
 @dataclass(frozen=True)
