@@ -1,0 +1,255 @@
+"""Shares of rows whose marks come in clusters: exact binomial laws on effective sizes; numpy and ``scipy.special``.
+
+A mark is 1 (the row has the property), 0 (it has not) or NaN (nothing can be said about the row). Marks of a feed come
+in bursts, so n rows weigh no more than n/τ independent ones. τ is taken from history and batch together: history alone
+misses the clusters of rare events.
+"""
+
+from __future__ import annotations
+
+from abc import ABC, abstractmethod
+from dataclasses import dataclass
+from typing import Literal
+
+import numpy as np
+from scipy import special
+
+from sercheck.serial.arrays import Bools, Floats, Ints
+
+Side = Literal["upper", "lower"]
+
+BLOCK = 1 << 19
+"""Values transformed at once (4 MB: about a second-level cache), so that memory stays flat."""
+
+FEWEST_EXPECTED = 3.0
+"""Marked effective rows expected at a literal share below which a pass says nothing (chosen by simulation)."""
+
+
+def tally(marks: Floats) -> tuple[Ints, Ints]:
+    """Count the marked rows and the rows that can be marked, each of shape (S,)."""
+    return np.nansum(marks, axis=1).astype(np.int64), np.count_nonzero(~np.isnan(marks), axis=1).astype(np.int64)
+
+
+def cluster_size(marks: Floats) -> Floats:
+    """Rows that weigh as one independent row, τ ≥ 1, by Geyer's (1992) initial monotone sequence.
+
+    τ = max(1, −1 + 2 Σ Γ_m) with Γ_m = r_{2m} + r_{2m+1}, summed while positive and made non-increasing, lags below
+    T/4. r_k is the autocorrelation of the marks with complete pairs only: [c_k / (pairs + k)] / [c_0 / observed].
+    A constant row has τ = 1.
+
+    Args:
+        marks: history and batch in one stretch, shape (S, T); NaN takes no part and is never closed up.
+
+    Returns:
+        τ, shape (S,).
+    """
+    S, T = marks.shape
+    size = np.ones(S)
+    lags = (T - 1) // 4 + 1 if T else 0
+    lags -= lags % 2
+    if lags < 2:
+        return size
+    varied = np.flatnonzero(_varied(marks))
+    block = max(1, BLOCK // T)
+    for first in range(0, len(varied), block):
+        rows = varied[first : first + block]
+        size[rows] = _initial_monotone(_autocorrelation(marks[rows], lags))
+    return size
+
+
+def _varied(marks: Floats) -> Bools:
+    hits, seen = tally(marks)
+    return (hits > 0) & (hits < seen)
+
+
+def _autocorrelation(marks: Floats, lags: int) -> Floats:
+    T = marks.shape[1]
+    seen = ~np.isnan(marks)
+    observed = seen.sum(axis=1, keepdims=True)
+    centred = np.where(seen, marks, 0.0)
+    centred = np.where(seen, centred - centred.sum(axis=1, keepdims=True) / observed, 0.0)
+    length = _good_length(T + lags)
+    products = _lagged(centred, lags, length)
+    k = np.arange(lags)
+    pairs = T - k if seen.all() else np.rint(_lagged(seen.astype(np.float64), lags, length))
+    r: Floats = (products / (pairs + k)) / (products[:, :1] / observed)
+    return r
+
+
+def _lagged(x: Floats, lags: int, length: int) -> Floats:
+    spectrum = np.fft.rfft(x, length, axis=1)
+    products: Floats = np.fft.irfft(np.abs(spectrum) ** 2, length, axis=1)[:, :lags]
+    return products
+
+
+def _good_length(least: int) -> int:
+    """The smallest 2^a times 1, 3, 5, 9 or 15 that is at least ``least`` (fast to transform)."""
+    return min(m << max(0, (-(-least // m) - 1).bit_length()) for m in (1, 3, 5, 9, 15))
+
+
+def _initial_monotone(r: Floats) -> Floats:
+    pairs = r[:, 0::2] + r[:, 1::2]
+    positive = np.logical_and.accumulate(pairs > 0, axis=1)
+    falling = np.minimum.accumulate(pairs, axis=1)
+    return np.maximum(1.0, -1.0 + 2.0 * np.where(positive, falling, 0.0).sum(axis=1))
+
+
+def binomial_tail(hits: Floats, rows: Floats, share: Floats, side: Side) -> Floats:
+    """P(X ≥ hits) (upper) or P(X ≤ hits) (lower) for X binomial; sizes need not be whole (Korn and Graubard 1998).
+
+    Upper: I_share(hits, rows − hits + 1), lower: I_{1−share}(rows − hits, hits + 1) (Clopper and Pearson 1934). NaN
+    stays NaN; with no rows both are 1.
+    """
+    share = np.asarray(share, dtype=np.float64)
+    if side == "upper":
+        return _beta(hits, rows - hits + 1.0, share)
+    return _beta(rows - hits, hits + 1.0, 1.0 - share)
+
+
+def conditional_tail(hits: Floats, rows: Floats, past_hits: Floats, past_rows: Floats, side: Side) -> Floats:
+    """Mid-p that a share is above (upper) or below (lower) that of the past, given the marks of both together.
+
+    Given their sum the marks of the batch are binomial with w = rows / (rows + past_rows) (Przyborowski and Wilenski
+    1940): ½ [I_w(k, K + 1) + I_w(k + 1, K)] above, and 1 less that below. Sizes need not be whole. NaN without rows on
+    both sides.
+    """
+    total = np.where((rows > 0) & (past_rows > 0), rows + past_rows, np.nan)
+    if side == "lower":  # the same law seen from history: small tails keep their digits
+        hits, rows, past_hits, past_rows = past_hits, past_rows, hits, rows
+    w = rows / total
+    p: Floats = 0.5 * (_beta(hits, past_hits + 1.0, w) + _beta(hits + 1.0, past_hits, w))
+    return p
+
+
+def _beta(a: Floats, b: Floats, x: Floats) -> Floats:
+    """I_x(a, b) with its limits 1 at a = 0 and 0 at b = 0."""
+    a, b, x = np.broadcast_arrays(a, b, x)
+    inner = special.betainc(np.where(a > 0, a, 1.0), np.where(b > 0, b, 1.0), x)
+    return np.where(np.isnan(inner), np.nan, np.where(a <= 0, 1.0, np.where(b <= 0, 0.0, inner)))
+
+
+@dataclass(frozen=True)
+class ShareLaw(ABC):
+    """How the share of marked rows scatters; all arrays have one shape (S, L).
+
+    The limit is the first attainable share (a whole number of rows) whose p-value is within the risk, so that the
+    p-value is within the risk exactly when the share is at the limit or beyond. NaN where no share is that far.
+
+    Attributes:
+        hits: marked rows in the batch.
+        rows: rows of the batch that can be marked.
+        tau: rows that weigh as one independent row (``cluster_size`` of history and batch).
+        power: probability of ``detectable``.
+    """
+
+    hits: Floats
+    rows: Floats
+    tau: Floats
+    power: float
+
+    @abstractmethod
+    def tail(self, hits: Floats, tau: Floats | float, side: Side) -> Floats:
+        """The p-value of ``hits`` marked rows on ``side``."""
+
+    @property
+    @abstractmethod
+    def bound(self) -> Floats:
+        """The share that is compared with."""
+
+    def p_value(self, side: Side) -> Floats:
+        """Probability of a share this far or farther on ``side`` when the bound holds exactly."""
+        return np.where(self.rows > 0, self.tail(self.hits, self.tau, side), np.nan)
+
+    def limit_hits(self, side: Side, risk: Floats, tau: Floats | float | None = None) -> Floats:
+        """Marked rows at the limit: the fewest (upper) or most (lower) within the risk; NaN where there are none."""
+        tau = self.tau if tau is None else tau
+        rows, level = np.broadcast_arrays(self.rows, np.asarray(risk, dtype=np.float64))
+        inside = np.zeros(rows.shape)  # counted from the harmless end: never within the risk
+        outside = rows + 1.0  # taken as within the risk
+        for _ in range(int(np.max(rows, initial=0.0) + 2).bit_length()):
+            middle = np.floor((inside + outside) / 2)
+            p = self.tail(middle if side == "upper" else rows - middle, tau, side)
+            beyond = p <= level
+            outside = np.where(beyond, middle, outside)
+            inside = np.where(beyond, inside, np.maximum(middle, inside))
+        hits = outside if side == "upper" else rows - outside
+        return np.where((outside <= rows) & (rows > 0) & ~np.isnan(level), hits, np.nan)
+
+    def limit(self, side: Side, risk: Floats) -> Floats:
+        """The share at which the p-value comes within ``risk``."""
+        return _share(self.limit_hits(side, risk), self.rows)
+
+    def naive_limit(self, side: Side, risk: Floats) -> Floats:
+        """The limit had the rows been independent (τ = 1)."""
+        return _share(self.limit_hits(side, risk, 1.0), self.rows)
+
+    def detectable(self, side: Side, risk: Floats) -> Floats:
+        """Distance from the bound to the share that passes the limit with probability ``power`` (a beta quantile)."""
+        hits = self.limit_hits(side, risk) / self.tau
+        rows = self.rows / self.tau
+        if side == "upper":
+            share = special.betaincinv(hits, rows - hits + 1.0, self.power)
+        else:
+            share = special.betaincinv(hits + 1.0, rows - hits, 1.0 - self.power)
+        change: Floats = np.abs(share - self.bound)
+        return change
+
+
+@dataclass(frozen=True)
+class AgainstShare(ShareLaw):
+    """The share of marked rows against a share that the author wrote: exact binomial on effective sizes."""
+
+    share: Floats
+
+    @property
+    def bound(self) -> Floats:
+        """The author's share."""
+        return np.broadcast_to(np.asarray(self.share, dtype=np.float64), self.rows.shape)
+
+    @property
+    def standard_error(self) -> Floats:
+        """√(p(1 − p) τ/n) at the author's share."""
+        return _root(self.bound, self.tau, self.rows)
+
+    @property
+    def too_few(self) -> Bools:
+        """Where a pass says nothing: fewer than ``FEWEST_EXPECTED`` marked effective rows are expected."""
+        return np.asarray(self.rows * self.bound / self.tau < FEWEST_EXPECTED)
+
+    def tail(self, hits: Floats, tau: Floats | float, side: Side) -> Floats:
+        """Clopper and Pearson's tail on hits/τ and rows/τ."""
+        return binomial_tail(hits / tau, self.rows / tau, self.bound, side)
+
+
+@dataclass(frozen=True)
+class AgainstPast(ShareLaw):
+    """The share of marked rows against that of history: conditional binomial with mid-p on effective sizes."""
+
+    past_hits: Floats
+    past_rows: Floats
+
+    @property
+    def bound(self) -> Floats:
+        """History's share."""
+        return _share(self.past_hits, self.past_rows)
+
+    @property
+    def standard_error(self) -> Floats:
+        """√(p(1 − p) τ (1/n + 1/N)), p of history and batch together."""
+        pooled = _share(self.hits + self.past_hits, self.rows + self.past_rows)
+        harmonic = _share(self.rows * self.past_rows, self.rows + self.past_rows)
+        return _root(pooled, self.tau, harmonic)
+
+    def tail(self, hits: Floats, tau: Floats | float, side: Side) -> Floats:
+        """Mid-p of the conditional binomial on sizes divided by τ."""
+        return conditional_tail(hits / tau, self.rows / tau, self.past_hits / tau, self.past_rows / tau, side)
+
+
+def _share(hits: Floats, rows: Floats) -> Floats:
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return np.where(rows > 0, hits / rows, np.nan)
+
+
+def _root(share: Floats, tau: Floats, rows: Floats) -> Floats:
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return np.where(rows > 0, np.sqrt(share * (1.0 - share) * tau / rows), np.nan)
