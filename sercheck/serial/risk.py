@@ -15,14 +15,16 @@ def t_tail(t: Floats, df: Floats | float) -> Floats:
     """
     t, df = np.broadcast_arrays(np.asarray(t, dtype=np.float64), np.asarray(df, dtype=np.float64))
     infinite = np.isinf(df)
-    return np.where(infinite, special.ndtr(-t), special.stdtr(np.where(infinite, 1.0, df), -t))
+    tail: Floats = np.where(infinite, special.ndtr(-t), special.stdtr(np.where(infinite, 1.0, df), -t))
+    return tail
 
 
 def t_quantile(p: Floats | float, df: Floats | float) -> Floats:
     """Quantile of Student's t at probability ``p`` (``df`` inf: normal); NaN stays NaN."""
     p, df = np.broadcast_arrays(np.asarray(p, dtype=np.float64), np.asarray(df, dtype=np.float64))
     infinite = np.isinf(df)
-    return np.where(infinite, special.ndtri(p), special.stdtrit(np.where(infinite, 1.0, df), p))
+    quantile: Floats = np.where(infinite, special.ndtri(p), special.stdtrit(np.where(infinite, 1.0, df), p))
+    return quantile
 
 
 def holm(p: Floats, risk: float) -> Floats:

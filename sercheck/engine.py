@@ -1,0 +1,137 @@
+"""The line from a block of series to what the judge decides on: grid, transforms, measures.
+
+``gate``, the rehearsal and a distributed run all call ``measure_block``; nothing else measures. Depends on the grid,
+the transforms, the measures and the compiled rules.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from fnmatch import fnmatchcase
+from typing import Protocol
+
+import numpy as np
+
+from sercheck.errors import UsageError
+from sercheck.grid import Grid, Panel
+from sercheck.judge import Seen
+from sercheck.measure import Clock, Measure, Measurement, Question
+from sercheck.measures import get
+from sercheck.rulebook.compiled import Rule, Rulebook
+from sercheck.serial.arrays import Bools, Ints
+from sercheck.transforms import apply
+
+
+class Steps(Protocol):
+    """What the engine needs to know of a cadence."""
+
+    def steps(self, length: str | int) -> int:
+        """A length in time or steps as a number of steps."""
+
+    @property
+    def step_ns(self) -> int:
+        """Nanoseconds of one step."""
+
+
+@dataclass(frozen=True)
+class Run:
+    """What is the same for all blocks of one run.
+
+    Attributes:
+        book: the rule file.
+        cadence: turns lengths in time into steps.
+        as_of: int64 nanoseconds since 1970 UTC at which the batch is judged.
+    """
+
+    book: Rulebook
+    cadence: Steps
+    as_of: int
+
+
+def measure_block(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
+    """Measure every rule on every series of the block.
+
+    A column is transformed once for all the rules that ask for the same transforms and window, and what they compute
+    from it in common is computed once (``Panel.remember``).
+
+    Returns:
+        What was seen, in the order of the rules, and notes for the reader.
+    """
+    panels: dict[object, Panel] = {}
+    seen: list[Seen] = []
+    notes: list[str] = []
+    for place, rule in enumerate(run.book.rules):
+        measure = get(rule.measure)
+        chosen = _chosen(rule, grid.keys)
+        if not chosen.any():
+            continue
+        for column in rule.columns if measure.of_values else ("",):
+            key = (column, rule.after, rule.window)
+            if key not in panels:
+                panels[key] = _panel(grid, rule, column, run)
+                notes.extend(panels[key].notes)
+            panel = panels[key]
+            if not chosen.all():
+                panel = replace(panel, values=panel.values[chosen], delivered=panel.delivered[chosen], shared={})
+            seen.append(_look(place, rule, measure, panel, grid, chosen, run))
+    return seen, notes
+
+
+def _chosen(rule: Rule, keys: np.ndarray) -> Bools:
+    if not rule.only:
+        return np.ones(len(keys), dtype=bool)
+    return np.array([any(fnmatchcase(key, glob) for glob in rule.only) for key in keys.tolist()], dtype=bool)
+
+
+def _panel(grid: Grid, rule: Rule, column: str, run: Run) -> Panel:
+    steps = len(grid.axis)
+    if rule.window == "batch":
+        start = grid.start
+    else:
+        start = max(steps - run.cadence.steps(rule.window), 0)
+    values = grid.values[column] if column else np.where(grid.delivered, 1.0, np.nan)
+    return apply(rule.after, Panel(values, start, grid.axis, grid.delivered, column))
+
+
+def _look(place: int, rule: Rule, measure: Measure, panel: Panel, grid: Grid, chosen: Bools, run: Run) -> Seen:
+    clock = Clock(_part(grid, chosen), run.as_of, run.cadence.step_ns, run.book.timezone)
+    question = Question(rule.fields, rule.stays, rule.false_alarm, dict(panel.axis.lengths), clock)
+    if panel.values.shape[1] == panel.start:
+        raise UsageError(
+            f"rule '{rule.name}'", "after its transforms no step of the window is left", todo="Ask for a longer window."
+        )
+    measurement = measure.run(panel, question)
+    if panel.unable:
+        measurement = _unable(measurement, panel.unable)
+    first, last = int(panel.axis.stamps[panel.start]), int(panel.axis.stamps[-1])
+    return Seen(place, grid.keys[chosen], panel.column or None, measurement, first, last)
+
+
+def _unable(seen: Measurement, reason: str) -> Measurement:
+    everywhere: Ints = np.full(seen.observed.shape, 0, dtype=np.int64)
+    return replace(seen, undecided=everywhere, reasons=(reason,))
+
+
+def _part(grid: Grid, chosen: Bools) -> Grid:
+    """The chosen series of a grid, tally included."""
+    if chosen.all():
+        return grid
+    tally = grid.tally
+    part = replace(
+        tally,
+        rows=tally.rows[chosen],
+        doubles=tally.doubles[chosen],
+        differing=tally.differing[chosen],
+        disorder=tally.disorder[chosen],
+        off_grid=tally.off_grid[chosen],
+        unreadable={name: counts[chosen] for name, counts in tally.unreadable.items()},
+        infinite={name: counts[chosen] for name, counts in tally.infinite.items()},
+        newest=tally.newest[chosen],
+    )
+    return replace(
+        grid,
+        keys=grid.keys[chosen],
+        values={name: values[chosen] for name, values in grid.values.items()},
+        delivered=grid.delivered[chosen],
+        tally=part,
+    )
