@@ -91,7 +91,8 @@ def _initial_monotone(r: Floats) -> Floats:
     pairs = r[:, 0::2] + r[:, 1::2]
     positive = np.logical_and.accumulate(pairs > 0, axis=1)
     falling = np.minimum.accumulate(pairs, axis=1)
-    return np.maximum(1.0, -1.0 + 2.0 * np.where(positive, falling, 0.0).sum(axis=1))
+    size: Floats = np.maximum(1.0, -1.0 + 2.0 * np.where(positive, falling, 0.0).sum(axis=1))
+    return size
 
 
 def binomial_tail(hits: Floats, rows: Floats, share: Floats, side: Side) -> Floats:
