@@ -1,0 +1,283 @@
+"""Autoregressive models of many series at once; depends on numpy and ``serial`` only."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.centre import Centred, centred
+
+STEEPEST = 0.98
+"""Largest modulus of a reflection coefficient that a null hypothesis may put into a model (keeps it stationary)."""
+BLOCK = 1 << 15
+"""Values worked on at a time: two arrays of 256 kB stay in a second-level cache through all orders."""
+
+
+@dataclass(frozen=True)
+class Autoregression:
+    """Models x_t - mean = Σ_j a_j (x_{t-j} - mean) + e_t of S series, padded with 0 to a common order P.
+
+    Attributes:
+        order: order of each model, shape (S,).
+        coefficients: a_1 .. a_P, shape (S, P).
+        reflection: reflection coefficients (partial autocorrelations of the model), shape (S, P).
+        variance: innovation variance, in the squared unit of the series, shape (S,); NaN for a series that is constant
+            or has no two successive values, whose model is white noise only for want of a better one.
+        mean: mean of the observed values, shape (S,).
+        n: observed values, shape (S,).
+        reached: the highest order that the length and the gaps of each series let be tried, shape (S,).
+    """
+
+    order: Ints
+    coefficients: Floats
+    reflection: Floats
+    variance: Floats
+    mean: Floats
+    n: Ints
+    reached: Ints
+
+    def rows(self, pick: Ints | Bools | slice) -> Autoregression:
+        """The models of some of the series."""
+        return Autoregression(
+            self.order[pick], self.coefficients[pick], self.reflection[pick], self.variance[pick], self.mean[pick],
+            self.n[pick], self.reached[pick],
+        )  # fmt: skip
+
+
+def largest_order(n: int, lag: int = 1) -> int:
+    """Highest order tried: min(10 log10 n, n/3), and for a test at a lag above 1 at least lag + 2."""
+    if n < 3:
+        return 0
+    usual = min(int(10 * np.log10(n)), n // 3)
+    return max(usual, lag + 2) if lag > 1 else usual
+
+
+def burg(x: object, max_order: int | None = None, min_order: int = 0) -> Autoregression:
+    """Fit each series by Burg's method (Burg 1975), its order chosen by AICc (Hurvich and Tsai 1989).
+
+    The reflection coefficient of order m is k = 2 Σ f_t b_{t-1} / Σ (f_t² + b_{t-1}²) over all t for which x_{t-m} ..
+    x_t are observed (Burg's method for segments: nothing is closed up over a gap). The criterion is
+    Σ_{j≤m} w_j ln(1 - k_j²) + n (n + m)/(n - m - 2), where w_j is the number of such stretches plus j: n for a complete
+    series, whose criterion is then AICc itself, and less where gaps leave less to learn from.
+
+    Args:
+        x: one series or (S, T); NaN is missing.
+        max_order: highest order tried; default min(10 log10 n, n/3), n the observed values of each series. In either
+            case an order above w/3 is not tried.
+        min_order: lowest order chosen, where it can be tried at all.
+
+    Returns:
+        The models. Scale and shift of a series change neither order nor coefficients.
+    """
+    data = centred(x)
+    series, steps = data.values.shape
+    width = max(largest_order(steps) if max_order is None else max_order, min_order)
+    width = max(min(width, steps // 3), 0)
+    reflection = np.zeros((series, width))
+    weight = np.zeros((series, width))
+    block = max(1, BLOCK // max(steps, 1))
+    gaps = data.n < steps
+    for rows in _blocks(np.flatnonzero(~gaps), block):
+        reflection[rows] = _lattice(data.values[rows], width)
+        weight[rows] = steps
+    for rows in _blocks(np.flatnonzero(gaps), block):
+        reflection[rows], weight[rows] = _lattice_with_gaps(data.values[rows], data.seen[rows], width)
+    return _chosen(data, reflection, weight, max_order, min_order)
+
+
+def _blocks(rows: Ints, size: int) -> list[Ints]:
+    return [rows[first : first + size] for first in range(0, len(rows), size)]
+
+
+def _lattice(x: Floats, width: int) -> Floats:
+    """Reflection coefficients of complete series."""
+    k = np.zeros((len(x), width))
+    f, b = x.copy(), x.copy()
+    held = np.empty_like(x)
+    for m in range(1, width + 1):
+        ahead, behind, spare = f[:, m:], b[:, m - 1 : -1], held[:, m:]
+        power = np.einsum("ij,ij->i", ahead, ahead) + np.einsum("ij,ij->i", behind, behind)
+        k[:, m - 1] = _ratio(2 * np.einsum("ij,ij->i", ahead, behind), power)
+        step = k[:, m - 1 : m]
+        np.multiply(ahead, step, out=spare)
+        np.subtract(behind, spare, out=spare)
+        behind *= step
+        ahead -= behind
+        # b of this order becomes the spare array, shifted by one step as the recursion wants it
+        b, held = held, b
+    return k
+
+
+def _lattice_with_gaps(x: Floats, seen: Bools, width: int) -> tuple[Floats, Floats]:
+    """Reflection coefficients and stretch counts plus order; f and b are 0 where a value of theirs is missing."""
+    k = np.zeros((len(x), width))
+    weight = np.zeros((len(x), width))
+    f, b = x.copy(), x.copy()
+    whole = seen.copy()
+    for m in range(1, width + 1):
+        whole = whole[:, 1:] & seen[:, : seen.shape[1] - m]
+        ahead, behind = f[:, 1:] * whole, b[:, :-1] * whole
+        power = np.einsum("ij,ij->i", ahead, ahead) + np.einsum("ij,ij->i", behind, behind)
+        k[:, m - 1] = _ratio(2 * np.einsum("ij,ij->i", ahead, behind), power)
+        weight[:, m - 1] = whole.sum(axis=1) + m
+        step = k[:, m - 1 : m]
+        f, b = ahead - step * behind, behind - step * ahead
+    return k, weight
+
+
+def _ratio(top: Floats, bottom: Floats) -> Floats:
+    return np.divide(top, bottom, out=np.zeros_like(top), where=bottom > 0)
+
+
+def _chosen(
+    data: Centred, reflection: Floats, weight: Floats, max_order: int | None, min_order: int
+) -> Autoregression:
+    """Select each series' order and put the models together."""
+    width = reflection.shape[1]
+    orders = np.arange(1, width + 1)
+    n = data.n[:, None].astype(np.float64)
+    usual = 10 * np.log10(np.maximum(n, 1)) if max_order is None else np.full_like(n, max_order)
+    able = (orders <= np.minimum(np.maximum(usual, min_order), weight / 3)) & data.varies[:, None] & (n - orders > 2)
+    able = np.logical_and.accumulate(able, axis=1)
+    reached = able.sum(axis=1)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        gain = weight * np.log1p(-(reflection**2))
+        penalty = n * (n + orders) / (n - orders - 2)
+        start = np.where(n > 2, n * n / (n - 2), np.inf)
+    above = np.where(able, np.cumsum(np.where(able, gain, 0.0), axis=1) + penalty, np.inf)
+    criterion = np.concatenate([start, above], axis=1)
+    early = np.arange(width + 1) < np.minimum(min_order, reached)[:, None]
+    order = np.argmin(np.where(early, np.inf, criterion), axis=1)
+    reflection = np.where(orders <= order[:, None], reflection, 0.0)
+    count = np.maximum(data.n, 1)
+    power = np.einsum("ij,ij->i", data.values, data.values) / count * np.prod(1 - reflection**2, axis=1)
+    variance = np.where(data.varies & (data.n > 1), power * data.scale**2, np.nan)
+    return Autoregression(order, step_up(reflection), reflection, variance, data.mean, data.n, reached)
+
+
+def step_up(reflection: Floats) -> Floats:
+    """Coefficients a_1 .. a_P from reflection coefficients, both of shape (S, P) (Levinson 1947, Durbin 1960)."""
+    a = np.zeros_like(reflection)
+    for m in range(reflection.shape[1]):
+        k = reflection[:, m : m + 1]
+        a[:, :m] -= k * a[:, :m][:, ::-1]
+        a[:, m] = reflection[:, m]
+    return a
+
+
+def model_autocorrelation(model: Autoregression, lags: int) -> Floats:
+    """Theoretical autocorrelations ρ_0 .. ρ_lags of the models, shape (S, lags + 1) (Durbin-Levinson recursion)."""
+    width = int(model.order.max(initial=0))
+    rho = np.zeros((len(model.order), lags + 1))
+    rho[:, 0] = 1.0
+    a = np.zeros((len(model.order), width))
+    left = np.ones(len(model.order))
+    for m in range(min(width, lags)):
+        k = model.reflection[:, m]
+        rho[:, m + 1] = np.einsum("ij,ij->i", a[:, :m], rho[:, m:0:-1]) + k * left
+        a[:, :m] -= k[:, None] * a[:, :m][:, ::-1]
+        a[:, m] = k
+        left *= 1 - k**2
+    backward = np.ascontiguousarray(a[:, ::-1])
+    for j in range(width + 1, lags + 1 if width else 0):
+        rho[:, j] = np.einsum("ij,ij->i", backward, rho[:, j - width : j])
+    return rho
+
+
+def impose_autocorrelation(model: Autoregression, lag: int, b: Floats | float) -> Autoregression:
+    """The models with the reflection coefficient of order ``lag`` replaced so that their ρ_lag is ``b``.
+
+    k = (b - Σ_{j<lag} a_j ρ_{lag-j}) / v_{lag-1}, a and v of the model of order lag - 1; held within ± ``STEEPEST``,
+    where a value outside would mean that ``b`` contradicts the earlier autocorrelations. The process variance stays.
+
+    Args:
+        model: fitted models.
+        lag: at least 1.
+        b: the autocorrelation to impose, a number or shape (S,).
+    """
+    series, width = model.reflection.shape
+    reflection = np.zeros((series, max(width, lag)))
+    reflection[:, :width] = model.reflection
+    before = reflection[:, : lag - 1]
+    shorter = replace(model, order=np.minimum(model.order, lag - 1), reflection=before, coefficients=step_up(before))
+    rho = model_autocorrelation(shorter, lag)
+    left = np.prod(1 - before**2, axis=1)
+    k = np.clip((b - rho[:, lag]) / left, -STEEPEST, STEEPEST)
+    total = model.variance / np.prod(1 - reflection**2, axis=1)
+    reflection[:, lag - 1] = k
+    return replace(
+        model,
+        order=np.maximum(model.order, lag),
+        coefficients=step_up(reflection),
+        reflection=reflection,
+        variance=total * np.prod(1 - reflection**2, axis=1),
+    )
+
+
+def innovations(x: object, model: Autoregression) -> Floats:
+    """What the models do not foresee: e_t = x_t - mean - Σ_j a_j (x_{t-j} - mean).
+
+    Args:
+        x: one series or (S, T), of the models' series; NaN is missing.
+        model: as fitted; its own mean is used, so that ``x`` may be other rows than it was fitted to.
+
+    Returns:
+        Shape (S, T); NaN at the first ``order`` steps, wherever one of the values needed is missing, and for a series
+        whose model has no variance.
+    """
+    values = np.atleast_2d(np.asarray(x, dtype=np.float64)) - model.mean[:, None]
+    steps = values.shape[1]
+    e = values.copy()
+    # highest orders first: the series that still have a coefficient at lag j are then one leading slice
+    by_order = np.argsort(-model.order, kind="stable")
+    order = model.order[by_order]
+    width = int(order[0]) if len(order) else 0
+    if width:
+        busy = by_order[: np.searchsorted(-order, 0, side="left")]
+        block = max(1, BLOCK // max(steps, 1))
+        for rows in _blocks(busy, block):
+            e[rows] = _filtered(values[rows], model.coefficients[rows], model.order[rows])
+    e[~np.isfinite(e) | np.isnan(model.variance)[:, None]] = np.nan
+    return e
+
+
+def _filtered(values: Floats, coefficients: Floats, order: Ints) -> Floats:
+    """The filter for a block of series sorted by falling order; NaN spreads by itself."""
+    steps = values.shape[1]
+    e = values.copy()
+    for j in range(1, min(int(order[0]), steps) + 1):
+        live = int(np.searchsorted(-order, -j, side="right"))
+        e[:live, j:] -= coefficients[:live, j - 1 : j] * values[:live, : steps - j]
+    e[np.arange(steps) < order[:, None]] = np.nan
+    return e
+
+
+def largest_root(model: Autoregression) -> Floats:
+    """Largest modulus of the roots of z^p - a_1 z^{p-1} - ... - a_p, shape (S,): below 1 for a stationary model."""
+    root = np.zeros(len(model.order))
+    for p in np.unique(model.order[model.order > 0]):
+        rows = np.flatnonzero(model.order == p)
+        companion = np.zeros((len(rows), p, p))
+        companion[:, 0, :] = model.coefficients[rows, :p]
+        companion[:, np.arange(1, p), np.arange(p - 1)] = 1.0
+        root[rows] = np.abs(np.linalg.eigvals(companion)).max(axis=1)
+    return root
+
+
+def root_beyond(model: Autoregression, radius: float) -> Bools:
+    """Whether the largest root exceeds ``radius``, without computing roots, shape (S,).
+
+    The polynomial with roots divided by ``radius`` is stable exactly if all its reflection coefficients, found by the
+    step-down recursion, are below 1 in modulus (Schur 1917, Cohn 1922).
+    """
+    width = int(model.order.max(initial=0))
+    a = model.coefficients[:, :width] / radius ** np.arange(1, width + 1)
+    beyond = np.zeros(len(a), dtype=bool)
+    for m in range(width, 0, -1):
+        k = a[:, m - 1].copy()
+        beyond |= np.abs(k) >= 1
+        k[beyond] = 0.0
+        a[:, : m - 1] = (a[:, : m - 1] + k[:, None] * a[:, : m - 1][:, ::-1]) / (1 - k**2)[:, None]
+    return beyond
