@@ -1,0 +1,35 @@
+"""sercheck decides for every batch of a scheduled feed whether it may be loaded. This file hands on the public names.
+
+They are imported when first used, so that ``import sercheck`` costs nothing.
+"""
+
+from __future__ import annotations
+
+import importlib
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from sercheck import serial
+    from sercheck.errors import BatchHeld, SercheckError
+    from sercheck.rulebook import load_rules
+    from sercheck.verdict import Verdict, gate
+
+__all__ = ["BatchHeld", "SercheckError", "Verdict", "__version__", "gate", "load_rules", "serial"]
+
+__version__ = "0.1.0"
+
+_PLACES = {
+    "BatchHeld": "sercheck.errors",
+    "SercheckError": "sercheck.errors",
+    "Verdict": "sercheck.verdict",
+    "gate": "sercheck.verdict",
+    "load_rules": "sercheck.rulebook",
+}
+
+
+def __getattr__(name: str) -> object:
+    if name == "serial":
+        return importlib.import_module("sercheck.serial")
+    if name in _PLACES:
+        return getattr(importlib.import_module(_PLACES[name]), name)
+    raise AttributeError(f"module 'sercheck' has no attribute {name!r}")

@@ -84,11 +84,8 @@ def _chosen(rule: Rule, keys: np.ndarray) -> Bools:
 
 
 def _panel(grid: Grid, rule: Rule, column: str, run: Run) -> Panel:
-    steps = len(grid.axis)
-    if rule.window == "batch":
-        start = grid.start
-    else:
-        start = max(steps - run.cadence.steps(rule.window), 0)
+    whole = rule.window == "batch"
+    start = grid.start if whole else max(len(grid.axis) - run.cadence.steps(rule.window), 0)
     values = grid.values[column] if column else np.where(grid.delivered, 1.0, np.nan)
     return apply(rule.after, Panel(values, start, grid.axis, grid.delivered, column))
 
