@@ -8,6 +8,7 @@ from __future__ import annotations
 import importlib
 import os
 import sys
+import traceback
 
 import click
 
@@ -56,7 +57,7 @@ def main() -> None:
         click.echo(f"sercheck: {error.sentence()}", err=True)
     except Exception as error:  # noqa: BLE001  Python would end with 1, which means 'held'; a bug must say 2
         if os.environ.get("SERCHECK_TRACEBACK"):
-            raise
+            traceback.print_exc()
         what = " ".join(str(error).split())[:300]
         click.echo(
             f"sercheck: internal error, nothing was released: {type(error).__name__}: {what}. "
