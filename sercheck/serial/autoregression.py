@@ -131,9 +131,7 @@ def _ratio(top: Floats, bottom: Floats) -> Floats:
     return np.divide(top, bottom, out=np.zeros_like(top), where=bottom > 0)
 
 
-def _chosen(
-    data: Centred, reflection: Floats, weight: Floats, max_order: int | None, min_order: int
-) -> Autoregression:
+def _chosen(data: Centred, reflection: Floats, weight: Floats, max_order: int | None, min_order: int) -> Autoregression:
     """Select each series' order and put the models together."""
     width = reflection.shape[1]
     orders = np.arange(1, width + 1)

@@ -58,7 +58,8 @@ def centred(x: object) -> Centred:
     peak = np.maximum(np.abs(low), np.abs(high))
     # of 2^exponent at most 2^1022 is taken out, so that the scale and its inverse are doubles
     exponent = np.clip(np.frexp(peak)[1], -1021, 1022)
-    values = np.ldexp(x, -exponent[:, None])
+    unit = np.ldexp(1.0, -exponent)
+    values = x * unit[:, None]
     if not full:
         np.copyto(values, 0.0, where=~seen)
     count = np.maximum(n, 1)
@@ -70,7 +71,6 @@ def centred(x: object) -> Centred:
     values -= rest[:, None]
     if not full:
         np.copyto(values, 0.0, where=~seen)
-    unit = np.ldexp(1.0, -exponent)
     varies = high * unit - low * unit > ROUNDING * peak * unit
     mean = np.where(some, np.ldexp(first + rest, exponent), np.nan)
     return Centred(values, seen, n, mean, np.ldexp(1.0, exponent), varies)
