@@ -8,13 +8,15 @@ misses the clusters of rare events.
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
-from dataclasses import dataclass
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field, replace
 from typing import Literal
 
 import numpy as np
 from scipy import special
 
 from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.risk import t_tail
 
 Side = Literal["upper", "lower"]
 
@@ -30,7 +32,7 @@ def tally(marks: Floats) -> tuple[Ints, Ints]:
     return np.nansum(marks, axis=1).astype(np.int64), np.count_nonzero(~np.isnan(marks), axis=1).astype(np.int64)
 
 
-def cluster_size(marks: Floats) -> Floats:
+def cluster_size(marks: Floats, *, short: bool = False) -> Floats:
     """Rows that weigh as one independent row, τ ≥ 1, by Geyer's (1992) initial monotone sequence.
 
     τ = max(1, −1 + 2 Σ Γ_m) with Γ_m = r_{2m} + r_{2m+1}, summed while positive and made non-increasing, lags below
@@ -39,6 +41,9 @@ def cluster_size(marks: Floats) -> Floats:
 
     Args:
         marks: history and batch in one stretch, shape (S, T); NaN takes no part and is never closed up.
+        short: the stretch is hardly longer than what is judged. The sample mean takes about τ/T off every
+            autocorrelation (Kendall 1954), which is nothing in a long history but much of τ here: it is given back
+            once, r → r + (1 − r) τ/T.
 
     Returns:
         τ, shape (S,).
@@ -53,7 +58,10 @@ def cluster_size(marks: Floats) -> Floats:
     block = max(1, BLOCK // T)
     for first in range(0, len(varied), block):
         rows = varied[first : first + block]
-        size[rows] = _initial_monotone(_autocorrelation(marks[rows], lags))
+        r = _autocorrelation(marks[rows], lags)
+        size[rows] = _initial_monotone(r)
+        if short:
+            size[rows] = _initial_monotone(r + (1.0 - r) * (size[rows] / T)[:, None])
     return size
 
 
@@ -93,6 +101,28 @@ def _initial_monotone(r: Floats) -> Floats:
     falling = np.minimum.accumulate(pairs, axis=1)
     size: Floats = np.maximum(1.0, -1.0 + 2.0 * np.where(positive, falling, 0.0).sum(axis=1))
     return size
+
+
+def first_within(tail: Callable[[Floats], Floats], most: Floats, risk: Floats) -> Floats:
+    """The smallest whole number up to ``most`` whose tail probability is within the risk, by bisection.
+
+    Args:
+        tail: gives the tail probability of an array of counts; 1 at count 0 and falling.
+        most: largest count that can be, in the shape of ``tail``'s result.
+        risk: broadcasts to it; NaN gives NaN.
+
+    Returns:
+        The counts; NaN where not even ``most`` is within the risk, or where nothing can be counted.
+    """
+    most, level = np.broadcast_arrays(most, np.asarray(risk, dtype=np.float64))
+    before = np.zeros(most.shape)
+    within = most + 1.0
+    for _ in range(int(np.max(most, initial=0.0) + 2).bit_length()):
+        middle = np.floor((before + within) / 2)
+        found = tail(middle) <= level
+        within = np.where(found, middle, within)
+        before = np.where(found, before, np.maximum(before, middle))
+    return np.where((within <= most) & (most > 0) & ~np.isnan(level), within, np.nan)
 
 
 def binomial_tail(hits: Floats, rows: Floats, share: Floats, side: Side) -> Floats:
@@ -149,7 +179,7 @@ class ShareLaw(ABC):
     power: float
 
     @abstractmethod
-    def tail(self, hits: Floats, tau: Floats | float, side: Side) -> Floats:
+    def tail(self, hits: Floats, side: Side) -> Floats:
         """The p-value of ``hits`` marked rows on ``side``."""
 
     @property
@@ -159,22 +189,13 @@ class ShareLaw(ABC):
 
     def p_value(self, side: Side) -> Floats:
         """Probability of a share this far or farther on ``side`` when the bound holds exactly."""
-        return np.where(self.rows > 0, self.tail(self.hits, self.tau, side), np.nan)
+        return np.where(self.rows > 0, self.tail(self.hits, side), np.nan)
 
-    def limit_hits(self, side: Side, risk: Floats, tau: Floats | float | None = None) -> Floats:
+    def limit_hits(self, side: Side, risk: Floats) -> Floats:
         """Marked rows at the limit: the fewest (upper) or most (lower) within the risk; NaN where there are none."""
-        tau = self.tau if tau is None else tau
-        rows, level = np.broadcast_arrays(self.rows, np.asarray(risk, dtype=np.float64))
-        inside = np.zeros(rows.shape)  # counted from the harmless end: never within the risk
-        outside = rows + 1.0  # taken as within the risk
-        for _ in range(int(np.max(rows, initial=0.0) + 2).bit_length()):
-            middle = np.floor((inside + outside) / 2)
-            p = self.tail(middle if side == "upper" else rows - middle, tau, side)
-            beyond = p <= level
-            outside = np.where(beyond, middle, outside)
-            inside = np.where(beyond, inside, np.maximum(middle, inside))
-        hits = outside if side == "upper" else rows - outside
-        return np.where((outside <= rows) & (rows > 0) & ~np.isnan(level), hits, np.nan)
+        if side == "upper":
+            return first_within(lambda hits: self.tail(hits, side), self.rows, risk)
+        return self.rows - first_within(lambda unmarked: self.tail(self.rows - unmarked, side), self.rows, risk)
 
     def limit(self, side: Side, risk: Floats) -> Floats:
         """The share at which the p-value comes within ``risk``."""
@@ -182,7 +203,7 @@ class ShareLaw(ABC):
 
     def naive_limit(self, side: Side, risk: Floats) -> Floats:
         """The limit had the rows been independent (τ = 1)."""
-        return _share(self.limit_hits(side, risk, 1.0), self.rows)
+        return replace(self, tau=np.ones(self.tau.shape)).limit(side, risk)
 
     def detectable(self, side: Side, risk: Floats) -> Floats:
         """Distance from the bound to the share that passes the limit with probability ``power`` (a beta quantile)."""
@@ -198,9 +219,19 @@ class ShareLaw(ABC):
 
 @dataclass(frozen=True)
 class AgainstShare(ShareLaw):
-    """The share of marked rows against a share that the author wrote: exact binomial on effective sizes."""
+    """The share of marked rows against a share that the author wrote: exact binomial on effective sizes.
+
+    Attributes:
+        share: the author's share.
+        df: degrees of freedom behind τ where it comes from little more than the batch itself (after Korn and
+            Graubard 1998: the tail is read as that of Student's t in place of the normal law); inf leaves the exact
+            tail.
+        blind: sides on which a failure would rest on clusters that nobody has seen: p is 1 there.
+    """
 
     share: Floats
+    df: Floats | float = np.inf
+    blind: Mapping[Side, Bools] = field(default_factory=dict)
 
     @property
     def bound(self) -> Floats:
@@ -217,9 +248,16 @@ class AgainstShare(ShareLaw):
         """Where a pass says nothing: fewer than ``FEWEST_EXPECTED`` marked effective rows are expected."""
         return np.asarray(self.rows * self.bound / self.tau < FEWEST_EXPECTED)
 
-    def tail(self, hits: Floats, tau: Floats | float, side: Side) -> Floats:
+    def naive_limit(self, side: Side, risk: Floats) -> Floats:
+        """The limit had the rows been independent (τ = 1, nothing estimated)."""
+        return replace(self, tau=np.ones(self.tau.shape), df=np.inf, blind={}).limit(side, risk)
+
+    def tail(self, hits: Floats, side: Side) -> Floats:
         """Clopper and Pearson's tail on hits/τ and rows/τ."""
-        return binomial_tail(hits / tau, self.rows / tau, self.bound, side)
+        p = binomial_tail(hits / self.tau, self.rows / self.tau, self.bound, side)
+        if np.isfinite(self.df).any():
+            p = np.where(np.isfinite(self.df), t_tail(-special.ndtri(p), self.df), p)
+        return np.where(self.blind[side], 1.0, p) if side in self.blind else p
 
 
 @dataclass(frozen=True)
@@ -241,14 +279,23 @@ class AgainstPast(ShareLaw):
         harmonic = _share(self.rows * self.past_rows, self.rows + self.past_rows)
         return _root(pooled, self.tau, harmonic)
 
-    def tail(self, hits: Floats, tau: Floats | float, side: Side) -> Floats:
+    def tail(self, hits: Floats, side: Side) -> Floats:
         """Mid-p of the conditional binomial on sizes divided by τ."""
+        tau = self.tau
         return conditional_tail(hits / tau, self.rows / tau, self.past_hits / tau, self.past_rows / tau, side)
 
 
 def _share(hits: Floats, rows: Floats) -> Floats:
     with np.errstate(invalid="ignore", divide="ignore"):
         return np.where(rows > 0, hits / rows, np.nan)
+
+
+def runs_of(marks: Floats) -> tuple[Ints, Ints]:
+    """Count the runs of marked and of unmarked rows, each of shape (S,); NaN ends a run."""
+    before = np.full_like(marks, np.nan)
+    before[:, 1:] = marks[:, :-1]
+    starts = marks != before
+    return np.count_nonzero(starts & (marks == 1), axis=1), np.count_nonzero(starts & (marks == 0), axis=1)
 
 
 def _root(share: Floats, tau: Floats, rows: Floats) -> Floats:
