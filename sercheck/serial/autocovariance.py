@@ -214,7 +214,8 @@ def good_length(least: int) -> int:
 
 
 def _per_pair(sums: Floats, pairs: Ints, lags: Ints) -> Floats:
-    return np.divide(sums, pairs + lags, out=np.full(sums.shape, np.nan), where=pairs > 0)
+    c: Floats = np.divide(sums, pairs + lags, out=np.full(sums.shape, np.nan), where=pairs > 0)
+    return c
 
 
 def _lag_array(lags: Lags, least: int = 0) -> Ints:
@@ -227,4 +228,4 @@ def _lag_array(lags: Lags, least: int = 0) -> Ints:
 
 
 def _shaped(result: Floats, x: object, lags: Lags) -> Floats:
-    return result.reshape(np.asarray(x).shape[:-1] + np.asarray(lags).shape)
+    return np.reshape(result, np.asarray(x).shape[:-1] + np.asarray(lags).shape)
