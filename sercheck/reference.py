@@ -20,6 +20,16 @@ def same(x: Floats) -> Floats:
     return x
 
 
+def detectable_reach(risk: Floats, df: Floats) -> Floats:
+    """Shift, in standard errors, that is found with probability ``POWER``: a quantile of the noncentral t.
+
+    t (1 - 1/(4 df)) + z √(1 + t²/(2 df)), t the critical value (Johnson and Welch 1940): with few degrees of freedom
+    the critical value is itself uncertain and t + z would promise too much.
+    """
+    t, power = t_quantile(1 - risk, df), t_quantile(POWER, np.inf)
+    return np.asarray(t * (1 - 1 / (4 * df)) + power * np.sqrt(1 + t**2 / (2 * df)), dtype=np.float64)
+
+
 @dataclass(frozen=True)
 class Pivot:
     """T = (statistic - centre) / scale follows Student's t with ``df`` degrees of freedom (inf: normal).
@@ -66,8 +76,7 @@ class Pivot:
         return (self.naive_to_unit or self.to_unit)(centre + (step if side == "upper" else -step))
 
     def detectable(self, side: Side, risk: Floats) -> Floats:
-        reach = t_quantile(1 - risk, self.df) + t_quantile(np.asarray(POWER), np.inf)
-        return np.abs(self._at(side, reach) - self.bound)
+        return np.abs(self._at(side, detectable_reach(risk, self.df)) - self.bound)
 
 
 @dataclass(frozen=True)

@@ -1,0 +1,249 @@
+"""A window and its history with the fixed cycles taken out, and the reasons that the classical measures share.
+
+Depends on ``serial``, ``grid``, ``measure`` and ``baseline``. Everything here is computed once a panel.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from sercheck.baseline import residual
+from sercheck.grid import Panel
+from sercheck.measure import Measurement, Reasons, Reference, Side
+from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.long_run import CosineSpectrum, cosine_spectrum
+from sercheck.serial.scores import QuantileGrid, Ranking, ranking
+from sercheck.serial.window_t import SMALL_RISK, fewest_windows
+
+NO_HISTORY = "no history: pass --history or learn a baseline"
+FEWEST_ROWS = 24
+"""Rows of a window that a comparison with history needs (simulated: sizes hold from there on)."""
+TIED, TIED_SMALL_RISK = 0.8, 0.5
+"""Share of the commonest value above which moments say nothing, and the same at a risk of .001 or less (simulated)."""
+
+
+@dataclass(frozen=True)
+class Past:
+    """The window that is judged and the history before it, in units of ``scale`` and without fixed cycles.
+
+    Attributes:
+        window: shape (S, n).
+        history: shape (S, N), residuals of a profile that did not see the cycle itself.
+        offset: what to add to a mean of ``window`` to have the mean of the rows, in units of ``scale``, shape (S,).
+        scale: a power of two for each series that keeps squares within reach of doubles, shape (S,).
+        n: observed values of the window, shape (S,).
+        known: observed values of history, shape (S,).
+        commonest: share of the commonest value among the rows as delivered, of history or, without one, of the
+            window, shape (S,).
+        seasons: names of the cycles taken out.
+    """
+
+    window: Floats
+    history: Floats
+    offset: Floats
+    scale: Floats
+    n: Ints
+    known: Ints
+    commonest: Floats
+    seasons: tuple[str, ...]
+
+    @property
+    def steps(self) -> int:
+        """Steps of the window."""
+        return int(self.window.shape[1])
+
+    @property
+    def stretches(self) -> Ints:
+        """How many windows' worth of values history holds, shape (S,)."""
+        return np.asarray(self.known // max(self.steps, 1), dtype=np.int64)
+
+
+def past(panel: Panel) -> Past:
+    """Cut the panel into window and history, residuals of the profile."""
+    return panel.remember("past", lambda: _past(panel))
+
+
+def _past(panel: Panel) -> Past:
+    without = residual(panel)
+    seen = ~np.isnan(without.values)
+    peak = np.max(np.abs(panel.values), axis=1, where=~np.isnan(panel.values), initial=0.0)
+    exponent = np.clip(np.frexp(peak)[1], -1021, 1022)
+    values = np.ldexp(without.values, -exponent[:, None])
+    window, history = values[:, panel.start :], values[:, : panel.start]
+    n = seen[:, panel.start :].sum(axis=1)
+    there = seen[:, panel.start :]
+    profile = np.ldexp(without.profile[:, panel.start :], -exponent[:, None])
+    rows = panel.history if panel.start else panel.window
+    return Past(
+        window=window,
+        history=history,
+        offset=mean(np.where(there, profile, np.nan)),
+        scale=np.ldexp(1.0, exponent),
+        n=n,
+        known=seen[:, : panel.start].sum(axis=1),
+        commonest=ranking(rows).commonest if without.seasons or not panel.start else scored(panel, history).commonest,
+        seasons=without.seasons,
+    )
+
+
+def scored(panel: Panel, history: Floats | None = None) -> Ranking:
+    """Normal scores in the series' own history, without its cycles."""
+    return panel.remember("ranking", lambda: ranking(past(panel).history if history is None else history))
+
+
+def score_spectrum(panel: Panel) -> CosineSpectrum:
+    """Cosine powers of history's scores."""
+    return panel.remember("score spectrum", lambda: cosine_spectrum(scored(panel).own))
+
+
+def value_spectrum(panel: Panel) -> CosineSpectrum:
+    """Cosine powers of history's values (in units of ``Past.scale``)."""
+    return panel.remember("value spectrum", lambda: cosine_spectrum(past(panel).history))
+
+
+def window_scores(panel: Panel) -> Floats:
+    """Scores of the window's values, shape (S, n)."""
+    return panel.remember("window scores", lambda: scored(panel).of(past(panel).window))
+
+
+def mean(x: Floats) -> Floats:
+    """Mean of the observed values of each row; NaN when there is none."""
+    seen = ~np.isnan(x)
+    count = seen.sum(axis=1)
+    total = np.where(seen, x, 0.0).sum(axis=1)
+    return np.where(count > 0, total / np.maximum(count, 1), np.nan)
+
+
+def variance(x: Floats) -> Floats:
+    """Variance (divisor n - 1) of the observed values along the last axis; NaN where fewer than two are observed."""
+    seen = ~np.isnan(x)
+    count = seen.sum(axis=-1)
+    middle = np.where(seen, x, 0.0).sum(axis=-1) / np.maximum(count, 1)
+    squares = (np.where(seen, x - middle[..., None], 0.0) ** 2).sum(axis=-1)
+    return np.where(count > 1, squares / np.maximum(count - 1, 1), np.nan)
+
+
+def cell(x: Floats | Ints) -> Floats:
+    """Shape (S,) to the (S, 1) of a measure without lags."""
+    return np.asarray(x, dtype=np.float64)[:, None]
+
+
+def counts(panel: Panel) -> tuple[Ints, Ints]:
+    """Observed and missing values of the window as delivered, both of shape (S, 1)."""
+    n = np.asarray((~np.isnan(panel.window)).sum(axis=1, keepdims=True), dtype=np.int64)
+    return n, np.asarray(panel.window.shape[1] - n, dtype=np.int64)
+
+
+def ask_rows(reasons: Reasons, told: Past, fewest: int, what: str) -> None:
+    """Undecided where the window has fewer than ``fewest`` values."""
+    few = cell(told.n) < fewest
+    reasons.add(few, f"fewer than {fewest} values in the window: {what} needs {fewest}")
+
+
+def ask_history(reasons: Reasons, told: Past, risk: float, what: str) -> None:
+    """Undecided without history, or where it holds too few stretches of the window's length."""
+    reasons.add(cell(told.known) == 0, NO_HISTORY)
+    ask_rows(reasons, told, FEWEST_ROWS, f"{what} against history")
+    fewest = fewest_windows(risk)
+    reasons.add(
+        cell(told.stretches) < fewest,
+        f"history holds fewer than {fewest} stretches of the window's {told.steps} steps: "
+        f"{fewest * told.steps} steps are needed at a risk of {risk:g}",
+    )
+
+
+def ask_variety(reasons: Reasons, told: Past, risk: float) -> None:
+    """Undecided where one value makes up most of the rows."""
+    share = TIED_SMALL_RISK if risk <= SMALL_RISK else TIED
+    with np.errstate(invalid="ignore"):
+        reasons.add(
+            cell(told.commonest) > share,
+            f"one value makes up more than {share:.0%} of the rows: use the measure rate for it",
+        )
+
+
+def without(told: Past) -> str:
+    """What was taken out, for ``assumes``."""
+    return f", fixed cycles ({', '.join(told.seasons)}) taken out" if told.seasons else ""
+
+
+@dataclass(frozen=True)
+class Chosen:
+    """One of two references for each series: ``first`` where ``pick``, shape (S, 1)."""
+
+    pick: Bools
+    first: Reference
+    second: Reference
+
+    @property
+    def bound(self) -> Floats:
+        return np.where(self.pick, self.first.bound, self.second.bound)
+
+    @property
+    def standard_error(self) -> Floats:
+        return np.where(self.pick, self.first.standard_error, self.second.standard_error)
+
+    def p_value(self, side: Side) -> Floats:
+        return np.where(self.pick, self.first.p_value(side), self.second.p_value(side))
+
+    def limit(self, side: Side, risk: Floats) -> Floats:
+        return np.where(self.pick, self.first.limit(side, risk), self.second.limit(side, risk))
+
+    def naive_limit(self, side: Side, risk: Floats) -> Floats:
+        return np.where(self.pick, self.first.naive_limit(side, risk), self.second.naive_limit(side, risk))
+
+    def detectable(self, side: Side, risk: Floats) -> Floats:
+        return np.where(self.pick, self.first.detectable(side, risk), self.second.detectable(side, risk))
+
+
+def combined(pick: Bools, make_first: Callable[[], Measurement], make_second: Callable[[], Measurement]) -> Measurement:
+    """The first measurement where ``pick`` (shape (S,)), the second elsewhere; only what is needed is made.
+
+    Each series is judged by the method that its own history allows, whatever stands beside it in the block.
+    """
+    if pick.all() or not pick.any():
+        return make_first() if pick.all() and len(pick) else make_second()
+    first, second, here = make_first(), make_second(), pick[:, None]
+
+    def either(a: Reference | None, b: Reference | None) -> Reference | None:
+        return None if a is None or b is None else Chosen(here, a, b)
+
+    return replace(
+        first,
+        observed=np.where(here, first.observed, second.observed),
+        n_eff=np.where(here, first.n_eff, second.n_eff),
+        upper=either(first.upper, second.upper),
+        lower=either(first.lower, second.lower),
+        undecided=np.where(
+            here, first.undecided, np.where(second.undecided < 0, -1, second.undecided + len(first.reasons))
+        ),
+        reasons=(*first.reasons, *second.reasons),
+        method=f"{first.method}; where history is too short: {second.method}",
+        assumes=f"{first.assumes}; where history is too short: {second.assumes}",
+    )
+
+
+@dataclass(frozen=True)
+class ToUnit:
+    """Increasing map from a statistic's scale to the unit of the rows, shape (S, L) to (S, L).
+
+    Attributes:
+        grid: way from a mean score to a value; None when the statistic is a value already.
+        offset: added, in units of ``scale``, shape (S,).
+        scale: shape (S,).
+        plain: series whose statistic is a value already, shape (S,), or None.
+    """
+
+    grid: QuantileGrid | None
+    offset: Floats
+    scale: Floats
+    plain: Bools | None = None
+
+    def __call__(self, x: Floats) -> Floats:
+        value = x if self.grid is None else self.grid(x)
+        if self.plain is not None:
+            value = np.where(self.plain[:, None], x, value)
+        return np.asarray((value + self.offset[:, None]) * self.scale[:, None], dtype=np.float64)

@@ -1,0 +1,105 @@
+"""Literal bounds without history: two witnesses of the long-run variance, of whom the more careful counts.
+
+Depends on ``serial``, ``grid``, ``measure``, ``reference`` and ``baseline``.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+
+from sercheck.baseline import chosen_seasons
+from sercheck.grid import Panel
+from sercheck.measure import Measurement, Question, Reasons, Reference
+from sercheck.measures._past import ToUnit, ask_rows, ask_variety, cell, counts, mean, past, variance
+from sercheck.reference import Larger, Pivot
+from sercheck.serial.arrays import Floats
+from sercheck.serial.long_run import LongRun, autoregressive_long_run, cosine_long_run
+from sercheck.serial.season import phase_means
+
+FEWEST_ALONE = 96
+"""Rows that a literal bound without history needs (simulated, short memory)."""
+FEWEST_STRONG = 336
+"""The same where lag-one memory may reach .9 (simulated)."""
+STRONG = 0.8
+"""Fitted memory Σφ from which the true one may reach .9 (its bias is -.04 and its error .05 at 96 rows)."""
+
+
+def own_cycles_out(panel: Panel) -> tuple[Floats, tuple[str, ...]]:
+    """The window in units of ``Past.scale`` without its own phase means, and the names of the cycles taken out.
+
+    Only cycles that the window holds at least four times; deviations are widened by √(C/(C-1)), so that their variance
+    is that of the rows about the true profile.
+    """
+    values = panel.window / past(panel).scale[:, None]
+    names = chosen_seasons(panel.axis, values.shape[1])
+    for name in names:
+        phase = panel.phase(name)[panel.start :]
+        means, seen = phase_means(values, phase, panel.axis.lengths[name])
+        cycles = seen[:, phase]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            values = (values - means[:, phase]) * np.where(cycles > 1, np.sqrt(cycles / (cycles - 1)), np.nan)
+    return values, names
+
+
+def ask_alone(reasons: Reasons, panel: Panel, question: Question, run: LongRun, what: str, strong: int) -> None:
+    """The reasons that all literal bounds without history share; ``strong`` is the least size under strong memory."""
+    told = past(panel)
+    ask_rows(reasons, told, FEWEST_ALONE, f"{what} without history")
+    ask_variety(reasons, told, question.risk)
+    reasons.add(~(cell(run.variance) > 0), "the window does not vary: there is no sampling error to allow for")
+    reasons.add(
+        (cell(told.n) < strong) & (cell(run.memory) > STRONG),
+        f"rows depend strongly on each other: without history {what} then needs {strong} rows",
+    )
+
+
+def sides(question: Question, against: Callable[[float], Reference]) -> tuple[Reference | None, Reference | None]:
+    """References for too large and too small of a literal bound."""
+    low, high = question.stays.low, question.stays.high
+    return None if high is None else against(high), None if low is None else against(low)
+
+
+def mean_alone(panel: Panel, question: Question) -> Measurement:
+    """The window's mean against the author's number, p = max(p_AR, p_EWC)."""
+    told, reasons = past(panel), Reasons((len(past(panel).n), 1))
+    values, taken = own_cycles_out(panel)
+    level = mean(panel.window / told.scale[:, None])
+    first, second = autoregressive_long_run(values), cosine_long_run(values)
+    ask_alone(reasons, panel, question, first, "a level", FEWEST_STRONG)
+    rows = np.maximum(told.n, 1)
+    spread = variance(values)
+
+    def against(bound: float) -> Reference:
+        def witness(run: LongRun) -> Pivot:
+            scale = cell(np.sqrt(run.variance / rows))
+            return Pivot(
+                statistic=cell(level),
+                centre=cell(bound / told.scale),
+                scale=scale,
+                df=cell(run.df),
+                bound=np.full(scale.shape, bound),
+                standard_error=scale * cell(told.scale),
+                to_unit=ToUnit(None, np.zeros(len(rows)), told.scale),
+                naive_scale=cell(np.sqrt(spread / rows)),
+            )
+
+        return Larger(witness(first), witness(second))
+
+    upper, lower = sides(question, against)
+    n, n_missing = counts(panel)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        n_eff = rows * spread / np.maximum(first.variance, second.variance)
+    return Measurement(
+        observed=cell(level * told.scale),
+        n=n,
+        n_missing=n_missing,
+        n_eff=cell(n_eff),
+        upper=upper,
+        lower=lower,
+        undecided=reasons.index,
+        reasons=tuple(reasons.texts),
+        method="mean, two long-run variances (Berk 1974; Lazarus, Lewis, Stock and Watson 2018)",
+        assumes="short memory" + (f", fixed cycles ({', '.join(taken)}) taken out" if taken else ""),
+    )
