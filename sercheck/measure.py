@@ -145,11 +145,19 @@ class Measure(ABC):
     Attributes:
         kinds: which kinds of ``stays`` it accepts.
         of_values: reads a value column; False: reads the clock, judged once a series whatever the columns.
+        exact: no sampling error, so that no false alarm comes by chance: its rules take no share of the alarm budget.
+        weight: what a rule of this measure weighs in the alarm budget unless it says so itself.
+        bounds_in: numbers, or lengths in time that the rule file compiles to seconds.
+        span: smallest and largest value that the observation can take; a literal bound must lie between them.
         Fields: pydantic model of its own fields (forbids unknown ones).
     """
 
     kinds: ClassVar[frozenset[str]] = frozenset({"below", "above", "between"})
     of_values: ClassVar[bool] = True
+    exact: ClassVar[bool] = False
+    weight: ClassVar[float] = 1.0
+    bounds_in: ClassVar[Literal["numbers", "time"]] = "numbers"
+    span: ClassVar[tuple[float, float]] = (float("-inf"), float("inf"))
     Fields: ClassVar[type[BaseModel]]
 
     @abstractmethod

@@ -16,6 +16,8 @@ Length = str | int
 
 Action = Literal["hold", "note"]
 
+RiskFrom = Literal["rule", "file", "budget", "default", "exact"]
+
 
 @dataclass(frozen=True)
 class Transform:
@@ -56,6 +58,9 @@ class Rule:
         matters: the smallest change worth knowing, or None.
         otherwise: what a failure does.
         when_undecided: release or hold.
+        weight: what the rule weighs in the alarm budget (0 for one that takes no share).
+        risk_from: where ``false_alarm`` comes from: the rule itself, the file's ``false_alarm``, the file's
+            ``false_holds``, the default, or exact (no sampling error: the risk is 0).
         line: line of the rule in its file, from 1.
     """
 
@@ -75,6 +80,8 @@ class Rule:
     tell: tuple[str, ...] = ()
     runbook: str | None = None
     about: str | None = None
+    weight: float = 1.0
+    risk_from: RiskFrom = "default"
     line: int = 0
 
 
@@ -91,10 +98,13 @@ class Rulebook:
     """A whole rule file.
 
     Attributes:
+        every: a pandas offset or ``irregular``.
         seasons: name to length (time or steps).
+        batch_every: a length in time, or a pandas offset such as B or MS.
         closed_days: local dates.
-        history: paths or globs named in the file (relative ones resolved against the file's folder).
-        baseline: ``from`` and ``refresh`` lengths.
+        history: paths or globs named in the file (relative ones resolved against the file's folder), or
+            ``db:NAME?table=...`` and ``db:NAME?query=...`` (percent-encoded).
+        baseline: ``from`` (a length in time or an ISO date) and ``refresh`` (a length in time).
         limits: ``memory`` (bytes) and ``time`` (seconds).
         fingerprint: sha256 of the canonical content (comments, order of keys and layout do not change it).
         path: where it was read from, for messages.
