@@ -66,11 +66,11 @@ class SeasonModel:
     evolving: Bools
 
     def profile(self, first: int, last: int, shift: int = 0) -> Floats:
-        """The profile at steps ``first`` to ``last`` (exclusive), ``shift`` steps ahead of the clock, shape (S, steps)."""
+        """The profile at steps ``first`` to ``last`` (exclusive), read ``shift`` steps ahead, shape (S, steps)."""
         return _profile(self.cycles, self.means, self.choice, slice(first, last), shift)
 
     def whitened(self, x: Floats) -> Floats:
-        """``x`` through history's autoregression: its constant stays a constant; NaN where a value needed is missing."""
+        """``x`` through history's autoregression: a constant stays one; NaN where a value needed is missing."""
         return innovations(x, self.noise)
 
     def widening(self, n: int) -> Floats:
@@ -141,12 +141,12 @@ def _foretold(history: Floats, phase: Ints, fit: Profile) -> Floats:
     usable = fit.kept & (counts > 1)
     with np.errstate(divide="ignore", invalid="ignore"):
         error = (history - fit.means[:, phase]) * (counts / (counts - 1.0))
-        return np.where(usable, error**2, 0.0).sum(axis=1) / usable.sum(axis=1)
+        return np.asarray(np.where(usable, error**2, 0.0).sum(axis=1) / usable.sum(axis=1))
 
 
 def _seen_cycles(fit: Profile) -> Floats:
     places = np.sum(fit.counts > 0, axis=1)
-    return fit.counts.sum(axis=1) / np.maximum(places, 1)
+    return np.asarray(fit.counts.sum(axis=1) / np.maximum(places, 1))
 
 
 def _corrected(e: Floats, count: Floats, fitted: Ints) -> Floats:
@@ -161,9 +161,9 @@ def _correlates(e: Floats, lag: int, count: Floats) -> Bools:
     if e.shape[1] <= lag:
         return np.zeros(len(e), dtype=bool)
     pair = e[:, lag:] * e[:, :-lag]
-    seen = ~np.isnan(pair)
+    seen: Bools = ~np.isnan(pair)
     pair = np.where(seen, pair, 0.0)
-    power = np.nanmean(np.where(seen.any(axis=1)[:, None], e, 0.0) ** 2, axis=1)
+    power = np.nansum(e**2, axis=1) / np.maximum(np.sum(~np.isnan(e), axis=1), 1)
     total = pair.sum(axis=1) + seen.sum(axis=1) * power / np.maximum(count, 1)
     error = np.sqrt((pair**2).sum(axis=1))
     return np.asarray(total > STILL_CORRELATED * error)
@@ -277,4 +277,5 @@ def _centred_norm(p: Floats, seen: Bools) -> Floats:
     seen = seen & ~np.isnan(p)
     count = np.maximum(seen.sum(axis=1), 1)
     p = np.where(seen, p, 0.0)
-    return np.asarray(np.where(seen, p - (p.sum(axis=1) / count)[:, None], 0.0) ** 2).sum(axis=1)
+    apart = np.where(seen, p - (p.sum(axis=1) / count)[:, None], 0.0)
+    return np.asarray(np.einsum("ij,ij->i", apart, apart))

@@ -12,7 +12,7 @@ FAR_OFF = 5.0
 """Robust standard deviations beyond which a cycle is broken: of the logarithm of a cycle's mean squared distance from
 the median profile. A healthy cycle is left out about once in 10^5 even for strongly correlated noise (simulated)."""
 NARROWEST = 0.1
-"""Least standard deviation granted to that logarithm, so that cycles which are all but equal do not break each other."""
+"""Least standard deviation granted to that logarithm, so that nearly equal cycles do not break each other."""
 
 
 class Profile(NamedTuple):
@@ -102,7 +102,7 @@ def _distance(x: Floats, profile: Floats, stretch: Ints) -> Floats:
     share = np.add.reduceat(power, starts, axis=1) / total
     with np.errstate(divide="ignore", invalid="ignore"):
         # a millionth of the whole is nothing: exact agreement must not make the logarithm infinite
-        return np.log(share * seen.sum(axis=1, keepdims=True) / count + 1e-6)
+        return np.asarray(np.log(share * seen.sum(axis=1, keepdims=True) / count + 1e-6))
 
 
 def median(x: Floats) -> Floats:

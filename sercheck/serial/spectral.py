@@ -1,4 +1,4 @@
-"""Is there a season at all: peaks of the periodogram against their neighbours; depends on numpy and ``scipy.special``."""
+"""Is there a season at all: periodogram peaks against their neighbours; depends on numpy and ``scipy.special``."""
 
 from __future__ import annotations
 
@@ -44,9 +44,9 @@ def spectral_f(x: object, length: int) -> SpectralF:
     """Test for a season of ``length`` steps against any smooth spectrum.
 
     The last c whole cycles are detrended; I is their periodogram. F_h = I(ch) over the mean of its 2m neighbours,
-    m = (c - 1)//2, follows F(2, 4m) for harmonics h = 1 .. min(3, (length - 1)//2) when the spectrum is flat across the
-    neighbours; their p-values are combined by Fisher (1932): -2 Σ ln p_h is χ² with 2H degrees of freedom. The number of
-    cycles needs no whole-window match: what is left over at the beginning is not used.
+    m = (c - 1)//2, follows F(2, 4m) for harmonics h = 1 .. H = min(3, (length - 1)//2) when the spectrum is flat across
+    the neighbours; their p-values are combined by Fisher (1932): -2 Σ ln p_h is χ² with 2H degrees of freedom. What is
+    left over before the whole cycles is not used.
 
     Args:
         x: one series or (S, T); NaN is missing and counts as lying on the trend, which is right for scattered gaps and

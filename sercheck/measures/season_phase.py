@@ -1,0 +1,132 @@
+"""Has the clock slipped: does the season come early or late?
+
+Null hypothesis: the window holds history's seasonal profile, at any amplitude, without a shift in time. Window and
+profile p are whitened by the autoregression (Burg 1975, order at most 6) of history without its season; the window is
+regressed on [1, p, (p_{+d} + p_{-d})/2 - p, (p_{-d} - p_{+d})/2]. The last coefficient, times d, is the slip; its t
+(error times √(1 + n/N) for the errors of the profile) is judged two-sided, and only where the profile moved that way
+fits better too; elsewhere the slip is 0. The risk is shared (Bonferroni) among the distances d searched, and among the
+whole window and its later half, so far as a slip of d would be seen in them with probability .8.
+
+Fields: ``season`` (a name from ``seasons``, or steps) and ``reach`` (largest slip searched, default 1 step; searching
+many costs power).
+Unit: steps; positive is late. ``below``, ``above`` and ``between`` bound the slip, ``like: history`` asks for none.
+Missing values: nothing is closed up; a value takes part where those before it that the model needs are there.
+Minimum: history of 4 cycles, 12 whitened values, and a season strong enough against its noise that a slip of one step
+would be seen; with one or two cycles it seldom is. Undecided where history shows that the season evolves.
+
+Example::
+
+    name: no clock has slipped
+    measure: season_phase
+    season: day
+    window: 7D
+    stays: {like: history}
+"""
+
+from __future__ import annotations
+
+from typing import Annotated, ClassVar
+
+import numpy as np
+from pydantic import BaseModel, ConfigDict, Field
+
+from sercheck.errors import UsageError
+from sercheck.grid import Panel
+from sercheck.measure import Measure, Measurement, Question, Reasons
+from sercheck.measures._season import ask_history, ask_window, learned, named_season, window_counts
+from sercheck.measures._season_laws import Best
+from sercheck.reference import Pivot
+from sercheck.serial.arrays import Floats
+from sercheck.serial.matched_filter import matched_amplitude
+from sercheck.serial.phase import Slip, phase_slip
+
+
+class SeasonPhaseFields(BaseModel):
+    """``season``: a name from ``seasons`` or steps; ``reach``: largest slip searched, in steps."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+    season: str | Annotated[int, Field(ge=3)]
+    reach: Annotated[int, Field(ge=1)] = 1
+
+
+class SeasonPhase(Measure):
+    """Slip of a season in time."""
+
+    kinds: ClassVar[frozenset[str]] = frozenset({"below", "above", "between", "like_history"})
+    Fields: ClassVar[type[BaseModel]] = SeasonPhaseFields
+
+    def run(self, panel: Panel, question: Question) -> Measurement:
+        fields = question.fields
+        assert isinstance(fields, SeasonPhaseFields)
+        season = named_season(panel, fields.season)
+        if 2 * fields.reach >= season.cycle.length:
+            raise UsageError(
+                f"season_phase of season {season.name}",
+                f"a reach of {fields.reach} steps",
+                f"less than half of the season's {season.cycle.length} steps",
+                "A slip of half a cycle forward is the same as one backward: ask for a smaller reach.",
+            )
+        n, n_missing = window_counts(panel.window)
+        reasons = Reasons(n.shape)
+        enough = ask_history(reasons, panel, season)
+        stays = question.stays
+        both = stays.kind in ("like_history", "between")
+        unknown = np.full(len(n), np.nan)
+        slip = Slip(unknown, unknown, unknown, np.zeros(len(n), np.int64), unknown, np.zeros(len(n), np.int64), unknown)
+        if enough.any():
+            told = learned(panel, season)
+            slip = phase_slip(
+                told.window, told.model, panel.start, fields.reach, question.risk if both else 2 * question.risk
+            )
+            reasons.add(
+                told.model.evolving[:, None],
+                f"history's season {season.name} evolves: a slip cannot be told from its changes",
+            )
+            shrinkage = matched_amplitude(told.window, told.model, panel.start).shrinkage
+            ask_window(reasons, season, slip.points, shrinkage)
+            _ask_power(reasons, slip)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            n_eff = n * (slip.naive / slip.scale)[:, None] ** 2
+        low, high = (0.0, 0.0) if stays.kind == "like_history" else (stays.low, stays.high)
+        return Measurement(
+            observed=slip.value[:, None],
+            n=n,
+            n_missing=n_missing,
+            n_eff=n_eff,
+            upper=None if high is None else _reference(slip, high),
+            lower=None if low is None else _reference(slip, low),
+            undecided=reasons.index,
+            reasons=tuple(reasons.texts),
+            method="regression on history's whitened seasonal profile moved either way, Student's t, the best of the "
+            "whole window and its later half (Bonferroni)",
+            assumes="stationary history, a season that stays the same",
+            season=season.name,
+        )
+
+
+def _ask_power(reasons: Reasons, slip: Slip) -> None:
+    """Undecided where no look could have shown a slip."""
+    for times in (2, 5, np.inf):
+        # a few round sentences rather than one for each series
+        with np.errstate(invalid="ignore"):
+            cells = (slip.looks == 0) & (slip.needed**2 <= times)
+        longer = "" if np.isinf(times) else f": a window about {times} times as long is needed"
+        reasons.add(
+            cells[:, None],
+            f"a slip of the size looked for could not be seen against the noise of this window{longer}",
+        )
+    reasons.add((slip.looks == 0)[:, None], "a slip of the size looked for could not be seen in this window")
+
+
+def _reference(slip: Slip, bound: float) -> Best:
+    centre: Floats = np.where(np.isnan(slip.value), np.nan, bound)[:, None]
+    look = Pivot(
+        statistic=slip.value[:, None],
+        centre=centre,
+        scale=slip.scale[:, None],
+        df=slip.df[:, None],
+        bound=centre,
+        standard_error=slip.scale[:, None],
+        naive_scale=slip.naive[:, None],
+    )
+    return Best(look, np.maximum(slip.looks, 1)[:, None])
