@@ -26,6 +26,12 @@ BLOCK = 1 << 19
 FEWEST_EXPECTED = 3.0
 """Marked effective rows expected at a literal share below which a pass says nothing (chosen by simulation)."""
 
+LONG_HISTORY = 8
+"""Batches of history from which τ is taken as known (simulated: sizes under 1 from there on)."""
+
+FEWEST_RUNS = 10
+"""Runs of the rarer kind that tell how large its clusters are (simulated: fewer give up to 300 times the risk)."""
+
 
 def tally(marks: Floats) -> tuple[Ints, Ints]:
     """Count the marked rows and the rows that can be marked, each of shape (S,)."""
@@ -288,6 +294,42 @@ class AgainstPast(ShareLaw):
 def _share(hits: Floats, rows: Floats) -> Floats:
     with np.errstate(invalid="ignore", divide="ignore"):
         return np.where(rows > 0, hits / rows, np.nan)
+
+
+def against_share(marks: Floats, start: int, share: float, power: float) -> AgainstShare:
+    """The law of the share of marked rows from column ``start`` on against a literal share; arrays of shape (S, 1).
+
+    Where history is shorter than ``LONG_HISTORY`` batches, τ comes from little more than the batch that it judges:
+    its bias is given back and its degrees of freedom (observed/τ − 1) are used. Its side 'lower' is blind when a rare
+    mark came in fewer than ``FEWEST_RUNS`` runs, 'upper' when a common one was missing in fewer than that.
+
+    Args:
+        marks: history and batch, shape (S, T), NaN takes no part.
+        start: first column of the batch.
+        share: the author's share, 0 to 1.
+        power: probability of ``detectable``.
+    """
+    hits, rows = _batch(marks, start)
+    if start >= LONG_HISTORY * (marks.shape[1] - start):
+        return AgainstShare(hits, rows, cluster_size(marks)[:, None], power, np.asarray(share))
+    tau = cluster_size(marks, short=True)[:, None]
+    observed = np.count_nonzero(~np.isnan(marks), axis=1)[:, None]
+    df = np.where(tau > 1.0, np.maximum(observed / tau - 1.0, 1.0), np.inf)
+    marked, unmarked = (runs[:, None] for runs in runs_of(marks))
+    few = marked < FEWEST_RUNS if share <= 0.5 else unmarked < FEWEST_RUNS
+    return AgainstShare(hits, rows, tau, power, np.asarray(share), df, {"lower" if share <= 0.5 else "upper": few})
+
+
+def against_past(marks: Floats, start: int, power: float) -> AgainstPast:
+    """The law of the share of marked rows from column ``start`` on against that before it; arrays of shape (S, 1)."""
+    hits, rows = _batch(marks, start)
+    past_hits, past_rows = _batch(marks[:, :start], 0)
+    return AgainstPast(hits, rows, cluster_size(marks)[:, None], power, past_hits, past_rows)
+
+
+def _batch(marks: Floats, start: int) -> tuple[Floats, Floats]:
+    hits, rows = tally(marks[:, start:])
+    return hits[:, None].astype(np.float64), rows[:, None].astype(np.float64)
 
 
 def runs_of(marks: Floats) -> tuple[Ints, Ints]:
