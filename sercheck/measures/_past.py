@@ -126,7 +126,7 @@ def variance(x: Floats) -> Floats:
     return np.where(count > 1, squares / np.maximum(count - 1, 1), np.nan)
 
 
-def cell(x: Floats | Ints) -> Floats:
+def cell(x: Floats | Ints | Bools) -> Floats:
     """Shape (S,) to the (S, 1) of a measure without lags."""
     return np.asarray(x, dtype=np.float64)[:, None]
 

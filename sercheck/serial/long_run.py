@@ -191,15 +191,15 @@ def autoregressive_long_run(x: object, trend: bool = False) -> LongRun:
     left, shrink = np.concatenate([ones, left], axis=1), np.concatenate([ones, shrink], axis=1)
     lower = np.arange(left.shape[1]) < model.order[:, None]
     q = shrink[:, -1] * np.sum(np.where(lower, left**2 / shrink, 0.0), axis=1)
-    rest: Floats = left[:, -1]
+    rest = left[:, -1]
     lost = 2 if trend else 1
     with np.errstate(divide="ignore", invalid="ignore"):
         bias = np.where(model.order > 0, (lost * q / rest + 2 * (1 - rest)) / n, 0.0)
         held = np.clip(rest - bias, (0.3 if trend else 0.4) * rest, 1.5 * rest)
         spared = n - model.order - lost
-        variance = np.where(spared > 0, model.variance / held**2 * n / spared, np.nan)
-        df = n / (1 + 2 * q / rest**2)
-    return LongRun(variance, df, 1.0 - rest)
+        variance: Floats = np.where(spared > 0, model.variance / held**2 * n / spared, np.nan)
+        df = np.asarray(n / (1 + 2 * q / rest**2), dtype=np.float64)
+    return LongRun(variance, df, np.asarray(1.0 - rest, dtype=np.float64))
 
 
 def cosine_count(n: int) -> int:

@@ -1,0 +1,267 @@
+"""Is the series as spread out as it should be?
+
+Null hypothesis: the window's standard deviation is the bound, and log variances scatter as those of history's stretches
+of the same length do.
+
+Against history (``like: history``): L = ln of the variance of the normal scores (van der Waerden 1952) of the window's
+values in the series' own history, compared with the same of m non-overlapping stretches of history by window-t:
+T = (L - mean)/(sd √(1 + 1/m)) on m - 1 degrees of freedom (log variances are nearly normal: Bartlett and Kendall 1946).
+A literal bound with history: the log variances of the values themselves, about the bound, with history's scatter.
+A literal bound without history is answered only for a feed declared light-tailed (``tails: light``): the variance has
+χ² scatter on n/(1 + 2 Σ (1 - k/n) ρ_k²) degrees of freedom (Bayley and Hammersley 1946) with the autocorrelations ρ of
+a fitted autoregression, taken to the cube root (Wilson and Hilferty 1931).
+
+Fixed cycles (``seasons``) are taken out first.
+
+Unit: standard deviation, in the unit of the column. Against history it is history's standard deviation times the
+ratio of the scores' standard deviations, so that one wild value does not make it; a spread beyond all of history's
+values is told too small.
+Missing values take no part and are never closed up.
+Minimum: 24 rows and 8 stretches of history of the window's length (20 at a risk of .001 or less); a literal bound
+without history 336 rows of a light-tailed feed whose rows do not depend strongly on each other. A literal bound on a
+history with far-out values (excess kurtosis above 4) is undecided unless ``tails: light`` is declared. Undecided when
+one value makes up more than 80 % of the rows (50 % at a risk of .001 or less).
+
+Example::
+
+    name: spread as usual
+    measure: spread
+    stays: {like: history}
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import ClassVar, Literal
+
+import numpy as np
+from pydantic import BaseModel, ConfigDict
+
+from sercheck.grid import Panel
+from sercheck.measure import Measure, Measurement, Question, Reasons, Reference
+from sercheck.measures._past import (
+    ask_history,
+    ask_rows,
+    ask_variety,
+    cell,
+    combined,
+    counts,
+    mean,
+    past,
+    scored,
+    variance,
+    window_scores,
+    without,
+)
+from sercheck.measures._witnesses import STRONG, own_cycles_out, sides
+from sercheck.reference import Pivot
+from sercheck.serial.arrays import Floats
+from sercheck.serial.autoregression import burg, model_autocorrelation
+from sercheck.serial.effective_size import effective_size_of
+from sercheck.serial.window_t import fewest_windows, window_t, windows
+
+FEWEST_ALONE = 336
+"""Rows that a literal bound without history needs (simulated for light tails)."""
+HEAVY = 4.0
+"""Excess kurtosis of history (Laplace's law has 3) above which a literal bound is not answered: on Student's t with 3
+degrees of freedom the false-alarm rate at .001 would be .009 (simulated)."""
+FLAT = 1e-30
+"""What the variance of a window without any is taken for, so that its logarithm is finite and far out."""
+
+
+class SpreadFields(BaseModel):
+    """``tails``: ``light`` declares that no value is far out (needed for a literal bound without history)."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+    tails: Literal["unknown", "light"] = "unknown"
+
+
+class Spread(Measure):
+    """Standard deviation of the window."""
+
+    kinds: ClassVar[frozenset[str]] = frozenset({"below", "above", "between", "like_history"})
+    span: ClassVar[tuple[float, float]] = (0.0, float("inf"))
+    Fields: ClassVar[type[BaseModel]] = SpreadFields
+
+    def run(self, panel: Panel, question: Question) -> Measurement:
+        if not question.stays.literal:
+            return _like_history(panel, question)
+        enough = past(panel).stretches >= fewest_windows(question.risk)
+        return combined(enough, lambda: _literal(panel, question), lambda: _alone(panel, question))
+
+
+@dataclass(frozen=True)
+class _Deviation:
+    """Log variance to standard deviation: base · exp((x - origin)/2), row by row; shape (S,) each."""
+
+    base: Floats
+    origin: Floats
+
+    def __call__(self, x: Floats) -> Floats:
+        with np.errstate(over="ignore"):
+            return np.asarray(self.base[:, None] * np.exp((x - self.origin[:, None]) / 2), dtype=np.float64)
+
+
+@dataclass(frozen=True)
+class _CubeRoot:
+    """Cube root of a variance to the standard deviation; a root below 0 is none."""
+
+    scale: Floats
+
+    def __call__(self, x: Floats) -> Floats:
+        return np.asarray(self.scale[:, None] * np.maximum(x, 0.0) ** 1.5, dtype=np.float64)
+
+
+def _logs(values: Floats) -> Floats:
+    """Logarithm of a variance; NaN where it is 0 or unknown."""
+    able = values > 0
+    return np.where(able, np.log(np.where(able, values, 1.0)), np.nan)
+
+
+def _asked(panel: Panel, question: Question) -> Reasons:
+    told, reasons = past(panel), Reasons((len(past(panel).n), 1))
+    ask_history(reasons, told, question.risk, "a spread")
+    ask_variety(reasons, told, question.risk)
+    return reasons
+
+
+def _like_history(panel: Panel, question: Question) -> Measurement:
+    told, reasons = past(panel), _asked(panel, question)
+    scores = scored(panel).own
+    base = np.sqrt(variance(told.history)) * told.scale
+    now, then = variance(window_scores(panel)), _then(scores, told.steps)
+    at = _logs(np.maximum(now, FLAT))
+    centre, scale, df = window_t(_logs(then), at)
+    unit = _Deviation(base, centre)
+    pivot = _pivot(at, centre, scale, df, unit, unit(cell(centre)), told.n)
+    return _measured(panel, reasons, pivot, pivot, unit(cell(at)), _size(told.n, scale), "stationary history")
+
+
+def _literal(panel: Panel, question: Question) -> Measurement:
+    """Raw log variances about the author's number, with the scatter and the bias of history's stretches."""
+    told, reasons = past(panel), _asked(panel, question)
+    assert isinstance(question.fields, SpreadFields)
+    heavy = (question.fields.tails != "light") & (_excess(told.history) > HEAVY)
+    reasons.add(cell(heavy) > 0, "history has far-out values, on which a standard deviation hangs: use like: history")
+    now, then = variance(told.window), _then(told.history, told.steps)
+    at = _logs(np.maximum(now, FLAT))
+    middle, wide, df = window_t(_logs(then), at)
+    scale = wide / np.sqrt(1 + 1 / (df + 1))
+    bias = middle - _logs(variance(told.history))
+    unit = _Deviation(told.scale, np.zeros(len(at)))
+
+    def against(bound: float) -> Pivot:
+        centre = 2 * _logs(np.asarray(bound / told.scale)) + bias
+        return _pivot(at, centre, scale, df, unit, np.full((len(at), 1), bound), told.n)
+
+    upper, lower = sides(question, against)
+    return _measured(panel, reasons, upper, lower, unit(cell(at)), _size(told.n, scale), "stationary history")
+
+
+def _then(history: Floats, steps: int) -> Floats:
+    """Variances of history's stretches with at least half of the window's values, shape (S, m)."""
+    cut = windows(history, steps)
+    enough = (~np.isnan(cut)).sum(axis=2) * 2 >= steps
+    return np.where(enough, variance(cut), np.nan)
+
+
+def _excess(history: Floats) -> Floats:
+    """Excess kurtosis of the observed values, shape (S,); 0 where they do not vary."""
+    apart = history - mean(history)[:, None]
+    with np.errstate(invalid="ignore", divide="ignore"):
+        ratio = mean(apart**4) / mean(apart**2) ** 2
+    return np.where(np.isfinite(ratio), ratio - 3, 0.0)
+
+
+def _size(n: Floats | object, scale: Floats) -> Floats:
+    """Rows times the variance of a log variance of independent normal rows, 2/(n - 1), over the one used."""
+    rows = np.asarray(n, dtype=np.float64)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.asarray(rows * 2 / (rows - 1) / scale**2, dtype=np.float64)
+
+
+def _pivot(
+    at: Floats, centre: Floats, scale: Floats, df: Floats, unit: _Deviation, bound: Floats, n: Floats | object
+) -> Pivot:
+    place, step = cell(centre), cell(scale)
+    rows = np.maximum(np.asarray(n, dtype=np.float64), 2)
+    return Pivot(
+        statistic=cell(at),
+        centre=place,
+        scale=step,
+        df=cell(df),
+        bound=bound,
+        standard_error=(unit(place + step) - unit(place - step)) / 2,
+        to_unit=unit,
+        naive_scale=cell(np.sqrt(2 / (rows - 1))),
+    )
+
+
+def _measured(
+    panel: Panel,
+    reasons: Reasons,
+    upper: Reference | None,
+    lower: Reference | None,
+    observed: Floats,
+    n_eff: Floats,
+    assumes: str,
+    method: str = "log variance of normal scores, window-t (van der Waerden 1952; Bartlett and Kendall 1946)",
+) -> Measurement:
+    n, n_missing = counts(panel)
+    return Measurement(
+        observed=observed,
+        n=n,
+        n_missing=n_missing,
+        n_eff=cell(n_eff),
+        upper=upper,
+        lower=lower,
+        undecided=reasons.index,
+        reasons=tuple(reasons.texts),
+        method=method,
+        assumes=assumes + without(past(panel)),
+    )
+
+
+def _alone(panel: Panel, question: Question) -> Measurement:
+    """χ² scatter on the effective size of a variance; light tails only."""
+    told, reasons = past(panel), Reasons((len(past(panel).n), 1))
+    assert isinstance(question.fields, SpreadFields)
+    reasons.add(
+        question.fields.tails != "light",
+        "a spread needs history, or a feed that is declared to have no far-out values (tails: light)",
+    )
+    ask_rows(reasons, told, FEWEST_ALONE, "a literal spread without history")
+    ask_variety(reasons, told, question.risk)
+    values, _ = own_cycles_out(panel)
+    rows = np.maximum(told.n, 2)
+    model = burg(values)
+    rho = model_autocorrelation(model, min(200, max(told.steps - 1, 0)))
+    about_mean = effective_size_of(rows, rho)
+    size = effective_size_of(rows, rho**2)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        corrected = variance(values) * (1 - 1 / rows) / (1 - 1 / np.maximum(about_mean, 1.5))
+        df = np.maximum(size - 1, 1)
+    strong = cell(1 - np.prod(1 - model.reflection, axis=1)) > STRONG
+    reasons.add(strong, "rows depend strongly on each other: a spread then needs history")
+    reasons.add(~(cell(corrected) > 0), "the window does not vary: there is no sampling error to allow for")
+    at, unit = np.cbrt(corrected), _CubeRoot(told.scale)
+
+    def against(bound: float) -> Pivot:
+        root = np.cbrt((bound / told.scale) ** 2)
+        centre, scale = cell(root * (1 - 2 / (9 * df))), cell(root * np.sqrt(2 / (9 * df)))
+        return Pivot(
+            statistic=cell(at),
+            centre=centre,
+            scale=scale,
+            df=np.full(scale.shape, np.inf),
+            bound=np.full(scale.shape, bound),
+            standard_error=(unit(centre + scale) - unit(centre - scale)) / 2,
+            to_unit=unit,
+            naive_scale=cell(root * np.sqrt(2 / (9.0 * (rows - 1)))),
+        )
+
+    upper, lower = sides(question, against)
+    return _measured(
+        panel, reasons, upper, lower, unit(cell(at)), size, "short memory, light tails",
+        "variance on its effective size (Bayley and Hammersley 1946; Wilson and Hilferty 1931)",
+    )  # fmt: skip
