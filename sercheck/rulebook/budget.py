@@ -160,3 +160,15 @@ def _sentence(key: tuple[RiskFrom, Action, float, float], names: list[str], whol
         else f"weight {weight:g}; it only notes and takes nothing from the others",
     }
     return f"Risk {risk:.3g} for one batch{' each' if len(names) > 1 else ''}: {who} ({reasons[origin]})."
+
+
+def of_measure(measure: type[Measure]) -> str:
+    """What a rule of a measure takes of the alarm budget, in a sentence."""
+    if measure.exact:
+        return "It has no sampling error, gives no false alarm by chance and takes no share of the alarm budget."
+    if measure.weight == 1:
+        return "A rule that holds takes one share of the alarm budget (weight 1)."
+    return (
+        f"A rule that holds takes a share of weight {measure.weight:g} of the alarm budget unless it says otherwise: "
+        "on real feeds it alarms more often than its risk."
+    )
