@@ -1,0 +1,144 @@
+"""The law of a partial autocorrelation by Burg's method, under a bound; depends on numpy and ``serial`` only."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from sercheck.serial.arrays import Floats, Ints
+from sercheck.serial.autoregression import (
+    Autoregression,
+    burg,
+    innovations,
+    largest_order,
+    model_autocorrelation,
+    step_up,
+)
+from sercheck.serial.centre import centred
+from sercheck.serial.sampling_error import Residuals, autocorrelation_bias, bartlett_weights, model_lags
+
+BLOCK = 1 << 15
+"""Values worked on at a time: the arrays of the recursion stay in a second-level cache."""
+
+
+@dataclass(frozen=True)
+class Reflections:
+    """Burg's reflection coefficients at L lags; arrays of shape (S, L).
+
+    Attributes:
+        k: estimates of the partial autocorrelations; NaN for a constant series or without complete stretches.
+        rows: complete stretches plus lag: the number of rows for a complete series.
+    """
+
+    k: Floats
+    rows: Ints
+
+
+@dataclass(frozen=True)
+class PartialLaw:
+    """(atanh k - centre)/scale is standard normal; ``error`` is the standard error of k; arrays of shape (S, L)."""
+
+    centre: Floats
+    scale: Floats
+    error: Floats
+
+
+def reflections(x: object, lags: Ints) -> Reflections:
+    """Burg's recursion (Burg 1975) up to the largest lag, nothing closed up over gaps.
+
+    With f and b the forward and backward prediction errors of order j - 1, k_j = 2 Σ f_t b_{t-1}/Σ (f_t² + b_{t-1}²).
+
+    Args:
+        x: one series or (S, T); NaN is missing.
+        lags: from 1, shape (L,).
+    """
+    data = centred(x)
+    series, steps = data.values.shape
+    k = np.full((series, len(lags)), np.nan)
+    rows = np.zeros(k.shape, dtype=np.int64)
+    block = max(1, BLOCK // max(steps, 1))
+    for first in range(0, series, block):
+        part = slice(first, first + block)
+        f = b = data.values[part]
+        seen = whole = data.seen[part]
+        for order in range(1, min(int(lags.max(initial=0)), steps - 1) + 1):
+            whole = whole[:, 1:] & seen[:, : steps - order]
+            ahead, behind = f[:, 1:] * whole, b[:, :-1] * whole
+            power = np.einsum("ij,ij->i", ahead, ahead) + np.einsum("ij,ij->i", behind, behind)
+            step = 2 * np.einsum("ij,ij->i", ahead, behind) / np.where(power > 0, power, np.inf)
+            here = np.flatnonzero(lags == order)
+            k[part, here] = step[:, None]
+            rows[part, here] = np.where(power > 0, whole.sum(axis=1) + order, 0)[:, None]
+            f, b = ahead - step[:, None] * behind, behind - step[:, None] * ahead
+    return Reflections(np.where(data.varies[:, None] & (rows > 0), k, np.nan), rows)
+
+
+class PartialLaws:
+    """Laws of the reflection coefficients of a block of series; its models are fitted once.
+
+    Args:
+        x: the series, shape (S, T), NaN is missing.
+        lags: from 1, shape (L,).
+    """
+
+    def __init__(self, x: Floats, lags: Ints) -> None:
+        self.lags = lags
+        self.estimate = reflections(x, lags)
+        longest = int(lags.max(initial=1))
+        self.model = burg(x, max_order=None if longest == 1 else largest_order(x.shape[1], longest))
+        self.residuals = Residuals(innovations(x, self.model), self.model.order)
+
+    def under(self, b: float) -> PartialLaw:
+        """The law of each coefficient when the true partial autocorrelation is exactly ``b``, inside (-1, 1).
+
+        The model of each series gets b as its reflection coefficient at the lag. To first order the estimate moves by
+        Σ_j W_j times the innovations' autocorrelation at j, W = Σ_i (∂k/∂ρ_i) W^(i) of Bartlett's (1946) weights, which
+        gives the linear variance V (1 - b² over n when the order is the lag, Quenouille 1949; more or less when the
+        true order is higher), and the robust V_h (after Taylor 1984). The bias β is -(a + (k + 2) b)/n, a = 1 at odd
+        and 2 at even lags k, for a process whose order is the lag (Shaman and Stine 1988), plus Σ_i (∂k/∂ρ_i) times the
+        difference that the orders beyond make to the bias of r_i (Kendall 1954; Marriott and Pope 1954). With
+        s² = max(V, V_h) and g = 1 - b², [atanh k - atanh b - β/g - b s²/g²] g/s is standard normal.
+        """
+        g = 1 - b * b
+        s2, bias = np.empty(self.estimate.k.shape), np.empty(self.estimate.k.shape)
+        for column, lag in enumerate(self.lags.tolist()):
+            rows = np.maximum(self.estimate.rows[:, column], 1)
+            weights, beyond = partial_expansion(self.model, lag, b)
+            linear = np.einsum("ij,ij->i", weights, weights) / rows
+            s2[:, column] = np.fmax(linear, self.residuals.robust_variance(weights, rows, lag))
+            bias[:, column] = (beyond - (1 if lag % 2 else 2) - (lag + 2) * b) / rows
+        s = np.sqrt(s2)
+        return PartialLaw(np.arctanh(b) + bias / g + b * s2 / g**2, s / g, s)
+
+
+def partial_expansion(model: Autoregression, lag: int, b: float) -> tuple[Floats, Floats]:
+    """First-order expansion of the partial autocorrelation at ``lag`` where its true value is ``b``.
+
+    The derivatives are those of the last component of R⁻¹ρ: with φ the coefficients of order k and
+    ψ = R⁻¹ e_k = (-a_{k-1}, .., -a_1, 1)/v of order k - 1, ∂k/∂ρ_i = ψ_i - Σ_l φ_l (ψ_{l+i} + ψ_{l-i}).
+
+    Returns:
+        Weights of the innovations' autocorrelations, shape (S, J), and n times the bias that the model's orders beyond
+        the lag add, shape (S,).
+    """
+    series, width = model.reflection.shape
+    reflection = np.zeros((series, max(width, lag)))
+    reflection[:, :width] = model.reflection
+    reflection[:, lag - 1] = b
+    order = np.maximum(model.order, lag)
+    phi = step_up(reflection[:, :lag])
+    psi = np.ones((series, lag))
+    psi[:, :-1] = -step_up(reflection[:, : lag - 1])[:, ::-1]
+    psi /= np.prod(1 - reflection[:, : lag - 1] ** 2, axis=1)[:, None]
+    changed = replace(model, order=order, coefficients=step_up(reflection), reflection=reflection)
+    short = replace(model, order=np.minimum(order, lag), coefficients=phi, reflection=reflection[:, :lag])
+    rho, rho_short = (model_autocorrelation(each, model_lags(lag)) for each in (changed, short))
+    total = np.zeros((series, rho.shape[1] - 1 + lag))
+    beyond = np.zeros(series)
+    for i in range(1, lag + 1):
+        slope = psi[:, i - 1] - np.einsum("ij,ij->i", phi[:, : lag - i], psi[:, i:])
+        slope -= np.einsum("ij,ij->i", phi[:, i:], psi[:, : lag - i])
+        total[:, : rho.shape[1] - 1 + i] += slope[:, None] * bartlett_weights(rho, i)
+        beyond += slope * (autocorrelation_bias(rho, i) - autocorrelation_bias(rho_short, i))
+    return total, beyond
