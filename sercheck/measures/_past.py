@@ -15,6 +15,7 @@ from sercheck.grid import Panel
 from sercheck.measure import Measurement, Reasons, Reference, Side
 from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.serial.long_run import CosineSpectrum, cosine_spectrum
+from sercheck.serial.risk import t_quantile
 from sercheck.serial.scores import QuantileGrid, Ranking, ranking
 from sercheck.serial.window_t import SMALL_RISK, fewest_windows
 
@@ -163,6 +164,24 @@ def ask_variety(reasons: Reasons, told: Past, risk: float) -> None:
             cell(told.commonest) > share,
             f"one value makes up more than {share:.0%} of the rows: use the measure rate for it",
         )
+
+
+MUTE = "the limit lies beyond all of history's values: a longer window or history is needed"
+
+
+def out_of_reach(rank: Ranking, centre: Floats, scale: Floats, df: Floats, risk: float) -> Bools:
+    """Where a limit lies at or beyond the extreme scores, so that no window could break it, shape (S,)."""
+    ends = rank.unit.scores
+    with np.errstate(invalid="ignore"):
+        reach = t_quantile(1 - risk / 2, df) * scale
+        return np.asarray((centre + reach >= ends[:, -1]) | (centre - reach <= ends[:, 0]))
+
+
+def at_the_end(rank: Ranking, score: Floats) -> Bools:
+    """Where a score is one of the extremes (to rounding), so that the value may lie anywhere beyond, shape (S,)."""
+    ends, nearly = rank.unit.scores, 1 - 1e-9
+    with np.errstate(invalid="ignore"):
+        return np.asarray((score >= ends[:, -1] * nearly) | (score <= ends[:, 0] * nearly))
 
 
 def without(told: Past) -> str:

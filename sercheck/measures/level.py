@@ -41,13 +41,16 @@ from pydantic import BaseModel, ConfigDict
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Question, Reasons
 from sercheck.measures._past import (
+    MUTE,
     ToUnit,
     ask_history,
     ask_variety,
+    at_the_end,
     cell,
     combined,
     counts,
     mean,
+    out_of_reach,
     past,
     score_spectrum,
     scored,
@@ -59,7 +62,6 @@ from sercheck.measures._witnesses import mean_alone
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Bools, Floats
 from sercheck.serial.long_run import contrast_variance, mean_contrast
-from sercheck.serial.risk import t_quantile
 from sercheck.serial.window_t import fewest_windows
 
 
@@ -172,8 +174,7 @@ def _with_history(panel: Panel, question: Question, *, raw: bool) -> Measurement
         law = _law(panel, raw=raw, new=1 + told.n / np.maximum(told.known, 1))
         upper = lower = law.about(law.centre, law.unit(cell(law.centre)))
         if not raw:
-            mute = _out_of_reach(panel, law, law.centre, question.risk)[:, None]
-            reasons.add(mute, "the limit lies beyond all of history's values: a longer window or history is needed")
+            reasons.add(out_of_reach(scored(panel), law.centre, law.scale, law.df, question.risk)[:, None], MUTE)
     reasons.add(~(cell(law.scale) > 0), "history does not vary: there is no sampling error to allow for")
     n, n_missing = counts(panel)
     with np.errstate(divide="ignore", invalid="ignore"):
@@ -206,16 +207,8 @@ def _beyond(panel: Panel, law: _Law, bounds: list[float], risk: float) -> Bools:
     outside = np.zeros(len(told.n), dtype=bool)
     for bound in bounds:
         at = (bound / told.scale - told.offset)[:, None]
-        outside |= _out_of_reach(panel, law, values.of(at)[:, 0], risk)
+        outside |= out_of_reach(values, values.of(at)[:, 0], law.scale, law.df, risk)
     return outside
-
-
-def _out_of_reach(panel: Panel, law: _Law, centre: Floats, risk: float) -> Bools:
-    """Where a limit lies at or beyond the extreme scores, so that no window could break it."""
-    grid = scored(panel).unit.scores
-    with np.errstate(invalid="ignore"):
-        reach = t_quantile(1 - risk / 2, law.df) * law.scale
-        return np.asarray((centre + reach >= grid[:, -1]) | (centre - reach <= grid[:, 0]))
 
 
 def _observed(panel: Panel, law: _Law) -> Floats:
@@ -223,10 +216,8 @@ def _observed(panel: Panel, law: _Law) -> Floats:
     inside = law.unit(cell(law.at))
     if law.unit.grid is None:
         return inside
-    told, ends = past(panel), scored(panel).unit.scores
-    with np.errstate(invalid="ignore"):
-        nearly = 1 - 1e-9  # a mean of equal scores differs from them by rounding
-        beyond = ((law.at >= ends[:, -1] * nearly) | (law.at <= ends[:, 0] * nearly)) & ~law.plain
+    told = past(panel)
+    beyond = at_the_end(scored(panel), law.at) & ~law.plain
     middle = np.full(len(told.n), np.nan)
     if beyond.any():
         middle[beyond] = np.nanmedian(told.window[beyond], axis=1)
