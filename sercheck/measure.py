@@ -81,6 +81,8 @@ class Measurement:
         season: name of the season the measure looked at, or None.
         integer: the observed value is a count (shown without decimals).
         certify: the p-value is that of 'there is nothing': small means the rule is kept (``stays: {present: true}``).
+        unsure: index into ``reasons`` where a pass would say nothing although a failure stands, -1 elsewhere (all
+            cells keep their p-value, so that the risk is shared as if nothing were known of them), or None.
     """
 
     observed: Floats
@@ -98,6 +100,7 @@ class Measurement:
     season: str | None = None
     integer: bool = False
     certify: bool = False
+    unsure: Ints | None = None
 
 
 @dataclass(frozen=True)
