@@ -15,7 +15,8 @@ from sercheck.errors import UsageError
 from sercheck.grid import Panel
 from sercheck.measure import Reasons
 from sercheck.serial.arrays import Bools, Floats, Ints
-from sercheck.serial.matched_filter import Cycle, SeasonModel, learn_season
+from sercheck.serial.centre import centred
+from sercheck.serial.matched_filter import SMALLEST_ERROR, Cycle, SeasonModel, learn_season
 from sercheck.serial.phase import FEWEST_POINTS
 from sercheck.serial.season import robust_phase_means
 
@@ -71,7 +72,7 @@ class Learned:
 
     Attributes:
         model: profile, noise and whether the season evolves.
-        window: shape (S, n), other seasons taken out, closed days missing.
+        window: shape (S, n), in a unit of its own, other seasons taken out, closed days missing.
         history: shape (S, N), the same.
     """
 
@@ -87,7 +88,9 @@ def learned(panel: Panel, season: Named) -> Learned:
 
 def _learned(panel: Panel, cycle: Cycle) -> Learned:
     start, axis = panel.start, panel.axis
-    values = np.where(axis.closed, np.nan, panel.values)
+    # everything that is learned is the same in any unit: one without huge squares or a far-off mean is safe
+    data = centred(panel.values)
+    values = np.where(data.seen & ~axis.closed, data.values, np.nan)
     cycles = [cycle]
     for name in chosen_seasons(axis, start):
         other = Cycle(axis.lengths[name], panel.phase(name))
@@ -137,3 +140,10 @@ def window_counts(window: Floats) -> tuple[Ints, Ints]:
     """Observed and missing values of the window, both of shape (S, 1)."""
     n: Ints = np.asarray(np.sum(~np.isnan(window), axis=1, keepdims=True), dtype=np.int64)
     return n, window.shape[1] - n
+
+
+def effective(n: Ints, naive: Floats, scale: Floats) -> Floats:
+    """Values that n count for: n times the variance of independent rows over the one used; unknown without noise."""
+    told = scale > 2 * SMALLEST_ERROR
+    ratio = np.divide(naive, scale, out=np.full(scale.shape, np.nan), where=told)
+    return np.asarray(n * ratio[:, None] ** 2)

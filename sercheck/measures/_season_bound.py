@@ -9,11 +9,12 @@ from sercheck.grid import Panel
 from sercheck.measure import Measurement, Question, Reasons, Side
 from sercheck.measures._season import Named, window_counts
 from sercheck.reference import Pivot, same
-from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.arrays import Bools, Ints
 from sercheck.serial.autoregression import burg, root_beyond
+from sercheck.serial.centre import centred
 from sercheck.serial.lag_law import ROOT, Lagged, bound_law, forward, lagged
 from sercheck.serial.matched_filter import HIGHEST_ORDER
-from sercheck.serial.season import detrended, phase_means
+from sercheck.serial.season import detrended, without_trend_and_season
 
 MODEST = 0.6
 """Size of a bound from which r scatters so unevenly that more values are needed (simulated)."""
@@ -21,6 +22,8 @@ FEWEST, CYCLES = 48, 4
 """Values, and cycles of the lag, for a bound up to ``MODEST`` (simulated)."""
 FEWEST_STEEP, CYCLES_STEEP = 168, 7
 """The same for a bound above it (simulated)."""
+NOTHING = 1e-20
+"""Share of the variance under which what season and line leave is rounding."""
 
 
 def bounded(panel: Panel, question: Question, season: Named, multiple: int) -> Measurement:
@@ -28,7 +31,8 @@ def bounded(panel: Panel, question: Question, season: Named, multiple: int) -> M
     lag = season.cycle.length
     stays = question.stays
     n, n_missing = window_counts(panel.window)
-    rest = detrended(panel.window)
+    data = centred(panel.window)
+    rest = detrended(np.where(data.seen, data.values, np.nan))
     seen = lagged(rest, np.array([lag], dtype=np.int64))
     reasons = Reasons(n.shape)
     bounds = [b for b in (stays.low, stays.high) if b is not None]
@@ -41,7 +45,7 @@ def bounded(panel: Panel, question: Question, season: Named, multiple: int) -> M
     )
     reasons.add(np.isnan(seen.r), "the window is constant, or too gappy to have an autocorrelation at this lag")
     reasons.add(
-        _wanders(rest, panel, season, lag // multiple)[:, None],
+        _wanders(panel, season, lag // multiple)[:, None],
         "the series wanders without a level to return to: difference first (after: difference)",
     )
     sides = len(bounds)
@@ -84,7 +88,7 @@ def _side(reasons: Reasons, seen: Lagged, side: Side, bound: float | None, n: In
         scale=law.scale,
         df=law.df,
         bound=np.full(n.shape, bound),
-        standard_error=law.error,
+        standard_error=np.where(np.isnan(seen.r), np.nan, law.error),
         to_unit=np.tanh,
         naive_scale=naive,
         naive_centre=np.full(n.shape, bound),
@@ -102,10 +106,12 @@ def _side(reasons: Reasons, seen: Lagged, side: Side, bound: float | None, n: In
     return pivot
 
 
-def _wanders(rest: Floats, panel: Panel, season: Named, length: int) -> Bools:
-    """A root near 1 once the window's own phase means are out: a strong season alone must not look like one."""
-    if rest.shape[1] < FEWEST_CYCLES * length:
-        return np.zeros(len(rest), dtype=bool)
-    phase = season.cycle.phase[panel.start :] % length
-    without = rest - phase_means(rest, phase, length)[0][:, phase]
-    return root_beyond(burg(without, max_order=HIGHEST_ORDER), ROOT)
+def _wanders(panel: Panel, season: Named, length: int) -> Bools:
+    """A root near 1 once the window's own line and phase means are out: a strong season must not look like one."""
+    data = centred(panel.window)
+    x = np.where(data.seen, data.values, np.nan)
+    if x.shape[1] < FEWEST_CYCLES * length:
+        return np.zeros(len(x), dtype=bool)
+    rest = without_trend_and_season(x, season.cycle.phase[panel.start :] % length, length)
+    exact: Bools = np.nansum(rest**2, axis=1) <= NOTHING * np.nansum(x**2, axis=1)
+    return root_beyond(burg(rest, max_order=HIGHEST_ORDER), ROOT) & ~exact

@@ -33,12 +33,16 @@ from pydantic import BaseModel, ConfigDict, Field
 from sercheck.errors import UsageError
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Question, Reasons
-from sercheck.measures._season import ask_history, ask_window, learned, named_season, window_counts
+from sercheck.measures._season import ask_history, ask_window, effective, learned, named_season, window_counts
 from sercheck.measures._season_laws import Best
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats
-from sercheck.serial.matched_filter import matched_amplitude
+from sercheck.serial.matched_filter import Amplitude, matched_amplitude
 from sercheck.serial.phase import Slip, phase_slip
+from sercheck.serial.risk import t_tail
+
+THERE = 2.0
+"""Standard errors of its amplitude by which a season must be there to have a phase (the usual two)."""
 
 
 class SeasonPhaseFields(BaseModel):
@@ -82,17 +86,16 @@ class SeasonPhase(Measure):
                 told.model.evolving[:, None],
                 f"history's season {season.name} evolves: a slip cannot be told from its changes",
             )
-            shrinkage = matched_amplitude(told.window, told.model, panel.start).shrinkage
-            ask_window(reasons, season, slip.points, shrinkage)
+            amplitude = matched_amplitude(told.window, told.model, panel.start)
+            ask_window(reasons, season, slip.points, amplitude.shrinkage)
             _ask_power(reasons, slip)
-        with np.errstate(divide="ignore", invalid="ignore"):
-            n_eff = n * (slip.naive / slip.scale)[:, None] ** 2
+            _ask_season(reasons, slip, amplitude, question.risk)
         low, high = (0.0, 0.0) if stays.kind == "like_history" else (stays.low, stays.high)
         return Measurement(
             observed=slip.value[:, None],
             n=n,
             n_missing=n_missing,
-            n_eff=n_eff,
+            n_eff=effective(n, slip.naive, slip.scale),
             upper=None if high is None else _reference(slip, high),
             lower=None if low is None else _reference(slip, low),
             undecided=reasons.index,
@@ -116,6 +119,17 @@ def _ask_power(reasons: Reasons, slip: Slip) -> None:
             f"a slip of the size looked for could not be seen against the noise of this window{longer}",
         )
     reasons.add((slip.looks == 0)[:, None], "a slip of the size looked for could not be seen in this window")
+
+
+def _ask_season(reasons: Reasons, slip: Slip, seen: Amplitude, risk: float) -> None:
+    """Undecided where the window does not hold the season: it has no phase then; a slip that is found stands."""
+    with np.errstate(invalid="ignore"):
+        absent = ~(seen.value > THERE * seen.scale)
+        p = 2 * slip.looks * t_tail(np.abs(slip.value) / slip.scale, slip.df)
+    reasons.add(
+        (absent & ~(p <= risk))[:, None],
+        "the window does not hold the season, so that it has no phase: see seasonal_lag for its strength",
+    )
 
 
 def _reference(slip: Slip, bound: float) -> Best:

@@ -44,7 +44,7 @@ from pydantic import BaseModel, ConfigDict, Field
 
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Question, Reasons
-from sercheck.measures._season import Named, ask_history, ask_window, learned, named_season, window_counts
+from sercheck.measures._season import Named, ask_history, ask_window, effective, learned, named_season, window_counts
 from sercheck.measures._season_bound import bounded
 from sercheck.measures._season_laws import ChiSquare
 from sercheck.reference import Pivot
@@ -52,6 +52,7 @@ from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.serial.autocovariance import autocorrelation
 from sercheck.serial.lag_law import forward
 from sercheck.serial.matched_filter import Amplitude, matched_amplitude
+from sercheck.serial.phase import SURE
 from sercheck.serial.risk import t_quantile, t_tail
 from sercheck.serial.spectral import FEWEST_CYCLES, spectral_f, spectral_f_power
 from sercheck.serial.window_t import FEWEST_WINDOWS, WindowT, count_windows, window_t, windows
@@ -117,8 +118,7 @@ def _like_history(panel: Panel, question: Question, season: Named) -> Measuremen
     ask_window(reasons, season, amplitude.points, amplitude.shrinkage, ~evolving)
     _ask_power(reasons, amplitude, evolving, question.risk, season)
     pivot = _pivot(amplitude, by_windows, new, evolving)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        n_eff = np.where(evolving[:, None], np.nan, n * (amplitude.naive / amplitude.scale)[:, None] ** 2)
+    n_eff = np.where(evolving[:, None], np.nan, effective(n, amplitude.naive, amplitude.scale))
     return Measurement(
         observed=pivot.to_unit(pivot.statistic),
         n=n,
@@ -180,14 +180,14 @@ def _ask_evolving(
 
 
 def _ask_power(reasons: Reasons, seen: Amplitude, evolving: Bools, risk: float, season: Named) -> None:
-    """Undecided where a season that is gone would more often pass than not; a fail stands."""
+    """Undecided where a season that is gone would be missed too often; a fail stands."""
     with np.errstate(invalid="ignore"):
         p = 2 * t_tail(np.abs((seen.value - 1) / seen.scale), seen.df)
-        blind = t_quantile(1 - risk / 2, seen.df) * seen.foreseen > 1
+        blind = (t_quantile(1 - risk / 2, seen.df) + SURE) * seen.foreseen > 1
         reasons.add(
             (blind & ~(p <= risk) & ~evolving)[:, None],
-            f"season {season.name} is weak against its noise: even one that is gone would more often be missed than "
-            "found in this window; a longer one is needed",
+            f"season {season.name} is weak against its noise: even one that is gone would not be found with "
+            "probability .8 in this window; a longer one is needed",
         )
 
 

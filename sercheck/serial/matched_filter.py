@@ -52,6 +52,8 @@ class SeasonModel:
         spread: variance of the deseasonalised history, corrected likewise, shape (S,).
         taught: values of history that taught, shape (S,).
         evolving: the profile is not the same all through history, shape (S,).
+        scatter: variance of the amplitudes of history's windows over that of their errors, at least 1, shape (S,).
+        windows: degrees of freedom behind ``scatter``, shape (S,).
     """
 
     cycles: tuple[Cycle, ...]
@@ -64,6 +66,8 @@ class SeasonModel:
     spread: Floats
     taught: Ints
     evolving: Bools
+    scatter: Floats
+    windows: Floats
 
     def profile(self, first: int, last: int, shift: int = 0) -> Floats:
         """The profile at steps ``first`` to ``last`` (exclusive), read ``shift`` steps ahead, shape (S, steps)."""
@@ -127,12 +131,14 @@ def learn_season(history: Floats, cycles: Sequence[Cycle], window: int) -> Seaso
     variance = _corrected(e, count, noise.order + 1)
     model = SeasonModel(
         cycles, means, choice, length, count, noise, variance, _corrected(rest, count, np.ones(len(rest), np.int64)),
-        kept.sum(axis=1), np.zeros(len(rest), dtype=bool),
+        kept.sum(axis=1), np.zeros(len(rest), dtype=bool), np.ones(len(rest)), np.ones(len(rest)),
     )  # fmt: skip
     correlated = _correlates(e, cycles[0].length, np.where(choice == 0, count, np.inf))
     for place, cycle in enumerate(cycles[1:], start=1):
         correlated |= (choice == place) & _correlates(e, cycle.length, count)
-    return replace(model, evolving=correlated | _scatters(model, np.where(kept, history, np.nan), window))
+    scatter, df = _scatter(model, np.where(kept, history, np.nan), window)
+    wild = special.chdtrc(df, scatter * df) < SCATTERS
+    return replace(model, evolving=correlated | wild, scatter=np.maximum(scatter, 1.0), windows=df)
 
 
 def _foretold(history: Floats, phase: Ints, fit: Profile) -> Floats:
@@ -169,8 +175,8 @@ def _correlates(e: Floats, lag: int, count: Floats) -> Bools:
     return np.asarray(total > STILL_CORRELATED * error)
 
 
-def _scatters(model: SeasonModel, history: Floats, window: int) -> Bools:
-    """Amplitudes of history's windows scatter more than their errors allow."""
+def _scatter(model: SeasonModel, history: Floats, window: int) -> tuple[Floats, Floats]:
+    """Variance of the amplitudes of history's windows over that of their errors, and its degrees of freedom."""
     steps = history.shape[1]
     if steps // window < FEWEST_WINDOWS:
         window = max(model.cycles[0].length, steps // FEWEST_WINDOWS)
@@ -182,10 +188,9 @@ def _scatters(model: SeasonModel, history: Floats, window: int) -> Bools:
     bits = np.where(usable, (a - 1) ** 2 * norm, 0.0).reshape(-1, count)
     # the profile is the windows' own mean, which takes its share of the degrees of freedom
     share = 1 - np.minimum(np.maximum(window, model.length) / max(steps, 1), 0.5)
-    df = usable.reshape(-1, count).sum(axis=1) * share
-    with np.errstate(divide="ignore", invalid="ignore"):
-        chi2 = bits.sum(axis=1) / model.variance
-    return np.asarray((df > 0) & (special.chdtrc(np.maximum(df, 0.5), np.nan_to_num(chi2, posinf=1e300)) < SCATTERS))
+    df = np.maximum(usable.reshape(-1, count).sum(axis=1) * share, 0.5)
+    known = model.variance > 0
+    return np.divide(bits.sum(axis=1), model.variance * df, out=np.ones(len(df)), where=known), df
 
 
 def fit_amplitude(y: Floats, p: Floats) -> tuple[Floats, Floats, Floats, Ints]:
@@ -215,7 +220,7 @@ class Amplitude:
     Attributes:
         value: least-squares amplitude over the shrinkage.
         scale: its standard error, the profile's errors included.
-        df: degrees of freedom, whitened points less 2.
+        df: degrees of freedom: whitened points less 2 where history's amplitudes scatter no more than their errors.
         shrinkage: λ, by which errors of the profile shrink the least-squares amplitude.
         foreseen: the standard error had the batch history's innovation variance (does not depend on the batch).
         naive: the standard error had the rows been independent.
@@ -244,6 +249,10 @@ def matched_amplitude(batch: Floats, model: SeasonModel, first: int) -> Amplitud
     variance of history's innovations, and widens the error by √(1 + n/N). (â/λ - 1) λ/(se √(1 + n/N)) follows
     Student's t on m - 2 degrees of freedom when the batch has history's season.
 
+    Where the amplitudes of history's windows scatter κ > 1 times as much (in variance) as their errors, so may the
+    batch's: the error is multiplied by √κ, and its degrees of freedom are those of both estimates together
+    (Satterthwaite 1946).
+
     Args:
         batch: shape (S, n), NaN is missing: a whitened point needs itself and as many values before it as the order.
         model: what history teaches.
@@ -253,19 +262,21 @@ def matched_amplitude(batch: Floats, model: SeasonModel, first: int) -> Amplitud
     shape = model.profile(first, first + n)
     a, rss, norm, m = fit_amplitude(model.whitened(batch), model.whitened(shape))
     raw = _centred_norm(shape, ~np.isnan(batch))
-    wide = np.sqrt(model.widening(n))
-    df = (m - 2).astype(np.float64)
+    wide = np.sqrt(model.widening(n) * model.scatter)
+    left = (m - 2).astype(np.float64)
     with np.errstate(divide="ignore", invalid="ignore"):
         shrinkage = 1 - model.variance * (m - 1) / (model.count * norm)
         safe = np.where(shrinkage > 0, shrinkage, np.nan)
-        scale = np.sqrt(rss / np.where(df > 0, df, np.nan) / norm) * wide / safe
+        left = np.where(left > 0, left, np.nan)
+        scale = np.sqrt(rss / left / norm) * wide / safe
         foreseen = np.sqrt(model.variance / norm) * wide / safe
         naive = np.sqrt(model.spread / raw)
         value = a / safe
+        df = model.scatter**2 / (1 / left + (model.scatter - 1) ** 2 / model.windows)
     return Amplitude(
         value,
         np.maximum(scale, SMALLEST_ERROR),
-        np.where(df > 0, df, np.nan),
+        df,
         shrinkage,
         np.maximum(foreseen, SMALLEST_ERROR),
         naive,

@@ -14,7 +14,7 @@ from sercheck.serial.risk import t_quantile, t_tail
 FEWEST_POINTS = 12
 """Whitened points below which a slip cannot be told from the noise of four fitted coefficients (simulated)."""
 SURE = 0.84
-"""Normal quantile of power .8, with which a slip of the size looked for must be seen, or nothing is said."""
+"""Normal quantile of power .8, with which what is looked for must be seen, or nothing is said."""
 
 
 @dataclass(frozen=True)

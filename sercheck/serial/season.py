@@ -7,6 +7,7 @@ from typing import NamedTuple
 import numpy as np
 
 from sercheck.serial.arrays import Bools, Floats, Ints, as_series
+from sercheck.serial.centre import centred
 
 FAR_OFF = 5.0
 """Robust standard deviations beyond which a cycle is broken: of the logarithm of a cycle's mean squared distance from
@@ -126,15 +127,30 @@ def detrended(x: object) -> Floats:
     Returns:
         Residuals, shape (S, T), with mean 0 over the observed values; all 0 for a series with one value.
     """
-    x = as_series(x)
-    seen = ~np.isnan(x)
-    count = np.maximum(seen.sum(axis=1, keepdims=True), 1)
-    clock = np.where(seen, np.arange(x.shape[1], dtype=np.float64), 0.0)
-    clock -= np.where(seen, clock.sum(axis=1, keepdims=True) / count, 0.0)
-    rest = x - np.where(seen, x, 0.0).sum(axis=1, keepdims=True) / count
-    moment = (clock**2).sum(axis=1, keepdims=True)
-    slope = np.where(seen, clock * rest, 0.0).sum(axis=1, keepdims=True) / np.where(moment > 0, moment, 1.0)
-    return np.asarray(rest - slope * clock)
+    data = centred(x)
+    count = np.maximum(data.n, 1)[:, None]
+    clock = np.where(data.seen, np.arange(data.seen.shape[1], dtype=np.float64), 0.0)
+    clock -= np.where(data.seen, clock.sum(axis=1, keepdims=True) / count, 0.0)
+    moment = np.einsum("ij,ij->i", clock, clock)
+    slope = np.einsum("ij,ij->i", clock, data.values) / np.where(moment > 0, moment, 1.0)
+    rest = (data.values - slope[:, None] * clock) * data.scale[:, None]
+    return np.where(data.seen, rest, np.nan)
+
+
+def without_trend_and_season(x: Floats, phase: Ints, length: int) -> Floats:
+    """What a line in time and phase means, fitted together, leave of each series, shape (S, T).
+
+    Phase means are taken out of the series and of the clock, then the one's line on the other (Frisch and Waugh 1933).
+
+    Args:
+        x: shape (S, T), NaN is missing and stays missing.
+        phase: place in the cycle of each step, shape (T,).
+        length: steps in one cycle.
+    """
+    clock = np.where(np.isnan(x), np.nan, np.arange(x.shape[1], dtype=np.float64))
+    left, run = _less_phase_means(x, phase, length), _less_phase_means(clock, phase, length)
+    moment = np.nansum(run**2, axis=1, keepdims=True)
+    return np.asarray(left - np.nansum(left * run, axis=1, keepdims=True) / np.where(moment > 0, moment, 1.0) * run)
 
 
 def seasonal_share(x: object, length: int, *, given_trend: bool = False) -> Floats:
@@ -150,15 +166,10 @@ def seasonal_share(x: object, length: int, *, given_trend: bool = False) -> Floa
     """
     x = as_series(x)
     phase = np.arange(x.shape[1]) % length
-    before = detrended(x) if given_trend else _less_mean(x)
     if given_trend:
-        # the line and the phase means together: take phase means out of both, then the line (Frisch and Waugh 1933)
-        clock = np.where(np.isnan(x), np.nan, np.arange(x.shape[1], dtype=np.float64))
-        left, run = _less_phase_means(x, phase, length), _less_phase_means(clock, phase, length)
-        moment = np.nansum(run**2, axis=1, keepdims=True)
-        after = left - np.nansum(left * run, axis=1, keepdims=True) / np.where(moment > 0, moment, 1.0) * run
+        before, after = detrended(x), without_trend_and_season(x, phase, length)
     else:
-        after = _less_phase_means(x, phase, length)
+        before, after = _less_mean(x), _less_phase_means(x, phase, length)
     total = np.nansum(before**2, axis=1)
     return np.where(total > 0, 1 - np.nansum(after**2, axis=1) / np.where(total > 0, total, 1.0), np.nan)
 
