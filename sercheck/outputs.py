@@ -7,7 +7,7 @@ import os
 import secrets
 import shutil
 import stat
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager, suppress
 from itertools import count
 from pathlib import Path
@@ -38,7 +38,7 @@ def whole_file(path: str | Path) -> Iterator[BinaryIO]:
         mode = _mode_of_old(path, target)
         draft, handle = _draft_in(target.parent)
         try:
-            with os.fdopen(handle, "wb", closefd=True) as file:
+            with os.fdopen(handle, "wb") as file:
                 yield file
                 file.flush()
                 if mode is not None:
@@ -99,21 +99,24 @@ def _moved_before(source: Path, folder: Path) -> Path:
 
 def _place(source: Path, folder: Path) -> Path:
     """Give the file a name in the folder, then take the old name away; a kill in between leaves both, never none."""
-    near = source.stat().st_dev == folder.stat().st_dev and not source.is_symlink()
-    target = _claim(source, folder, _link_or_rename) if near else _copy(source, folder)
+    try:
+        target = _copy(source, folder) if source.is_symlink() else _claim(source, folder, source.name)
+    except OSError as error:
+        if error.errno != errno.EXDEV:
+            raise
+        target = _copy(source, folder)
     _settle(folder)
     source.unlink(missing_ok=True)
     _settle(source.parent)
     return target
 
 
-def _claim(source: Path, folder: Path, put: Callable[[Path, Path], None], named: str | None = None) -> Path:
-    """Put ``source`` under its name, or the first free numbered one; an equal file that is there already will do."""
-    name = named or source.name
+def _claim(source: Path, folder: Path, name: str) -> Path:
+    """Put ``source`` under the name, or the first free numbered one; an equal file that is there already will do."""
     for number in count(1):
         target = folder / (name if number == 1 else _numbered(name, number))
         try:
-            put(source, target)
+            _link_or_rename(source, target)
         except FileExistsError:
             if target.is_file() and _same_content(source, target):
                 return target
@@ -147,7 +150,7 @@ def _copy(source: Path, folder: Path) -> Path:
             new.flush()
             os.fsync(new.fileno())
         shutil.copystat(source, draft)
-        return _claim(draft, folder, _link_or_rename, named=source.name)
+        return _claim(draft, folder, source.name)
     finally:
         draft.unlink(missing_ok=True)
 

@@ -8,7 +8,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from hashlib import blake2b
 from pathlib import Path
-from typing import IO, TYPE_CHECKING, Any, TextIO
+from typing import IO, TYPE_CHECKING, Any, Literal
 
 import numpy as np
 
@@ -59,7 +59,7 @@ class Records:
         ValueError: a column is missing, unknown, of another length or of the wrong type (an error of the program).
     """
 
-    columns: Mapping[str, np.ndarray]
+    columns: Mapping[str, Any]
 
     def __post_init__(self) -> None:
         if set(self.columns) != set(COLUMNS):
@@ -76,12 +76,13 @@ class Records:
         return len(self.columns["record_id"])
 
     def __getitem__(self, name: str) -> np.ndarray:
-        return self.columns[name]
+        column: np.ndarray = self.columns[name]
+        return column
 
     @classmethod
     def empty(cls) -> Records:
         """No records."""
-        return cls({name: [] for name in COLUMNS})  # type: ignore[misc]  # lists become arrays
+        return cls({name: [] for name in COLUMNS})
 
     @classmethod
     def concat(cls, parts: Sequence[Records]) -> Records:
@@ -110,7 +111,7 @@ class Records:
 
     def changed(self, **columns: object) -> Records:
         """The same records with other values in the named columns."""
-        return Records({**self.columns, **columns})  # type: ignore[dict-item]  # lists become arrays
+        return Records({**self.columns, **columns})
 
     def counts(self) -> dict[str, int]:
         """How many records have each outcome."""
@@ -128,26 +129,29 @@ class Records:
         for values in self.tuples():
             yield dict(zip(COLUMNS, values, strict=True))
 
+    def rows_where(self, name: str, value: object) -> Iterator[dict[str, Any]]:
+        """The rows whose column ``name`` holds ``value``."""
+        return self.take(np.flatnonzero(self.columns[name] == value)).rows()
+
     def to_frame(self) -> pd.DataFrame:
         """A pandas DataFrame of nullable types: Int64, Float64 and string (times stay RFC 3339 text)."""
         import pandas as pd
 
         return pd.DataFrame({name: _series(column, name) for name, column in self.columns.items()})
 
-    def write(self, to: str | Path | IO[str]) -> None:
-        """Write all records to a file, whole or not at all, or as JSON lines to ``-`` (stdout) or an open stream.
+    def write(self, to: str | Path | IO[str], form: Literal["json", "csv"] = "json") -> None:
+        """Write all records to a file, whole or not at all, or to ``-`` (stdout) or an open stream.
 
-        The suffix says the format: .jsonl, .csv or .parquet.
+        A file's suffix says its format: .jsonl, .csv or .parquet. For a stream ``form`` does: JSON lines or CSV.
 
         Raises:
             OutputError: unknown suffix, missing folder, no permission, full disk, a reader that went away.
         """
-        if not isinstance(to, str | Path):
-            _to_stream(json_lines(self.columns, INTEGERS), to, "the stream")
-        elif str(to) == "-":
-            _to_stream(json_lines(self.columns, INTEGERS), sys.stdout, "stdout")
-        else:
+        if isinstance(to, str | Path) and str(to) != "-":
             self._to_file(to)
+            return
+        stream, place = (sys.stdout, "stdout") if isinstance(to, str | Path) else (to, "the stream")
+        _to_stream((csv_lines if form == "csv" else json_lines)(self.columns, INTEGERS), stream, place)
 
     def _to_file(self, path: str | Path) -> None:
         suffix = check_suffix(path)
@@ -176,12 +180,11 @@ def check_suffix(path: str | Path) -> str:
 def record_ids(
     batch_fingerprint: str,
     rules_fingerprint: str,
+    rule: Sequence[Any] | np.ndarray,
+    column: Sequence[Any] | np.ndarray,
+    series: Sequence[Any] | np.ndarray,
+    lag: Sequence[Any] | np.ndarray,
     baseline_id: str | None,
-    *,
-    rule: Sequence[str] | np.ndarray,
-    column: Sequence[str | None] | np.ndarray,
-    series: Sequence[str | None] | np.ndarray,
-    lag: Sequence[float | None] | np.ndarray,
 ) -> np.ndarray:
     """Stable ids: 32 hex digits of BLAKE2b over everything that tells one record from another; NaN is no lag.
 
@@ -237,7 +240,9 @@ def utc_text(nanoseconds: np.ndarray | int) -> np.ndarray:
 
 
 def _is_many(column: object) -> bool:
-    return isinstance(column, Sequence | np.ndarray) and not isinstance(column, str | bytes) and np.ndim(column) > 0
+    if isinstance(column, np.ndarray):
+        return column.ndim > 0
+    return isinstance(column, Sequence) and not isinstance(column, str | bytes)
 
 
 def _is_constant(column: np.ndarray) -> bool:
@@ -323,7 +328,7 @@ def _series(column: np.ndarray, name: str) -> Any:
     return pd.arrays.FloatingArray(np.where(null, 0.0, column), null)
 
 
-def _to_stream(blocks: Iterator[str], stream: IO[str] | TextIO, place: str) -> None:
+def _to_stream(blocks: Iterator[str], stream: IO[str], place: str) -> None:
     """UTF-8 whatever the terminal's own encoding is."""
     binary = getattr(stream, "buffer", None)
     try:

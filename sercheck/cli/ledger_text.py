@@ -1,0 +1,93 @@
+"""Batches and records as pages for people; depends on ``table`` and ``say``."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from typing import TYPE_CHECKING, Any
+
+from sercheck.cli.say import folded, plain
+from sercheck.cli.table import Head, number, table
+
+if TYPE_CHECKING:
+    from sercheck.record import Records
+    from sercheck.store.rows import JudgedBatch, Judgement
+
+TEXT_LIMIT = 50
+"""Lines of a list shown to people when they name no number (about a screen)."""
+LABEL = 17
+"""Width of the names on a page: the longest, ``batch_fingerprint``."""
+REASON = 2_000
+"""Letters of one fact shown to people."""
+
+
+def batch_table(found: Iterable[JudgedBatch]) -> str:
+    """One line a batch."""
+    heads = (
+        Head("batch", least=16), Head("feed", least=8), Head("newest row"), Head("decision"), Head("pass", right=True),
+        Head("fail", right=True), Head("undecided", right=True), Head("rows", right=True), Head("series", right=True),
+    )  # fmt: skip
+    return table(heads, [_batch_line(each) for each in found])
+
+
+def _batch_line(each: JudgedBatch) -> list[object]:
+    batch, last = each.batch, each.last
+    counts = [last.counts[outcome] for outcome in ("pass", "fail", "undecided")]
+    return [batch.batch_id, batch.feed, batch.last_stamp, last.decision, *counts, batch.rows, batch.series]
+
+
+def record_table(found: Records) -> str:
+    """One line a record, without what only ``show`` has room for."""
+    heads = (
+        Head("outcome"), Head("rule", least=12), Head("column", least=6), Head("series", least=6),
+        Head("lag", right=True), Head("observed", right=True), Head("limit", right=True), Head("p", right=True),
+        Head("record"), Head("batch", least=8),
+    )  # fmt: skip
+    return table(heads, [_record_line(row) for row in found.rows()])
+
+
+def _record_line(row: dict[str, Any]) -> list[object]:
+    numbers = [number(row[name]) for name in ("observed", "limit", "p_value")]
+    names = [row[name] for name in ("outcome", "rule", "column", "series", "lag")]
+    return [*names, *numbers, str(row["record_id"])[:8], row["batch_id"]]
+
+
+def batch_page(each: JudgedBatch, found: Records) -> str:
+    """Everything about one batch; ``found`` are the records that failed or were undecided, as many as there is room."""
+    batch = each.batch
+    stretch = f", {batch.first_stamp} to {batch.last_stamp}" if batch.first_stamp else ""
+    lines = [
+        _fact("batch", batch.batch_id),
+        _fact("feed", batch.feed),
+        _fact("rows", f"{batch.rows} of {batch.series} series{stretch}"),
+        _fact("fingerprint", batch.fingerprint),
+        *(_fact("received", path) for path in batch.received),
+        *(line for judgement in each.judgements for line in _judgement(judgement)),
+    ]
+    if len(found):
+        lines += ["", record_table(found)]
+    counts = [each_judged.counts for each_judged in each.judgements]
+    more = sum(count["fail"] + count["undecided"] for count in counts) - len(found)
+    if more > 0:
+        lines.append(f"and {more} more: sercheck ledger records --batch {batch.batch_id} --outcome fail")
+    return "\n".join(lines)
+
+
+def _judgement(judgement: Judgement) -> list[str]:
+    counts = judgement.counts
+    return [
+        "",
+        _fact("decision", f"{judgement.decision}, judged at {judgement.judged_at}"),
+        _fact("records", f"{counts['pass']} passed, {counts['fail']} failed, {counts['undecided']} undecided"),
+        _fact("rules", judgement.rules_fingerprint),
+        _fact("baseline", judgement.baseline_id or "none"),
+        _fact("sercheck", judgement.sercheck_version),
+    ]
+
+
+def record_page(row: dict[str, Any]) -> str:
+    """All that a record says; what is null is left out."""
+    return "\n".join(_fact(name, str(value)) for name, value in row.items() if value is not None)
+
+
+def _fact(name: str, value: str) -> str:
+    return folded(plain(value, REASON), f"{name:<{LABEL}}  ", " " * (LABEL + 2))

@@ -1,0 +1,295 @@
+"""The ledger: every batch, what was decided about it and its records; depends on ``record`` and its own folder.
+
+A judgement with its records is one transaction: there is all of it or nothing, whenever the process dies. Ids come
+from content, so storing the same judgement again changes nothing and gives what was stored first, and of two processes
+that judge the same batch at once one decides.
+"""
+
+from __future__ import annotations
+
+import json
+from dataclasses import fields, replace
+from datetime import UTC, datetime
+from itertools import count, islice
+from types import TracebackType
+from typing import TYPE_CHECKING, Any, Self
+
+from sercheck.errors import StoreError, UsageError
+from sercheck.record import COLUMNS, INTEGERS, NUMBERS, Records, storable
+from sercheck.store.database import ConflictError, Database, ledger_url
+from sercheck.store.migrations import migrate
+from sercheck.store.queries import COUNT_OF, batches_where, begins_with, judgements_of, records_where
+from sercheck.store.rows import BatchRow, Filters, JudgedBatch, Judgement, JudgementRow, judgement_id
+from sercheck.store.tables import BATCH_COLUMNS, RECORD_COLUMNS, tables
+
+if TYPE_CHECKING:
+    from sqlalchemy import Connection, Result, RowMapping
+
+BLOCK = 5_000
+"""Records sent to or fetched from the database at a time (a few megabytes)."""
+ASKED = 500
+"""Ids asked for in one query (databases allow 999 parameters and more)."""
+_REPEATING = frozenset(COLUMNS) - INTEGERS - NUMBERS - {"record_id"}
+SHORTEST_PREFIX = 4
+"""Letters of an id that a person must type at least."""
+
+
+class UnknownIdError(UsageError):
+    """No batch or record is called so."""
+
+
+class Ledger:
+    """The ledger of one store; a context manager. Nothing is made or opened before it is needed.
+
+    Looking things up where no file of a ledger is finds nothing and makes nothing. Every method raises ``StoreError``
+    when the database cannot be read or written.
+    """
+
+    def __init__(self, database: Database) -> None:
+        self._database = database
+        self._ready = False
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        self.close()
+
+    @property
+    def place(self) -> str:
+        """Where the ledger lies, without passwords."""
+        return self._database.place
+
+    def close(self) -> None:
+        """Let go of the database."""
+        self._database.close()
+
+    def prepare(self) -> None:
+        """Make the ledger if there is none and bring it up to date; ``add`` does so by itself.
+
+        Call it before long work, to learn of an unusable store first.
+        """
+        if not self._ready:
+            self._database.create()
+            migrate(self._database)
+            self._ready = True
+
+    def find(self, batch_id: str, rules_fingerprint: str, baseline_id: str | None) -> Judgement | None:
+        """The judgement of this batch by these rules against this baseline, if there is one."""
+        if not self._there():
+            return None
+        with self._database.reading() as connection:
+            return _find(connection, judgement_id(batch_id, rules_fingerprint, baseline_id))
+
+    def add(self, batch: BatchRow, judgement: JudgementRow, records: Records) -> Judgement:
+        """Store a judgement with its batch and records, all or nothing, and give it as stored.
+
+        The same judgement stored before, by this or another process, is left alone and returned: look at its decision.
+
+        Raises:
+            StoreError: the database fails; another batch has this id; two records have one id.
+            ValueError: batch, judgement and records are not of one batch (an error of the program).
+        """
+        others = set(records["batch_id"].tolist()) | {judgement.batch_id}
+        if others != {batch.batch_id}:
+            raise ValueError(f"batch {batch.batch_id} got a judgement or records of {others - {batch.batch_id}}")
+        self.prepare()
+        try:
+            return self._add(batch, judgement, records)
+        except ConflictError:  # another process stored the same batch meanwhile: now its rows are seen
+            try:
+                return self._add(batch, judgement, records)
+            except ConflictError as conflict:
+                raise StoreError(
+                    self.place, f"two records of batch {batch.batch_id} have one id; nothing was stored",
+                    "one id for one rule, column, series and lag", "Please report it.",
+                ) from conflict  # fmt: skip
+
+    def _add(self, batch: BatchRow, judgement: JudgementRow, records: Records) -> Judgement:
+        with self._database.writing() as connection:
+            stored = _find(connection, judgement.judgement_id)
+            if stored is None:
+                _put_batch(connection, batch, self.place)
+                stored = _put_judgement(connection, judgement, records)
+                _put_records(connection, records, judgement.judgement_id)
+        return stored
+
+    def records(self, wanted: str | Filters) -> Records:
+        """The records of a batch (its whole id), or those that the filters let through; the newest batch first."""
+        filters = Filters(batch_id=wanted) if isinstance(wanted, str) else wanted
+        if not self._there():
+            return Records.empty()
+        with self._database.reading() as connection:
+            return _gathered(connection.execute(records_where(filters)))
+
+    def batches(self, wanted: Filters | None = None) -> tuple[JudgedBatch, ...]:
+        """The batches that the filters let through, the newest first.
+
+        Decision and outcome are asked of the judgement stored last.
+        """
+        if not self._there():
+            return ()
+        with self._database.reading() as connection:
+            ids = list(connection.execute(batches_where(wanted or Filters())).scalars())
+            found = _judged(connection, ids)
+        return tuple(found[batch_id] for batch_id in dict.fromkeys(ids))
+
+    def batch(self, batch_id: str) -> JudgedBatch:
+        """The batch whose id is, or alone begins with, ``batch_id``.
+
+        Raises:
+            UnknownIdError: no batch is called so.
+            UsageError: several are, or too few letters were given.
+        """
+        self._must_be_there(batch_id, "batch")
+        with self._database.reading() as connection:
+            whole = _the_one(connection, "batch", batch_id)
+            return _judged(connection, [whole])[whole]
+
+    def record(self, record_id: str) -> Records:
+        """The one record whose id is, or alone begins with, ``record_id``.
+
+        Raises:
+            UnknownIdError: no record is called so.
+            UsageError: several are, or too few letters were given.
+        """
+        from sqlalchemy import select
+
+        self._must_be_there(record_id, "record")
+        with self._database.reading() as connection:
+            whole = _the_one(connection, "record", record_id)
+            columns = [tables().records.c[name] for name in COLUMNS]
+            return _gathered(connection.execute(select(*columns).where(columns[0] == whole)))
+
+    def _there(self) -> bool:
+        """A ledger exists; it is brought up to date at the first look."""
+        if not self._database.exists:
+            return False
+        self.prepare()
+        return True
+
+    def _must_be_there(self, name: str, kind: str) -> None:
+        if not self._there():
+            raise _unknown(name, kind)
+
+
+def open_ledger(store: str | None = None, url: str | None = None) -> Ledger:
+    """The ledger at ``url`` (any SQLAlchemy URL), else in the folder ``store`` (which may also be a URL).
+
+    What is not given comes from ``SERCHECK_LEDGER`` (a URL) and ``SERCHECK_STORE`` (a folder, default ``.sercheck``).
+
+    Raises:
+        StoreError: the URL cannot be read.
+    """
+    return Ledger(Database(*ledger_url(store, url)))
+
+
+def _find(connection: Connection, sought: str) -> Judgement | None:
+    from sqlalchemy import select
+
+    judgements = tables().judgements
+    row = connection.execute(select(*judgements.c).where(judgements.c.judgement_id == sought)).mappings().first()
+    return None if row is None else _judgement(row)
+
+
+def _put_batch(connection: Connection, batch: BatchRow, place: str) -> None:
+    """A new batch, or one more set of files that a known one was read from."""
+    from sqlalchemy import insert, select, update
+
+    batches = tables().batches
+    received = [storable(path) for path in batch.received]
+    row = connection.execute(select(*batches.c).where(batches.c.batch_id == batch.batch_id)).mappings().first()
+    if row is None:
+        values = {name: getattr(batch, name) for name in BATCH_COLUMNS}
+        values |= {"feed": storable(batch.feed), "received": json.dumps(received, ensure_ascii=False)}
+        connection.execute(insert(batches).values(values))
+        return
+    if row["fingerprint"] != batch.fingerprint:
+        raise StoreError(place, f"batch {batch.batch_id} is there with other content", "one id for one content")
+    known = json.loads(row["received"])
+    if not set(received) <= set(known):
+        merged = json.dumps(list(dict.fromkeys([*known, *received])), ensure_ascii=False)
+        connection.execute(update(batches).where(batches.c.batch_id == batch.batch_id).values(received=merged))
+
+
+def _put_judgement(connection: Connection, judgement: JudgementRow, records: Records) -> Judgement:
+    from sqlalchemy import insert
+
+    given = {each.name: getattr(judgement, each.name) for each in fields(JudgementRow)}
+    given["rules"] = storable(judgement.rules)
+    now = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%S.%fZ")
+    stored = Judgement(**given, stored_at=now, counts=records.counts())
+    counted = {COUNT_OF[outcome]: number for outcome, number in stored.counts.items()}
+    values = {"judgement_id": judgement.judgement_id, **given, "stored_at": now, **counted}
+    connection.execute(insert(tables().judgements).values(values))
+    return stored
+
+
+def _put_records(connection: Connection, records: Records, sought: str) -> None:
+    from sqlalchemy import insert
+
+    statement = insert(tables().records)
+    text = str(statement.compile(dialect=connection.dialect))
+    rows = ((*values, sought, place) for values, place in zip(records.tuples(), count(), strict=False))
+    while block := list(islice(rows, BLOCK)):
+        if connection.dialect.positional:  # the driver takes our tuples as they are: half the time
+            connection.exec_driver_sql(text, block)
+        else:
+            connection.execute(statement, [dict(zip(RECORD_COLUMNS, row, strict=True)) for row in block])
+
+
+def _gathered(result: Result[Any]) -> Records:
+    """Rows to columns, block by block; equal texts are kept once, so that memory stays small."""
+    seen: dict[object, object] = {}
+    parts = []
+    while block := result.fetchmany(BLOCK):
+        columns = zip(*block, strict=True)
+        parts.append(Records({
+            name: [seen.setdefault(cell, cell) for cell in column] if name in _REPEATING else list(column)
+            for name, column in zip(COLUMNS, columns, strict=True)
+        }))  # fmt: skip
+    return Records.concat(parts)
+
+
+def _judged(connection: Connection, ids: list[str]) -> dict[str, JudgedBatch]:
+    found: dict[str, JudgedBatch] = {}
+    for first in range(0, len(ids), ASKED):
+        for row in connection.execute(judgements_of(ids[first : first + ASKED])).mappings():
+            before = found.get(row["batch_id"]) or JudgedBatch(_batch(row), ())
+            found[row["batch_id"]] = replace(before, judgements=(*before.judgements, _judgement(row)))
+    return found
+
+
+def _the_one(connection: Connection, kind: str, start: str) -> str:
+    from sqlalchemy import select
+
+    table = tables().batches if kind == "batch" else tables().records
+    column = table.c[f"{kind}_id"]
+    if connection.execute(select(column).where(column == start)).first():
+        return start
+    if len(start) < SHORTEST_PREFIX:
+        raise UsageError(f"{kind} {start!r}", "too short to look for", f"{SHORTEST_PREFIX} letters of the id or more")
+    ids = list(connection.execute(select(column).where(begins_with(column, start)).order_by(column).limit(6)).scalars())
+    if not ids:
+        raise _unknown(start, kind)
+    if len(ids) > 1:
+        some = ", ".join(ids[:5]) + (" and more" if len(ids) > 5 else "")
+        raise UsageError(f"{kind} {start!r}", f"several ids begin so: {some}", "more letters of one of them")
+    return str(ids[0])
+
+
+def _unknown(name: str, kind: str) -> UnknownIdError:
+    todo = "`sercheck ledger batches` lists them." if kind == "batch" else "`sercheck ledger records` lists them."
+    return UnknownIdError(f"{kind} {name!r}", "not in the ledger", f"the id of a {kind}, or its beginning", todo)
+
+
+def _batch(row: RowMapping) -> BatchRow:
+    values = {name: row[f"of_batch_{name}"] for name in BATCH_COLUMNS}
+    return BatchRow(**{**values, "received": tuple(json.loads(values["received"]))})
+
+
+def _judgement(row: RowMapping) -> Judgement:
+    values = {each.name: row[each.name] for each in fields(Judgement) if each.name != "counts"}
+    return Judgement(**values, counts={outcome: row[column] for outcome, column in COUNT_OF.items()})

@@ -1,0 +1,141 @@
+"""How a ledger's tables come about: named steps, each in one transaction with the record of it; depends on ``errors``.
+
+A step never changes once released: what it makes is written out here and shares nothing with today's queries.
+A new step goes to the end of ``MIGRATIONS``.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from datetime import UTC, datetime
+from typing import TYPE_CHECKING
+
+from sercheck.errors import StoreError
+
+if TYPE_CHECKING:
+    from sqlalchemy import Connection
+
+    from sercheck.store.database import Database
+
+
+@dataclass(frozen=True)
+class Migration:
+    """One step: its name, which is recorded, and what it does."""
+
+    name: str
+    apply: Callable[[Connection], None]
+
+
+def _first_tables(connection: Connection) -> None:
+    from sqlalchemy import BigInteger, Column, Double, ForeignKey, Index, Integer, MetaData, String, Table, Text
+
+    meta = MetaData()
+    Table(
+        "batches",
+        meta,
+        Column("batch_id", String(255), primary_key=True),
+        *(Column(name, Text, nullable=False) for name in ("feed", "fingerprint")),
+        *(Column(name, Text) for name in ("first_stamp", "last_stamp")),
+        *(Column(name, BigInteger, nullable=False) for name in ("rows", "series")),
+        Column("received", Text, nullable=False),
+    )
+    Table(
+        "judgements",
+        meta,
+        Column("judgement_id", String(64), primary_key=True),
+        Column("batch_id", String(255), ForeignKey("batches.batch_id"), nullable=False, index=True),
+        Column("rules_fingerprint", Text, nullable=False),
+        Column("baseline_id", Text),
+        *(Column(name, Text, nullable=False) for name in ("decision", "judged_at", "stored_at")),
+        *(Column(name, Integer, nullable=False) for name in ("passed", "failed", "undecided")),
+        *(Column(name, Text, nullable=False) for name in ("rules", "sercheck_version")),
+    )
+    texts = (
+        "feed", "batch_id", "batch_fingerprint", "judged_at", "rule", "measure", "column", "series", "season", "after",
+        "window_start", "window_end", "method", "assumes", "outcome", "reason", "action", "likely_cause",
+        "rules_fingerprint", "baseline_id", "sercheck_version",
+    )  # fmt: skip
+    numbers = (
+        "n_eff", "observed", "bound", "standard_error", "limit", "naive_limit", "detectable", "p_value", "false_alarm",
+        "false_alarm_used", "cause_support",
+    )  # fmt: skip
+    Table(
+        "records",
+        meta,
+        Column("record_id", String(64), primary_key=True),
+        Column("judgement_id", String(64), ForeignKey("judgements.judgement_id"), nullable=False),
+        Column("place", BigInteger, nullable=False),
+        *(Column(name, Text) for name in texts),
+        *(Column(name, BigInteger) for name in ("lag", "n", "n_missing")),
+        *(Column(name, Double) for name in numbers),
+        Index("records_of_judgement", "judgement_id", "place"),
+    )
+    meta.create_all(connection, checkfirst=False)
+
+
+MIGRATIONS: tuple[Migration, ...] = (Migration("001 batches, judgements and records", _first_tables),)
+
+
+def migrate(database: Database) -> None:
+    """Bring the tables up to date; one look when they are already.
+
+    Raises:
+        StoreError: a newer sercheck has changed the ledger, or it cannot be written.
+    """
+    for step in _missing(database, _recorded(database)):
+        try:
+            _take(database, step)
+        except StoreError:
+            if step in _missing(database, _recorded(database)):
+                raise  # else another process took the step meanwhile
+
+
+def _take(database: Database, step: Migration) -> None:
+    with database.writing() as connection:
+        recorded = _read(connection) if database.has_table(connection, "migrations") else None
+        if step not in _missing(database, recorded):
+            return
+        if recorded is None:
+            _make_list(connection)
+        step.apply(connection)
+        _record(connection, step)
+
+
+def _missing(database: Database, recorded: list[str] | None) -> tuple[Migration, ...]:
+    known = [step.name for step in MIGRATIONS]
+    have = recorded or []
+    if have != known[: len(have)]:
+        strange = next(name for name in have if name not in known[: len(have)])
+        raise StoreError(
+            database.place, f"the ledger was changed by a newer sercheck (step {strange!r} is not known here)",
+            f"a ledger no newer than step {known[-1]!r}", "Install the newer sercheck.",
+        )  # fmt: skip
+    return MIGRATIONS[len(have) :]
+
+
+def _recorded(database: Database) -> list[str] | None:
+    with database.reading() as connection:
+        return _read(connection) if database.has_table(connection, "migrations") else None
+
+
+def _read(connection: Connection) -> list[str]:
+    from sqlalchemy import Text, column, select, table
+
+    name = column("name", Text())
+    return list(connection.execute(select(name).select_from(table("migrations", name)).order_by(name)).scalars())
+
+
+def _make_list(connection: Connection) -> None:
+    from sqlalchemy import Column, MetaData, String, Table, Text
+
+    steps = Table("migrations", MetaData(), Column("name", String(255), primary_key=True), Column("applied_at", Text))
+    steps.create(connection, checkfirst=False)
+
+
+def _record(connection: Connection, step: Migration) -> None:
+    from sqlalchemy import column, insert, table
+
+    steps = table("migrations", column("name"), column("applied_at"))
+    now = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ")
+    connection.execute(insert(steps).values(name=step.name, applied_at=now))

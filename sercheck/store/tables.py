@@ -1,0 +1,48 @@
+"""Names and columns of the ledger's tables as they stand after all migrations; depends on ``record``.
+
+Only what queries need: the tables are made, with their types and keys, by the migrations.
+"""
+
+from __future__ import annotations
+
+from functools import cache
+from typing import TYPE_CHECKING, NamedTuple
+
+from sercheck.record import COLUMNS, INTEGERS, NUMBERS
+
+if TYPE_CHECKING:
+    from sqlalchemy import TableClause
+
+BATCH_COLUMNS = ("batch_id", "feed", "fingerprint", "first_stamp", "last_stamp", "rows", "series", "received")
+JUDGEMENT_COLUMNS = (
+    "judgement_id", "batch_id", "rules_fingerprint", "baseline_id", "decision", "judged_at", "stored_at",
+    "passed", "failed", "undecided", "rules", "sercheck_version",
+)  # fmt: skip
+RECORD_COLUMNS = (*COLUMNS, "judgement_id", "place")
+"""``place`` is the position of a record in its judgement."""
+
+
+class Tables(NamedTuple):
+    """The tables that queries name."""
+
+    batches: TableClause
+    judgements: TableClause
+    records: TableClause
+
+
+@cache
+def tables() -> Tables:
+    """Build them once, at the first use of a ledger."""
+    from sqlalchemy import BigInteger, Double, Text, column, table
+
+    def kind(name: str) -> BigInteger | Double[float] | Text:
+        if name in NUMBERS:
+            return Double()
+        return BigInteger() if name in INTEGERS or name in {"rows", "series", "place"} else Text()
+
+    texts = {"series"}  # a number of series in batches, a key in records
+    return Tables(
+        table("batches", *(column(name, kind(name)) for name in BATCH_COLUMNS)),
+        table("judgements", *(column(name) for name in JUDGEMENT_COLUMNS)),
+        table("records", *(column(name, Text() if name in texts else kind(name)) for name in RECORD_COLUMNS)),
+    )
