@@ -1,0 +1,320 @@
+"""One number a batch for each thing that may go wrong, over many batches and series; numpy, scipy.special, ``serial``.
+
+Every function gives shape (S, B): the statistic of each batch, NaN where too few of its values are there. Batches lie
+one after another along time.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from scipy import special
+
+from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.autoregression import Autoregression, step_up
+
+FLOOR = 0.01
+"""Added to a variance of scores (which is about 1) before its log is taken: a dead batch has a log too."""
+
+FARTHEST = 8.0
+"""Scores of amplitude and phase are clipped here: beyond, the tail of t has no digits left."""
+
+OBSERVED = 0.5
+"""Share of a batch's values that must be there for it to have a statistic (a plain half)."""
+
+EXISTING = 0.75
+"""Share of innovations that must exist; else the model's order is halved, since each gap costs order + 1 of them."""
+
+
+def batches(x: Floats, n: int) -> Floats:
+    """View (S, B·n) as (S, B, n)."""
+    return x.reshape(len(x), x.shape[1] // n, n)
+
+
+def _mean(x: Floats) -> tuple[Floats, Ints]:
+    """Mean over the last axis of what is there (NaN where less than half is), and how much there is."""
+    seen = ~np.isnan(x)
+    count = seen.sum(axis=-1)
+    enough = count >= max(2.0, OBSERVED * x.shape[-1])
+    mean = np.where(seen, x, 0.0).sum(axis=-1) / np.maximum(count, 1)
+    return np.where(enough, mean, np.nan), count
+
+
+def level(z: Floats, n: int) -> Floats:
+    """Mean of the scores z(r), r the residuals of the profile."""
+    return _mean(batches(z, n))[0]
+
+
+def spread(z: Floats, n: int) -> Floats:
+    """Variance of the scores z(r), plus ``FLOOR``."""
+    cut = batches(z, n)
+    mean, count = _mean(cut)
+    square = np.where(np.isnan(cut), 0.0, (cut - mean[..., None]) ** 2).sum(axis=-1)
+    return np.asarray(square / np.maximum(count - 1, 1) + FLOOR)
+
+
+def power(z: Floats, n: int) -> Floats:
+    """Mean square of the scores z(e), e the innovations, plus ``FLOOR``."""
+    return _mean(batches(z, n) ** 2)[0] + FLOOR
+
+
+def difference_autocorrelation(y: Floats, n: int) -> Floats:
+    """Inverse hyperbolic tangent of the correlation of neighbouring first differences, Σ ab / Σ ½(a² + b²).
+
+    The season stays in: what smooths the noise smooths the season's corners too.
+    """
+    d = np.diff(batches(y, n), axis=-1)
+    a, b = d[..., :-1], d[..., 1:]
+    told = ~np.isnan(a) & ~np.isnan(b)
+    product = np.where(told, a * b, 0.0).sum(axis=-1)
+    size = np.where(told, a * a + b * b, 0.0).sum(axis=-1) / 2
+    enough = (told.sum(axis=-1) >= max(2.0, OBSERVED * (n - 2))) & (size > 0)
+    r = np.where(enough, product / np.where(size > 0, size, 1.0), np.nan)
+    return np.asarray(np.arctanh(np.clip(r, -1 + 1e-12, 1 - 1e-12)))
+
+
+@dataclass(frozen=True)
+class Fitted:
+    """A coefficient of a least-squares fit within each batch; every array has shape (S, B).
+
+    Attributes:
+        estimate: the coefficient.
+        error: its standard error by the batch's own residual variance.
+        df: degrees of freedom of that variance.
+        score: Φ⁻¹(F_t((estimate - usual)/error)), clipped: normal whatever the degrees of freedom.
+    """
+
+    estimate: Floats
+    error: Floats
+    df: Floats
+    score: Floats
+
+    def of_score(self, score: Floats, usual: float) -> Floats:
+        """The newest batch's estimate that would have this score, shape (S,): the way back to the unit."""
+        t = special.stdtrit(np.maximum(self.df[:, -1], 1.0), special.ndtr(np.clip(score, -FARTHEST, FARTHEST)))
+        return np.asarray(usual + t * self.error[:, -1])
+
+
+def amplitude(y: Floats, here: Floats, n: int) -> Fitted:
+    """Strength of the season in each batch, 1 being the profile's: filtered y on filtered [1, profile].
+
+    Args:
+        y: the series through the autoregressive filter, shape (S, B·n).
+        here: the profile through the same filter.
+        n: steps in one batch.
+    """
+    return _fit(batches(y, n), [batches(here, n)], 1.0)
+
+
+def slip(y: Floats, here: Floats, ahead: Floats, behind: Floats, n: int) -> Fitted:
+    """Steps by which each batch runs late: filtered y on [1, p, (p₊ + p₋)/2 - p, (p₋ - p₊)/2], the last coefficient.
+
+    The symmetric term takes up the noise of the profile; p₊ and p₋ are the profile one place ahead and behind.
+    """
+    p, plus, minus = batches(here, n), batches(ahead, n), batches(behind, n)
+    return _fit(batches(y, n), [p, (plus + minus) / 2 - p, (minus - plus) / 2], 0.0)
+
+
+def _fit(y: Floats, regressors: list[Floats], usual: float) -> Fitted:
+    """Least squares of each batch on [1, regressors]; the last coefficient against ``usual``."""
+    told = ~np.isnan(y)
+    for x in regressors:
+        told &= ~np.isnan(x)
+    count = told.sum(axis=-1)
+    df = count - 1 - len(regressors)
+
+    def about(x: Floats) -> Floats:
+        mean = np.where(told, x, 0.0).sum(axis=-1) / np.maximum(count, 1)
+        return np.where(told, x - mean[..., None], 0.0)
+
+    left = about(y)
+    basis = [about(x) for x in regressors]
+    # Gram-Schmidt, the wanted regressor last: its coefficient needs only what the others leave of it
+    scale = (basis[-1] ** 2).sum(axis=-1)
+    for k, x in enumerate(basis[:-1]):
+        square = (x**2).sum(axis=-1)
+        inverse = np.where(square > 0, 1 / np.where(square > 0, square, 1.0), 0.0)
+        left = left - (np.einsum("...t,...t->...", left, x) * inverse)[..., None] * x
+        for j in range(k + 1, len(basis)):
+            basis[j] = basis[j] - (np.einsum("...t,...t->...", basis[j], x) * inverse)[..., None] * x
+    wanted = basis[-1]
+    square = (wanted**2).sum(axis=-1)
+    able = (count >= OBSERVED * y.shape[-1]) & (df >= 3) & (square > 1e-10 * scale) & (scale > 0)
+    square = np.where(able, square, 1.0)
+    estimate = np.einsum("...t,...t->...", left, wanted) / square
+    rest = ((left - estimate[..., None] * wanted) ** 2).sum(axis=-1)
+    error = np.sqrt(rest / np.maximum(df, 1) / square)
+    able &= error > 0
+    t = (estimate - usual) / np.where(able, error, 1.0)
+    # by the smaller tail, so that the upper one keeps its digits
+    tail = special.stdtr(np.maximum(df, 1).astype(np.float64), -np.abs(t))
+    score = np.clip(-np.sign(t) * special.ndtri(np.maximum(tail, 1e-300)), -FARTHEST, FARTHEST)
+    blank = np.where(able, 0.0, np.nan)
+    return Fitted(estimate + blank, error + blank, df.astype(np.float64), score + blank)
+
+
+def through_filter(x: Floats, model: Autoregression) -> Floats:
+    """x_t - Σ a_j x_{t-j}, shape (S, T); NaN where a value that is needed is missing or before the start."""
+    out = x.copy()
+    for j in range(1, int(model.order.max(initial=0)) + 1):
+        uses = j <= model.order
+        shifted = np.full_like(x, np.nan)
+        shifted[:, j:] = x[:, :-j]
+        out = np.where(uses[:, None], out - model.coefficients[:, j - 1 : j] * shifted, out)
+    return out
+
+
+def existing(model: Autoregression, x: Floats, wanted: Bools) -> Autoregression:
+    """Halve each model's order until ``EXISTING`` of the innovations at ``wanted`` steps of ``x`` exist.
+
+    The shorter model of Burg's recursion has the same first reflection coefficients.
+
+    Args:
+        model: fitted models.
+        x: what the model filters, shape (S, T).
+        wanted: steps that count (not closed, not held), shape (S, T).
+    """
+    order = model.order.copy()
+    missing = np.cumsum(np.isnan(x), axis=1)
+    due = np.maximum((wanted & ~np.isnan(x)).sum(axis=1), 1)
+    steps = np.arange(x.shape[1])
+    while True:
+        start = steps - order[:, None] - 1
+        before = np.where(start >= 0, np.take_along_axis(missing, np.maximum(start, 0), axis=1), 0)
+        whole = (missing == before) & (steps >= order[:, None]) & wanted
+        poor = (whole.sum(axis=1) < EXISTING * due) & (order > 0)
+        if not poor.any():
+            break
+        order = np.where(poor, order // 2, order)
+    kept = np.arange(1, model.reflection.shape[1] + 1) <= order[:, None]
+    reflection = np.where(kept, model.reflection, 0.0)
+    return replace(model, order=order, reflection=reflection, coefficients=step_up(reflection))
+
+
+@dataclass(frozen=True)
+class Marks:
+    """Where a value equals an earlier one, counted in batches.
+
+    Attributes:
+        count: comparisons in each batch, shape (S, B).
+        equal: those that are equal, shape (S, B).
+        longest: longest run of equals within the newest batch, shape (S,).
+        starts: chance that an equal follows an unequal in history, shape (S,).
+        goes_on: chance that an equal follows an equal (or three of them, where that is larger), shape (S,).
+    """
+
+    count: Ints
+    equal: Ints
+    longest: Ints
+    starts: Floats
+    goes_on: Floats
+
+
+def equal_before(x: Floats, distance: int, n: int) -> Marks:
+    """Compare every value with the one ``distance`` steps earlier.
+
+    A commonest value that lies at the end of the range and makes up more than 5 % (zero at night) is not compared:
+    its repeats tell nothing.
+
+    Args:
+        x: values as delivered, shape (S, B·n + more); the batches are its end.
+        distance: steps back.
+        n: steps in one batch.
+    """
+    held = pinned(x)
+    x = np.where(x == held[:, None], np.nan, x)
+    size = x.shape[1] // n * n
+    now, then = x[:, -size:], np.full((len(x), size), np.nan)
+    if distance < x.shape[1]:
+        shifted = np.full_like(x, np.nan)
+        shifted[:, distance:] = x[:, :-distance]
+        then = shifted[:, -size:]
+    told = ~np.isnan(now) & ~np.isnan(then)
+    equal = told & (now == then)
+    past_told, past_equal = told[:, :-n], equal[:, :-n]
+    after = past_equal[:, :-1]
+    three = after[:, 2:] & after[:, 1:-1] & after[:, :-2]
+
+    def chance(given: Bools, result: Bools) -> Floats:
+        return np.asarray(((given & result).sum(axis=1) + 0.5) / (given.sum(axis=1) + 1.0))
+
+    pairs = past_told[:, 1:]
+    starts = chance(pairs & ~after, past_equal[:, 1:])
+    goes_on = np.maximum(
+        chance(pairs & after, past_equal[:, 1:]),
+        np.where(three.any(axis=1), chance(pairs[:, 2:] & three, past_equal[:, 3:]), 0.0),
+    )
+    count, hits = (batches(part.astype(np.float64), n).sum(axis=-1).astype(np.int64) for part in (told, equal))
+    return Marks(count, hits, longest_run(equal[:, -n:]), starts, goes_on)
+
+
+def longest_run(marks: Bools) -> Ints:
+    """Longest run of true in each row, shape (S,)."""
+    place = np.arange(1, marks.shape[1] + 1)
+    last_gap = np.maximum.accumulate(np.where(marks, 0, place), axis=1)
+    return np.asarray((place - last_gap).max(axis=1, initial=0), dtype=np.int64)
+
+
+def pinned(x: Floats) -> Floats:
+    """The commonest value where it ends the range and makes up more than 5 %, NaN elsewhere; shape (S,)."""
+    count = np.maximum((~np.isnan(x)).sum(axis=1), 1)
+    result = np.full(len(x), np.nan)
+    if not x.shape[1]:
+        return result
+    ordered = np.sort(x, axis=1)
+    place = np.arange(x.shape[1])
+    new = np.ones(ordered.shape, dtype=bool)
+    new[:, 1:] = ordered[:, 1:] != ordered[:, :-1]
+    first = np.maximum.accumulate(np.where(new, place, 0), axis=1)
+    length = np.where(np.isnan(ordered), 0, place - first + 1)
+    at = length.argmax(axis=1)
+    most = length.max(axis=1)
+    value = np.take_along_axis(ordered, at[:, None], axis=1)[:, 0]
+    lowest, highest = ordered[:, 0], np.take_along_axis(ordered, (count - 1)[:, None], axis=1)[:, 0]
+    ends = (value == lowest) | (value == highest)
+    varies = lowest < highest
+    return np.where(ends & varies & (most > 0.05 * count), value, result)
+
+
+def share_tails(marks: Marks) -> Floats:
+    """P(at least k equals in the newest batch) for k = 0 .. n, shape (S, n + 1): as clustered as history is.
+
+    π = (K + ½)/(N + 1) of history; τ = max(1, variance of the batches' counts over the binomial's), 4 with at most 20
+    batches; M = min(N + 1, max(½, (n - τ)/(τ - 1))), N + 1 at τ = 1 (what history's length leaves unknown of π);
+    X ~ BetaBin(n, πM, (1 - π)M).
+    """
+    past_count, past_equal = marks.count[:, :-1], marks.equal[:, :-1]
+    n, total, equal = marks.count[:, -1], past_count.sum(axis=1), past_equal.sum(axis=1)
+    pi = (equal + 0.5) / (total + 1.0)
+    whole = past_count > 0
+    expected = past_count * pi[:, None]
+    excess = np.where(whole, past_equal - expected, 0.0) ** 2
+    binomial = np.where(total > 0, (expected * (1 - pi[:, None])).sum(axis=1), 1.0)
+    tau = np.where(whole.sum(axis=1) > 20, np.maximum(1.0, excess.sum(axis=1) / binomial), 4.0)
+    most = total + 1.0
+    size = np.where(tau > 1, np.maximum(0.5, (n - tau) / np.where(tau > 1, tau - 1, 1.0)), most)
+    size = np.minimum(most, size)
+    return beta_binomial_tails(n, pi * size, (1 - pi) * size)
+
+
+def beta_binomial_tails(n: Ints, a: Floats, b: Floats) -> Floats:
+    """P(X ≥ k) of the beta-binomial laws, k = 0 .. max n; n, a, b of shape (S,): sums of the upper terms."""
+    j = np.arange(int(n.max(initial=0)) + 1)
+    inside = j <= n[:, None]
+    rest = np.where(inside, n[:, None] - j, 0)
+    log_p = (
+        special.gammaln(n[:, None] + 1.0) - special.gammaln(j + 1.0) - special.gammaln(rest + 1.0)
+        + special.betaln(j + a[:, None], rest + b[:, None]) - special.betaln(a, b)[:, None]
+    )  # fmt: skip
+    p = np.where(inside, np.exp(log_p), 0.0)
+    tails = np.minimum(1.0, np.cumsum(p[:, ::-1], axis=1)[:, ::-1])
+    tails[:, 0] = 1.0
+    return tails
+
+
+def run_tails(marks: Marks, longest: int) -> Floats:
+    """P(a run of at least r equals in the newest batch) = 1 - exp(-n p01 p11^(r-1)), r = 0 .. longest."""
+    r = np.arange(longest + 1)
+    rate = marks.count[:, -1:] * marks.starts[:, None] * marks.goes_on[:, None] ** np.maximum(r - 1, 0)
+    return np.where(r < 1, 1.0, -np.expm1(-rate))

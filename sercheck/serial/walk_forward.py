@@ -1,0 +1,211 @@
+"""A seasonal profile that learns as the feed goes on, and never from what it is held against; numpy and ``serial``."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from sercheck.serial.arrays import Bools, Floats, Ints
+
+GAINS = (0.0, 0.04, 0.1, 0.2)
+"""Smallest weights of a new cycle that are tried: none, and memories of about 25, 10 and 5 cycles."""
+
+CLIP = 4.0
+"""A deviation counts up to this many running medians (about 2.7 standard deviations of a normal law)."""
+
+CLIP_FROM = 5
+"""Deviations are clipped from the sixth cycle on: fewer have no usable median."""
+
+MEMORY = 13
+"""Cycles in the running median: a quarter of a year of weeks, two weeks of days; odd, so that the middle is a value."""
+
+FEWEST = 2
+"""Cycles that a phase must have been seen before its profile is used: one alone is an observation, not a profile."""
+
+DECILES = 10
+
+
+@dataclass(frozen=True)
+class Profile:
+    """What each step was expected to be before it came; every array has shape (S, T), NaN before it is known.
+
+    Attributes:
+        here: the profile at the step's own place in the cycle.
+        ahead: the profile one place later, as known at the same time.
+        behind: the profile one place earlier, as known at the same time.
+        gain: the smallest weight of a new cycle, shape (S,).
+    """
+
+    here: Floats
+    ahead: Floats
+    behind: Floats
+    gain: Floats
+
+    def last(self, steps: int) -> Profile:
+        """The last steps of it."""
+        return Profile(self.here[:, -steps:], self.ahead[:, -steps:], self.behind[:, -steps:], self.gain)
+
+
+@dataclass(frozen=True)
+class Cycles:
+    """Steps laid out in cycles.
+
+    Attributes:
+        step: the step that lies at each place of each cycle, shape (C, length); -1 where there is none.
+        place: cycle times length plus phase of each step, shape (T,).
+    """
+
+    step: Ints
+    place: Ints
+
+
+def cycles(phase: Ints, length: int) -> Cycles:
+    """Lay the steps out in cycles by their phase on the feed's wall clock.
+
+    A phase that comes twice (an autumn hour) shares its place, and the first one teaches; one that never comes (a
+    spring hour) leaves its place empty.
+    """
+    turn = np.diff(phase) % length
+    turn = np.where(turn > length // 2, turn - length, turn) if length > 2 else np.maximum(turn, 1)
+    place = int(phase[0]) + np.concatenate(([0], np.cumsum(turn)))
+    place -= place.min() // length * length
+    step = np.full((int(place.max()) // length + 1) * length, -1, dtype=np.int64)
+    step[place[::-1]] = np.arange(len(phase))[::-1]
+    return Cycles(step.reshape(-1, length), place)
+
+
+def walk_forward(
+    y: Floats, phase: Ints, length: int, delay: int, *, first: int, block: int, gain: Floats | None = None
+) -> Profile:
+    """Learn a profile cycle by cycle and give for every step what was known ``delay`` steps before it.
+
+    p ← p + max(1/(k+1), g) δ, where δ = y - p is the deviation of the (k+1)-th cycle seen at this phase, clipped at
+    four running medians of abs(δ) from the sixth cycle on: a running mean that never stops learning (g > 0) and that
+    one broken cycle cannot bend. The same delay everywhere makes the residuals of history scatter like those of a new
+    batch; residuals around a mean that holds their own cycle are too small by (1 + 1/C)/(1 - 1/C).
+
+    Args:
+        y: shape (S, T); NaN is missing and teaches nothing.
+        phase: place in the cycle of each step, shape (T,).
+        length: steps in one cycle.
+        delay: steps between a value and the first one whose profile may hold it (rounded up to whole cycles).
+        first: steps from the start among which the gain is chosen.
+        block: steps of one batch: the gain with the least squared error around each batch's mean is chosen, since a
+            level that wanders is no fault of the profile.
+        gain: the gain of each series, shape (S,), to skip the choice.
+    """
+    table = cycles(phase, length)
+    lag = max(1, -(-delay // length))
+    if gain is None:
+        gain = _choose(y[:, :first], cycles(phase[:first], length), lag, block)
+    known = _learn(y, table, lag, gain)
+    shape = (len(y), -1)
+    return Profile(
+        known.reshape(shape)[:, table.place],
+        np.roll(known, -1, axis=2).reshape(shape)[:, table.place],
+        np.roll(known, 1, axis=2).reshape(shape)[:, table.place],
+        gain,
+    )
+
+
+def _learn(y: Floats, table: Cycles, lag: int, gain: Floats) -> Floats:
+    """The profile known for each cycle, shape (S, C, length)."""
+    series, (count, length) = len(y), table.step.shape
+    known = np.full((series, count, length), np.nan)
+    p = np.zeros((series, length))
+    seen = np.zeros((series, length), dtype=np.int64)
+    recent = np.full((MEMORY, series, length), np.nan)
+    for c in range(count):
+        step = table.step[c]
+        value = np.where(step >= 0, y[:, step], np.nan)
+        deviation = value - p
+        told = ~np.isnan(deviation)
+        size = np.abs(deviation)
+        usual = middle(recent)
+        cap = CLIP * np.fmax(usual, middle(usual.T)[:, None])
+        clipped = np.where(seen >= CLIP_FROM, np.clip(deviation, -cap, cap), deviation)
+        weight = np.maximum(1.0 / (seen + 1), gain[:, None])
+        p = np.where(told, p + weight * np.where(told, clipped, 0.0), p)
+        seen += told
+        again = told & (seen > 1)  # the first value is its own profile and deviates from nothing
+        recent = np.where(again, np.concatenate((size[None], recent[:-1])), recent)
+        if c + lag < count:
+            known[:, c + lag] = np.where(seen >= FEWEST, p, np.nan)
+    return known
+
+
+def middle(x: Floats) -> Floats:
+    """Median along the first axis over what is not missing; NaN where all is."""
+    ordered = np.sort(x, axis=0)
+    count = (~np.isnan(x)).sum(axis=0)
+    low = np.take_along_axis(ordered, np.maximum(count - 1, 0)[None] // 2, axis=0)[0]
+    high = np.take_along_axis(ordered, np.minimum(count // 2, len(x) - 1)[None], axis=0)[0]
+    return np.asarray(np.where(count > 0, (low + high) / 2, np.nan))
+
+
+def around_blocks(x: Floats, block: int) -> Floats:
+    """Deviations from the mean of each block; the blocks end with the series, what is over at the start is cut."""
+    count = x.shape[1] // block
+    cut = x[:, x.shape[1] - count * block :].reshape(len(x), count, block)
+    seen = ~np.isnan(cut)
+    total = np.where(seen, cut, 0.0).sum(axis=2, keepdims=True)
+    mean = total / np.maximum(seen.sum(axis=2, keepdims=True), 1)
+    return np.asarray((cut - mean).reshape(len(x), -1))
+
+
+def _choose(y: Floats, table: Cycles, lag: int, block: int) -> Floats:
+    """The gain with the least squared error around the batches' own means; the first on ties."""
+    errors = []
+    for gain in GAINS:
+        known = _learn(y, table, lag, np.full(len(y), gain)).reshape(len(y), -1)[:, table.place]
+        errors.append(np.nansum(around_blocks(y - known, block) ** 2, axis=1))
+    return np.asarray(GAINS)[np.argmin(np.stack(errors), axis=0)]
+
+
+def on_scale(x: Floats, log: Floats) -> Floats:
+    """ln(1 + x/c) where ``log`` holds c, x itself where it is NaN; shapes (S, ...) and (S,)."""
+    c = log.reshape(-1, *([1] * (x.ndim - 1)))
+    with np.errstate(invalid="ignore"):
+        return np.where(np.isnan(c), x, np.log1p(np.maximum(x / c, 0.0)))
+
+
+def off_scale(y: Floats, log: Floats) -> Floats:
+    """The way back from ``on_scale``."""
+    c = log.reshape(-1, *([1] * (y.ndim - 1)))
+    with np.errstate(invalid="ignore", over="ignore"):
+        return np.where(np.isnan(c), y, c * np.expm1(y))
+
+
+def log_unit(x: Floats, profile: Floats) -> Floats:
+    """The c of ln(1 + x/c) where the scatter of a series grows with its profile, NaN where logs are no better; (S,).
+
+    Logs are the better scale when all values are at least 0, log mean abs(residual) against log profile over the
+    profile's deciles has a slope over one half (the slope of a Poisson count, 1 being that of a constant percentage),
+    and the profile spans more than a factor of three (else nothing is gained). c is the profile's mean in its lowest
+    decile that is not 0, so that zeros are near neighbours of what is usual there, whatever the unit: a share of a
+    road's time needs the same c as the same share in per cent.
+
+    Args:
+        x: shape (S, T), NaN is missing.
+        profile: the walk-forward profile of ``x``, shape (S, T).
+    """
+    residual = x - profile
+    told = ~np.isnan(residual)
+    rank = np.argsort(np.argsort(np.where(told, profile, np.inf), axis=1, kind="stable"), axis=1, kind="stable")
+    group = np.where(told, rank * DECILES // np.maximum(told.sum(axis=1, keepdims=True), 1), -1)
+    high, wide = np.full((2, len(x), DECILES), np.nan)
+    for k in range(DECILES):
+        inside = group == k
+        count = np.maximum(inside.sum(axis=1), 1)
+        high[:, k] = np.where(inside, profile, 0.0).sum(axis=1) / count
+        wide[:, k] = np.where(inside, np.abs(residual), 0.0).sum(axis=1) / count
+    usable = (high > 0) & (wide > 0)
+    a, b = (np.log(np.where(usable, part, 1.0)) for part in (high, wide))
+    count = np.maximum(usable.sum(axis=1, keepdims=True), 1)
+    da = np.where(usable, a - np.where(usable, a, 0.0).sum(axis=1, keepdims=True) / count, 0.0)
+    square = (da**2).sum(axis=1)
+    slope = (da * np.where(usable, b, 0.0)).sum(axis=1) / np.where(square > 0, square, np.inf)
+    never_negative = ~(x < 0).any(axis=1)
+    growing = never_negative & (slope > 0.5) & (high.max(axis=1) > 3 * high.min(axis=1))
+    return np.where(growing, np.where(high > 0, high, np.inf).min(axis=1), np.nan)
