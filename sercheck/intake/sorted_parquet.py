@@ -1,0 +1,213 @@
+"""Parquet whose row groups are sorted by key, read series by series with flat memory; depends on ``parquet``."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from functools import cached_property
+from itertools import pairwise
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from sercheck.intake.build import Chunk, to_rows
+from sercheck.intake.calendar import Cadence
+from sercheck.intake.layout import Layout
+from sercheck.intake.parquet import parquet_file, table_chunk
+from sercheck.intake.paths import told
+from sercheck.intake.rows import Rows
+from sercheck.intake.stamps import read_stamps, resolve
+from sercheck.intake.zone import NOT_A_STAMP
+from sercheck.serial.arrays import Ints
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+BLOCK_ROWS = 1_000_000
+"""Rows of a block, about (ours: some 30 MB of compact columns, and as long as the usual largest row group)."""
+
+
+@dataclass(frozen=True)
+class _Group:
+    """One row group: its file and number there, its rows, and the smallest and largest key in it."""
+
+    path: Path
+    number: int
+    rows: int
+    least: Any
+    most: Any
+
+
+class SortedParquet:
+    """Files that hold one sequence of series, in order of key."""
+
+    def __init__(self, groups: list[_Group], layout: Layout, cadence: Cadence, block_rows: int) -> None:
+        self.groups, self.layout, self.cadence, self.block_rows = groups, layout, cadence, block_rows
+
+    @classmethod
+    def recognise(
+        cls, paths: list[Path], layout: Layout, cadence: Cadence, block_rows: int = BLOCK_ROWS
+    ) -> SortedParquet | None:
+        """The files as a stream when they have more rows than one block and their statistics show them sorted.
+
+        Raises:
+            BatchError: a file is no Parquet or lacks a column.
+        """
+        if not layout.series:
+            return None
+        groups: list[_Group] = []
+        for path in paths:
+            with told(path):
+                found = _groups(path, layout)
+            if found is None:
+                return None
+            groups += found
+        in_order = all(_not_after(one.most, other.least) for one, other in pairwise(groups))
+        if len(groups) < 2 or sum(group.rows for group in groups) <= block_rows or not in_order:
+            return None
+        return cls(groups, layout, cadence, block_rows)
+
+    @cached_property
+    def per_series(self) -> float:
+        """Rows of a series, about: those of a first group over its series."""
+        key = self.layout.series
+        table = next(self._tables([self.groups[0]], list(key)))
+        return self.groups[0].rows / max(1, len(table.group_by(list(key)).aggregate([])))
+
+    def some_stamps(self) -> Ints:
+        """Stamps of the first, the middle and the last row group."""
+        places = sorted({0, len(self.groups) // 2, len(self.groups) - 1})
+        return np.concatenate(list(self.stamps([self.groups[place] for place in places])))
+
+    def stamps(self, groups: list[_Group] | None = None) -> Iterator[Ints]:
+        """Stamps of each row group, nanoseconds UTC (an hour that comes twice is read as the first)."""
+        name = self.layout.time
+        for table in self._tables(self.groups if groups is None else groups, [name]):
+            parts = [read_stamps(part, self.cadence, name) for part in table.column(name).chunks]
+            codes = [np.arange(len(part.stamps)) for part in parts]
+            yield np.concatenate([resolve(p, c, self.cadence.zone) for p, c in zip(parts, codes, strict=True)])
+
+    def ends(self) -> tuple[int, int] | None:
+        """First and last stamp by the statistics in the footers, or None where these do not tell."""
+        import pyarrow as pa
+
+        found: list[Any] = []
+        kind = None
+        for path in dict.fromkeys(group.path for group in self.groups):
+            with told(path), parquet_file(path, self.layout) as file:
+                kind = file.schema_arrow.field(self.layout.time).type
+                place = file.schema_arrow.names.index(self.layout.time)
+                if not (pa.types.is_timestamp(kind) or pa.types.is_date(kind)):
+                    return None
+                for number in range(file.num_row_groups):
+                    statistics = file.metadata.row_group(number).column(place).statistics
+                    if statistics is None or not statistics.has_min_max:
+                        return None
+                    found += [statistics.min, statistics.max]
+        ends = pa.array([min(found), max(found)], kind)
+        stamps = resolve(read_stamps(ends, self.cadence, self.layout.time), np.arange(2), self.cadence.zone)
+        return None if (stamps == NOT_A_STAMP).any() else (int(stamps[0]), int(stamps[1]))
+
+    def blocks(self) -> Iterator[Rows]:
+        """Rows of whole series, in order of key; a series that runs over into the next row group waits for it."""
+        waiting: list[pa.Table] = []
+        size = 0
+        for group, table in zip(self.groups, self._tables(self.groups, list(self.layout.needed)), strict=True):
+            waiting.append(table)
+            size += table.num_rows
+            after = self._next(group)
+            if after is not None and size < self.block_rows:
+                continue
+            ready, waiting = self._split(waiting, after)
+            size = sum(part.num_rows for part in waiting)
+            if ready:
+                yield self._rows(ready)
+
+    def chunks(self) -> list[Chunk]:
+        """All rows, row group after row group."""
+        tables = self._tables(self.groups, list(self.layout.needed))
+        return [table_chunk(table, self.layout, self.cadence, str(self.groups[0].path)) for table in tables]
+
+    def _rows(self, tables: list[pa.Table]) -> Rows:
+        place = str(self.groups[0].path)
+        return to_rows([table_chunk(table, self.layout, self.cadence, place) for table in tables], self.cadence)
+
+    def _next(self, group: _Group) -> _Group | None:
+        place = self._places[id(group)] + 1
+        return self.groups[place] if place < len(self.groups) else None
+
+    @cached_property
+    def _places(self) -> dict[int, int]:
+        return {id(group): place for place, group in enumerate(self.groups)}
+
+    def _split(self, tables: list[pa.Table], after: _Group | None) -> tuple[list[pa.Table], list[pa.Table]]:
+        """Rows of series that are complete, and those whose key may come again in the next group."""
+        import pyarrow as pa
+
+        if after is None:
+            return tables, []
+        ready: list[pa.Table] = []
+        waiting: list[pa.Table] = []
+        for table in tables:
+            done = _before(table.column(self.layout.series[0]), after.least)
+            if done.all():
+                ready.append(table)
+                continue
+            first = int(np.argmin(done))
+            if not done[first:].any():  # sorted inside the group as well: no copy
+                ready += [table.slice(0, first)] if first else []
+                waiting.append(table.slice(first))
+            else:
+                ready.append(table.filter(pa.array(done)))
+                waiting.append(table.filter(pa.array(~done)))
+        return ready, waiting
+
+    def _tables(self, groups: list[_Group], columns: list[str]) -> Iterator[pa.Table]:
+        opened: tuple[Path, Any] | None = None
+        for group in groups:
+            with told(group.path):
+                if opened is None or opened[0] != group.path:
+                    if opened is not None:
+                        opened[1].close()
+                    opened = (group.path, parquet_file(group.path, self.layout))
+                table = opened[1].read_row_group(group.number, columns=columns)
+            yield table
+        if opened is not None:
+            opened[1].close()
+
+
+def _groups(path: Path, layout: Layout) -> list[_Group] | None:
+    """The row groups with the range of their first key column; None where the footer does not tell."""
+    with parquet_file(path, layout) as file:
+        metadata = file.metadata
+        place = file.schema_arrow.names.index(layout.series[0])
+        if metadata.num_columns != len(file.schema_arrow.names):  # nested columns shift the places
+            return None
+        found = []
+        for number in range(metadata.num_row_groups):
+            group = metadata.row_group(number)
+            statistics = group.column(place).statistics
+            if statistics is None or not statistics.has_min_max or statistics.null_count:
+                return None
+            found.append(_Group(path, number, group.num_rows, statistics.min, statistics.max))
+    return found
+
+
+def _not_after(one: Any, other: Any) -> bool:
+    return type(one) is type(other) and isinstance(one, str | int) and one <= other
+
+
+def _before(column: pa.ChunkedArray, bound: Any) -> np.ndarray:
+    """Rows whose key is smaller, compared once a distinct key."""
+    import pyarrow as pa
+    import pyarrow.compute as pc
+
+    parts = []
+    for part in column.chunks:
+        if pa.types.is_dictionary(part.type):
+            smaller = np.array([word < bound for word in part.dictionary.to_pylist()], dtype=bool)
+            parts.append(smaller[part.indices.to_numpy(zero_copy_only=False)])
+        else:
+            parts.append(pc.less(part, pa.scalar(bound, part.type)).to_numpy(zero_copy_only=False))
+    return np.concatenate(parts) if parts else np.zeros(0, dtype=bool)
