@@ -162,9 +162,8 @@ def _filtered(x: Floats, weights: Floats, size: int) -> Floats:
     """Σ_j W_j x_{t-j}, j from 1, for each t, by Fourier transforms of ``size`` points."""
     steps = x.shape[1]
     product = np.fft.rfft(x, size) * np.fft.rfft(weights, size)
-    filtered = np.empty_like(x)
-    filtered[:, 0] = 0.0
-    filtered[:, 1:] = np.fft.irfft(product, size)[:, : steps - 1]
+    filtered = np.zeros_like(x)
+    filtered[:, 1:] = np.fft.irfft(product, size)[:, : max(steps - 1, 0)]
     return filtered
 
 
