@@ -45,6 +45,7 @@ def rules_schema() -> dict[str, Any]:
         condition, more = _condition(name, get(name))
         rule["allOf"].append(condition)
         definitions.update(more)
+    rule["not"] = {"required": ["weight", "false_alarm"]}
     rule["unevaluatedProperties"] = False
     definitions["rule"] = rule
     schema["properties"]["rules"] = {**schema["properties"]["rules"], "items": {"$ref": "#/$defs/rule"}}
