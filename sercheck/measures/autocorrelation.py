@@ -128,7 +128,7 @@ def _against_history(panel: Panel, question: Question, lags: tuple[int, ...]) ->
         return _told(r, quiet, n, n_missing, None, reasons, lags, "")
     without = residual(panel)
     past = history_law(without.values[:, : panel.start], without.values[:, panel.start :], steps)
-    reasons.add(np.isnan(without.values[:, : panel.start]).all(axis=1, keepdims=True), NO_HISTORY)
+    reasons.add(np.count_nonzero(~np.isnan(without.values[:, : panel.start]), axis=1, keepdims=True) == 0, NO_HISTORY)
     ask_variety(reasons, panel, past.batch, question.risk)
     ask_rows(reasons, n, past.rows, lags, lambda lag: max(FEWEST_BY_WINDOWS, 4 * lag))
     reasons.add(np.isnan(past.batch), "the window varies by no more than the rounding of its numbers")

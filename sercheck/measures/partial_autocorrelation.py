@@ -170,7 +170,7 @@ def _against_history(panel: Panel, question: Question, lags: tuple[int, ...]) ->
     law, count = window_t(old, forward(now.k)), count_windows(old)
     usual = np.where(np.isnan(old), 0, rows).sum(axis=1) / np.maximum(count, 1)
     reasons = Reasons(shape)
-    reasons.add(np.isnan(history).all(axis=1, keepdims=True), NO_HISTORY)
+    reasons.add(np.count_nonzero(~np.isnan(history), axis=1, keepdims=True) == 0, NO_HISTORY)
     ask_variety(reasons, panel, observed, question.risk)
     ask_rows(reasons, n, now.rows, lags, lambda lag: max(FEWEST_BY_WINDOWS, 4 * lag))
     reasons.add(

@@ -32,7 +32,8 @@ def autocovariance(x: object, lags: Lags) -> Floats:
         lags: from 0; a lag without a complete pair gives NaN.
 
     Returns:
-        In the squared unit of ``x``, of shape ``x.shape[:-1] + np.shape(lags)``; 0 for a constant series.
+        In the squared unit of ``x``, of shape ``x.shape[:-1] + np.shape(lags)``; 0 for a constant series. Beyond the
+        reach of doubles (values above 1e154) it is infinite, where autocorrelations are still exact.
 
     Raises:
         ValueError: a negative lag, or more than two dimensions.
@@ -40,7 +41,8 @@ def autocovariance(x: object, lags: Lags) -> Floats:
     data = centred(x)
     steps = _lag_array(lags)
     sums, pairs = lagged_products(data, steps)
-    c = _per_pair(sums, pairs, steps) * data.scale[:, None] * data.scale[:, None]
+    with np.errstate(over="ignore", under="ignore"):
+        c = _per_pair(sums, pairs, steps) * data.scale[:, None] * data.scale[:, None]
     return _shaped(np.where(data.varies[:, None] | (pairs == 0), c, 0.0), x, lags)
 
 

@@ -24,7 +24,7 @@ class Autoregression:
         coefficients: a_1 .. a_P, shape (S, P).
         reflection: reflection coefficients (partial autocorrelations of the model), shape (S, P).
         variance: innovation variance, in the squared unit of the series, shape (S,); NaN for a series that is constant
-            or has no two successive values, whose model is white noise only for want of a better one.
+            or has fewer than two values, whose model is white noise only for want of a better one.
         mean: mean of the observed values, shape (S,).
         n: observed values, shape (S,).
         reached: the highest order that the length and the gaps of each series let be tried, shape (S,).
@@ -151,7 +151,8 @@ def _chosen(data: Centred, reflection: Floats, weight: Floats, max_order: int | 
     reflection = np.where(orders <= order[:, None], reflection, 0.0)
     count = np.maximum(data.n, 1)
     power = np.einsum("ij,ij->i", data.values, data.values) / count * np.prod(1 - reflection**2, axis=1)
-    variance = np.where(data.varies & (data.n > 1), power * data.scale**2, np.nan)
+    with np.errstate(over="ignore", under="ignore"):
+        variance = np.where(data.varies & (data.n > 1), power * data.scale * data.scale, np.nan)
     return Autoregression(order, step_up(reflection), reflection, variance, data.mean, data.n, reached)
 
 
@@ -203,14 +204,14 @@ def impose_autocorrelation(model: Autoregression, lag: int, b: Floats | float) -
     rho = model_autocorrelation(shorter, lag)
     left = np.prod(1 - before**2, axis=1)
     k = np.clip((b - rho[:, lag]) / left, -STEEPEST, STEEPEST)
-    total = model.variance / np.prod(1 - reflection**2, axis=1)
+    before_change = np.prod(1 - reflection**2, axis=1)
     reflection[:, lag - 1] = k
     return replace(
         model,
         order=np.maximum(model.order, lag),
         coefficients=step_up(reflection),
         reflection=reflection,
-        variance=total * np.prod(1 - reflection**2, axis=1),
+        variance=model.variance * (np.prod(1 - reflection**2, axis=1) / before_change),
     )
 
 
