@@ -205,7 +205,7 @@ class ShareLaw(ABC):
 
     def limit(self, side: Side, risk: Floats) -> Floats:
         """The share at which the p-value comes within ``risk``."""
-        return _share(self.limit_hits(side, risk), self.rows)
+        return quotient(self.limit_hits(side, risk), self.rows)
 
     def naive_limit(self, side: Side, risk: Floats) -> Floats:
         """The limit had the rows been independent (τ = 1)."""
@@ -251,8 +251,8 @@ class AgainstShare(ShareLaw):
 
     @property
     def too_few(self) -> Bools:
-        """Where a pass says nothing: fewer than ``FEWEST_EXPECTED`` marked effective rows are expected."""
-        return np.asarray(self.rows * self.bound / self.tau < FEWEST_EXPECTED)
+        """Where a pass says nothing: fewer than ``FEWEST_EXPECTED`` effective rows of the rarer kind are expected."""
+        return np.asarray(self.rows * np.minimum(self.bound, 1 - self.bound) / self.tau < FEWEST_EXPECTED)
 
     def naive_limit(self, side: Side, risk: Floats) -> Floats:
         """The limit had the rows been independent (τ = 1, nothing estimated)."""
@@ -268,7 +268,11 @@ class AgainstShare(ShareLaw):
 
 @dataclass(frozen=True)
 class AgainstPast(ShareLaw):
-    """The share of marked rows against that of history: conditional binomial with mid-p on effective sizes."""
+    """The share of marked rows against that of history: conditional binomial with mid-p on effective sizes.
+
+    Where most rows of history are marked the unmarked ones are counted: the law is nearly exact for rare rows and
+    wide for common ones.
+    """
 
     past_hits: Floats
     past_rows: Floats
@@ -276,22 +280,26 @@ class AgainstPast(ShareLaw):
     @property
     def bound(self) -> Floats:
         """History's share."""
-        return _share(self.past_hits, self.past_rows)
+        return quotient(self.past_hits, self.past_rows)
 
     @property
     def standard_error(self) -> Floats:
         """√(p(1 − p) τ (1/n + 1/N)), p of history and batch together."""
-        pooled = _share(self.hits + self.past_hits, self.rows + self.past_rows)
-        harmonic = _share(self.rows * self.past_rows, self.rows + self.past_rows)
+        pooled = quotient(self.hits + self.past_hits, self.rows + self.past_rows)
+        harmonic = quotient(self.rows * self.past_rows, self.rows + self.past_rows)
         return _root(pooled, self.tau, harmonic)
 
     def tail(self, hits: Floats, side: Side) -> Floats:
-        """Mid-p of the conditional binomial on sizes divided by τ."""
-        tau = self.tau
-        return conditional_tail(hits / tau, self.rows / tau, self.past_hits / tau, self.past_rows / tau, side)
+        """Mid-p of the conditional binomial on sizes divided by τ, of the rarer kind of rows in history."""
+        n, K, N = self.rows / self.tau, self.past_hits / self.tau, self.past_rows / self.tau
+        marked = conditional_tail(hits / self.tau, n, K, N, side)
+        other: Side = "lower" if side == "upper" else "upper"
+        unmarked = conditional_tail((self.rows - hits) / self.tau, n, N - K, N, other)
+        return np.where(2 * self.past_hits > self.past_rows, unmarked, marked)
 
 
-def _share(hits: Floats, rows: Floats) -> Floats:
+def quotient(hits: Floats, rows: Floats) -> Floats:
+    """The quotient; NaN where there are no rows."""
     with np.errstate(invalid="ignore", divide="ignore"):
         return np.where(rows > 0, hits / rows, np.nan)
 

@@ -56,7 +56,7 @@ class BetaBinomialShare:
     @property
     def bound(self) -> Floats:
         """History's share."""
-        return self.rate
+        return np.where(self.past_rows > 0, self.rate, np.nan)
 
     @property
     def mixing(self) -> Floats:
@@ -182,10 +182,15 @@ class RunLaw(ABC):
     def tail(self, marks: Floats) -> Floats:
         """Probability that a batch holds a run of at least that many marks (1 for none)."""
 
+    @abstractmethod
+    def naive_limit(self, side: Side, risk: Floats) -> Floats:
+        """The limit did marks come independently."""
+
     @property
     def bound(self) -> Floats:
         """The longest run that half of history's batches stay under."""
-        return np.fmin(first_within(self.tail, self.rows, np.asarray(0.5)), self.rows)
+        half = np.fmin(first_within(self.tail, self.rows, np.asarray(0.5)), self.rows)
+        return np.where(self.rows > 0, half, np.nan)
 
     @property
     def standard_error(self) -> Floats:
@@ -228,7 +233,6 @@ class ChainRuns(RunLaw):
         return np.where(marks > 0, -np.expm1(-self.rows * self.enters * self.stays ** np.maximum(marks - 1, 0)), 1.0)
 
     def naive_limit(self, side: Side, risk: Floats) -> Floats:
-        """The limit did marks come independently."""
         return replace(self, enters=self.share, stays=self.share).limit(side, risk)
 
 
@@ -263,7 +267,6 @@ class PastRuns(RunLaw):
             return np.where(marks > 0, -np.expm1(-self.rows * expected / self.past_rows), 1.0)
 
     def naive_limit(self, side: Side, risk: Floats) -> Floats:
-        """The limit did marks come independently."""
         return ChainRuns(self.longest, self.rows, self.share, self.share, self.share).limit(side, risk)
 
 
