@@ -27,6 +27,7 @@ class Axis:
         closed: steps that lie on a closed day, shape (T,).
         expected: steps at which a row is due (closed days of daily and longer cadences are not), shape (T,).
         groups: for lengths that ``after: {every: ...}`` asks for, the number of the group each step lies in, shape (T,).
+        held: steps of batches that were held and then let in by a person, shape (T,); empty when there are none.
     """
 
     stamps: Ints
@@ -36,6 +37,7 @@ class Axis:
     closed: Bools
     expected: Bools
     groups: Mapping[str, Ints] = field(default_factory=dict)
+    held: Bools = field(default_factory=lambda: np.zeros(0, dtype=bool))
 
     def __len__(self) -> int:
         return len(self.stamps)
@@ -51,6 +53,7 @@ class Axis:
             self.closed[part],
             self.expected[part],
             {name: group[part] for name, group in self.groups.items()},
+            self.held[part] if len(self.held) else self.held,
         )
 
 

@@ -130,6 +130,7 @@ class Question:
         risk: false-alarm risk asked of the rule, over all its series and lags (a measure may abstain because of it).
         lengths: steps in one cycle of each named season.
         clock: for the measures of the clock.
+        rests: the rule's longer look held a batch within the last seven and rests (see ``looks.Sooner``).
     """
 
     fields: BaseModel
@@ -137,6 +138,7 @@ class Question:
     risk: float
     lengths: dict[str, int] = field(default_factory=dict)
     clock: Clock | None = None
+    rests: bool = False
 
 
 class Measure(ABC):

@@ -74,6 +74,48 @@ def difference_autocorrelation(y: Floats, n: int) -> Floats:
     return np.asarray(np.arctanh(np.clip(r, -1 + 1e-12, 1 - 1e-12)))
 
 
+def portmanteau(e: Floats, n: int, stride: int, lags: int) -> Floats:
+    """Ln Q of the innovations of windows that end ``stride`` apart, the last with the last step.
+
+    Q = Σ_{k ≤ lags} t_k², t_k = Σ e_t e_{t-k} / √(Σ e_t² e_{t-k}²) (Taylor 1984), which allows for changing variance.
+
+    Args:
+        e: shape (S, T), NaN is missing.
+        n: steps of a window.
+        stride: steps between the ends of two windows.
+        lags: autocorrelations in the sum.
+    """
+    ends = np.arange(e.shape[1], n - 1, -stride)[::-1]
+
+    def window_sums(v: Floats) -> Floats:
+        total = np.pad(np.cumsum(v, axis=1), ((0, 0), (1, 0)))
+        return np.asarray(total[:, ends] - total[:, ends - n])
+
+    enough = window_sums((~np.isnan(e)).astype(np.float64)) >= max(2.0, OBSERVED * n)
+    q = np.zeros(enough.shape)
+    for k in range(1, lags + 1):
+        product = np.zeros_like(e)
+        product[:, k:] = np.nan_to_num(e[:, k:] * e[:, :-k])
+        size = window_sums(product**2)
+        q += np.where(size > 0, window_sums(product) ** 2 / np.where(size > 0, size, 1.0), 0.0)
+    return np.where(enough & (q > 0), np.log(np.where(q > 0, q, 1.0)), np.nan)
+
+
+def mean_earlier(table: Floats, nearest: int = 7, farthest: int = 34) -> Floats:
+    """Mean of the statistics 7 to 34 places earlier, those that are there (at least half); same shape.
+
+    They share no rows with a window of seven batches, and go back over the four weeks before it.
+    """
+    width = farthest - nearest + 1
+    seen = ~np.isnan(table)
+    total = np.cumsum(np.pad(np.where(seen, table, 0.0), ((0, 0), (farthest + 1, 0))), axis=1)
+    count = np.cumsum(np.pad(seen, ((0, 0), (farthest + 1, 0))).astype(np.int64), axis=1)
+    size = table.shape[1]
+    sums = total[:, width : width + size] - total[:, :size]
+    counts = count[:, width : width + size] - count[:, :size]
+    return np.where(counts >= width // 2, sums / np.maximum(counts, 1), np.nan)
+
+
 @dataclass(frozen=True)
 class Fitted:
     """A coefficient of a least-squares fit within each batch; every array has shape (S, B).
@@ -308,7 +350,7 @@ def beta_binomial_tails(n: Ints, a: Floats, b: Floats) -> Floats:
         + special.betaln(j + a[:, None], rest + b[:, None]) - special.betaln(a, b)[:, None]
     )  # fmt: skip
     p = np.where(inside, np.exp(log_p), 0.0)
-    tails = np.minimum(1.0, np.cumsum(p[:, ::-1], axis=1)[:, ::-1])
+    tails: Floats = np.minimum(1.0, np.cumsum(p[:, ::-1], axis=1)[:, ::-1])
     tails[:, 0] = 1.0
     return tails
 
@@ -317,4 +359,4 @@ def run_tails(marks: Marks, longest: int) -> Floats:
     """P(a run of at least r equals in the newest batch) = 1 - exp(-n p01 p11^(r-1)), r = 0 .. longest."""
     r = np.arange(longest + 1)
     rate = marks.count[:, -1:] * marks.starts[:, None] * marks.goes_on[:, None] ** np.maximum(r - 1, 0)
-    return np.where(r < 1, 1.0, -np.expm1(-rate))
+    return np.asarray(np.where(r < 1, 1.0, -np.expm1(-rate)))

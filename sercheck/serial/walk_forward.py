@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.arrays import Floats, Ints
 
 GAINS = (0.0, 0.04, 0.1, 0.2)
 """Smallest weights of a new cycle that are tried: none, and memories of about 25, 10 and 5 cycles."""
@@ -141,7 +141,7 @@ def middle(x: Floats) -> Floats:
     count = (~np.isnan(x)).sum(axis=0)
     low = np.take_along_axis(ordered, np.maximum(count - 1, 0)[None] // 2, axis=0)[0]
     high = np.take_along_axis(ordered, np.minimum(count // 2, len(x) - 1)[None], axis=0)[0]
-    return np.asarray(np.where(count > 0, (low + high) / 2, np.nan))
+    return np.where(count > 0, (low + high) / 2, np.nan).astype(np.float64)
 
 
 def around_blocks(x: Floats, block: int) -> Floats:
@@ -160,7 +160,8 @@ def _choose(y: Floats, table: Cycles, lag: int, block: int) -> Floats:
     for gain in GAINS:
         known = _learn(y, table, lag, np.full(len(y), gain)).reshape(len(y), -1)[:, table.place]
         errors.append(np.nansum(around_blocks(y - known, block) ** 2, axis=1))
-    return np.asarray(GAINS)[np.argmin(np.stack(errors), axis=0)]
+    best: Floats = np.asarray(GAINS)[np.argmin(np.stack(errors), axis=0)]
+    return best
 
 
 def on_scale(x: Floats, log: Floats) -> Floats:
@@ -208,4 +209,4 @@ def log_unit(x: Floats, profile: Floats) -> Floats:
     slope = (da * np.where(usable, b, 0.0)).sum(axis=1) / np.where(square > 0, square, np.inf)
     never_negative = ~(x < 0).any(axis=1)
     growing = never_negative & (slope > 0.5) & (high.max(axis=1) > 3 * high.min(axis=1))
-    return np.where(growing, np.where(high > 0, high, np.inf).min(axis=1), np.nan)
+    return np.asarray(np.where(growing, np.where(high > 0, high, np.inf).min(axis=1), np.nan))

@@ -1,0 +1,141 @@
+"""From a panel to the recent past of its window; depends on ``serial``, ``grid``, ``baseline`` and ``recent_past``.
+
+A measure asks ``enough(panel)`` where this method applies, ``recent_past(panel)`` for the table of the last ninety
+or so stretches, and calls the method of its name on it::
+
+    told = recent_past(panel).level()
+    Measurement(observed=told.observed, upper=told.reference, lower=told.reference, n_eff=told.n_eff, ...)
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from sercheck.baseline import chosen_seasons
+from sercheck.grid import Axis, Panel
+from sercheck.measure import Reasons
+from sercheck.recent_past import Comparison, RecentPast
+from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.walk_forward import Profile, log_unit, on_scale, walk_forward
+
+BATCHES = 90
+"""Stretches of history that a new one is compared with: a quarter of days."""
+
+FEWEST, FEWEST_WEEKS, FEWEST_PANEL = 56, 26, 16
+"""Stretches that the method needs: of a day or so, of seven rows, and of one series among several (simulated)."""
+
+FEWEST_TOLD = 16
+"""Stretches of history that have the statistic, in any case: t with fewer degrees of freedom sees nothing."""
+
+FIRST = 104
+"""Stretches of history in which scale and gain are chosen: ninety, and two weeks of days that teach the profile."""
+
+FARTHEST = 1e60
+"""Values of a window are cut here, in units of history's largest: their fourth powers stay within doubles."""
+
+DAY = 86_400_000_000_000
+"""Nanoseconds of a day."""
+
+METHOD = "one-step forecast from the last batches' statistics, tails from their misses"
+ASSUMES = "the batch is to its week as the last {batches} were to theirs"
+
+
+def enough(panel: Panel) -> Bools:
+    """Series whose history holds enough stretches of the window's length, shape (S,)."""
+    n = panel.values.shape[1] - panel.start
+    if not n or not panel.start:
+        return np.zeros(len(panel.values), dtype=bool)
+    fewest = FEWEST_PANEL if len(panel.values) > 1 else FEWEST_WEEKS if n <= 7 else FEWEST
+    known = (~np.isnan(panel.history)).sum(axis=1)
+    return np.asarray((known >= n * fewest // 2) & (panel.start // n >= fewest))
+
+
+def ask_told(reasons: Reasons, told: Comparison) -> None:
+    """Undecided where too few batches of history have the statistic, or the window itself has none."""
+    reasons.add(
+        told.batches < FEWEST_TOLD - 7, f"fewer than {FEWEST_TOLD} earlier batches have enough values to compare with"
+    )
+    reasons.add(np.isnan(told.observed), "too few values in the window, or a closed day")
+    reasons.add(np.isnan(told.reference.p_value("upper")), "the earlier batches do not vary, so nothing can be unusual")
+
+
+def recent_past(panel: Panel, *, logs: bool = True) -> RecentPast:
+    """The window and the stretches of its length before it, with scale and profile chosen; computed once a panel.
+
+    Batches that were held and then let in (``panel.axis.held``) stay in level and profile and leave the looks and the
+    histories of autocorrelation, amplitude and phase.
+
+    Args:
+        panel: history and window.
+        logs: choose ln(1 + x/c) where the scatter grows with the level; off for pooled statistics.
+    """
+    return panel.remember(("recent past", logs), lambda: _recent_past(panel, logs=logs))
+
+
+def season_of(axis: Axis, history: int) -> str | None:
+    """The season whose profile is learned: the longest within a week that history teaches, else the shortest."""
+    names = chosen_seasons(axis, history)
+    within = [name for name in names if axis.lengths[name] <= max(7 * day_steps(axis), 2)]
+    return within[-1] if within else names[0] if names else None
+
+
+def day_steps(axis: Axis) -> float:
+    """Steps in a day by the stamps (0 for a single stamp)."""
+    return DAY / float(np.median(np.diff(axis.stamps))) if len(axis) > 1 else 0.0
+
+
+def _recent_past(panel: Panel, *, logs: bool) -> RecentPast:
+    axis, start = panel.axis, panel.start
+    n = panel.values.shape[1] - start
+    day, week = round(day_steps(axis)), round(7 * day_steps(axis))
+    counts = _counts(panel.history)
+    x, scale = _scaled(panel.values, start)
+    taught = np.where(axis.closed, np.nan, x)
+    season = season_of(axis, start)
+    log = np.full(len(x), np.nan)
+    profile: Profile | None = None
+    y = taught
+    if season is not None:
+        phase, length, delay = axis.phases[season], axis.lengths[season], max(week, n, 1)
+        first = min(start, FIRST * n)
+        if logs:
+            early = walk_forward(taught[:, :first], phase[:first], length, delay, first=first, block=n)
+            log = log_unit(taught[:, :first], early.here)
+            y = on_scale(taught, log)
+        profile = walk_forward(y, phase, length, delay, first=first, block=n)
+    batches = min(BATCHES, start // n)
+    steps = (batches + 1) * n
+    return RecentPast(
+        x=x[:, -min(x.shape[1], steps + week) :],
+        y=y[:, -steps:],
+        profile=None if profile is None else profile.last(steps),
+        n=n,
+        held=np.broadcast_to(_held(axis, start, batches, n), (len(x), batches)),
+        log=log,
+        counts=counts,
+        scale=scale,
+        repeats_at=tuple(step for step in (day, week) if step > 1),
+    )
+
+
+def _held(axis: Axis, start: int, batches: int, n: int) -> Bools:
+    """Batches of history with a held step."""
+    if not len(axis.held):
+        return np.zeros(batches, dtype=bool)
+    return np.asarray(axis.held[start - batches * n : start].reshape(batches, n).any(axis=1))
+
+
+def _counts(history: Floats) -> Bools:
+    with np.errstate(invalid="ignore"):
+        whole = (history >= 0) & (history == np.floor(history))
+    return np.asarray((whole | np.isnan(history)).all(axis=1))
+
+
+def _scaled(values: Floats, start: int) -> tuple[Floats, Floats]:
+    """Values in units of a power of two near history's largest: squares neither overflow nor vanish."""
+    history = values[:, :start]
+    peak = np.max(np.abs(history), axis=1, where=~np.isnan(history), initial=0.0)
+    exponent: Ints = np.clip(np.frexp(peak)[1], -1021, 1022).astype(np.int64)
+    with np.errstate(over="ignore"):
+        scaled = np.ldexp(values, -exponent[:, None].astype(np.int32))
+    return np.clip(scaled, -FARTHEST, FARTHEST), np.ldexp(1.0, exponent.astype(np.int32))
