@@ -8,10 +8,10 @@ Formula: a row was seen before when it lies in a stretch of `length` successive 
 earlier stretch (of history, or of the window itself, not overlapping), bit for bit. Stretches of one constant are
 skipped: a stuck value is for `repeats`. Without `length` three values, or, for coarse values, the first of 4, 6, 8, 12
 and 24 at which at most 2 % of history's rows recur. A literal bound is held against the share itself, which has no
-sampling error. Like history, one-sided: with K of N rows of history in stretches that history holds twice,
-π = (K + ½)/(N + 1), τ the variance of the counts in history's stretches of the window's length over the binomial
-variance (at least 1; 4 with 20 stretches or fewer), M = (n − τ)/(τ − 1) between ½ and N + 1,
-p = P(BetaBin(n, πM, (1 − π)M) ≥ k).
+sampling error. Like history, one-sided: with K of N rows of history in stretches that history holds twice and c the
+length (the rows that one recurrence marks), π = (K + c/2)/(N + c), τ the variance of the counts in history's
+stretches of the window's length over the binomial variance (at least c; at least 4 with 20 stretches or fewer),
+M = (n − τ)/(τ − 1) between ½ and N + 1, p = P(BetaBin(n, πM, (1 − π)M) ≥ k).
 
 Source: hashing of successive values (Karp and Rabin 1987); beta-binomial law (Skellam 1948).
 
@@ -76,7 +76,7 @@ class Replay(Measure):
                 method="rows in stretches that came before, counted (Karp and Rabin 1987)", unsure=unsure,
             )  # fmt: skip
         stretches = panel.start // panel.window.shape[1]
-        law = beta_binomial_share(seen.history, seen.batch, POWER)
+        law = beta_binomial_share(seen.history, seen.batch, POWER, seen.length)
         reasons.add(panel.start == 0, "no history: pass --history or learn a baseline")
         reasons.add(
             stretches < FEWEST_WINDOWS,

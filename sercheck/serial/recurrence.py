@@ -131,19 +131,21 @@ class BetaBinomialShare:
         return change
 
 
-def beta_binomial_share(past: Floats, batch: Floats, power: float) -> BetaBinomialShare:
+def beta_binomial_share(past: Floats, batch: Floats, power: float, clump: Ints | float = 1.0) -> BetaBinomialShare:
     """Learn the law of a batch's share of marks from history's.
 
     Args:
         past: marks of history, shape (S, N).
         batch: marks of the batch, shape (S, n); history's stretches are as long.
         power: probability of ``detectable``.
+        clump: marks c that one event makes at least, shape (S,) or a number: τ is no smaller (a history without
+            events cannot tell it) and π = (K + c/2)/(N + c), half an event more than was seen.
     """
     K, N = (count.astype(np.float64) for count in tally(past))
     hits, rows = (count.astype(np.float64) for count in tally(batch))
-    tau = spread_of_counts(past, batch.shape[1])
+    tau = np.maximum(clump, spread_of_counts(past, batch.shape[1]))
     column = (slice(None), None)
-    rate = (K + 0.5) / (N + 1)
+    rate = (K + 0.5 * clump) / (N + clump)
     return BetaBinomialShare(hits[column], rows[column], N[column], rate[column], tau[column], power)
 
 
