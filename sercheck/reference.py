@@ -59,7 +59,8 @@ class Pivot:
     naive_to_unit: Callable[[Floats], Floats] | None = None
 
     def p_value(self, side: Side) -> Floats:
-        t = (self.statistic - self.centre) / self.scale
+        with np.errstate(divide="ignore", invalid="ignore"):  # undecided cells may have no scale
+            t = (self.statistic - self.centre) / self.scale
         return t_tail(t if side == "upper" else -t, self.df)
 
     def _at(self, side: Side, quantile: Floats) -> Floats:

@@ -103,8 +103,9 @@ def run(name: str, stays: Stays, panel: Panel, risk: float = 0.01) -> Measuremen
 
 
 def decided(seen: Measurement) -> np.ndarray:
-    """Cells that have no reason to stay undecided."""
-    return seen.undecided < 0
+    """Cells that have no reason to stay undecided, whatever the p-value."""
+    unsure = getattr(seen, "unsure", None)
+    return (seen.undecided < 0) & (unsure is None or unsure < 0)
 
 
 def p_values(seen: Measurement) -> list[np.ndarray]:
