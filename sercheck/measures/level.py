@@ -32,36 +32,16 @@ Example::
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
 from typing import ClassVar, Literal
 
 import numpy as np
 from pydantic import BaseModel, ConfigDict
 
 from sercheck.grid import Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons
-from sercheck.measures._past import (
-    MUTE,
-    ToUnit,
-    ask_history,
-    ask_variety,
-    at_the_end,
-    cell,
-    combined,
-    counts,
-    mean,
-    out_of_reach,
-    past,
-    score_spectrum,
-    scored,
-    value_spectrum,
-    window_scores,
-    without,
-)
+from sercheck.measure import Measure, Measurement, Question
+from sercheck.measures._location import location_with_history
+from sercheck.measures._past import combined, past
 from sercheck.measures._witnesses import mean_alone
-from sercheck.reference import Pivot
-from sercheck.serial.arrays import Bools, Floats
-from sercheck.serial.long_run import contrast_variance, mean_contrast
 from sercheck.serial.window_t import fewest_windows
 
 
@@ -87,138 +67,7 @@ class Level(Measure):
             enough = np.ones_like(enough)
         raw = fields.of_the == "mean"
         return combined(
-            enough, lambda: _with_history(panel, question, raw=raw), lambda: mean_alone(panel, question)
+            enough,
+            lambda: location_with_history(panel, question, raw=raw),
+            lambda: mean_alone(panel, question),
         )
-
-
-@dataclass(frozen=True)
-class _Law:
-    """What the sides of a comparison with history share, on the statistic's scale, shape (S,) each.
-
-    Attributes:
-        at: the window's mean score or mean.
-        centre: history's.
-        scale: standard error.
-        df: degrees of freedom.
-        naive: standard error had the rows been independent.
-        variance: variance of the values that were averaged.
-        plain: the statistic is a mean of values, not of scores.
-        unit: way to the unit of the rows.
-    """
-
-    at: Floats
-    centre: Floats
-    scale: Floats
-    df: Floats
-    naive: Floats
-    variance: Floats
-    plain: Bools
-    unit: ToUnit
-
-    def about(self, centre: Floats, bound: Floats) -> Pivot:
-        """The pivot about ``centre``, whose value in the unit of the rows is ``bound``."""
-        place, scale = cell(centre), cell(self.scale)
-        return Pivot(
-            statistic=cell(self.at),
-            centre=place,
-            scale=scale,
-            df=cell(self.df),
-            bound=bound,
-            standard_error=(self.unit(place + scale) - self.unit(place - scale)) / 2,
-            to_unit=self.unit,
-            naive_scale=cell(self.naive),
-        )
-
-
-def _law(panel: Panel, *, raw: bool, new: Floats | float) -> _Law:
-    """Mean and standard error from history's cosine powers; ``new`` widens for the error of history's own mean."""
-    told = past(panel)
-    spectrum = value_spectrum(panel) if raw else score_spectrum(panel)
-    variance, df = contrast_variance(spectrum, mean_contrast(~np.isnan(told.window)))
-    rows = np.maximum(told.n, 1)
-    return _Law(
-        at=mean(told.window if raw else window_scores(panel)),
-        centre=spectrum.mean,
-        scale=np.sqrt(variance * new),
-        df=df,
-        naive=np.sqrt(spectrum.variance * new / rows),
-        variance=spectrum.variance,
-        plain=np.full(len(rows), raw),
-        unit=ToUnit(None if raw else scored(panel).unit, told.offset, told.scale),
-    )
-
-
-def _mixed(pick: Bools, raw: _Law, robust: _Law) -> _Law:
-    """``raw`` where ``pick``."""
-    if not pick.any():
-        return robust
-    names = ("at", "centre", "scale", "df", "naive", "variance", "plain")
-    chosen = {name: np.where(pick, getattr(raw, name), getattr(robust, name)) for name in names}
-    return _Law(**chosen, unit=replace(robust.unit, plain=pick))
-
-
-def _with_history(panel: Panel, question: Question, *, raw: bool) -> Measurement:
-    """The window's mean score (or value) at the time scale that history's cosine powers give."""
-    told, stays, reasons = past(panel), question.stays, Reasons((len(past(panel).n), 1))
-    ask_history(reasons, told, question.risk, "a level")
-    ask_variety(reasons, told, question.risk)
-    upper: Pivot | None
-    lower: Pivot | None
-    if stays.literal:
-        law = _law(panel, raw=raw, new=1.0)
-        if not raw:
-            far = _beyond(panel, law, [b for b in (stays.low, stays.high) if b is not None], question.risk)
-            law = _mixed(far, _law(panel, raw=True, new=1.0), law) if far.any() else law
-        upper, lower = (None if b is None else _literal(panel, law, b) for b in (stays.high, stays.low))
-    else:
-        law = _law(panel, raw=raw, new=1 + told.n / np.maximum(told.known, 1))
-        upper = lower = law.about(law.centre, law.unit(cell(law.centre)))
-        if not raw:
-            reasons.add(out_of_reach(scored(panel), law.centre, law.scale, law.df, question.risk)[:, None], MUTE)
-    reasons.add(~(cell(law.scale) > 0), "history does not vary: there is no sampling error to allow for")
-    n, n_missing = counts(panel)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        n_eff = told.n * (law.naive / law.scale) ** 2
-    return Measurement(
-        observed=_observed(panel, law),
-        n=n,
-        n_missing=n_missing,
-        n_eff=cell(n_eff),
-        upper=upper,
-        lower=lower,
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
-        method=("mean" if raw else "mean of normal scores (van der Waerden 1952)")
-        + ", overlapping batch means of history (Meketon and Schmeiser 1984; Welch 1987)",
-        assumes="stationary history" + (", light tails" if raw else "") + without(told),
-    )
-
-
-def _literal(panel: Panel, law: _Law, bound: float) -> Pivot:
-    """The pivot about the author's number."""
-    value = bound / law.unit.scale - law.unit.offset
-    target = value if law.unit.grid is None else np.where(law.plain, value, scored(panel).of(value[:, None])[:, 0])
-    return law.about(target, np.full((len(value), 1), bound))
-
-
-def _beyond(panel: Panel, law: _Law, bounds: list[float], risk: float) -> Bools:
-    """Series of which a number or its limit lies outside history's values, where scores cannot follow."""
-    told, values = past(panel), scored(panel)
-    outside = np.zeros(len(told.n), dtype=bool)
-    for bound in bounds:
-        at = (bound / told.scale - told.offset)[:, None]
-        outside |= out_of_reach(values, values.of(at)[:, 0], law.scale, law.df, risk)
-    return outside
-
-
-def _observed(panel: Panel, law: _Law) -> Floats:
-    """The level in the unit of the rows; a window that lies beyond all of history is told by its own median."""
-    inside = law.unit(cell(law.at))
-    if law.unit.grid is None:
-        return inside
-    told = past(panel)
-    beyond = at_the_end(scored(panel), law.at) & ~law.plain
-    middle = np.full(len(told.n), np.nan)
-    if beyond.any():
-        middle[beyond] = np.nanmedian(told.window[beyond], axis=1)
-    return np.where(beyond[:, None], cell((middle + told.offset) * told.scale), inside)

@@ -104,7 +104,9 @@ def contrast_weights(contrast: Floats, steps: int) -> Floats:
         steps: T, the length of the history whose powers are weighted, at least n.
     """
     out = np.empty((len(contrast), max(steps - 1, 0)))
-    block = max(1, BLOCK // max(2 * steps, 1))
+    if steps < 2:
+        return out
+    block = max(1, BLOCK // (2 * steps))
     for first in range(0, len(contrast), block):
         rows = slice(first, first + block)
         turned = np.fft.rfft(contrast[rows], 2 * steps, axis=1)[:, 1:steps]

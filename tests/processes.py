@@ -1,0 +1,128 @@
+"""Panels of simulated feeds and false-alarm rates, for the tests of the measures."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from sercheck.grid import Axis, Panel
+from sercheck.measure import Measure, Measurement, Question, Stays
+
+HOUR = 3_600_000_000_000
+LIKE = Stays("like_history")
+
+
+def axis(steps, lengths=None, closed=None):
+    """An hourly axis whose seasons begin at step 0."""
+    index = np.arange(steps)
+    lengths = lengths or {}
+    return Axis(
+        stamps=index * HOUR,
+        index=index,
+        lengths=lengths,
+        phases={name: index % length for name, length in lengths.items()},
+        closed=np.zeros(steps, dtype=bool) if closed is None else closed,
+        expected=np.ones(steps, dtype=bool),
+    )
+
+
+def panel(values, start, lengths=None):
+    """A panel of complete rows."""
+    values = np.atleast_2d(np.asarray(values, dtype=np.float64))
+    return Panel(values, start, axis(values.shape[1], lengths), ~np.isnan(values), "kwh")
+
+
+def autoregressive(seed, series, steps, phi, warm=400):
+    """Σφ x_{t-j} + e_t with standard normal innovations, after a run-in."""
+    noise = np.random.default_rng(seed).normal(size=(series, steps + warm))
+    x = np.zeros_like(noise)
+    coefficients = np.atleast_1d(phi)
+    for t in range(len(coefficients), steps + warm):
+        x[:, t] = noise[:, t]
+        for j, a in enumerate(coefficients, start=1):
+            x[:, t] += a * x[:, t - j]
+    return x[:, warm:]
+
+
+def make(kind, seed, series, steps):
+    """One of the processes that the measures are held against."""
+    seeded = np.random.default_rng(seed)
+    if kind == "white":
+        return seeded.normal(size=(series, steps))
+    if kind.startswith("ar"):
+        return autoregressive(seed, series, steps, float(kind[2:]))
+    if kind == "ma":
+        noise = seeded.normal(size=(series, steps + 1))
+        return noise[:, 1:] + 0.6 * noise[:, :-1]
+    if kind == "t3":
+        return seeded.standard_t(3, size=(series, steps))
+    if kind == "lognormal":
+        return np.exp(0.8 * autoregressive(seed, series, steps, 0.6))
+    if kind == "counts":
+        return seeded.negative_binomial(3, 0.3, size=(series, steps)).astype(float)
+    if kind == "seasonal":
+        cycle = 4 * np.sin(2 * np.pi * np.arange(steps) / 24) + 2 * (np.arange(steps) % 24 < 6)
+        return autoregressive(seed, series, steps, 0.6) + cycle
+    raise ValueError(kind)
+
+
+SEASONAL = {"day": 24}
+
+
+def look(measure: Measure, values, start, stays=LIKE, risk=0.01, lengths=None, **fields) -> Measurement:
+    """Run a measure on a panel."""
+    question = Question(measure.Fields(**fields), stays, risk, lengths or {})
+    return measure.run(panel(values, start, lengths), question)
+
+
+def p_values(seen: Measurement):
+    """The p-value of each series as the judge takes it; NaN where undecided."""
+    tails = [
+        reference.p_value(side) for side, reference in (("upper", seen.upper), ("lower", seen.lower)) if reference
+    ]
+    p = tails[0] if len(tails) == 1 else np.minimum(1, 2 * np.minimum(*tails))
+    return np.where(seen.undecided >= 0, np.nan, p)[:, 0]
+
+
+def alarms(measure, kind, n, past, risks=(0.05, 0.01, 0.001), series=2000, blocks=1, seed=1, stays=LIKE, **fields):
+    """False-alarm rates of the measure, and of the limits for independent rows, at the risks."""
+    lengths = SEASONAL if kind == "seasonal" else {}
+    honest, naive = np.zeros(len(risks)), np.zeros(len(risks))
+    for block in range(blocks):
+        values = make(kind, [seed, block], series, past + n)
+        seen = look(measure, values, past, stays, 0.01, lengths, **fields)
+        p = p_values(seen)
+        sides = (seen.upper is not None) + (seen.lower is not None)
+        for place, risk in enumerate(risks):
+            honest[place] += np.sum(p <= risk)
+            share = np.full(seen.observed.shape, risk / sides)
+            beyond = np.zeros(seen.observed.shape, dtype=bool)
+            if seen.upper is not None:
+                beyond |= seen.observed > seen.upper.naive_limit("upper", share)
+            if seen.lower is not None:
+                beyond |= seen.observed < seen.lower.naive_limit("lower", share)
+            naive[place] += beyond.sum()
+    return honest / (series * blocks), naive / (series * blocks)
+
+
+def agrees(seen: Measurement, risks=(0.2, 0.01, 0.0001)):
+    """Whether p-value and limit tell the same, for every series, side and risk."""
+    for side, reference in (("upper", seen.upper), ("lower", seen.lower)):
+        if reference is None:
+            continue
+        for risk in risks:
+            limit = reference.limit(side, np.full(seen.observed.shape, risk))
+            p = reference.p_value(side)
+            beyond = seen.observed >= limit if side == "upper" else seen.observed <= limit
+            told = (seen.undecided < 0) & (np.abs(p / risk - 1) > 1e-6)
+            np.testing.assert_array_equal((p <= risk)[told], beyond[told])
+
+
+def power_at_detectable(measure, kind, n, past, change, risk=0.01, series=2000, **fields):
+    """How often a window changed by its own ``detectable`` is found; ``change`` puts the change in."""
+    lengths = SEASONAL if kind == "seasonal" else {}
+    values = make(kind, 77, series, past + n)
+    seen = look(measure, values, past, LIKE, risk, lengths, **fields)
+    size = seen.upper.detectable("upper", np.full(seen.observed.shape, risk / 2))
+    changed = values.copy()
+    changed[:, past:] = change(values[:, past:], np.median(size), seen)
+    return np.nanmean(p_values(look(measure, changed, past, LIKE, risk, lengths, **fields)) <= risk)
