@@ -60,7 +60,9 @@ class Completeness(Measure):
         reasons.add(question.clock.grid.irregular, "an irregular feed has no cadence by which a row is due")
         reasons.add((n == 0)[:, None], "no row is due in the window: all of it is closed")
         if question.stays.literal:
-            return exact(question.stays, share, n, n - came, reasons, span=self.span, method="delivered over due stamps")
+            return exact(
+                question.stays, share, n, n - came, reasons, span=self.span, method="delivered over due stamps"
+            )
         law = against_past(np.where(due, panel.delivered, np.nan), panel.start, POWER)
         reasons.add(panel.start == 0, "no history: pass --history or learn a baseline")
         reasons.add(law.past_rows == 0, "no row was due in history: pass a longer --history")

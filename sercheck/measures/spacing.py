@@ -124,7 +124,9 @@ class Spacing(Measure):
             count, n = _counted(grid.tally, look), grid.tally.rows
             n_missing = np.zeros(len(n), dtype=np.int64)
         observed = count.astype(np.float64)
-        return exact(question.stays, observed, n, n_missing, reasons, span=self.span, method=METHODS[look], integer=True)
+        return exact(
+            question.stays, observed, n, n_missing, reasons, span=self.span, method=METHODS[look], integer=True
+        )
 
 
 def _counted(tally: Tally, look: str) -> Ints:
