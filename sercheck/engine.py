@@ -29,7 +29,7 @@ class Steps(Protocol):
         """A length in time or steps as a number of steps."""
 
     @property
-    def step_ns(self) -> int:
+    def step(self) -> int:
         """Nanoseconds of one step."""
 
 
@@ -91,7 +91,7 @@ def _panel(grid: Grid, rule: Rule, column: str, run: Run) -> Panel:
 
 
 def _look(place: int, rule: Rule, measure: Measure, panel: Panel, grid: Grid, chosen: Bools, run: Run) -> Seen:
-    clock = Clock(_part(grid, chosen), run.as_of, run.cadence.step_ns, run.book.timezone)
+    clock = Clock(_part(grid, chosen), run.as_of, run.cadence.step, run.book.timezone)
     question = Question(rule.fields, rule.stays, rule.false_alarm, dict(panel.axis.lengths), clock)
     if panel.values.shape[1] == panel.start:
         raise UsageError(

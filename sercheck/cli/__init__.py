@@ -26,16 +26,16 @@ TROUBLE = 2
 class _ByName(click.Group):
     """A group whose commands are imported when they are called; the list itself needs no import."""
 
-    def list_commands(self, ctx: click.Context) -> list[str]:  # noqa: ARG002  click's signature
+    def list_commands(self, ctx: click.Context) -> list[str]:
         return list(COMMANDS)
 
-    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:  # noqa: ARG002  click's signature
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
         if cmd_name not in COMMANDS:
             return None
         command: click.Command = importlib.import_module(f"sercheck.cli.{cmd_name}").command
         return command
 
-    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:  # noqa: ARG002  click's
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
         with formatter.section("Commands"):
             formatter.write_dl(list(COMMANDS.items()))
 

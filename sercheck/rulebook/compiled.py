@@ -108,6 +108,7 @@ class Rulebook:
         limits: ``memory`` (bytes) and ``time`` (seconds).
         fingerprint: sha256 of the canonical content (comments, order of keys and layout do not change it).
         path: where it was read from, for messages.
+        text: the YAML it was compiled from.
     """
 
     feed: str
@@ -129,3 +130,4 @@ class Rulebook:
     limits: Mapping[str, float] = field(default_factory=dict)
     fingerprint: str = ""
     path: str = ""
+    text: str = ""

@@ -16,7 +16,7 @@ from sercheck.rulebook.compiled import Rulebook
 from sercheck.rulebook.compiler import Compiler, resolved
 from sercheck.rulebook.places import LARGEST, read
 
-NOT_CONTENT = ("path", "fingerprint", "line")
+NOT_CONTENT = ("path", "text", "fingerprint", "line")
 """What says where the rules stand, not what they are."""
 
 
@@ -56,7 +56,7 @@ def _compiled(text: str, source: str, folder: Path) -> Rulebook:
     book = compiler.compile()
     if book is None:
         raise RuleFileError.of(sorted(compiler.mistakes.found, key=_by_line))
-    return dataclasses.replace(book, fingerprint=fingerprint(book), history=resolved(book.history, folder))
+    return dataclasses.replace(book, text=text, fingerprint=fingerprint(book), history=resolved(book.history, folder))
 
 
 def _by_line(mistake: RuleFileError) -> tuple[int, int]:

@@ -1,0 +1,58 @@
+"""``sercheck gate``: parse, call, print."""
+
+from __future__ import annotations
+
+import json
+import sys
+
+import click
+
+from sercheck.cli.say import say
+
+
+@click.command("gate")
+@click.argument("rules", type=click.Path())
+@click.argument("batch", type=click.Path(), nargs=-1, required=True)
+@click.option("--history", multiple=True, metavar="PATH", help="Rows let in before: files or a glob.")
+@click.option(
+    "--records", metavar="FILE", help="Write the records: .jsonl, .csv or .parquet; - is JSON lines on stdout."
+)
+@click.option("--store", envvar="SERCHECK_STORE", default=".sercheck", show_default=True, metavar="DIR")
+@click.option("--released-to", type=click.Path(), metavar="DIR", help="Move the batch files here when released.")
+@click.option("--held-to", type=click.Path(), metavar="DIR", help="Move the batch files here when held.")
+@click.option("--as-of", metavar="TIME", help="The clock to judge by (default: now).")
+@click.option("--no-keep", is_flag=True, help="Write nothing to store or archive.")
+@click.option("--format", "form", type=click.Choice(["text", "json"]), default="text", show_default=True)
+def command(
+    rules: str,
+    batch: tuple[str, ...],
+    history: tuple[str, ...],
+    records: str | None,
+    store: str,
+    released_to: str | None,
+    held_to: str | None,
+    as_of: str | None,
+    no_keep: bool,
+    form: str,
+) -> None:
+    """Judge BATCH (files or globs) by the rule file RULES.
+
+    Ends with 0 when the batch is released, 1 when it is held, 2 in trouble.
+    """
+    from sercheck.cli.screen import answer
+    from sercheck.outputs import move_batch
+    from sercheck.verdict import gate
+
+    if form == "json" and records == "-":
+        raise click.UsageError("--format json and --records - both want stdout; give the records a file")
+    verdict = gate(rules, list(batch), history=list(history) or None, as_of=as_of, store=None if no_keep else store)
+    if records:
+        verdict.table.write(records)
+    if form == "json":
+        click.echo(json.dumps(verdict.summary(), allow_nan=False, ensure_ascii=False))
+    else:
+        say(answer(verdict))
+    folder = released_to if verdict.released else held_to
+    if folder:
+        move_batch(verdict.paths, folder)
+    sys.exit(0 if verdict.released else 1)

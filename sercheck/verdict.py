@@ -1,0 +1,274 @@
+"""Judge one batch from files or frames to a stored decision: the Python interface, and what the command line calls."""
+
+from __future__ import annotations
+
+import re
+import time
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from datetime import UTC, datetime, timedelta
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from sercheck import __version__
+from sercheck.collect import Common, records
+from sercheck.engine import Run, measure_block
+from sercheck.errors import BatchError, BatchHeld, UsageError
+from sercheck.intake.layout import Layout
+from sercheck.intake.stream import feed_cadence, feed_grids, open_feed
+from sercheck.judge import Judged, Seen, judge
+from sercheck.record import Records, utc_text
+from sercheck.rulebook import load_rules
+from sercheck.rulebook.budget import expected_false_holds
+from sercheck.rulebook.compiled import Rulebook
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from sercheck.grid import Grid
+
+    Rows = str | Path | Sequence[str | Path] | pd.DataFrame
+
+
+@dataclass(frozen=True)
+class Facts:
+    """The batch in numbers.
+
+    Attributes:
+        first: first step of the batch, UTC, RFC 3339.
+        last: last step.
+        rows: rows delivered.
+        series: number of series.
+    """
+
+    first: str
+    last: str
+    rows: int
+    series: int
+
+
+@dataclass(frozen=True)
+class Verdict:
+    """What became of a batch, with every record.
+
+    Attributes:
+        decision: ``released`` or ``held``.
+        batch_id: derived from the batch's content.
+        feed: name of the feed.
+        table: the records as columns.
+        facts: the batch in numbers.
+        notes: what the reader should know that no rule asks about.
+        paths: the files the batch came from (empty for a frame).
+        expected: most false holds a healthy feed has on average, and in which period; None when the rule file does not
+            say how often a batch comes.
+    """
+
+    decision: str
+    batch_id: str
+    feed: str
+    table: Records
+    facts: Facts
+    notes: tuple[str, ...] = ()
+    paths: tuple[str, ...] = ()
+    expected: tuple[float, str] | None = None
+
+    @property
+    def counts(self) -> dict[str, int]:
+        """Records by outcome."""
+        return self.table.counts()
+
+    @property
+    def released(self) -> bool:
+        """The batch may be loaded."""
+        return self.decision == "released"
+
+    @property
+    def records(self) -> pd.DataFrame:
+        """The records as a DataFrame with nullable types."""
+        return self.table.to_frame()
+
+    def summary(self) -> dict[str, Any]:
+        """The verdict as plain data, as ``sercheck gate --format json`` prints it."""
+        expected = None if self.expected is None else {"per": self.expected[1], "count": self.expected[0]}
+        return {
+            "decision": self.decision,
+            "batch_id": self.batch_id,
+            "counts": self.counts,
+            "failed": list(self.table.rows_where("outcome", "fail")),
+            "false_holds_expected": expected,
+            "notes": list(self.notes),
+        }
+
+    def raise_if_held(self) -> None:
+        """Raise ``BatchHeld`` when the batch may not be loaded, for a step of a pipeline."""
+        if self.released:
+            return
+        reasons = [row["reason"] for row in self.table.rows() if row["action"] == "hold"]
+        raise BatchHeld(
+            f"batch {self.batch_id} of {self.feed}",
+            f"held: {'; '.join(reasons[:3])}" + (f" and {len(reasons) - 3} more" if len(reasons) > 3 else ""),
+        )
+
+
+def gate(
+    rules: Rulebook | str | Path,
+    batch: Rows,
+    history: Rows | None = None,
+    *,
+    as_of: str | None = None,
+    store: str | Path | None = None,
+    ledger: str | None = None,
+) -> Verdict:
+    """Judge a batch.
+
+    Args:
+        rules: a compiled rule file (``load_rules``) or its path.
+        batch: the newest rows: a DataFrame, a path, several, or a glob.
+        history: rows let in before, likewise; default what the rule file names.
+        as_of: the clock to judge by, RFC 3339 or any stamp that pandas reads (UTC when it has no offset); default now.
+        store: folder of the ledger that the judgement is kept in; default none is kept.
+        ledger: SQLAlchemy URL of the ledger, where it is not in the store.
+
+    The same batch judged again by the same rules against the same history changes nothing: what the ledger has stands
+    and is returned.
+
+    Raises:
+        SercheckError: rule file, batch, history or store cannot be used. Nothing is released then.
+    """
+    book = rules if isinstance(rules, Rulebook) else load_rules(rules)
+    judged_at = _clock(as_of)
+    layout = layout_of(book)
+    source = open_feed(batch, layout)
+    given = history if history is not None else list(book.history) or None
+    past = None if given is None else open_feed(given, layout)
+    counted = _Counted()
+    run = Run(book, feed_cadence(source, past, layout), judged_at)
+    seen: list[Seen] = []
+    notes: list[str] = []
+    for grid in feed_grids(source, past, layout):
+        counted.add(grid)
+        block, said = measure_block(grid, run)
+        seen += block
+        notes += said
+    facts = counted.facts()
+    common = Common(
+        feed=book.feed,
+        batch_id=f"{_slug(book.feed)}-{re.sub('[-:]', '', facts.first)}-{source.fingerprint[:12]}",
+        batch_fingerprint=source.fingerprint,
+        judged_at=str(utc_text(judged_at)[0]),
+        rules_fingerprint=book.fingerprint,
+        baseline_id=None if past is None else past.fingerprint,
+        sercheck_version=__version__,
+    )
+    table = records(book, _judged(book, seen), common)
+    verdict = Verdict(
+        decision="held" if np.any(table["action"] == "hold") else "released",
+        batch_id=common.batch_id,
+        feed=book.feed,
+        table=table,
+        facts=facts,
+        notes=(*counted.notes(), *dict.fromkeys(notes)),
+        paths=source.paths,
+        expected=expected_false_holds(book),
+    )
+    return verdict if store is None and ledger is None else _kept(verdict, common, book, store, ledger)
+
+
+def layout_of(book: Rulebook) -> Layout:
+    """The part of a rule file that says how rows become a grid."""
+    groups = dict.fromkeys(step.by for rule in book.rules for step in rule.after if step.kind == "every")
+    return Layout(
+        time=book.time,
+        series=book.series,
+        values=book.values,
+        every=book.every,
+        timezone=book.timezone,
+        season_clock=book.season_clock,
+        closed_days=book.closed_days,
+        seasons=book.seasons,
+        batch_every=book.batch_every,
+        group_lengths=tuple(length for length in groups if length is not None),
+    )
+
+
+def _judged(book: Rulebook, seen: Sequence[Seen]) -> list[Judged]:
+    told: list[Judged] = []
+    for place, rule in enumerate(book.rules):
+        told += judge(rule, [part for part in seen if part.rule == place])
+    return told
+
+
+def _kept(verdict: Verdict, common: Common, book: Rulebook, store: str | Path | None, url: str | None) -> Verdict:
+    """Store the judgement; what was stored before stands."""
+    from sercheck.store.ledger import open_ledger
+    from sercheck.store.rows import BatchRow, Filters, JudgementRow
+
+    facts = verdict.facts
+    batch = BatchRow(
+        verdict.batch_id, verdict.feed, common.batch_fingerprint, facts.first, facts.last, facts.rows, facts.series,
+        verdict.paths,
+    )  # fmt: skip
+    judgement = JudgementRow(
+        verdict.batch_id, common.rules_fingerprint, common.baseline_id, verdict.decision, common.judged_at,
+        book.text, __version__,
+    )  # fmt: skip
+    with open_ledger(None if store is None else str(store), url) as ledger:
+        stored = ledger.add(batch, judgement, verdict.table)
+        if stored.judged_at == common.judged_at:
+            return verdict
+        table = ledger.records(Filters(judgement_id=stored.judgement_id))
+    note = f"this batch was judged by these rules before, at {stored.judged_at}; that judgement stands"
+    return replace(verdict, decision=stored.decision, table=table, notes=(*verdict.notes, note))
+
+
+def _clock(as_of: str | None) -> int:
+    """The time to judge by as nanoseconds since 1970 UTC."""
+    if as_of is None:
+        return time.time_ns()
+    try:
+        stamp = datetime.fromisoformat(as_of)
+    except ValueError as trouble:
+        raise UsageError("--as-of", f"'{as_of}' is no time", "a time such as 2026-01-20T06:00:00Z") from trouble
+    utc = stamp.replace(tzinfo=UTC) if stamp.tzinfo is None else stamp.astimezone(UTC)
+    return round((utc - datetime(1970, 1, 1, tzinfo=UTC)) / timedelta(microseconds=1)) * 1000
+
+
+def _slug(feed: str) -> str:
+    """A feed's name as part of an id that can be typed and used as a file name."""
+    return re.sub(r"[^A-Za-z0-9_.]+", "_", feed)[:60] or "feed"
+
+
+class _Counted:
+    """What the blocks of a batch were, added up."""
+
+    def __init__(self) -> None:
+        self._stretch: tuple[int, int] | None = None
+        self._rows = self._series = 0
+        self._odd: Counter[str] = Counter()
+
+    def add(self, grid: Grid) -> None:
+        """Count a block."""
+        tally = grid.tally
+        self._stretch = (int(grid.axis.stamps[grid.start]), int(grid.axis.stamps[-1]))
+        self._rows += int(tally.rows.sum())
+        self._series += len(grid.keys)
+        self._odd["could not be placed in time (off the cadence, unreadable or far away)"] += int(tally.off_grid.sum())
+        self._odd["stand in for an earlier row with the same stamp and other values"] += int(tally.differing.sum())
+        self._odd["repeat an earlier row"] += int(tally.doubles.sum())
+        for kind, columns in (("text in place of a number", tally.unreadable), ("an infinite value", tally.infinite)):
+            for name, counts in columns.items():
+                self._odd[f"hold {kind} in {name} (taken as missing)"] += int(counts.sum())
+
+    def facts(self) -> Facts:
+        """The batch in numbers."""
+        if self._stretch is None:
+            raise BatchError("the batch", "it has no series", "rows with stamps", "Look at the file.")
+        first, last = utc_text(np.array(self._stretch)).tolist()
+        return Facts(first, last, self._rows, self._series)
+
+    def notes(self) -> tuple[str, ...]:
+        """What is odd about the rows, whether or not a rule asks."""
+        return tuple(f"{number} of {self._rows} rows {what}" for what, number in self._odd.items() if number)
