@@ -110,6 +110,18 @@ def window_scores(panel: Panel) -> Floats:
     return panel.remember("window scores", lambda: scored(panel).of(past(panel).window))
 
 
+def quartile_scale(panel: Panel) -> Floats:
+    """What one step of a score is worth in the unit of the rows: history's quartile distance over that of N(0, 1).
+
+    The standard deviation where the quartiles coincide. Shape (S,).
+    """
+    told, unit = past(panel), scored(panel).unit
+    quartile = 0.6744897501960817
+    at = np.full((len(told.n), 1), quartile)
+    distance = (unit(at) - unit(-at))[:, 0] / (2 * quartile)
+    return np.where(distance > 0, distance, np.sqrt(variance(told.history))) * told.scale
+
+
 def mean(x: Floats) -> Floats:
     """Mean of the observed values of each row; NaN when there is none."""
     seen = ~np.isnan(x)
