@@ -5,8 +5,8 @@ from __future__ import annotations
 import re
 import time
 from collections import Counter
-from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -62,6 +62,7 @@ class Verdict:
         facts: the batch in numbers.
         notes: what the reader should know that no rule asks about.
         paths: the files the batch came from (empty for a frame).
+        abouts: what the rule file says about each rule, by name.
         expected: most false holds a healthy feed has on average, and in which period; None when the rule file does not
             say how often a batch comes.
     """
@@ -73,6 +74,7 @@ class Verdict:
     facts: Facts
     notes: tuple[str, ...] = ()
     paths: tuple[str, ...] = ()
+    abouts: Mapping[str, str] = field(default_factory=dict)
     expected: tuple[float, str] | None = None
 
     @property
@@ -172,6 +174,7 @@ def gate(
         facts=facts,
         notes=(*counted.notes(), *dict.fromkeys(notes)),
         paths=source.paths,
+        abouts={rule.name: rule.about for rule in book.rules if rule.about},
         expected=expected_false_holds(book),
     )
     return verdict if store is None and ledger is None else _kept(verdict, common, book, store, ledger)

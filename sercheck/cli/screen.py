@@ -58,6 +58,8 @@ def _failed(verdict: Verdict) -> list[str]:
         more = len(rows) - MOST_SERIES
         if more > 0:
             lines.append(f"    and {more} more")
+        if rule in verdict.abouts:
+            lines.append(folded(plain(verdict.abouts[rule], 300), "    ", "    "))
     if len(by_rule) > MOST_RULES:
         lines.append(f"  and {len(by_rule) - MOST_RULES} more rules failed")
     return lines
