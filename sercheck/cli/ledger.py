@@ -33,11 +33,11 @@ def _moment(text: str | None, *, end: bool) -> str | None:
         return None
     try:
         stamp = datetime.fromisoformat(text)
-    except ValueError:
+        if end and len(text) <= len("2026-01-12"):
+            stamp = stamp.replace(hour=23, minute=59, second=59)
+        utc = (stamp if stamp.tzinfo else stamp.replace(tzinfo=UTC)).astimezone(UTC)
+    except (ValueError, OverflowError):
         raise click.BadParameter(f"{text!r} is no date or time; wanted 2026-01-12 or 2026-01-12T06:00:00Z") from None
-    if end and len(text) <= len("2026-01-12"):
-        stamp = stamp.replace(hour=23, minute=59, second=59)
-    utc = (stamp if stamp.tzinfo else stamp.replace(tzinfo=UTC)).astimezone(UTC)
     # Without the Z a start sorts before all fractions of its second; with it an end sorts behind them.
     return f"{utc:%Y-%m-%dT%H:%M:%S}" + ("Z" if end else "")
 
