@@ -32,7 +32,7 @@ def read_json(path: Path, zipped: bool, layout: Layout, cadence: Cadence) -> lis
     try:
         columns = _fast(path, zipped, layout)
         chunks = [to_chunk(columns, layout, cadence, str(path))]
-    except (pa.ArrowInvalid, KeyError):
+    except (pa.ArrowInvalid, KeyError, json.JSONDecodeError, RecursionError):
         chunks = _slow(path, zipped, layout, cadence)
     return chunks
 
@@ -88,10 +88,9 @@ def _slow(path: Path, zipped: bool, layout: Layout, cadence: Cadence) -> list[Ch
         while block := list(islice(objects, LINES)):
             for row in block:
                 seen.update(dict.fromkeys(row))
+            check_columns(seen, layout, str(path))
             columns = {name: _column([row.get(name) for row in block]) for name in layout.needed}
             chunks.append(to_chunk(columns, layout, cadence, str(path)))
-    if chunks:
-        check_columns(seen, layout, str(path))
     return chunks
 
 

@@ -31,7 +31,8 @@ def expand(paths: str | Path | Sequence[str | Path]) -> list[Path]:
         raise BatchError("input", "no file is named", "one file, several, or a glob")
     files: list[Path] = []
     for path in given:
-        files.extend(_expand_one(str(path)))
+        with told(Path(path)):
+            files.extend(_expand_one(str(path)))
     return files
 
 
@@ -96,6 +97,7 @@ def _sentence(text: str) -> tuple[str, str]:
         ("straddl", f"a single row is longer than {CSV_BLOCK:,} bytes", "short rows (a quote may be left open)"),
         ("magic bytes", "the content is not Parquet, or breaks off", "a whole Parquet file"),
         ("footer", "the content is not Parquet, or breaks off", "a whole Parquet file"),
+        ("Empty CSV", "the file has columns and no rows", "at least one row"),
         ("parse error: Expected", f"rows of different length ({text[:160]})", "as many cells in every row as columns"),
     )
     for sign, came, wanted in known:

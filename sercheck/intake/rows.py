@@ -92,7 +92,7 @@ class Fingerprint:
 
     def __init__(self, values: tuple[str, ...]) -> None:
         self._columns = _text_numbers(np.array(values, dtype=object))
-        self._sums = np.zeros(2, dtype=np.uint64)
+        self._sums = [0, 0]
         self._rows = 0
 
     def add(self, rows: Rows) -> None:
@@ -118,15 +118,15 @@ class Fingerprint:
             mixed *= _MIX_2
             np.right_shift(mixed, np.uint64(32), out=other)
             mixed ^= other
-            self._sums[0] += mixed.sum()
+            self._sums[0] += int(mixed.sum())
             mixed *= _MIX_1
             np.right_shift(mixed, np.uint64(31), out=other)
             mixed ^= other
-            self._sums[1] += mixed.sum()
+            self._sums[1] += int(mixed.sum())
 
     def text(self) -> str:
         """The fingerprint as hexadecimal digits."""
-        first, second = (int(total) for total in self._sums)
+        first, second = (total % (1 << 64) for total in self._sums)
         return f"{first:016x}{second:016x}{self._rows:x}"
 
 
