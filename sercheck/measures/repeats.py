@@ -11,10 +11,12 @@ Formula: a literal bound is held against the observation itself, which has no sa
   τ the variance of the stretches' counts over the binomial variance (at least 1; 4 with 20 stretches or fewer),
   M = (n − τ)/(τ − 1) between ½ and N + 1, p = P(BetaBin(n, πM, (1 − π)M) ≥ k). Run: p = 1 − exp(−n p01 p11^{r−1}),
   p11 the chance that a repeat follows a repeat, or three of them where that is larger.
-- 8 stretches or more (assumes a stationary history). Share: Student's t on asin √share of the stretches. Run: a
-  geometric tail beyond the longest length that ten of history's runs reach.
+- 8 stretches or more (assumes a stationary history). Share: the larger p of Student's t on asin √share of
+  the stretches and of the beta-binomial law above, which is right where repeats are rare. Run: a geometric tail beyond
+  the longest length that ten of history's runs reach.
 
-Source: runs of a two-state chain by Poisson clumping (Aldous 1989); variance-stabilised shares (Anscombe 1948).
+Source: runs of a two-state chain by Poisson clumping (Aldous 1989); beta-binomial law (Skellam 1948);
+variance-stabilised shares (Anscombe 1948).
 
 Unit: `look: run` (default) counts equal values, 1 when nothing repeats; `look: share` is a share of rows, 0 to 1. The
 row before the window counts as the start of its first run.
@@ -45,7 +47,7 @@ from pydantic import BaseModel, ConfigDict
 from sercheck.grid import Panel
 from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Reference
 from sercheck.measures._exact import exact
-from sercheck.reference import Pivot
+from sercheck.reference import Larger, Pivot
 from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.recurrence import RunLaw, beta_binomial_share, chain_runs, past_runs
 from sercheck.serial.repeats import equal_to_earlier, longest_equal_run, resting_value, share_of
@@ -151,7 +153,12 @@ def _run(past: Floats, batch: Floats, *, recent: bool) -> tuple[Floats, Referenc
 def _share(past: Floats, batch: Floats, *, recent: bool) -> tuple[Floats, Reference, Floats, str]:
     if recent:
         law = beta_binomial_share(past, batch, POWER)
-        return share_of(batch)[:, None], law, law.rows / law.tau, "beta-binomial share of rows equal to the last"
+        return (
+            share_of(batch)[:, None],
+            law,
+            law.rows / law.tau,
+            "beta-binomial share of rows equal to the last (Skellam 1948)",
+        )
     return _share_by_windows(past, batch)
 
 
@@ -178,7 +185,8 @@ def _share_by_windows(past: Floats, batch: Floats) -> tuple[Floats, Reference, F
         to_unit=_to_share,
         naive_scale=naive[:, None],
     )
-    return share[:, None], pivot, n_eff[:, None], "window-t on asin √share (Anscombe 1948)"
+    method = "larger p of window-t on asin √share (Anscombe 1948) and of the beta-binomial share (Skellam 1948)"
+    return share[:, None], Larger(pivot, beta_binomial_share(past, batch, POWER)), n_eff[:, None], method
 
 
 def _to_share(angle: Floats) -> Floats:
