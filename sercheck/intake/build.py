@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from sercheck.errors import BatchError
+from sercheck.intake import arrow
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.cells import join_names, sorted_names, to_names, to_values
 from sercheck.intake.layout import Layout
@@ -82,11 +83,9 @@ def _joined(parts: list[np.ndarray]) -> np.ndarray:
 def _one_numbering(chunks: list[Chunk]) -> tuple[np.ndarray, np.ndarray]:
     if len(chunks) == 1:
         return sorted_names(chunks[0].names, chunks[0].codes)
-    import pyarrow as pa
-
-    every = pa.array(np.concatenate([chunk.names for chunk in chunks]), pa.string()).dictionary_encode()
+    every = arrow.texts(np.concatenate([chunk.names for chunk in chunks])).dictionary_encode()
     names = np.array(every.dictionary.to_pylist(), dtype=object)
-    names, numbers = sorted_names(names, every.indices.to_numpy(zero_copy_only=False).astype(np.int32))
+    names, numbers = sorted_names(names, arrow.codes(every, -1).astype(np.int32))
     starts = np.cumsum([0, *(len(chunk.names) for chunk in chunks)])
     pieces = [numbers[start:][chunk.codes] for start, chunk in zip(starts, chunks, strict=False)]
     return names, np.concatenate(pieces)

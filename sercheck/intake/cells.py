@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from sercheck.errors import BatchError
+from sercheck.intake import arrow
 from sercheck.intake.rows import INFINITE, UNREADABLE
 from sercheck.serial.arrays import Floats
 
@@ -35,8 +36,7 @@ def to_values(column: pa.Array, place: str) -> Floats:
 
     kind = column.type
     if pa.types.is_dictionary(kind):
-        codes = pc.fill_null(column.indices, -1).to_numpy(zero_copy_only=False).astype(np.int64)
-        numbers: Floats = np.append(to_values(column.dictionary, place), np.nan)[codes]
+        numbers: Floats = np.append(to_values(column.dictionary, place), np.nan)[arrow.codes(column, -1)]
         return numbers
     if pa.types.is_null(kind):
         return np.full(len(column), np.nan)
@@ -48,7 +48,8 @@ def to_values(column: pa.Array, place: str) -> Floats:
         raise BatchError(place, f"the value column is of type {kind}", "numbers")
     if column.type != pa.float64():
         column = pc.cast(column, pa.float64(), safe=False)
-    return _marked(column.to_numpy(zero_copy_only=False))
+    numbers, empty = arrow.numbers(column), arrow.nulls(column)
+    return _marked(numbers if empty is None else np.where(empty, np.nan, numbers))
 
 
 def _marked(numbers: Floats) -> Floats:
@@ -101,15 +102,12 @@ def to_names(column: pa.Array, place: str) -> tuple[np.ndarray, np.ndarray]:
     words = column.dictionary
     if not pa.types.is_string(words.type):
         words = _as_text(words, place)
-    whole = pc.match_substring_regex(words, _WHOLE)
-    if pc.any(whole).as_py():
+    if arrow.bools(pc.match_substring_regex(words, _WHOLE)).any():
         words = pc.replace_substring_regex(words, _WHOLE, r"\1")
-    codes = column.indices
-    if codes.null_count or words.null_count:
-        codes = pc.fill_null(codes.cast(pa.int32()), len(words))
-        words = pa.concat_arrays([pc.fill_null(words, ""), pa.array([""])])
-    numbers = codes.to_numpy(zero_copy_only=False).astype(np.int32, copy=False)
-    return _each_once(np.array(words.to_pylist(), dtype=object), numbers)
+    if words.null_count:
+        words = pc.fill_null(words, "")
+    names = np.array([*words.to_pylist(), ""], dtype=object)  # the last one is for rows without a key
+    return _each_once(names, arrow.codes(column, len(words)).astype(np.int32, copy=False))
 
 
 def _encoded(column: pa.Array, place: str) -> pa.DictionaryArray:
@@ -164,7 +162,6 @@ def join_names(parts: list[tuple[np.ndarray, np.ndarray]]) -> tuple[np.ndarray, 
     """
     if len(parts) == 1:
         return parts[0]
-    import pyarrow as pa
     import pyarrow.compute as pc
 
     combined = parts[0][1].astype(np.int64)
@@ -172,9 +169,9 @@ def join_names(parts: list[tuple[np.ndarray, np.ndarray]]) -> tuple[np.ndarray, 
         # Renumber after every part, so that the product of the numbers of names cannot overflow.
         combined = np.unique(combined * len(names) + codes, return_inverse=True)[1]
     _, first, codes = np.unique(combined, return_index=True, return_inverse=True)
-    texts = [pa.array(names[own[first]], pa.string()) for names, own in parts]
+    texts = [arrow.texts(names[own[first]]) for names, own in parts]
     escaped = [pc.replace_substring_regex(text, r"([/\\])", r"\\\1") for text in texts]
-    joined = pc.binary_join_element_wise(*escaped, "/")
+    joined = pc.binary_join_element_wise(*escaped, arrow.texts(["/"])[0])
     return np.array(joined.to_pylist(), dtype=object), codes.astype(np.int32)
 
 

@@ -21,6 +21,8 @@ def frame_chunk(frame: pd.DataFrame, layout: Layout, cadence: Cadence, place: st
     Raises:
         BatchError: a needed column is missing, twice or of a type that cannot serve.
     """
+    import pyarrow as pa
+
     levels = [str(name) for name in frame.index.names if name is not None and name not in frame.columns]
     check_columns([*map(str, frame.columns), *levels], layout, place)
     columns = {}
@@ -29,7 +31,10 @@ def frame_chunk(frame: pd.DataFrame, layout: Layout, cadence: Cadence, place: st
         columns[name] = _frame_column(values, always_text=name == layout.time)
     if len(frame) == 0:
         raise BatchError(place, "it has columns and no rows", "at least one row")
-    return to_chunk(columns, layout, cadence, place)
+    try:
+        return to_chunk(columns, layout, cadence, place)
+    except pa.ArrowException as error:
+        raise BatchError(place, f"it cannot be read ({' '.join(str(error).split())[:200]})", "plain columns") from error
 
 
 def _frame_column(values: Any, *, always_text: bool) -> pa.Array:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from sercheck.intake import arrow
 from sercheck.intake.rows import Rows
 from sercheck.serial.arrays import Ints
 
@@ -17,11 +18,12 @@ def union(one: np.ndarray, other: np.ndarray) -> np.ndarray:
 
 def places_of(names: np.ndarray, among: np.ndarray) -> Ints:
     """Place of each name among other names, -1 where it is not."""
-    import pyarrow as pa
     import pyarrow.compute as pc
 
-    found = pc.index_in(pa.array(names, pa.string()), value_set=pa.array(among, pa.string()))
-    return np.asarray(pc.fill_null(found, -1).to_numpy(zero_copy_only=False)).astype(np.int64)
+    found = pc.index_in(arrow.texts(names), value_set=arrow.texts(among))
+    empty = arrow.nulls(found)
+    places = arrow.numbers(found).astype(np.int64)
+    return places if empty is None else np.where(empty, -1, places)
 
 
 def aligned(rows: Rows, keys: np.ndarray) -> Rows:

@@ -1,4 +1,4 @@
-"""Rows of a feed in compact columns, and the fingerprint of their content; depends on numpy (pyarrow where used)."""
+"""Rows of a feed in compact columns, and the fingerprint of their content; depends on ``arrow``."""
 
 from __future__ import annotations
 
@@ -8,6 +8,7 @@ from functools import cached_property
 
 import numpy as np
 
+from sercheck.intake import arrow
 from sercheck.serial.arrays import Bools, Floats, Ints
 
 _QUIET = 0x7FF8_0000_0000_0000
@@ -141,12 +142,10 @@ def _text_numbers(texts: np.ndarray) -> np.ndarray:
     """A 64-bit number for each text: its bytes and their places mixed and summed."""
     if len(texts) == 0:
         return np.zeros(0, dtype=np.uint64)
-    import pyarrow as pa
-
-    _, offsets, data = pa.array(texts, pa.large_string()).buffers()
-    ends = np.frombuffer(offsets, dtype=np.int64)[: len(texts) + 1]
+    _, offsets, data = arrow.texts(texts).buffers()
+    ends = np.frombuffer(offsets, dtype=np.int64)
     lengths = np.diff(ends)
-    letters = np.frombuffer(data or b"", dtype=np.uint8)[: ends[-1]].astype(np.uint64)
+    letters = np.frombuffer(data, dtype=np.uint8).astype(np.uint64)
     starts = np.cumsum(lengths) - lengths
     places = (np.arange(len(letters)) - np.repeat(starts, lengths)).astype(np.uint64)
     mixed = _mix((letters + np.uint64(1)) * _LANE + places * _MIX_2)

@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from sercheck.intake import arrow
 from sercheck.intake.build import Chunk, to_rows
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.layout import Layout
@@ -143,8 +144,6 @@ class SortedParquet:
 
     def _split(self, tables: list[pa.Table], after: _Group | None) -> tuple[list[pa.Table], list[pa.Table]]:
         """Rows of series that are complete, and those whose key may come again in the next group."""
-        import pyarrow as pa
-
         if after is None:
             return tables, []
         ready: list[pa.Table] = []
@@ -159,8 +158,8 @@ class SortedParquet:
                 ready += [table.slice(0, first)] if first else []
                 waiting.append(table.slice(first))
             else:
-                ready.append(table.filter(pa.array(done)))
-                waiting.append(table.filter(pa.array(~done)))
+                ready.append(table.filter(arrow.mask(done)))
+                waiting.append(table.filter(arrow.mask(~done)))
         return ready, waiting
 
     def _tables(self, groups: list[_Group], columns: list[str]) -> Iterator[pa.Table]:
@@ -207,7 +206,7 @@ def _before(column: pa.ChunkedArray, bound: Any) -> np.ndarray:
     for part in column.chunks:
         if pa.types.is_dictionary(part.type):
             smaller = np.array([word < bound for word in part.dictionary.to_pylist()], dtype=bool)
-            parts.append(smaller[part.indices.to_numpy(zero_copy_only=False)])
+            parts.append(smaller[arrow.codes(part, -1)])
         else:
-            parts.append(pc.less(part, pa.scalar(bound, part.type)).to_numpy(zero_copy_only=False))
+            parts.append(arrow.bools(pc.less(part, pa.scalar(bound, part.type))))
     return np.concatenate(parts) if parts else np.zeros(0, dtype=bool)

@@ -9,9 +9,10 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from sercheck.errors import BatchError
+from sercheck.intake import arrow
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.zone import DAY, EARLIEST, LATEST, NOT_A_STAMP, SECOND, Zone
-from sercheck.serial.arrays import Bools, Ints
+from sercheck.serial.arrays import Bools, Floats, Ints
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -45,7 +46,7 @@ class ReadStamps:
     stamps: Ints
     naive: bool | Bools
 
-    def take(self, rows: Ints) -> ReadStamps:
+    def take(self, rows: np.ndarray) -> ReadStamps:
         """The stamps at the places ``rows``; a negative place is unreadable."""
         naive = self.naive if isinstance(self.naive, bool) else self.naive[rows]
         if len(self.stamps) == 0:
@@ -69,20 +70,19 @@ def read_stamps(column: pa.Array, cadence: Cadence, place: str) -> ReadStamps:
 
     kind = column.type
     if pa.types.is_dictionary(kind):
-        codes = pc.fill_null(column.indices, -1).to_numpy(zero_copy_only=False).astype(np.int64)
-        return read_stamps(column.dictionary, cadence, place).take(codes)
+        return read_stamps(column.dictionary, cadence, place).take(arrow.codes(column, -1))
     if pa.types.is_null(kind):
         return ReadStamps(np.full(len(column), NOT_A_STAMP, dtype=np.int64), False)
     if pa.types.is_timestamp(kind):
         return ReadStamps(_to_nanoseconds(_as_integers(column), _UNIT_NANOSECONDS[kind.unit]), kind.tz is None)
     if pa.types.is_date(kind):
-        return ReadStamps(_to_nanoseconds(_as_integers(column.cast(pa.date32()), pa.int32()), DAY), True)
+        return ReadStamps(_to_nanoseconds(_as_integers(pc.cast(column, pa.date32(), safe=False), pa.int32()), DAY), True)
     if pa.types.is_string(kind) or pa.types.is_large_string(kind) or pa.types.is_string_view(kind):
-        return _read_text(column, cadence, place)
+        return _read_text(column.cast(pa.string()) if pa.types.is_string_view(kind) else column, cadence, place)
     if pa.types.is_integer(kind) or pa.types.is_floating(kind) or pa.types.is_decimal(kind):
-        numbers = pc.cast(column, pa.float64(), safe=False).to_numpy(zero_copy_only=False)
+        numbers = _floats(pc.cast(column, pa.float64(), safe=False))
         if pa.types.is_integer(kind) and column.null_count == 0:
-            return _from_numbers(numbers, cadence, place, column.to_numpy(zero_copy_only=False).astype(np.int64))
+            return _from_numbers(numbers, cadence, place, arrow.numbers(column).astype(np.int64))
         return _from_numbers(numbers, cadence, place)
     raise BatchError(place, f"the time column is of type {kind}", "timestamps, dates, text or numbers")
 
@@ -141,12 +141,16 @@ def _comes_second(codes: np.ndarray, local: Ints, where: Ints) -> Bools:
 
 def _as_integers(column: pa.Array, width: pa.DataType | None = None) -> Ints:
     import pyarrow as pa
-    import pyarrow.compute as pc
 
-    numbers = column.view(width or pa.int64())
-    if numbers.null_count:
-        numbers = pc.fill_null(numbers.cast(pa.int64()), NOT_A_STAMP)
-    return np.asarray(numbers.to_numpy(zero_copy_only=False)).astype(np.int64, copy=False)
+    numbers = arrow.numbers(column.view(width or pa.int64())).astype(np.int64, copy=False)
+    empty = arrow.nulls(column)
+    return numbers if empty is None else np.where(empty, NOT_A_STAMP, numbers)
+
+
+def _floats(column: pa.Array) -> Floats:
+    """Numbers with NaN for null."""
+    numbers, empty = arrow.numbers(column), arrow.nulls(column)
+    return numbers if empty is None else np.where(empty, np.nan, numbers)
 
 
 def _to_nanoseconds(counts: Ints, unit: int) -> Ints:
@@ -201,27 +205,27 @@ def _read_text(column: pa.Array, cadence: Cadence, place: str) -> ReadStamps:
             continue
         if not (zone is None and column.null_count == len(column)):
             return ReadStamps(_to_nanoseconds(_as_integers(whole), 1_000), zone is None)
-    if _is_yearly(cadence) and pc.all(pc.match_substring_regex(column, _YEAR)).as_py():
+    if _is_yearly(cadence) and _matches(column, _YEAR).all():
         return _civil(_parts(column, _YEAR), len(column))
-    is_number = pc.fill_null(pc.match_substring_regex(column, _NUMBER), False)
+    is_number = _matches(column, _NUMBER)
     stamps = np.full(len(column), NOT_A_STAMP, dtype=np.int64)
     naive = np.ones(len(column), dtype=bool)
     left = np.ones(len(column), dtype=bool)
     for pattern in (_ISO, _QUARTER, _COMPACT_DATE):
         here = left & _matches(column, pattern)
         if cadence.irregular and pattern is _COMPACT_DATE:
-            here &= ~is_number.to_numpy(zero_copy_only=False)
+            here &= ~is_number
         if here.any():
-            found = _civil(_parts(column.filter(pa.array(here)), pattern), int(here.sum()))
+            found = _civil(_parts(column.filter(arrow.mask(here)), pattern), int(here.sum()))
             stamps[here], naive[here] = found.stamps, found.naive
             left &= ~here
-    numeric = left & is_number.to_numpy(zero_copy_only=False)
+    numeric = left & is_number
     if numeric.any():
-        texts = pc.utf8_trim_whitespace(column.filter(pa.array(numeric)))
+        texts = pc.utf8_trim_whitespace(column.filter(arrow.mask(numeric)))
         exact = None
         with suppress(pa.ArrowInvalid):  # fractions stay floats
-            exact = pc.cast(texts, pa.int64()).to_numpy(zero_copy_only=False)
-        numbers = pc.cast(texts, pa.float64()).to_numpy(zero_copy_only=False)
+            exact = arrow.numbers(pc.cast(texts, pa.int64()))
+        numbers = arrow.numbers(pc.cast(texts, pa.float64()))
         stray = (~left).any()  # a bare number among dates is an unreadable stamp, not a reason to refuse the feed
         if not (stray and np.median(np.abs(numbers)) < SMALLEST_EPOCH and not cadence.irregular):
             found = _from_numbers(numbers, cadence, place, exact)
@@ -232,40 +236,44 @@ def _read_text(column: pa.Array, cadence: Cadence, place: str) -> ReadStamps:
 def _matches(column: pa.Array, pattern: str) -> Bools:
     import pyarrow.compute as pc
 
-    found: Bools = pc.fill_null(pc.match_substring_regex(column, pattern), False).to_numpy(zero_copy_only=False)
-    return found
+    return arrow.bools(pc.match_substring_regex(column, pattern))
 
 
 def _parts(column: pa.Array, pattern: str) -> dict[str, np.ndarray]:
-    """The named parts of each text as integers (-1 where absent); ``z`` as the offset in nanoseconds."""
-    import pyarrow as pa
+    """The named parts of each text as integers (-1 where absent); ``z`` as a flag and an offset in nanoseconds."""
     import pyarrow.compute as pc
 
     found = pc.extract_regex(column, pattern)
     parts: dict[str, np.ndarray] = {}
-    for field in found.type:
-        texts = pc.struct_field(found, field.name)
+    for field, texts in zip(found.type, found.flatten(), strict=True):
         if field.name == "z":
-            parts.update(_offset_parts(texts))
-            continue
-        if field.name == "f":
-            texts = pc.utf8_rpad(texts, 9, "0")
-            texts = pc.if_else(pc.equal(texts, "000000000"), "0", texts)
-        texts = pc.if_else(pc.equal(texts, ""), "-1", texts)
-        parts[field.name] = pc.fill_null(pc.cast(texts, pa.int64()), -1).to_numpy(zero_copy_only=False)
+            parts |= _offset_parts(texts)
+        elif field.name == "f":
+            parts["f"] = _integers(pc.utf8_rpad(texts, 9, "0"))
+        else:
+            parts[field.name] = _integers(texts)
     return parts
 
 
-def _offset_parts(texts: pa.Array) -> dict[str, np.ndarray]:
+def _integers(texts: pa.Array) -> Ints:
+    """Digits as a number, -1 for an empty text."""
     import pyarrow as pa
     import pyarrow.compute as pc
 
-    given = pc.fill_null(pc.not_equal(texts, ""), False).to_numpy(zero_copy_only=False)
-    digits = pc.replace_substring_regex(texts, r"[^0-9]", "")
-    digits = pc.utf8_lpad(pc.utf8_rpad(digits, 4, "0"), 4, "0")
-    clock = pc.fill_null(pc.cast(digits, pa.int64()), 0).to_numpy(zero_copy_only=False)
+    filled = pc.replace_substring_regex(texts, "^$", "-1")
+    numbers = arrow.numbers(pc.cast(filled, pa.int64()))
+    empty = arrow.nulls(filled)
+    return numbers if empty is None else np.where(empty, -1, numbers)
+
+
+def _offset_parts(texts: pa.Array) -> dict[str, np.ndarray]:
+    import pyarrow.compute as pc
+
+    digits = pc.utf8_rpad(pc.replace_substring_regex(texts, r"[^0-9]", ""), 4, "0")
+    clock = _integers(digits)
     minutes = clock // 100 * 60 + clock % 100
-    west = pc.fill_null(pc.starts_with(texts, "-"), False).to_numpy(zero_copy_only=False)
+    west = arrow.bools(pc.match_substring_regex(texts, "^-"))
+    given = arrow.bools(pc.match_substring_regex(texts, "."))
     return {"aware": given, "offset": np.where(west, -minutes, minutes) * 60 * SECOND}
 
 
