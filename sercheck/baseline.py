@@ -8,7 +8,7 @@ import numpy as np
 
 from sercheck.grid import Axis, Panel
 from sercheck.serial.arrays import Floats
-from sercheck.serial.season import phase_means
+from sercheck.serial.season import cycle_numbers, robust_phase_means
 
 FEWEST_CYCLES = 4
 """Cycles below which no profile is taken out (methods: phase means need at least four cycles)."""
@@ -65,16 +65,20 @@ def _residual(panel: Panel) -> Residual:
 def leave_one_cycle_out(values: Floats, panel: Panel, season: str) -> tuple[Floats, Floats]:
     """Values less the phase means of one season that ``panel``'s history teaches, and those means at every step.
 
-    A phase that history saw once or never leaves missing values: there is nothing to compare with.
+    Broken cycles (a day stuck at zero) do not teach, so that they do not bend the profile; the stretch that is left out
+    is a cycle of the shortest season inside this one. A phase that history saw once or never leaves missing values:
+    there is nothing to compare with.
     """
-    phase = panel.phase(season)
-    teaches = ~panel.axis.closed[: panel.start]
-    history = np.where(teaches, values[:, : panel.start], np.nan)
-    means, counts = phase_means(history, phase[: panel.start], panel.axis.lengths[season])
-    profile = means[:, phase]
+    axis, start = panel.axis, panel.start
+    phase, length = panel.phase(season), axis.lengths[season]
+    history = np.where(~axis.closed[:start], values[:, :start], np.nan)
+    inside = min((name for name in axis.lengths if length % axis.lengths[name] == 0), key=axis.lengths.__getitem__)
+    learned = robust_phase_means(history, phase[:start], length, cycle_numbers(panel.phase(inside)[:start]))
+    profile = learned.means[:, phase]
     without = values - profile
-    seen = counts[:, phase[: panel.start]]
+    seen = learned.counts[:, phase[:start]]
     with np.errstate(divide="ignore", invalid="ignore"):
         widen = np.where(seen > 1, seen / (seen - 1), np.nan)
-    without[:, : panel.start] *= np.where(teaches, widen, 1.0)
+    # what did not teach is already apart from the profile
+    without[:, :start] *= np.where(learned.kept | (seen == 0), widen, 1.0)
     return without, profile

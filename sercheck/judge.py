@@ -155,7 +155,7 @@ def _outcome(rule: Rule, part: Seen, told: _Evidence, level: Floats) -> Judged:
     outcome = np.where(np.isnan(told.p), UNDECIDED, np.where(failed, FAIL, PASS)).astype(np.int64)
     why, reasons = _why(seen, outcome)
     if seen.unsure is not None:
-        idle = (outcome == PASS) & (seen.unsure >= 0)
+        idle = (outcome == (FAIL if seen.certify else PASS)) & (seen.unsure >= 0)
         outcome = np.where(idle, UNDECIDED, outcome)
         why = np.where(idle, seen.unsure, why)
     if rule.matters is not None:

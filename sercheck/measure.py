@@ -82,7 +82,8 @@ class Measurement:
         integer: the observed value is a count (shown without decimals).
         certify: the p-value is that of 'there is nothing': small means the rule is kept (``stays: {present: true}``).
         unsure: index into ``reasons`` where a pass would say nothing although a failure stands, -1 elsewhere (all
-            cells keep their p-value, so that the risk is shared as if nothing were known of them), or None.
+            cells keep their p-value, so that the risk is shared as if nothing were known of them), or None. With
+            ``certify`` it is the failure that would say nothing.
     """
 
     observed: Floats

@@ -136,14 +136,14 @@ def ask_window(reasons: Reasons, season: Named, points: Ints, shrinkage: Floats,
         )
 
 
-def window_counts(window: Floats) -> tuple[Ints, Ints]:
-    """Observed and missing values of the window, both of shape (S, 1)."""
-    n: Ints = np.asarray(np.sum(~np.isnan(window), axis=1, keepdims=True), dtype=np.int64)
-    return n, window.shape[1] - n
-
-
 def effective(n: Ints, naive: Floats, scale: Floats) -> Floats:
     """Values that n count for: n times the variance of independent rows over the one used; unknown without noise."""
     told = scale > 2 * SMALLEST_ERROR
     ratio = np.divide(naive, scale, out=np.full(scale.shape, np.nan), where=told)
     return np.asarray(n * ratio[:, None] ** 2)
+
+
+def told_reasons(reasons: Reasons, unsure: Reasons) -> tuple[tuple[str, ...], Ints]:
+    """Both lists of sentences as one, and the second's places in it."""
+    texts = (*reasons.texts, *unsure.texts)
+    return texts, np.where(unsure.undecided, unsure.index + len(reasons.texts), -1)

@@ -33,13 +33,13 @@ from pydantic import BaseModel, ConfigDict, Field
 from sercheck.errors import UsageError
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Question, Reasons
-from sercheck.measures._season import ask_history, ask_window, effective, learned, named_season, window_counts
+from sercheck.measures._lags import window_counts
+from sercheck.measures._season import ask_history, ask_window, effective, learned, named_season, told_reasons
 from sercheck.measures._season_laws import Best
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats
 from sercheck.serial.matched_filter import Amplitude, matched_amplitude
 from sercheck.serial.phase import Slip, phase_slip
-from sercheck.serial.risk import t_tail
 
 THERE = 2.0
 """Standard errors of its amplitude by which a season must be there to have a phase (the usual two)."""
@@ -49,8 +49,8 @@ class SeasonPhaseFields(BaseModel):
     """``season``: a name from ``seasons`` or steps; ``reach``: largest slip searched, in steps."""
 
     model_config = ConfigDict(extra="forbid", frozen=True)
-    season: str | Annotated[int, Field(ge=3)]
-    reach: Annotated[int, Field(ge=1)] = 1
+    season: str | Annotated[int, Field(ge=3, strict=True)]
+    reach: Annotated[int, Field(ge=1, strict=True)] = 1
 
 
 class SeasonPhase(Measure):
@@ -70,8 +70,8 @@ class SeasonPhase(Measure):
                 f"less than half of the season's {season.cycle.length} steps",
                 "A slip of half a cycle forward is the same as one backward: ask for a smaller reach.",
             )
-        n, n_missing = window_counts(panel.window)
-        reasons = Reasons(n.shape)
+        n, n_missing = window_counts(panel, (season.cycle.length,))
+        reasons, unsure = Reasons(n.shape), Reasons(n.shape)
         enough = ask_history(reasons, panel, season)
         stays = question.stays
         both = stays.kind in ("like_history", "between")
@@ -89,8 +89,9 @@ class SeasonPhase(Measure):
             amplitude = matched_amplitude(told.window, told.model, panel.start)
             ask_window(reasons, season, slip.points, amplitude.shrinkage)
             _ask_power(reasons, slip)
-            _ask_season(reasons, slip, amplitude, question.risk)
+            _ask_season(unsure, amplitude)
         low, high = (0.0, 0.0) if stays.kind == "like_history" else (stays.low, stays.high)
+        texts, unsure_at = told_reasons(reasons, unsure)
         return Measurement(
             observed=slip.value[:, None],
             n=n,
@@ -99,7 +100,8 @@ class SeasonPhase(Measure):
             upper=None if high is None else _reference(slip, high),
             lower=None if low is None else _reference(slip, low),
             undecided=reasons.index,
-            reasons=tuple(reasons.texts),
+            reasons=texts,
+            unsure=unsure_at,
             method="regression on history's whitened seasonal profile moved either way, Student's t, the best of the "
             "whole window and its later half (Bonferroni)",
             assumes="stationary history, a season that stays the same",
@@ -121,13 +123,12 @@ def _ask_power(reasons: Reasons, slip: Slip) -> None:
     reasons.add((slip.looks == 0)[:, None], "a slip of the size looked for could not be seen in this window")
 
 
-def _ask_season(reasons: Reasons, slip: Slip, seen: Amplitude, risk: float) -> None:
-    """Undecided where the window does not hold the season: it has no phase then; a slip that is found stands."""
+def _ask_season(unsure: Reasons, seen: Amplitude) -> None:
+    """That there is no slip says nothing where the window does not hold the season."""
     with np.errstate(invalid="ignore"):
         absent = ~(seen.value > THERE * seen.scale)
-        p = 2 * slip.looks * t_tail(np.abs(slip.value) / slip.scale, slip.df)
-    reasons.add(
-        (absent & ~(p <= risk))[:, None],
+    unsure.add(
+        absent[:, None],
         "the window does not hold the season, so that it has no phase: see seasonal_lag for its strength",
     )
 

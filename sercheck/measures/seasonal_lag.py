@@ -43,8 +43,9 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict, Field
 
 from sercheck.grid import Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons
-from sercheck.measures._season import Named, ask_history, ask_window, effective, learned, named_season, window_counts
+from sercheck.measure import POWER, Measure, Measurement, Question, Reasons
+from sercheck.measures._lags import window_counts
+from sercheck.measures._season import Named, ask_history, ask_window, effective, learned, named_season, told_reasons
 from sercheck.measures._season_bound import bounded
 from sercheck.measures._season_laws import ChiSquare
 from sercheck.reference import Pivot
@@ -53,7 +54,7 @@ from sercheck.serial.autocovariance import autocorrelation
 from sercheck.serial.lag_law import forward
 from sercheck.serial.matched_filter import Amplitude, matched_amplitude
 from sercheck.serial.phase import SURE
-from sercheck.serial.risk import t_quantile, t_tail
+from sercheck.serial.risk import t_quantile
 from sercheck.serial.spectral import FEWEST_CYCLES, spectral_f, spectral_f_power
 from sercheck.serial.window_t import FEWEST_WINDOWS, WindowT, count_windows, window_t, windows
 
@@ -69,14 +70,15 @@ class SeasonalLagFields(BaseModel):
     """``season``: a name from ``seasons`` or steps; ``multiple``: cycles taken together."""
 
     model_config = ConfigDict(extra="forbid", frozen=True)
-    season: str | Annotated[int, Field(ge=2)]
-    multiple: Annotated[int, Field(ge=1)] = 1
+    season: str | Annotated[int, Field(ge=2, strict=True)]
+    multiple: Annotated[int, Field(ge=1, strict=True)] = 1
 
 
 class SeasonalLag(Measure):
     """Strength of a season."""
 
     kinds: ClassVar[frozenset[str]] = frozenset({"below", "above", "between", "like_history", "present"})
+    span: ClassVar[tuple[float, float]] = (-1.0, 1.0)
     Fields: ClassVar[type[BaseModel]] = SeasonalLagFields
 
     def run(self, panel: Panel, question: Question) -> Measurement:
@@ -102,7 +104,7 @@ class _Unit:
 
 def _like_history(panel: Panel, question: Question, season: Named) -> Measurement:
     reasons = Reasons((len(panel.values), 1))
-    n, n_missing = window_counts(panel.window)
+    n, n_missing = window_counts(panel, (season.cycle.length,))
     enough = ask_history(reasons, panel, season)
     if not enough.any():
         return _nothing(panel, season, reasons)
@@ -116,7 +118,9 @@ def _like_history(panel: Panel, question: Question, season: Named) -> Measuremen
     by_windows = window_t(old, new)
     _ask_evolving(reasons, panel, season, evolving, count_windows(old), by_windows)
     ask_window(reasons, season, amplitude.points, amplitude.shrinkage, ~evolving)
-    _ask_power(reasons, amplitude, evolving, question.risk, season)
+    unsure = Reasons(n.shape)
+    _ask_power(unsure, amplitude, evolving, question.risk, season)
+    texts, unsure_at = told_reasons(reasons, unsure)
     pivot = _pivot(amplitude, by_windows, new, evolving)
     n_eff = np.where(evolving[:, None], np.nan, effective(n, amplitude.naive, amplitude.scale))
     return Measurement(
@@ -127,7 +131,8 @@ def _like_history(panel: Panel, question: Question, season: Named) -> Measuremen
         upper=pivot,
         lower=pivot,
         undecided=reasons.index,
-        reasons=tuple(reasons.texts),
+        reasons=texts,
+        unsure=unsure_at,
         method="matched filter on history's seasonal profile, Student's t (errors in the profile allowed for)"
         + ("; where the season evolves, its autocorrelation against history's windows" if evolving.any() else ""),
         assumes="stationary history" + ("" if evolving.all() else ", a season that stays the same"),
@@ -138,7 +143,7 @@ def _like_history(panel: Panel, question: Question, season: Named) -> Measuremen
 
 def _nothing(panel: Panel, season: Named, reasons: Reasons) -> Measurement:
     """Nothing can be learned from history; the autocorrelation is not the amplitude, so nothing is observed."""
-    n, n_missing = window_counts(panel.window)
+    n, n_missing = window_counts(panel, (season.cycle.length,))
     unknown = np.full(n.shape, np.nan)
     pivot = Pivot(unknown, unknown, unknown, unknown, unknown, unknown)
     method = "matched filter on history's seasonal profile, Student's t"
@@ -179,16 +184,15 @@ def _ask_evolving(
         )
 
 
-def _ask_power(reasons: Reasons, seen: Amplitude, evolving: Bools, risk: float, season: Named) -> None:
-    """Undecided where a season that is gone would be missed too often; a fail stands."""
+def _ask_power(unsure: Reasons, seen: Amplitude, evolving: Bools, risk: float, season: Named) -> None:
+    """A pass says nothing where a season that is gone would be missed too often."""
     with np.errstate(invalid="ignore"):
-        p = 2 * t_tail(np.abs((seen.value - 1) / seen.scale), seen.df)
         blind = (t_quantile(1 - risk / 2, seen.df) + SURE) * seen.foreseen > 1
-        reasons.add(
-            (blind & ~(p <= risk) & ~evolving)[:, None],
-            f"season {season.name} is weak against its noise: even one that is gone would not be found with "
-            "probability .8 in this window; a longer one is needed",
-        )
+    unsure.add(
+        (blind & ~evolving)[:, None],
+        f"season {season.name} is weak against its noise: even one that is gone would not be found with probability .8 "
+        "in this window; a longer one is needed",
+    )
 
 
 def _pivot(seen: Amplitude, past: WindowT, new: Floats, evolving: Bools) -> Pivot:
@@ -211,7 +215,7 @@ def _pivot(seen: Amplitude, past: WindowT, new: Floats, evolving: Bools) -> Pivo
 
 def _present(panel: Panel, question: Question, season: Named) -> Measurement:
     length = season.cycle.length
-    n, n_missing = window_counts(panel.window)
+    n, n_missing = window_counts(panel, (season.cycle.length,))
     seen = spectral_f(panel.window, length)
     reasons = Reasons(n.shape)
     reasons.add(
@@ -222,12 +226,14 @@ def _present(panel: Panel, question: Question, season: Named) -> Measurement:
     used = max(seen.cycles * length, 1)
     reasons.add((1 - seen.n / used > GAPPY)[:, None], "more than a quarter of the window is missing")
     reasons.add(np.isnan(seen.statistic)[:, None], "the window is constant or a straight line")
-    weak = spectral_f_power(seen.cycles, length, PLAIN_SHARE, question.risk) < 0.8
-    reasons.add(
-        (~(seen.p_value <= question.risk) & weak)[:, None],
+    weak = spectral_f_power(seen.cycles, length, PLAIN_SHARE, question.risk) < POWER
+    unsure = Reasons(n.shape)
+    unsure.add(
+        weak,
         f"{seen.cycles} cycles cannot certify even a plain season at a risk of {question.risk:g}: a longer window is "
         "needed",
     )
+    texts, unsure_at = told_reasons(reasons, unsure)
     reference = ChiSquare(seen.statistic[:, None], seen.df)
     return Measurement(
         observed=seen.statistic[:, None],
@@ -237,7 +243,8 @@ def _present(panel: Panel, question: Question, season: Named) -> Measurement:
         upper=reference,
         lower=None,
         undecided=reasons.index,
-        reasons=tuple(reasons.texts),
+        reasons=texts,
+        unsure=unsure_at,
         method=f"local spectral F over {seen.f.shape[1]} harmonics, combined by Fisher (1932)",
         assumes="a spectrum that is smooth around the season",
         lags=(length,),

@@ -42,12 +42,30 @@ def phase_means(x: Floats, phase: Ints, length: int) -> tuple[Floats, Ints]:
         Means (NaN where a phase was never observed) and counts, both of shape (S, length).
     """
     seen = ~np.isnan(x)
-    picks = np.zeros((x.shape[1], length))
-    picks[np.arange(x.shape[1]), phase] = 1.0
-    counts = (seen @ picks).astype(np.int64)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        means = (np.where(seen, x, 0.0) @ picks) / counts
-    return means, counts
+    counts = _phase_sums(seen, phase, length).astype(np.int64)
+    sums = _phase_sums(x if seen.all() else np.where(seen, x, 0.0), phase, length)
+    return np.divide(sums, counts, out=np.full(sums.shape, np.nan), where=counts > 0), counts
+
+
+def _phase_sums(x: Floats | Bools, phase: Ints, length: int) -> Floats:
+    """Sum at each place of the cycle, shape (S, length); by folding where no step is skipped or doubled."""
+    sums = np.zeros((x.shape[0], length))
+    steps = x.shape[1]
+    if not steps:
+        return sums
+    first = int(phase[0])
+    if np.array_equal(phase, (first + np.arange(steps)) % length):
+        begin = min((length - first) % length, steps)
+        whole = (steps - begin) // length
+        end = begin + whole * length
+        sums[:, first : first + begin] += x[:, :begin]
+        sums += x[:, begin:end].reshape(len(x), whole, length).sum(axis=1)
+        sums[:, : steps - end] += x[:, end:]
+        return sums
+    order = np.argsort(phase, kind="stable")
+    starts = np.flatnonzero(np.diff(phase[order], prepend=-1))
+    sums[:, phase[order][starts]] = np.add.reduceat(x[:, order], starts, axis=1, dtype=np.float64)
+    return sums
 
 
 def cycle_numbers(phase: Ints) -> Ints:
