@@ -14,7 +14,7 @@ from disks import make_read_only, small_disk, somebody_else
 from record_samples import alike, batch, judgement, records
 
 from sercheck.errors import StoreError
-from sercheck.store import migrations
+from sercheck.store import database, migrations
 from sercheck.store.ledger import open_ledger
 from sercheck.store.rows import Filters
 
@@ -167,12 +167,27 @@ def test_a_bad_url_is_told_without_its_password(url, said):
     assert "secret" not in str(caught.value)
 
 
+def test_a_ledger_that_stays_busy_is_told(tmp_path, monkeypatch):
+    """While another writes the ledger can be read; who wants to write waits, and in the end is told."""
+    add(tmp_path)
+    monkeypatch.setattr(database, "WAIT", 0.2)
+    other = sqlite3.connect(tmp_path / "ledger.sqlite", isolation_level=None)
+    other.execute("BEGIN IMMEDIATE")
+    with open_ledger(str(tmp_path)) as ledger:
+        assert len(ledger.records("heat-0112-abcd")) == 6
+        with pytest.raises(StoreError, match="kept the ledger busy"):
+            ledger.add(batch(), judgement(rules_fingerprint="rules-2"), records(rules="rules-2"))
+        other.rollback()
+        ledger.add(batch(), judgement(rules_fingerprint="rules-2"), records(rules="rules-2"))
+    other.close()
+
+
 def test_a_newer_ledger_is_refused(tmp_path):
     """A ledger with a step that is not known here is neither read nor written."""
     add(tmp_path)
-    with sqlite3.connect(tmp_path / "ledger.sqlite") as database:
-        database.execute("INSERT INTO migrations VALUES ('777 from the future', '2030-01-01T00:00:00Z')")
-    database.close()
+    with sqlite3.connect(tmp_path / "ledger.sqlite") as other:
+        other.execute("INSERT INTO migrations VALUES ('777 from the future', '2030-01-01T00:00:00Z')")
+    other.close()
     assert "newer sercheck" in sentence(tmp_path)
     with pytest.raises(StoreError, match="'777 from the future' is not known here"):
         open_ledger(str(tmp_path)).batches()
@@ -217,9 +232,9 @@ def _steps(store) -> list[str]:
 
 
 def _column(store, query: str) -> set[str]:
-    database = sqlite3.connect(store / "ledger.sqlite")
-    found = {row[0] for row in database.execute(query)}
-    database.close()
+    other = sqlite3.connect(store / "ledger.sqlite")
+    found = {row[0] for row in other.execute(query)}
+    other.close()
     return found
 
 
