@@ -43,14 +43,16 @@ def own_cycles_out(panel: Panel) -> tuple[Floats, tuple[str, ...]]:
     return values, names
 
 
-def ask_alone(reasons: Reasons, panel: Panel, question: Question, run: LongRun, what: str, strong: int) -> None:
-    """The reasons that all literal bounds without history share; ``strong`` is the least size under strong memory."""
+def ask_alone(
+    reasons: Reasons, panel: Panel, question: Question, run: LongRun, what: str, strong: int, memory: float = STRONG
+) -> None:
+    """The reasons that all literal bounds without history share; ``strong`` rows are needed above ``memory``."""
     told = past(panel)
     ask_rows(reasons, told, FEWEST_ALONE, f"{what} without history")
     ask_variety(reasons, told, question.risk)
     reasons.add(~(cell(run.variance) > 0), "the window does not vary: there is no sampling error to allow for")
     reasons.add(
-        (cell(told.n) < strong) & (cell(run.memory) > STRONG),
+        (cell(told.n) < strong) & (cell(run.memory) > memory),
         f"rows depend strongly on each other: without history {what} then needs {strong} rows",
     )
 
