@@ -181,6 +181,32 @@ def test_order_of_rows_does_not_matter(feed: list[tuple[str, int, float]], rando
     assert sum(int(block.delivered.sum()) for block in blocks) == len(feed)
 
 
+doubled = st.lists(
+    st.tuples(st.sampled_from(["a", "b"]), st.integers(0, 5), st.sampled_from([0.0, 1.0, float("nan")])),
+    min_size=1, max_size=40,
+)  # fmt: skip
+
+
+@given(doubled)
+@settings(max_examples=80, deadline=None)
+def test_counts_are_those_of_a_plain_loop(feed: list[tuple[str, int, float]]) -> None:
+    """Doubles, differing rows, disorder and the values kept are what reading row after row would give."""
+    grid = one(rows([r[0] for r in feed], [float(r[1]) for r in feed], [r[2] for r in feed]))
+    first = min(r[1] for r in feed)
+    for place, key in enumerate(grid.keys):
+        seen: dict[int, list[str]] = {}
+        disorder, doubles, before = 0, 0, None
+        for _, hour, value in (r for r in feed if r[0] == key):
+            doubles += str(value) in seen.get(hour, [])
+            seen.setdefault(hour, []).append(str(value))
+            disorder += before is not None and hour < before
+            before = hour
+        own = [int(array[place]) for array in (grid.tally.doubles, grid.tally.differing, grid.tally.disorder)]
+        assert own == [doubles, sum(len(set(contents)) - 1 for contents in seen.values()), disorder]
+        for hour, contents in seen.items():
+            np.testing.assert_equal(grid.values["v"][place, hour - first], float(contents[-1]))
+
+
 IRREGULAR = Layout("t", ("k",), ("v",), "irregular")
 
 

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import gzip
+import subprocess
+import sys
 from collections.abc import Callable
 from decimal import Decimal
 from itertools import pairwise
@@ -352,3 +354,47 @@ def test_real_feeds(name: str) -> None:
     assert int(grid.tally.off_grid.sum()) == off_grid
     assert int((~grid.delivered).sum()) == missing
     assert int(grid.tally.doubles.sum() + grid.tally.differing.sum() + grid.tally.disorder.sum()) == 0
+
+
+@pytest.mark.parametrize(
+    ("day", "steps", "missing", "off_grid"),
+    [("2012-03-10", 24, 0, 0), ("2012-03-11", 23, 0, 1), ("2012-11-04", 25, 1, 0)],
+)
+def test_days_of_clock_changes(day: str, steps: int, missing: int, off_grid: int) -> None:
+    """The electricity feed gives every day 24 rows: one too many in spring, one too few in autumn."""
+    feed = pd.read_csv(FEEDS / "electricity_hourly.csv.gz")
+    batch = feed[feed.ts.str.startswith(day)]
+    grid = grid_of(batch, Layout("ts", (), ("y",), "1h", "America/New_York", batch_every="1D"))
+    assert len(grid.axis) == steps
+    assert int((~grid.delivered).sum()) == missing
+    assert grid.tally.off_grid.tolist() == [off_grid]
+
+
+MEASURE = """
+import resource, sys
+from sercheck.intake.layout import Layout
+from sercheck.intake.stream import feed_grids, open_feed
+layout = Layout("read_at", ("meter",), ("kwh",), "1h")
+cells = sum(grid.values["kwh"].size for grid in feed_grids(open_feed(sys.argv[1], layout), None, layout))
+print(cells, resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
+"""
+
+
+@pytest.mark.scale
+def test_memory_of_a_stream_is_flat(tmp_path: Path) -> None:
+    """Four times as many series of a sorted file take no more memory."""
+    steps, peaks = 1000, []
+    hours = np.datetime64("2026-01-01", "us") + np.arange(steps) * np.timedelta64(1, "h")
+    for series in (4000, 16000):
+        path = tmp_path / f"{series}.parquet"
+        schema = pa.schema({"meter": pa.string(), "read_at": pa.timestamp("us"), "kwh": pa.float64()})
+        with pq.ParquetWriter(path, schema) as out:
+            for first in range(0, series, 1000):
+                keys = np.repeat([f"m{i:06d}" for i in range(first, first + 1000)], steps)
+                numbers = np.random.default_rng(first).normal(size=len(keys))
+                out.write_table(pa.table({"meter": keys, "read_at": np.tile(hours, 1000), "kwh": numbers}, schema))
+        found = subprocess.run([sys.executable, "-c", MEASURE, str(path)], capture_output=True, text=True, check=True)
+        cells, peak = map(int, found.stdout.split())
+        assert cells == series * steps
+        peaks.append(peak)
+    assert peaks[1] < 1.15 * peaks[0]

@@ -125,3 +125,13 @@ def test_offsets_are_left_alone_beside_doubtful_readings() -> None:
     """A stamp with an offset is an instant even when it falls where the clock was doubtful."""
     cells = ["2012-11-04 01:00", "2012-11-04T01:00:00Z", "2012-03-11T02:30Z"]
     assert read(cells, zone="America/New_York") == ["2012-11-04T05:00:00", "2012-11-04T01:00:00", "2012-03-11T02:30:00"]
+
+
+def test_a_cut_column_is_read_from_its_own_start() -> None:
+    """Columns that are views into longer ones, with nulls, keep their cells."""
+    for kind in (pa.string(), pa.large_string(), pa.string_view()):
+        column = pa.array(["2026-01-01", None, "2026-01-02 01:00", "2026/01/03"], kind)
+        assert read(column.slice(1)) == ["NaT", "2026-01-02T01:00:00", "2026-01-03T00:00:00"]
+        assert read(column.slice(1, 2)) == ["NaT", "2026-01-02T01:00:00"]
+    numbers = pa.array([None, 1_767_225_600, None, 1_767_225_660], pa.timestamp("s", "UTC"))
+    assert read(numbers.slice(1)) == ["2026-01-01T00:00:00", "NaT", "2026-01-01T00:01:00"]

@@ -76,9 +76,11 @@ def read_stamps(column: pa.Array, cadence: Cadence, place: str) -> ReadStamps:
     if pa.types.is_timestamp(kind):
         return ReadStamps(_to_nanoseconds(_as_integers(column), _UNIT_NANOSECONDS[kind.unit]), kind.tz is None)
     if pa.types.is_date(kind):
-        return ReadStamps(_to_nanoseconds(_as_integers(pc.cast(column, pa.date32(), safe=False), pa.int32()), DAY), True)
+        days = _as_integers(pc.cast(column, pa.date32(), safe=False), pa.int32())
+        return ReadStamps(_to_nanoseconds(days, DAY), True)
     if pa.types.is_string(kind) or pa.types.is_large_string(kind) or pa.types.is_string_view(kind):
-        return _read_text(column.cast(pa.string()) if pa.types.is_string_view(kind) else column, cadence, place)
+        text = column.cast(pa.string()) if pa.types.is_string_view(kind) else column
+        return _read_text(text, cadence, place)
     if pa.types.is_integer(kind) or pa.types.is_floating(kind) or pa.types.is_decimal(kind):
         numbers = _floats(pc.cast(column, pa.float64(), safe=False))
         if pa.types.is_integer(kind) and column.null_count == 0:
