@@ -36,9 +36,9 @@ def ask(*words: str):
 def test_batches_are_listed_the_newest_first(store):
     """The table has a line for each batch with its decision and counts."""
     lines = ask("batches", "--store", store).output.splitlines()
-    assert " ".join(lines[0].split()) == "batch feed newest row decision pass fail undecided rows series"
-    assert lines[1].split()[:4] == ["heat-0113-beef", "substation_heat", "2026-01-13T23:00:00Z", "released"]
-    assert lines[2].split()[3:] == ["held", "3", "3", "1", "144", "6"]
+    assert " ".join(lines[0].split()) == "batch feed newest row (UTC) decision pass fail undecided rows series"
+    assert lines[1].split()[:5] == ["f-heat-0113-", "substation_heat", "2026-01-13", "23:00", "released"]
+    assert lines[2].split()[4:] == ["held", "3", "3", "1", "144", "6"]
     assert len(lines) == 3
 
 
@@ -66,6 +66,8 @@ def test_records_are_listed_by_filter(store):
     """Filters work together, and a limit says that there is more."""
     lines = ask("records", "--store", store, "--outcome", "fail", "--series", "s*").output.splitlines()
     assert [line.split()[0] for line in lines] == ["outcome", "fail", "fail", "fail"]
+    both = ask("records", "--store", store).output.splitlines()
+    assert [line.split()[-1] for line in both] == ["batch", *["f-heat-0113-"] * 2, *["f-heat-0112-"] * 7]
     limited = ask("records", "--store", store, "--limit", "2")
     assert len(limited.stdout.splitlines()) == 3
     assert limited.stderr == "There are more than these 2 records: --limit shows more.\n"

@@ -125,6 +125,9 @@ def test_ids_may_be_shortened(ledger):
     for unknown in ("nothing", "heat%", "heat_", "HEAT-0112"):
         with pytest.raises(UnknownIdError, match="not in the ledger"):
             ledger.batch(unknown)
+    assert ledger.batch("f-heat-0112").batch.batch_id == "heat-0112-abcd"
+    with pytest.raises(UsageError, match="several"):
+        ledger.batch("f-heat-0113")
     whole = str(records()["record_id"][2])
     assert list(ledger.record(whole[:12]).rows()) == [next(records().take([2]).rows())]
     with pytest.raises(UnknownIdError):

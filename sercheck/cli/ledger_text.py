@@ -14,6 +14,9 @@ if TYPE_CHECKING:
 
 TEXT_LIMIT = 50
 """Lines of a list shown to people when they name no number (about a screen)."""
+SHORT_BATCH, SHORT_RECORD = 12, 8
+"""Letters of a fingerprint or id in a list: among a million batches two alike have a chance below 1 in 500 (birthday
+problem, 48 bits); of record ids 8 letters tell those of one page apart, and ``show`` says when they do not do."""
 LABEL = 17
 """Width of the names on a page: the longest, ``batch_fingerprint``."""
 REASON = 2_000
@@ -21,9 +24,9 @@ REASON = 2_000
 
 
 def batch_table(found: Iterable[JudgedBatch]) -> str:
-    """One line a batch."""
+    """One line a batch; the beginning of its fingerprint stands for it, as whole ids leave no room."""
     heads = (
-        Head("batch", least=16), Head("feed", least=8), Head("newest row"), Head("decision"), Head("pass", right=True),
+        Head("batch"), Head("feed", least=8), Head("newest row (UTC)"), Head("decision"), Head("pass", right=True),
         Head("fail", right=True), Head("undecided", right=True), Head("rows", right=True), Head("series", right=True),
     )  # fmt: skip
     return table(heads, [_batch_line(each) for each in found])
@@ -32,23 +35,29 @@ def batch_table(found: Iterable[JudgedBatch]) -> str:
 def _batch_line(each: JudgedBatch) -> list[object]:
     batch, last = each.batch, each.last
     counts = [last.counts[outcome] for outcome in ("pass", "fail", "undecided")]
-    return [batch.batch_id, batch.feed, batch.last_stamp, last.decision, *counts, batch.rows, batch.series]
+    newest = batch.last_stamp and batch.last_stamp[: len("2026-01-12T23:00")].replace("T", " ")
+    return [batch.fingerprint[:SHORT_BATCH], batch.feed, newest, last.decision, *counts, batch.rows, batch.series]
 
 
 def record_table(found: Records) -> str:
-    """One line a record, without what only ``show`` has room for."""
-    heads = (
+    """One line a record, without what only ``show`` has room for; the batch is named where there are several."""
+    heads = [
         Head("outcome"), Head("rule", least=12), Head("column", least=6), Head("series", least=6),
         Head("lag", right=True), Head("observed", right=True), Head("limit", right=True), Head("p", right=True),
-        Head("record"), Head("batch", least=8),
-    )  # fmt: skip
-    return table(heads, [_record_line(row) for row in found.rows()])
+        Head("record"),
+    ]  # fmt: skip
+    lines = [_record_line(row) for row in found.rows()]
+    if len(set(found["batch_id"].tolist())) > 1:
+        heads.append(Head("batch"))
+        for line, fingerprint in zip(lines, found["batch_fingerprint"].tolist(), strict=True):
+            line.append(str(fingerprint)[:SHORT_BATCH])
+    return table(heads, lines)
 
 
 def _record_line(row: dict[str, Any]) -> list[object]:
-    numbers = [number(row[name]) for name in ("observed", "limit", "p_value")]
+    numbers = [number(row["observed"]), number(row["limit"]), number(row["p_value"], 2)]
     names = [row[name] for name in ("outcome", "rule", "column", "series", "lag")]
-    return [*names, *numbers, str(row["record_id"])[:8], row["batch_id"]]
+    return [*names, *numbers, str(row["record_id"])[:SHORT_RECORD]]
 
 
 def batch_page(each: JudgedBatch, found: Records) -> str:

@@ -33,9 +33,9 @@ def table(heads: Sequence[Head], rows: Sequence[Sequence[object]]) -> str:
     return "\n".join(lines)
 
 
-def number(value: float | None) -> str:
-    """A statistic with four significant digits, enough to read; the record has them all."""
-    return NOTHING if value is None else f"{value:.4g}"
+def number(value: float | None, digits: int = 4) -> str:
+    """A statistic with few significant digits, enough to read; the record has them all."""
+    return NOTHING if value is None else f"{value:.{digits}g}"
 
 
 def _cell(value: object) -> str:

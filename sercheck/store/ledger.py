@@ -137,7 +137,7 @@ class Ledger:
         return tuple(found[batch_id] for batch_id in dict.fromkeys(ids))
 
     def batch(self, batch_id: str) -> JudgedBatch:
-        """The batch whose id is, or alone begins with, ``batch_id``.
+        """The batch whose id is ``batch_id``, or whose id or fingerprint alone begins so.
 
         Raises:
             UnknownIdError: no batch is called so.
@@ -263,15 +263,17 @@ def _judged(connection: Connection, ids: list[str]) -> dict[str, JudgedBatch]:
 
 
 def _the_one(connection: Connection, kind: str, start: str) -> str:
-    from sqlalchemy import select
+    from sqlalchemy import or_, select
 
     table = tables().batches if kind == "batch" else tables().records
     column = table.c[f"{kind}_id"]
+    names = [column, table.c.fingerprint] if kind == "batch" else [column]
     if connection.execute(select(column).where(column == start)).first():
         return start
     if len(start) < SHORTEST_PREFIX:
         raise UsageError(f"{kind} {start!r}", "too short to look for", f"{SHORTEST_PREFIX} letters of the id or more")
-    ids = list(connection.execute(select(column).where(begins_with(column, start)).order_by(column).limit(6)).scalars())
+    so_called = or_(*(begins_with(name, start) for name in names))
+    ids = list(connection.execute(select(column).where(so_called).order_by(column).limit(6)).scalars())
     if not ids:
         raise _unknown(start, kind)
     if len(ids) > 1:
@@ -282,7 +284,7 @@ def _the_one(connection: Connection, kind: str, start: str) -> str:
 
 def _unknown(name: str, kind: str) -> UnknownIdError:
     todo = "`sercheck ledger batches` lists them." if kind == "batch" else "`sercheck ledger records` lists them."
-    return UnknownIdError(f"{kind} {name!r}", "not in the ledger", f"the id of a {kind}, or its beginning", todo)
+    return UnknownIdError(f"{kind} {name!r}", "not in the ledger", f"the id of a {kind} or its beginning", todo)
 
 
 def _batch(row: RowMapping) -> BatchRow:
