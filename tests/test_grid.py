@@ -98,6 +98,13 @@ def test_series_that_only_history_knows_has_a_row() -> None:
     assert grid.tally.newest[1] == NOT_A_STAMP
 
 
+def test_history_tells_which_stamp_is_wild() -> None:
+    """Of two rows fifty years apart the one beside history is the batch."""
+    grid = one(rows(["a", "a"], [-438_000, 100]), rows(["a"] * 100, [float(h) for h in range(100)]))
+    assert (grid.start, len(grid.axis)) == (100, 101)
+    assert grid.tally.off_grid.tolist() == [1]
+
+
 def test_batch_out_of_reach_of_history_is_refused() -> None:
     """A batch of the wrong year is trouble, not a batch without history."""
     with pytest.raises(BatchError, match="from the history"):
@@ -132,6 +139,14 @@ def test_stretch_of_a_week_of_days_follows_history() -> None:
     grid = one(rows(["a"] * 6, [24.0 * d for d in range(1, 7)]), past, layout)
     assert grid.start == 20
     assert grid.delivered[0, 20:].tolist() == [False] + [True] * 6
+
+
+def test_stretch_of_a_month_of_days() -> None:
+    """A batch of a month has the days of that month."""
+    layout = Layout("t", ("k",), ("v",), "D", "Europe/Oslo", batch_every="MS")
+    grid = one(rows(["a"] * 3, [24.0 * 30, 24.0 * 33, 24.0 * 40]), None, layout)  # 4, 7 and 14 February
+    assert len(grid.axis) == 28
+    assert np.flatnonzero(grid.delivered[0]).tolist() == [3, 6, 13]
 
 
 def test_one_row_and_all_missing_are_grids() -> None:

@@ -9,7 +9,7 @@ import pytest
 from sercheck.errors import BatchError
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.stamps import read_stamps, resolve
-from sercheck.intake.zone import Zone
+from sercheck.intake.zone import NOT_A_STAMP, Zone
 
 
 def read(cells: object, every: str = "1h", zone: str = "UTC", codes: list[int] | None = None) -> list[str]:
@@ -119,6 +119,17 @@ def test_autumn_hour_by_order_of_delivery() -> None:
 def test_spring_hour_never_was() -> None:
     """A reading that the clock skipped is no stamp."""
     assert read(["2012-03-11 02:30", "2012-03-11 03:30"], zone="America/New_York") == ["NaT", "2012-03-11T07:30:00"]
+
+
+def test_a_day_without_midnight_is_a_day() -> None:
+    """Where clocks go forward at midnight the date still stands for its day in a daily feed."""
+    feed = read_stamps(pa.array(["2017-10-14", "2017-10-15", "2017-10-16"]), Cadence("D"), "t")
+    zone = Zone("America/Sao_Paulo")
+    codes = np.zeros(3, dtype=np.int32)
+    assert (resolve(feed, codes, zone) == NOT_A_STAMP).tolist() == [False, True, False]
+    index, on_grid = Cadence("D", zone.name).index_of(resolve(feed, codes, zone, whole_days=True))
+    assert np.diff(index).tolist() == [1, 1]
+    assert on_grid.all()
 
 
 def test_offsets_are_left_alone_beside_doubtful_readings() -> None:

@@ -53,7 +53,7 @@ def grids(
     if cadence.anchor is None:
         cadence = cadence.anchored((batch if history is None else history).stamps)
     past = None if history is None else extent(history, cadence)
-    laid = plan(extent(batch, cadence), past, cadence, layout, need_steps)
+    laid = plan(extent(batch, cadence, past), past, cadence, layout, need_steps)
     yield from planned_grids(batch, history, laid, block_cells)
 
 

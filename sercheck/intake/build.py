@@ -59,7 +59,7 @@ def to_rows(chunks: list[Chunk], cadence: Cadence) -> Rows:
     for name in chunks[0].values:
         values[name] = _joined([chunk.values[name] for chunk in chunks])
     chunks.clear()
-    return Rows(names, codes, resolve(read, codes, cadence.zone), values)
+    return Rows(names, codes, resolve(read, codes, cadence.zone, whole_days=cadence.daily_or_longer), values)
 
 
 def must_have_stamps(rows: Rows, layout: Layout, place: str) -> None:

@@ -257,8 +257,10 @@ class Cadence:
         first = int(self.index_of(np.array([stamp]))[0][0])
         if isinstance(length, int):
             return first, first + length
-        steps = self.steps(length)
         asked = parse_length(length)
+        if asked.kind == "months" and self.kind in ("fixed", "days", "business"):
+            return self._months_from(asked, stamp, floor=floor)
+        steps = self.steps(length)
         if self.daily_or_longer:
             if not floor or asked.kind != "months":
                 return first, first + steps
@@ -271,6 +273,16 @@ class Cadence:
         ends = self.zone.utc(np.array([begin_local, begin_local + size]))
         low, high = (self._at_or_after(int(end)) for end in ends)
         return (low if floor else first), (high if asked.kind == "days" else (low if floor else first) + steps)
+
+    def _months_from(self, asked: Length, stamp: int, *, floor: bool) -> tuple[int, int]:
+        """Months of the calendar in steps of days or less; without ``floor`` from the stamp's own day of the month."""
+        local = int(self.zone.local(np.array([stamp]))[0])
+        month = int(months_of(np.array([local // DAY]))[0])
+        begin = month - (month - asked.anchor) % asked.size if floor else month
+        low, high = (int(day) * DAY for day in first_days(np.array([begin, begin + asked.size])))
+        into = 0 if floor else local - int(first_days(np.array([month]))[0]) * DAY
+        ends = self.zone.utc(np.array([low + into, high + into]))
+        return self._at_or_after(int(ends[0])), self._at_or_after(int(ends[1]))
 
     def _period_of_months(self, asked: Length, index: int) -> int:
         months = index * self.length.size + self.length.anchor

@@ -18,7 +18,7 @@ from sercheck.intake.layout import Layout
 from sercheck.intake.parquet import parquet_file, table_chunk
 from sercheck.intake.paths import told
 from sercheck.intake.rows import Rows
-from sercheck.intake.stamps import read_stamps, resolve
+from sercheck.intake.stamps import ReadStamps, read_stamps, resolve
 from sercheck.intake.zone import NOT_A_STAMP
 from sercheck.serial.arrays import Ints
 
@@ -87,7 +87,10 @@ class SortedParquet:
         for table in self._tables(self.groups if groups is None else groups, [name]):
             parts = [read_stamps(part, self.cadence, name) for part in table.column(name).chunks]
             codes = [np.arange(len(part.stamps)) for part in parts]
-            yield np.concatenate([resolve(p, c, self.cadence.zone) for p, c in zip(parts, codes, strict=True)])
+            yield np.concatenate([self._resolved(part, code) for part, code in zip(parts, codes, strict=True)])
+
+    def _resolved(self, read: ReadStamps, codes: np.ndarray) -> Ints:
+        return resolve(read, codes, self.cadence.zone, whole_days=self.cadence.daily_or_longer)
 
     def ends(self) -> tuple[int, int] | None:
         """First and last stamp by the statistics in the footers, or None where these do not tell."""
@@ -107,7 +110,7 @@ class SortedParquet:
                         return None
                     found += [statistics.min, statistics.max]
         ends = pa.array([min(found), max(found)], kind)
-        stamps = resolve(read_stamps(ends, self.cadence, self.layout.time), np.arange(2), self.cadence.zone)
+        stamps = self._resolved(read_stamps(ends, self.cadence, self.layout.time), np.arange(2))
         return None if (stamps == NOT_A_STAMP).any() else (int(stamps[0]), int(stamps[1]))
 
     def blocks(self) -> Iterator[Rows]:

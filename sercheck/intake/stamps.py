@@ -89,7 +89,7 @@ def read_stamps(column: pa.Array, cadence: Cadence, place: str) -> ReadStamps:
     raise BatchError(place, f"the time column is of type {kind}", "timestamps, dates, text or numbers")
 
 
-def resolve(read: ReadStamps, codes: np.ndarray, zone: Zone) -> Ints:
+def resolve(read: ReadStamps, codes: np.ndarray, zone: Zone, *, whole_days: bool = False) -> Ints:
     """Put naive stamps on the zone's clock.
 
     A reading that comes twice in autumn is told apart by the order of delivery within its series: the first is summer
@@ -100,6 +100,7 @@ def resolve(read: ReadStamps, codes: np.ndarray, zone: Zone) -> Ints:
         read: stamps as read.
         codes: number of the series of each row, in order of delivery.
         zone: the feed's clock.
+        whole_days: stamps stand for days or longer, so that a midnight the clock skipped is still that day.
 
     Returns:
         int64 nanoseconds UTC; the smallest int64 where there is none.
@@ -111,7 +112,7 @@ def resolve(read: ReadStamps, codes: np.ndarray, zone: Zone) -> Ints:
     twice, never = zone.doubtful(local)
     if not isinstance(read.naive, bool):
         twice, never = twice & read.naive, never & read.naive
-    twice, never = twice & readable, never & readable
+    twice, never = twice & readable, never & readable & (not whole_days)
     second = None
     if twice.any():
         second = np.zeros(len(local), dtype=bool)

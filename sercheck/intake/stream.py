@@ -181,13 +181,14 @@ def feed_grids(
         past = None if history is None else history.rows()
         yield from grids(batch.rows(), past, cadence, layout, need_steps, block_cells)
         return
-    past_extent = None if history is None else history.extent(cadence)
-    laid = plan(batch.extent(cadence), past_extent, cadence, layout, need_steps)
     if history is None:
+        laid = plan(batch.extent(cadence), None, cadence, layout, need_steps)
         for rows in batch.blocks():
             yield from planned_grids(rows, None, laid, block_cells)
     else:
-        yield from _beside(batch.rows().by_series(), history, laid, block_cells)
+        rows, past_extent = batch.rows().by_series(), history.extent(cadence)
+        laid = plan(extent(rows, cadence, past_extent), past_extent, cadence, layout, need_steps)
+        yield from _beside(rows, history, laid, block_cells)
 
 
 def _beside(batch: Rows, history: Source, laid: Plan, block_cells: int) -> Iterator[Grid]:

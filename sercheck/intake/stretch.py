@@ -64,9 +64,14 @@ def fences(stamps: Ints, step: int) -> tuple[int, int]:
     return max(lower - reach, int(least)), min(upper + reach, int(most))
 
 
-def extent(rows: Rows, cadence: Cadence) -> Extent:
-    """The extent of rows in memory; the cadence is anchored."""
+def extent(rows: Rows, cadence: Cadence, beside: Extent | None = None) -> Extent:
+    """The extent of rows in memory; the cadence is anchored, ``beside`` is the extent of their history."""
     low, high = fences(rows.stamps, cadence.step)
+    if beside is not None:
+        reach = max(NEAREST_FENCE * cadence.step, beside.last - beside.first)
+        near = max(low, beside.first - reach), min(high, beside.last + reach)
+        if within(rows.stamps, *near).any():  # else all of them are far, which is no matter of a wild stamp
+            low, high = near
     return span(rows.stamps, cadence, low, high, len(rows) / max(1, len(rows.keys)))
 
 
@@ -144,8 +149,8 @@ def batch_stretch(batch: Extent, history: Extent | None, cadence: Cadence, layou
         tries = [cadence.period(every, batch.first, floor=True)] if isinstance(every, str) else []
         if history is not None:
             after = _index(cadence, history.last) + 1
-            if after <= first < after + cadence.steps(every):
-                follows = cadence.period(every, int(cadence.stamp_of(np.array([after]))[0]), floor=False)
+            follows = cadence.period(every, int(cadence.stamp_of(np.array([after]))[0]), floor=False)
+            if after <= first < follows[1]:
                 own_calendar = bool(tries) and _has_own_calendar(every, cadence)
                 tries = [*tries, follows] if own_calendar else [follows, *tries]
         tries.append(cadence.period(every, batch.first, floor=False))
@@ -174,8 +179,8 @@ def _not_too_thin(what: str, steps: int, rows: float, cadence: Cadence) -> None:
 
 
 def _near(begin: int, end: int, first: int, last: int, cadence: Cadence) -> None:
-    """Refuse a batch out of all reach of its history: no rule could look at the two together."""
-    reach = max(NEAREST_FENCE, FENCE * (last - first + 1), FENCE * (end - begin))
+    """Refuse a batch farther from its history than that is long: no rule could look at the two together."""
+    reach = max(NEAREST_FENCE, last - first + 1)
     gap = max(begin - last, first - end)
     if gap > reach:
         raise BatchError(
