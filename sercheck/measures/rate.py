@@ -21,8 +21,8 @@ Missing values: `missing` is the share of the delivered rows that have no usable
 Minimum size: none for a failure. A pass against a literal share is undecided when fewer than 3 effective rows of the
 rarer kind are expected at it (a bound of 0 or 1 is exact). With less history than 8 times the window the law is
 widened, since τ comes from little more than the window itself, and a failure on the side where a rare kind of row
-would be missing needs ten runs of it. Rates near one half with strong memory still fail up to 10 times too often at a
-risk of .001 when there are fewer than 1,000 rows and no history.
+would be too rare needs ten runs of it. Known weak cell: a share of about a third with strong memory (a hidden
+autoregression at .9), no history and under 1,000 rows fails 2 to 7 times too often at a risk of .001.
 
 One long burst cannot be seen by a rate (p is not much below n/(n + N)): put a rule on the longest run beside it.
 

@@ -30,7 +30,7 @@ LONG_HISTORY = 8
 """Batches of history from which τ is taken as known (simulated: sizes under 1 from there on)."""
 
 FEWEST_RUNS = 10
-"""Runs of the rarer kind that tell how large its clusters are (simulated: fewer give up to 300 times the risk)."""
+"""Runs of the rarer kind that begin to tell how it clusters (simulated: fewer give up to 300 times the risk)."""
 
 
 def tally(marks: Floats) -> tuple[Ints, Ints]:
@@ -229,14 +229,14 @@ class AgainstShare(ShareLaw):
 
     Attributes:
         share: the author's share.
-        df: degrees of freedom behind τ where it comes from little more than the batch itself (after Korn and
-            Graubard 1998: the tail is read as that of Student's t in place of the normal law); inf leaves the exact
-            tail.
+        df: for each side, degrees of freedom behind τ where it comes from little more than the batch itself (after
+            Korn and Graubard 1998: the tail is read as that of Student's t in place of the normal law); a side that
+            is not there, or inf, keeps the exact tail.
         blind: sides on which a failure would rest on clusters that nobody has seen: p is 1 there.
     """
 
     share: Floats
-    df: Floats | float = np.inf
+    df: Mapping[Side, Floats] = field(default_factory=dict)
     blind: Mapping[Side, Bools] = field(default_factory=dict)
 
     @property
@@ -256,13 +256,13 @@ class AgainstShare(ShareLaw):
 
     def naive_limit(self, side: Side, risk: Floats) -> Floats:
         """The limit had the rows been independent (τ = 1, nothing estimated)."""
-        return replace(self, tau=np.ones(self.tau.shape), df=np.inf, blind={}).limit(side, risk)
+        return replace(self, tau=np.ones(self.tau.shape), df={}, blind={}).limit(side, risk)
 
     def tail(self, hits: Floats, side: Side) -> Floats:
         """Clopper and Pearson's tail on hits/τ and rows/τ."""
         p = binomial_tail(hits / self.tau, self.rows / self.tau, self.bound, side)
-        if np.isfinite(self.df).any():
-            p = np.where(np.isfinite(self.df), t_tail(-special.ndtri(p), self.df), p)
+        if side in self.df:
+            p = np.where(np.isfinite(self.df[side]), t_tail(-special.ndtri(p), self.df[side]), p)
         return np.where(self.blind[side], 1.0, p) if side in self.blind else p
 
 
@@ -308,8 +308,9 @@ def against_share(marks: Floats, start: int, share: float, power: float) -> Agai
     """The law of the share of marked rows from column ``start`` on against a literal share; arrays of shape (S, 1).
 
     Where history is shorter than ``LONG_HISTORY`` batches, τ comes from little more than the batch that it judges:
-    its bias is given back and its degrees of freedom (observed/τ − 1) are used. Its side 'lower' is blind when a rare
-    mark came in fewer than ``FEWEST_RUNS`` runs, 'upper' when a common one was missing in fewer than that.
+    its bias is given back and its degrees of freedom, observed/τ − 1, are used. On the side where the rarer kind of
+    row would be too rare ('lower' for a share up to ½, else 'upper') few of them are left to tell how they cluster:
+    there half of their runs, less 1, are the degrees of freedom when fewer, and below ``FEWEST_RUNS`` it is blind.
 
     Args:
         marks: history and batch, shape (S, T), NaN takes no part.
@@ -324,8 +325,11 @@ def against_share(marks: Floats, start: int, share: float, power: float) -> Agai
     observed = np.count_nonzero(~np.isnan(marks), axis=1)[:, None]
     df = np.where(tau > 1.0, np.maximum(observed / tau - 1.0, 1.0), np.inf)
     marked, unmarked = (runs[:, None] for runs in runs_of(marks))
-    few = marked < FEWEST_RUNS if share <= 0.5 else unmarked < FEWEST_RUNS
-    return AgainstShare(hits, rows, tau, power, np.asarray(share), df, {"lower" if share <= 0.5 else "upper": few})
+    thin: Side = "lower" if share <= 0.5 else "upper"
+    full: Side = "upper" if share <= 0.5 else "lower"
+    runs = marked if share <= 0.5 else unmarked
+    few = {thin: np.minimum(df, np.maximum(runs / 2.0 - 1.0, 1.0)), full: df}
+    return AgainstShare(hits, rows, tau, power, np.asarray(share), few, {thin: runs < FEWEST_RUNS})
 
 
 def against_past(marks: Floats, start: int, power: float) -> AgainstPast:
