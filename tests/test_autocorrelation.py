@@ -46,6 +46,16 @@ def test_false_alarms_at_a_bound(kind, n):
         assert naive[0, 0] < 0.002
 
 
+@pytest.mark.parametrize("phi, lag, truth", [(0.9, 3, 0.729), ([1.5, -0.75], 2, 15 / 28), (0.0, 24, 0.0)])
+def test_false_alarms_at_later_lags(phi, lag, truth):
+    """The rates hold beyond lag one too, where strong earlier autocorrelations forbid to bend one coefficient alone."""
+    seen = look(Autocorrelation(), autoregressive(71, 3000, 168, phi), 0, Stays("between", truth, truth), lag=lag)
+    for side in ("upper", "lower"):
+        p = getattr(seen, side).p_value(side)
+        assert 0.02 <= (p <= 0.05).mean() <= 0.065
+        assert (p <= 0.01).mean() <= 0.017
+
+
 @pytest.mark.calibration
 @pytest.mark.parametrize("n", [168, 336])
 @pytest.mark.parametrize("kind", TRUTH)

@@ -174,21 +174,38 @@ def test_long_autoregressions_stand_for_moving_averages(row):
 @pytest.mark.parametrize("lag", [1, 2, 5, 24])
 @pytest.mark.parametrize("b", [-0.3, 0.0, 0.2])
 def test_imposed_autocorrelation(lag, b):
-    """A model bent to a bound has exactly that autocorrelation at the lag, and its shorter ones are untouched."""
+    """A model bent to a bound has exactly that autocorrelation at the lag and is still stationary."""
     model = burg(autoregressive(lag, 50, 300, 0.3), max_order=largest_order(300, lag))
     bent = impose_autocorrelation(model, lag, b)
     rho = model_autocorrelation(bent, lag)
     np.testing.assert_allclose(rho[:, lag], b, atol=1e-12)
-    np.testing.assert_allclose(rho[:, :lag], model_autocorrelation(model, lag)[:, :lag], atol=1e-14)
     assert not root_beyond(bent, 1.0).any()
+
+
+@pytest.mark.parametrize("lag", [2, 3, 6])
+def test_imposed_on_ar1(lag):
+    """An AR(1) fitted with .95 and bent to what .9 has at a later lag becomes AR(1) with about .9."""
+    bent = impose_autocorrelation(model_of(0.95), lag, 0.9**lag)
+    np.testing.assert_allclose(bent.reflection[0, 0], 0.9, atol=0.02)
+    assert np.abs(bent.reflection[0, 1:]).max() < 0.1
+
+
+def test_imposing_does_not_mix_series():
+    """The bent model of a series is the same whatever models stand beside it."""
+    model = burg(autoregressive(4, 30, 200, [1.1, -0.5, 0.2]))
+    together = impose_autocorrelation(model, 4, 0.1)
+    alone = impose_autocorrelation(model.rows([7]), 4, 0.1)
+    np.testing.assert_allclose(together.reflection[7], alone.reflection[0], rtol=1e-12, atol=1e-15)
 
 
 def test_imposing_what_cannot_be():
-    """A bound that contradicts the shorter autocorrelations leaves the model stationary."""
+    """A bound that contradicts all else leaves the model stationary, and goes as near to the bound as that allows."""
     model = burg(autoregressive(2, 5, 300, 0.97))
-    bent = impose_autocorrelation(model, 2, -0.9)
-    np.testing.assert_allclose(np.abs(bent.reflection[:, 1]), 0.98)
-    assert not root_beyond(bent, 1.0).any()
+    far = impose_autocorrelation(model, 2, -0.9)
+    np.testing.assert_allclose(model_autocorrelation(far, 2)[:, 2], -0.9, atol=1e-9)
+    beyond = impose_autocorrelation(model, 2, -1.5)
+    np.testing.assert_allclose(np.abs(beyond.reflection[:, 1]), 0.98)
+    assert not root_beyond(beyond, 1.0).any()
 
 
 def test_innovations_of_gaps():

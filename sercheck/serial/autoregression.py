@@ -11,6 +11,10 @@ from sercheck.serial.centre import Centred, centred
 
 STEEPEST = 0.98
 """Largest modulus of a reflection coefficient that a null hypothesis may put into a model (keeps it stationary)."""
+MOVING, ROUNDS = 8, 8
+"""Lower orders that move when an autocorrelation is imposed, and rounds of it (then it stands to 1e-6; measured)."""
+STEP, LONGEST = 1e-6, 0.3
+"""Step of the numerical gradient, and longest step of a round, in radians."""
 BLOCK = 1 << 15
 """Values worked on at a time: two arrays of 256 kB stay in a second-level cache through all orders."""
 
@@ -168,13 +172,19 @@ def step_up(reflection: Floats) -> Floats:
 
 def model_autocorrelation(model: Autoregression, lags: int) -> Floats:
     """Theoretical autocorrelations ρ_0 .. ρ_lags of the models, shape (S, lags + 1) (Durbin-Levinson recursion)."""
-    width = int(model.order.max(initial=0))
-    rho = np.zeros((len(model.order), lags + 1))
+    return _autocorrelation(model.reflection[:, : int(model.order.max(initial=0))], lags)
+
+
+def _autocorrelation(reflection: Floats, lags: int) -> Floats:
+    series, width = reflection.shape
+    while width and not reflection[:, width - 1].any():
+        width -= 1
+    rho = np.zeros((series, lags + 1))
     rho[:, 0] = 1.0
-    a = np.zeros((len(model.order), width))
-    left = np.ones(len(model.order))
+    a = np.zeros((series, width))
+    left = np.ones(series)
     for m in range(min(width, lags)):
-        k = model.reflection[:, m]
+        k = reflection[:, m]
         rho[:, m + 1] = np.einsum("ij,ij->i", a[:, :m], rho[:, m:0:-1]) + k * left
         a[:, :m] -= k[:, None] * a[:, :m][:, ::-1]
         a[:, m] = k
@@ -186,10 +196,13 @@ def model_autocorrelation(model: Autoregression, lags: int) -> Floats:
 
 
 def impose_autocorrelation(model: Autoregression, lag: int, b: Floats | float) -> Autoregression:
-    """The models with the reflection coefficient of order ``lag`` replaced so that their ρ_lag is ``b``.
+    """The nearest models whose autocorrelation at ``lag`` is ``b``.
 
-    k = (b - Σ_{j<lag} a_j ρ_{lag-j}) / v_{lag-1}, a and v of the model of order lag - 1; held within ± ``STEEPEST``,
-    where a value outside would mean that ``b`` contradicts the earlier autocorrelations. The process variance stays.
+    At lag 1 the first reflection coefficient becomes b and the others stay. At a lag k beyond, the angles asin k_j
+    (whose estimates scatter by about 1/√n each) of the model's own orders below k, and of order k, move by the least
+    sum of squares that brings ρ_k to b; what is left over is settled by k_k alone. Moving only k_k from the start would
+    contradict strong earlier autocorrelations: a fitted ρ_1 of .95 and an imposed ρ_3 of .73 leave no variance.
+    Coefficients are held within ± ``STEEPEST``.
 
     Args:
         model: fitted models.
@@ -199,13 +212,13 @@ def impose_autocorrelation(model: Autoregression, lag: int, b: Floats | float) -
     series, width = model.reflection.shape
     reflection = np.zeros((series, max(width, lag)))
     reflection[:, :width] = model.reflection
-    before = reflection[:, : lag - 1]
-    shorter = replace(model, order=np.minimum(model.order, lag - 1), reflection=before, coefficients=step_up(before))
-    rho = model_autocorrelation(shorter, lag)
-    left = np.prod(1 - before**2, axis=1)
-    k = np.clip((b - rho[:, lag]) / left, -STEEPEST, STEEPEST)
     before_change = np.prod(1 - reflection**2, axis=1)
-    reflection[:, lag - 1] = k
+    moving = min(lag - 1, int(model.order.max(initial=0)), MOVING)
+    if moving:
+        places = np.append(np.arange(moving), lag - 1)
+        reflection[:, places] = _nearest(reflection[:, :lag], places, model.order, np.broadcast_to(b, series))
+    below, left = _lag_below(reflection[:, :lag])
+    reflection[:, lag - 1] = np.clip((b - below) / left, -STEEPEST, STEEPEST)
     return replace(
         model,
         order=np.maximum(model.order, lag),
@@ -213,6 +226,41 @@ def impose_autocorrelation(model: Autoregression, lag: int, b: Floats | float) -
         reflection=reflection,
         variance=model.variance * (np.prod(1 - reflection**2, axis=1) / before_change),
     )
+
+
+def _lag_below(reflection: Floats) -> tuple[Floats, Floats]:
+    """ρ_k of the model of order k - 1 and the share of variance that it leaves, k the number of columns."""
+    before = reflection[:, :-1]
+    rho = _autocorrelation(before, reflection.shape[1])
+    return rho[:, -1], np.prod(1 - before**2, axis=1)
+
+
+def _nearest(reflection: Floats, places: Ints, order: Ints, b: Floats) -> Floats:
+    """Reflection coefficients at ``places``, the last of them the lag, with ρ_k = b and the least change of angle.
+
+    Gauss-Newton: with g the gradient of ρ_k, θ = θ_0 + g (b - ρ_k + g·(θ - θ_0))/(g·g).
+    """
+    start = np.arcsin(np.clip(reflection[:, places], -STEEPEST, STEEPEST))
+    angle = start.copy()
+    steepest = np.arcsin(STEEPEST)
+    trial = reflection.copy()
+    for _ in range(ROUNDS):
+        trial[:, places] = np.sin(angle)
+        below, left = _lag_below(trial)
+        rho = below + trial[:, -1] * left
+        slope = np.empty_like(angle)
+        slope[:, -1] = np.cos(angle[:, -1]) * left
+        for column, place in enumerate(places[:-1]):
+            moved = trial.copy()
+            moved[:, place] = np.sin(angle[:, column] + STEP)
+            ahead, rest = _lag_below(moved)
+            slope[:, column] = np.where(place < order, (ahead + moved[:, -1] * rest - rho) / STEP, 0.0)
+        gap = b - rho + np.einsum("ij,ij->i", slope, angle - start)
+        norm = np.maximum(np.einsum("ij,ij->i", slope, slope), np.finfo(np.float64).tiny)
+        aim = start + slope * (gap / norm)[:, None]
+        # a long step leaves the region where the gradient holds
+        angle = np.clip(angle + np.clip(aim - angle, -LONGEST, LONGEST), -steepest, steepest)
+    return np.sin(angle)
 
 
 def innovations(x: object, model: Autoregression) -> Floats:
