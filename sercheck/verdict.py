@@ -29,6 +29,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from sercheck.grid import Grid
+    from sercheck.store.ledger import Ledger
 
     Rows = str | Path | Sequence[str | Path] | pd.DataFrame
 
@@ -142,6 +143,9 @@ def gate(
     """
     book = rules if isinstance(rules, Rulebook) else load_rules(rules)
     judged_at = _clock(as_of)
+    kept_in = _open_ledger(store, ledger) if store is not None or ledger is not None else None
+    if kept_in:
+        kept_in.prepare()  # an unusable store is told before the work, not after it
     layout = layout_of(book)
     source = open_feed(batch, layout)
     given = history if history is not None else list(book.history) or None
@@ -177,7 +181,7 @@ def gate(
         abouts={rule.name: rule.about for rule in book.rules if rule.about},
         expected=expected_false_holds(book),
     )
-    return verdict if store is None and ledger is None else _kept(verdict, common, book, store, ledger)
+    return _kept(verdict, common, book, kept_in) if kept_in else verdict
 
 
 def layout_of(book: Rulebook) -> Layout:
@@ -204,9 +208,14 @@ def _judged(book: Rulebook, seen: Sequence[Seen]) -> list[Judged]:
     return told
 
 
-def _kept(verdict: Verdict, common: Common, book: Rulebook, store: str | Path | None, url: str | None) -> Verdict:
-    """Store the judgement; what was stored before stands."""
+def _open_ledger(store: str | Path | None, url: str | None) -> Ledger:
     from sercheck.store.ledger import open_ledger
+
+    return open_ledger(None if store is None else str(store), url)
+
+
+def _kept(verdict: Verdict, common: Common, book: Rulebook, ledger: Ledger) -> Verdict:
+    """Store the judgement; what was stored before stands."""
     from sercheck.store.rows import BatchRow, Filters, JudgementRow
 
     facts = verdict.facts
@@ -218,11 +227,12 @@ def _kept(verdict: Verdict, common: Common, book: Rulebook, store: str | Path | 
         verdict.batch_id, common.rules_fingerprint, common.baseline_id, verdict.decision, common.judged_at,
         book.text, __version__,
     )  # fmt: skip
-    with open_ledger(None if store is None else str(store), url) as ledger:
-        stored = ledger.add(batch, judgement, verdict.table)
-        if stored.judged_at == common.judged_at:
-            return verdict
+    with ledger:
+        known = ledger.find(judgement.batch_id, judgement.rules_fingerprint, judgement.baseline_id)
+        stored = known or ledger.add(batch, judgement, verdict.table)
         table = ledger.records(Filters(judgement_id=stored.judgement_id))
+    if known is None and stored.decision == verdict.decision:
+        return verdict
     note = f"this batch was judged by these rules before, at {stored.judged_at}; that judgement stands"
     return replace(verdict, decision=stored.decision, table=table, notes=(*verdict.notes, note))
 

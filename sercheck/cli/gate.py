@@ -41,10 +41,13 @@ def command(
     """
     from sercheck.cli.screen import answer
     from sercheck.outputs import move_batch
+    from sercheck.record import check_suffix
     from sercheck.verdict import gate
 
     if form == "json" and records == "-":
         raise click.UsageError("--format json and --records - both want stdout; give the records a file")
+    if records and records != "-":
+        check_suffix(records)
     verdict = gate(rules, list(batch), history=list(history) or None, as_of=as_of, store=None if no_keep else store)
     if records:
         verdict.table.write(records)
