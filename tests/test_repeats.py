@@ -234,6 +234,16 @@ def test_filling_and_sticking_are_found():
     assert found(x, start, "run", 1 / 720) <= 0.01
 
 
+def test_sticking_is_found_in_a_short_history_without_any_repeat():
+    """A month that never repeated a value tells that six stuck hours are no chance, and one tie may be."""
+    start = 24 * 30
+    x = np.random.default_rng(20).normal(size=(2, start + 24))
+    x[0, start + 9 : start + 15], x[1, start + 9] = x[0, start + 8], x[1, start + 8]
+    p = p_values(look(Repeats(), x, start, look="run"))
+    assert p[0] <= 1 / 720
+    assert p[1] == pytest.approx(1 - np.exp(-24 * 0.5 / (start - 1)), rel=1e-12)
+
+
 def test_coarse_rounding_hides_filling_and_says_so():
     """The coarser the rounding the longer the shortest run that would be seen."""
     limits = []

@@ -244,7 +244,8 @@ class PastRuns(RunLaw):
 
     u is the longest length that at least ten of history's runs reach (1 where there are not ten), K of them, with e
     further marks: beyond u, λ = K B(e + 1 + r − u, K + ½)/B(e + 1, K + ½) runs of r are expected in history (a
-    geometric tail with its rate unknown); up to u, λ is their number. With no run at all K is taken as ½.
+    geometric tail with its rate unknown); up to u, λ is their number. With fewer than ten runs in all, u = 1 and the
+    rate is estimated as everywhere here: λ = (K + ½) q^{r−1}, q = (e + ½)/(e + K + 1).
 
     Attributes:
         past_rows: N.
@@ -262,7 +263,9 @@ class PastRuns(RunLaw):
         """1 − exp(−n λ/N)."""
         u, K, e = self.anchor
         further = np.maximum(marks - u, 0)
-        beyond = K * np.exp(special.betaln(e + 1 + further, K + 0.5) - special.betaln(e + 1, K + 0.5))
+        tail = np.exp(special.betaln(e + 1 + further, K + 0.5) - special.betaln(e + 1, K + 0.5))
+        scarce = (K + 0.5) * ((e + 0.5) / (e + K + 1.0)) ** further
+        beyond = np.where(K < SAME_RUNS, scarce, K * tail)
         counted = np.count_nonzero(self.runs >= np.maximum(marks, 1), axis=1)[:, None]
         expected = np.where(marks > u, beyond, np.maximum(counted, beyond))
         with np.errstate(divide="ignore", invalid="ignore"):
@@ -324,7 +327,7 @@ def _anchor(runs: Ints) -> tuple[Floats, Floats, Floats]:
     if place >= 0:
         u = np.maximum(1, np.partition(runs, place, axis=1)[:, place])
     reach = runs >= u[:, None]
-    K = np.maximum(0.5, np.count_nonzero(reach, axis=1))
+    K = np.count_nonzero(reach, axis=1).astype(np.float64)
     e = np.where(reach, runs - u[:, None], 0).sum(axis=1)
     return u[:, None].astype(np.float64), K[:, None], e[:, None].astype(np.float64)
 
