@@ -7,10 +7,10 @@ from processes import agrees, autoregressive, look, make, p_values
 
 from sercheck.measure import Stays
 from sercheck.measures.partial_autocorrelation import PartialAutocorrelation
-from sercheck.serial.autocovariance import partial_autocorrelation
-from sercheck.serial.autoregression import burg
+from sercheck.serial.autocovariance import partial_autocorrelation, step_down
+from sercheck.serial.autoregression import burg, model_autocorrelation
 from sercheck.serial.partial_law import partial_expansion, reflections
-from sercheck.serial.sampling_error import bartlett_weights
+from sercheck.serial.sampling_error import autocorrelation_bias, bartlett_weights
 
 ALLOWED = {0.05: 0.065, 0.01: 0.017, 0.001: 0.003}
 CELLS = {
@@ -103,6 +103,28 @@ def test_lag_one_is_the_autocorrelation():
         rho[j] = one.coefficients[0] @ [rho[j - 1], rho[j - 2]]
     np.testing.assert_allclose(weights[0], bartlett_weights(rho, 1), atol=1e-12)
     assert beyond[0] != 0.0
+
+
+@pytest.mark.parametrize("lag", [2, 3])
+def test_expansion_twin(lag):
+    """Weights and bias are those of the autocorrelations times numerical derivatives of the partial one."""
+    model = burg(autoregressive(71, 1, 400, [0.4, 0.2, -0.3, 0.2]), max_order=4, min_order=4)
+    b = model.reflection[0, lag - 1]
+    rho = model_autocorrelation(model, 200)[0]
+    short = model_autocorrelation(
+        burg(autoregressive(71, 1, 400, [0.4, 0.2, -0.3, 0.2]), max_order=lag, min_order=lag), 200
+    )
+    weights, beyond, step = np.zeros(200 + lag), 0.0, 1e-5
+    for i in range(1, lag + 1):
+        moved = np.tile(rho[1 : lag + 1], (2, 1))
+        moved[:, i - 1] += [step, -step]
+        up, down = step_down(moved)[:, -1]
+        slope = (up - down) / (2 * step)
+        weights[: 200 + i] += slope * bartlett_weights(rho, i)
+        beyond += slope * (autocorrelation_bias(rho, i) - autocorrelation_bias(short[0], i))
+    fast, bias = partial_expansion(model, lag, b)
+    np.testing.assert_allclose(fast[0], weights, atol=1e-7)
+    np.testing.assert_allclose(bias[0], beyond, rtol=1e-6)
 
 
 @pytest.mark.parametrize("lag", [1, 2, 5])

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from sercheck.serial.arrays import Floats, Ints
+from sercheck.serial.autocovariance import good_length
 from sercheck.serial.autoregression import (
     Autoregression,
     burg,
@@ -16,7 +17,7 @@ from sercheck.serial.autoregression import (
     step_up,
 )
 from sercheck.serial.centre import centred
-from sercheck.serial.sampling_error import Residuals, autocorrelation_bias, bartlett_weights, model_lags
+from sercheck.serial.sampling_error import Residuals, model_lags
 
 BLOCK = 1 << 15
 """Values worked on at a time: the arrays of the recursion stay in a second-level cache."""
@@ -134,11 +135,38 @@ def partial_expansion(model: Autoregression, lag: int, b: float) -> tuple[Floats
     changed = replace(model, order=order, coefficients=step_up(reflection), reflection=reflection)
     short = replace(model, order=np.minimum(order, lag), coefficients=phi, reflection=reflection[:, :lag])
     rho, rho_short = (model_autocorrelation(each, model_lags(lag)) for each in (changed, short))
-    total = np.zeros((series, rho.shape[1] - 1 + lag))
-    beyond = np.zeros(series)
+    slope = np.empty((series, lag))
     for i in range(1, lag + 1):
-        slope = psi[:, i - 1] - np.einsum("ij,ij->i", phi[:, : lag - i], psi[:, i:])
-        slope -= np.einsum("ij,ij->i", phi[:, i:], psi[:, : lag - i])
-        total[:, : rho.shape[1] - 1 + i] += slope[:, None] * bartlett_weights(rho, i)
-        beyond += slope * (autocorrelation_bias(rho, i) - autocorrelation_bias(rho_short, i))
-    return total, beyond
+        slope[:, i - 1] = psi[:, i - 1] - np.einsum("ij,ij->i", phi[:, : lag - i], psi[:, i:])
+        slope[:, i - 1] -= np.einsum("ij,ij->i", phi[:, i:], psi[:, : lag - i])
+    return _combined_weights(rho, slope), np.einsum("ij,ij->i", slope, _biases(rho, lag) - _biases(rho_short, lag))
+
+
+def _combined_weights(rho: Floats, slope: Floats) -> Floats:
+    """Σ_i slope_i W^(i), W^(i) Bartlett's weights at lag i: a convolution of ρ with the slopes, both symmetric."""
+    longest, lag = rho.shape[1] - 1, slope.shape[1]
+    around = np.concatenate([np.zeros((len(slope), 1)), slope], axis=1)
+    size = good_length(2 * (longest + lag) + 1)
+    both = np.fft.irfft(_symmetric(rho, size) * _symmetric(around, size), size)[:, 1 : longest + lag + 1]
+    both[:, :longest] -= 2 * rho[:, 1:] * np.einsum("ij,ij->i", slope, rho[:, 1 : lag + 1])[:, None]
+    return both
+
+
+def _biases(rho: Floats, lag: int) -> Floats:
+    """``autocorrelation_bias`` at the lags 1 .. lag, shape (S, lag)."""
+    size = good_length(2 * rho.shape[1] + lag)
+    shifted = np.fft.irfft(_symmetric(rho, size) ** 2, size)
+    at = rho[:, 1 : lag + 1]
+    total = 2 * rho.sum(axis=1, keepdims=True) - 1
+    biases: Floats = -(
+        np.arange(1, lag + 1) * at + (1 - at) * total + 2 * (shifted[:, 1 : lag + 1] - at * shifted[:, :1])
+    )
+    return biases
+
+
+def _symmetric(half: Floats, size: int) -> Floats:
+    """Transform of a symmetric sequence given by its half from 0 on: real."""
+    whole = np.zeros((len(half), size))
+    whole[:, : half.shape[1]] = half
+    whole[:, size - half.shape[1] + 1 :] = half[:, :0:-1]
+    return np.fft.rfft(whole).real
