@@ -14,7 +14,7 @@ STEEPEST = 0.98
 MOVING, ROUNDS = 8, 8
 """Lower orders that move when an autocorrelation is imposed, and rounds of it (then it stands to 1e-6; measured)."""
 STEP, LONGEST = 1e-6, 0.3
-"""Step of the numerical gradient, and longest step of a round, in radians."""
+"""Step of the numerical gradient (and change at which a series is done), and longest step of a round, in radians."""
 BLOCK = 1 << 15
 """Values worked on at a time: two arrays of 256 kB stay in a second-level cache through all orders."""
 
@@ -241,26 +241,37 @@ def _nearest(reflection: Floats, places: Ints, order: Ints, b: Floats) -> Floats
     Gauss-Newton: with g the gradient of ρ_k, θ = θ_0 + g (b - ρ_k + g·(θ - θ_0))/(g·g).
     """
     start = np.arcsin(np.clip(reflection[:, places], -STEEPEST, STEEPEST))
-    angle = start.copy()
+    result = start.copy()
     steepest = np.arcsin(STEEPEST)
-    trial = reflection.copy()
+    left_over = np.arange(len(reflection))
     for _ in range(ROUNDS):
-        trial[:, places] = np.sin(angle)
-        below, left = _lag_below(trial)
-        rho = below + trial[:, -1] * left
-        slope = np.empty_like(angle)
-        slope[:, -1] = np.cos(angle[:, -1]) * left
-        for column, place in enumerate(places[:-1]):
-            moved = trial.copy()
-            moved[:, place] = np.sin(angle[:, column] + STEP)
-            ahead, rest = _lag_below(moved)
-            slope[:, column] = np.where(place < order, (ahead + moved[:, -1] * rest - rho) / STEP, 0.0)
-        gap = b - rho + np.einsum("ij,ij->i", slope, angle - start)
+        angle, first = result[left_over], start[left_over]
+        rho, slope = _gradient(reflection[left_over], places, order[left_over], angle)
+        gap = b[left_over] - rho + np.einsum("ij,ij->i", slope, angle - first)
         norm = np.maximum(np.einsum("ij,ij->i", slope, slope), np.finfo(np.float64).tiny)
-        aim = start + slope * (gap / norm)[:, None]
         # a long step leaves the region where the gradient holds
-        angle = np.clip(angle + np.clip(aim - angle, -LONGEST, LONGEST), -steepest, steepest)
-    return np.sin(angle)
+        step = np.clip(first + slope * (gap / norm)[:, None] - angle, -LONGEST, LONGEST)
+        result[left_over] = np.clip(angle + step, -steepest, steepest)
+        left_over = left_over[np.abs(result[left_over] - angle).max(axis=1) > STEP]
+        if not len(left_over):
+            break
+    return np.sin(result)
+
+
+def _gradient(reflection: Floats, places: Ints, order: Ints, angle: Floats) -> tuple[Floats, Floats]:
+    """ρ_k and its derivatives by the angles of ``places``; those of orders that a model has not are 0."""
+    trial = reflection.copy()
+    trial[:, places] = np.sin(angle)
+    below, left = _lag_below(trial)
+    rho = below + trial[:, -1] * left
+    slope = np.empty_like(angle)
+    slope[:, -1] = np.cos(angle[:, -1]) * left
+    for column, place in enumerate(places[:-1]):
+        moved = trial.copy()
+        moved[:, place] = np.sin(angle[:, column] + STEP)
+        ahead, rest = _lag_below(moved)
+        slope[:, column] = np.where(place < order, (ahead + moved[:, -1] * rest - rho) / STEP, 0.0)
+    return rho, slope
 
 
 def innovations(x: object, model: Autoregression) -> Floats:
