@@ -157,6 +157,21 @@ def test_closed_days_neither_teach_nor_are_judged():
     )
 
 
+def test_many_series_are_learned_as_each_alone():
+    """What is learned block by block is what each series teaches by itself, whichever season it chooses."""
+    x, start = feed("ar6", 31, 400, 2, strength=2.0)
+    steps = np.arange(x.shape[1])
+    x[::2] += 3 * SHAPE[steps % DAY] * (steps // DAY % 7 < 5)
+    cycles = [Cycle(DAY, steps % DAY), Cycle(7 * DAY, steps % (7 * DAY))]
+    whole = learn_season(x[:, :start], cycles, x.shape[1] - start)
+    assert set(whole.choice) == {0, 1}
+    for s in (0, 1, 257, 398):
+        alone = learn_season(x[s : s + 1, :start], cycles, x.shape[1] - start)
+        for name in ("choice", "length", "count", "variance", "spread", "taught", "evolving", "scatter", "windows"):
+            np.testing.assert_allclose(getattr(whole, name)[s], getattr(alone, name)[0], rtol=1e-9)
+        np.testing.assert_allclose(whole.profile(0, 200)[s], alone.profile(0, 200)[0], rtol=1e-9)
+
+
 def test_the_unit_does_not_matter():
     """Amplitude and p-value are the same from 1e-200 to 1e200, and on a far-off level."""
     x, start = feed("ar6", 15, 5, 4)

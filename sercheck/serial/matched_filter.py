@@ -6,8 +6,8 @@ Depends on numpy, ``scipy.special`` and ``serial`` only.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
-from typing import NamedTuple
+from dataclasses import dataclass, fields, replace
+from typing import Any, NamedTuple
 
 import numpy as np
 from scipy import special
@@ -19,6 +19,8 @@ from sercheck.serial.window_t import FEWEST_WINDOWS, windows
 
 HIGHEST_ORDER = 6
 """Highest order of the whitening model: more would cost points of a one-cycle batch (chosen by simulation)."""
+BLOCK = 1 << 18
+"""Values of history learned from at a time: temporaries of 2 MB stay in a cache, whatever the number of series."""
 STILL_CORRELATED = 3.0
 """Standard errors by which history's innovations may correlate at the season before it is said to evolve."""
 SCATTERS = 0.001
@@ -112,8 +114,29 @@ def learn_season(history: Floats, cycles: Sequence[Cycle], window: int) -> Seaso
     Returns:
         The model; NaN variance where history is too short to fit anything.
     """
+    block = max(1, BLOCK // max(history.shape[1], 1))
+    firsts = range(0, max(len(history), 1), block)
+    return _joined([_learn(history[first : first + block], tuple(cycles), window) for first in firsts])
+
+
+def _joined(models: list[SeasonModel]) -> SeasonModel:
+    """The models of blocks of series as one."""
+    first = models[0]
+    if len(models) == 1:
+        return first
+
+    def join(name: str, part: str | None = None) -> Any:
+        pieces = [getattr(model, name) for model in models]
+        return np.concatenate(pieces if part is None else [getattr(piece, part) for piece in pieces])
+
+    noise = replace(first.noise, **{field.name: join("noise", field.name) for field in fields(first.noise)})
+    means = tuple(np.concatenate(pieces) for pieces in zip(*(model.means for model in models), strict=True))
+    rest = {field.name: join(field.name) for field in fields(first) if field.name not in ("cycles", "means", "noise")}
+    return SeasonModel(cycles=first.cycles, means=means, noise=noise, **rest)
+
+
+def _learn(history: Floats, cycles: tuple[Cycle, ...], window: int) -> SeasonModel:
     steps = history.shape[1]
-    cycles = tuple(cycles)
     day = cycle_numbers(cycles[0].phase[:steps])
     fits = [robust_phase_means(history, c.phase[:steps], c.length, day) for c in cycles]
     errors = np.stack([_foretold(history, c.phase[:steps], fit) for c, fit in zip(cycles, fits, strict=True)])
