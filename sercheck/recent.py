@@ -1,10 +1,12 @@
-"""From a panel to the recent past of its window; depends on ``serial``, ``grid``, ``baseline`` and ``recent_past``.
+"""From a panel to the recent past of its window; depends on ``serial``, ``grid``, ``measure``, ``baseline``,
+``looks`` and ``recent_past``.
 
 A measure asks ``enough(panel)`` where this method applies, ``recent_past(panel)`` for the table of the last ninety
 or so stretches, and calls the method of its name on it::
 
-    told = recent_past(panel).level()
-    Measurement(observed=told.observed, upper=told.reference, lower=told.reference, n_eff=told.n_eff, ...)
+    recent_measurement(panel, recent_past(panel).level())
+    told = recent_past(panel).phase(question.rests)
+    recent_measurement(panel, told, season="day", idle=idle_phase(panel, question.risk))
 """
 
 from __future__ import annotations
@@ -13,9 +15,11 @@ import numpy as np
 
 from sercheck.baseline import chosen_seasons
 from sercheck.grid import Axis, Panel
-from sercheck.measure import Reasons
+from sercheck.looks import Least
+from sercheck.measure import POWER, Measurement, Reasons
 from sercheck.recent_past import Comparison, RecentPast
 from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.risk import t_quantile
 from sercheck.serial.walk_forward import Profile, log_unit, on_scale, walk_forward
 
 BATCHES = 90
@@ -36,8 +40,9 @@ FARTHEST = 1e60
 DAY = 86_400_000_000_000
 """Nanoseconds of a day."""
 
-METHOD = "one-step forecast from the last batches' statistics, tails from their misses"
-ASSUMES = "the batch is to its week as the last {batches} were to theirs"
+METHOD = "one-step forecast from the statistics of the last batches, tails from its own misses"
+COUNTED = "beta-binomial law of the share and geometric law of the longest run, clusters as in the last batches"
+ASSUMES = "the batch is to the week before it as the last batches were to theirs"
 
 
 def enough(panel: Panel) -> Bools:
@@ -52,11 +57,65 @@ def enough(panel: Panel) -> Bools:
 
 def ask_told(reasons: Reasons, told: Comparison) -> None:
     """Undecided where too few batches of history have the statistic, or the window itself has none."""
+    reasons.add(np.isnan(told.observed), "too few values in the window, or a closed day")
     reasons.add(
         told.batches < FEWEST_TOLD - 7, f"fewer than {FEWEST_TOLD} earlier batches have enough values to compare with"
     )
-    reasons.add(np.isnan(told.observed), "too few values in the window, or a closed day")
     reasons.add(np.isnan(told.reference.p_value("upper")), "the earlier batches do not vary, so nothing can be unusual")
+
+
+def recent_measurement(
+    panel: Panel, told: Comparison, *, season: str | None = None, idle: Bools | None = None
+) -> Measurement:
+    """What a measure hands to the judge for ``like: history``.
+
+    Args:
+        panel: history and window.
+        told: what one of the methods of ``RecentPast`` gave.
+        season: name of the season looked at, or None.
+        idle: series in which the fault could hardly be seen, shape (S,): a pass of theirs says nothing.
+    """
+    counted = isinstance(told.reference, Least)
+    reasons = Reasons(told.observed.shape)
+    ask_told(reasons, told)
+    index, texts = reasons.index, list(reasons.texts)
+    unsure: Ints | None = None
+    if idle is not None and idle.any():
+        unsure = np.where(idle[:, None] & (index < 0), len(texts), -1)
+        texts.append("the season is too weak beside the noise: neither its loss nor a slip of one step would be seen")
+    return Measurement(
+        observed=told.observed,
+        n=told.n,
+        n_missing=panel.values.shape[1] - panel.start - told.n,
+        n_eff=told.n_eff,
+        upper=told.reference,
+        lower=None if counted else told.reference,
+        undecided=index,
+        reasons=tuple(texts),
+        method=COUNTED if counted else METHOD,
+        assumes=ASSUMES,
+        season=season,
+        unsure=unsure,
+    )
+
+
+def idle_amplitude(panel: Panel, risk: float) -> Bools:
+    """Series in which a lost season would hardly be seen even over a week of batches, shape (S,)."""
+    past = recent_past(panel)
+    return idle(past.sight(past.amplitudes), past, risk)
+
+
+def idle_phase(panel: Panel, risk: float) -> Bools:
+    """Series in which a slip of one step would hardly be seen even over a week of batches, shape (S,)."""
+    past = recent_past(panel)
+    return idle(past.sight(past.slips), past, risk)
+
+
+def idle(sight: Floats, past: RecentPast, risk: float) -> Bools:
+    """Where √7 times the shift of T does not reach t_{1-α/4} + .84 (found with probability .8)."""
+    needed = float(t_quantile(1 - risk / 4, max(past.held.shape[1] - 10.0, 1.0))) + float(t_quantile(POWER, np.inf))
+    with np.errstate(invalid="ignore"):
+        return np.asarray(~(np.sqrt(7) * sight > needed))
 
 
 def recent_past(panel: Panel, *, logs: bool = True) -> RecentPast:
@@ -99,7 +158,8 @@ def _recent_past(panel: Panel, *, logs: bool) -> RecentPast:
         phase, length, delay = axis.phases[season], axis.lengths[season], max(week, n, 1)
         first = min(start, FIRST * n)
         if logs:
-            early = walk_forward(taught[:, :first], phase[:first], length, delay, first=first, block=n)
+            plain = np.zeros(len(x))  # a running mean will do to see how the scatter goes with the level
+            early = walk_forward(taught[:, :first], phase[:first], length, delay, first=first, block=n, gain=plain)
             log = log_unit(taught[:, :first], early.here)
             y = on_scale(taught, log)
         profile = walk_forward(y, phase, length, delay, first=first, block=n)
@@ -126,8 +186,9 @@ def _held(axis: Axis, start: int, batches: int, n: int) -> Bools:
 
 
 def _counts(history: Floats) -> Bools:
+    """Whole numbers from 0 on; doubles from 2^53 on are whole whatever they measure."""
     with np.errstate(invalid="ignore"):
-        whole = (history >= 0) & (history == np.floor(history))
+        whole = (history >= 0) & (history < 2**53) & (history == np.floor(history))
     return np.asarray((whole | np.isnan(history)).all(axis=1))
 
 

@@ -18,7 +18,7 @@ from sercheck.reference import Larger, Pivot
 from sercheck.serial import batch_statistics as statistic
 from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.serial.autoregression import Autoregression, burg
-from sercheck.serial.recent import LOOK_DF, LongerLook, OneStep, longer_look, one_step, smaller
+from sercheck.serial.recent import LOOK_DF, LongerLook, OneStep, against_earlier, longer_look, one_step, smaller
 from sercheck.serial.scores import Ranking, ranking
 from sercheck.serial.walk_forward import Profile, off_scale
 
@@ -98,7 +98,8 @@ class RecentPast:
     def model(self, highest: int | None = None) -> Autoregression:
         """The autoregressive model of history's residuals, held batches left out, short enough for the gaps."""
         past = self.residual[:, : -self.n]
-        fitted = burg(np.where(self.held_steps, np.nan, past), max_order=highest)
+        begin = int(np.argmax((~np.isnan(past)).any(axis=0)))  # before it the profile was not yet known
+        fitted = burg(np.where(self.held_steps, np.nan, past)[:, begin:], max_order=highest)
         return statistic.existing(fitted, past, ~self.held_steps)
 
     @cached_property
@@ -216,8 +217,8 @@ class RecentPast:
     def whiteness(self, stride: int, lags: int = 10) -> Comparison:
         """Whether the innovations are as white as they were: the portmanteau sum Q of the window; one look, upwards.
 
-        Judged by ln Q less its mean over the windows that ended 7 to 34 strides earlier. Never for a window of one
-        day of hours: it gives 17 times its risk at 1e-4 there.
+        Judged by ln Q less its mean over the windows that ended 7 to 34 strides earlier, against the same of the
+        windows that share no row with it. Never for a window of one day of hours: it gives 17 times its risk there.
 
         Args:
             stride: steps of one batch; the window is to span seven of them.
@@ -225,7 +226,7 @@ class RecentPast:
         """
         table = statistic.portmanteau(self.innovations, self.n, stride, lags)
         usual = statistic.mean_earlier(table)
-        step = one_step(table - usual)
+        step = against_earlier(table - usual, self.n // stride)
         last = usual[:, -1:]
         n = self._count(self.innovations)
         naive = np.full((len(self.x), 1), np.sqrt(2 / lags))  # sd of ln Q for a chi-square law

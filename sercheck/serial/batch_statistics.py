@@ -51,7 +51,7 @@ def spread(z: Floats, n: int) -> Floats:
     cut = batches(z, n)
     mean, count = _mean(cut)
     square = np.where(np.isnan(cut), 0.0, (cut - mean[..., None]) ** 2).sum(axis=-1)
-    return np.asarray(square / np.maximum(count - 1, 1) + FLOOR)
+    return np.where(np.isnan(mean), np.nan, square / np.maximum(count - 1, 1) + FLOOR)
 
 
 def power(z: Floats, n: int) -> Floats:
@@ -174,7 +174,8 @@ def _fit(y: Floats, regressors: list[Floats], usual: float) -> Fitted:
     basis = [about(x) for x in regressors]
     # Gram-Schmidt, the wanted regressor last: its coefficient needs only what the others leave of it
     scale = (basis[-1] ** 2).sum(axis=-1)
-    for k, x in enumerate(basis[:-1]):
+    for k in range(len(basis) - 1):
+        x = basis[k]
         square = (x**2).sum(axis=-1)
         inverse = np.where(square > 0, 1 / np.where(square > 0, square, 1.0), 0.0)
         left = left - (np.einsum("...t,...t->...", left, x) * inverse)[..., None] * x
@@ -256,16 +257,15 @@ class Marks:
 def equal_before(x: Floats, distance: int, n: int) -> Marks:
     """Compare every value with the one ``distance`` steps earlier.
 
-    A commonest value that lies at the end of the range and makes up more than 5 % (zero at night) is not compared:
-    its repeats tell nothing.
+    A commonest value of history that lies at the end of its range and makes up more than 5 % (zero at night) is not
+    compared: its repeats tell nothing.
 
     Args:
         x: values as delivered, shape (S, B·n + more); the batches are its end.
         distance: steps back.
         n: steps in one batch.
     """
-    held = pinned(x)
-    x = np.where(x == held[:, None], np.nan, x)
+    x = np.where(x == pinned(x[:, :-n])[:, None], np.nan, x)
     size = x.shape[1] // n * n
     now, then = x[:, -size:], np.full((len(x), size), np.nan)
     if distance < x.shape[1]:

@@ -112,15 +112,42 @@ def one_step(table: Floats) -> OneStep:
         scale = s * np.sqrt(1 + np.minimum(1, leverage(now_a, now_b)[:, 0]))
         misses = studentised / s[:, None]
         df, widen = tails(misses, m)
-    able = (m > 3 + DAYS) & (s > 0)
+    able = (m > 3 + DAYS) & (s > _rounding(table))
     nothing = np.where(able, 0.0, np.nan)
     return OneStep(table[:, -1], centre + nothing, scale + nothing, df, widen, misses[:, :-1], m)
+
+
+def against_earlier(table: Floats, overlap: int) -> OneStep:
+    """Judge the newest statistic of overlapping windows by those of windows that share no row with it.
+
+    No regression: the statistics just before it come from rows that are themselves judged. T = (S - mean)/(s √(1 +
+    v/m)), m earlier windows of which ``overlap`` in a row share rows: v = Σ ρ_j and df = m/Σ ρ_j² - 1, with
+    ρ_j = 1 - j/``overlap``, the correlation of statistics that add up over rows.
+
+    Args:
+        table: statistics in time order, the judged window last, shape (S, B + 1); NaN is missing.
+        overlap: windows in a row that share rows with one.
+    """
+    rho = 1 - np.abs(np.arange(1 - overlap, overlap)) / overlap
+    earlier = table[:, :-1].copy()
+    earlier[:, max(earlier.shape[1] - overlap + 1, 0) :] = np.nan
+    m = np.asarray((~np.isnan(earlier)).sum(axis=1), dtype=np.int64)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        centre = np.nansum(earlier, axis=1) / m
+        freedom = m / (rho**2).sum()
+        s = np.sqrt(np.nansum((earlier - centre[:, None]) ** 2, axis=1) / m * freedom / (freedom - 1))
+        misses = (earlier - centre[:, None]) / s[:, None]
+        scale = s * np.sqrt(1 + rho.sum() / m)
+    nothing = np.where((freedom > 3) & (s > _rounding(table)), 0.0, np.nan)
+    heavy, _ = tails(misses, m)
+    df = np.minimum(heavy, np.maximum(freedom - 1, 1.0))
+    return OneStep(table[:, -1], centre + nothing, scale + nothing, df, np.ones_like(s), misses, m)
 
 
 def tails(misses: Floats, m: Ints) -> tuple[Floats, Floats]:
     """Degrees of freedom and widening that history's own misses ask for, each of shape (S,)."""
     with np.errstate(invalid="ignore", divide="ignore"):
-        centred = misses - np.nanmean(np.where(m[:, None] > 0, misses, 0.0), axis=1, keepdims=True)
+        centred = misses - np.nansum(misses, axis=1, keepdims=True) / m[:, None]
         second = np.nansum(centred**2, axis=1) / m
         excess = np.nansum(centred**4, axis=1) / m / second**2 - 3
         df = np.maximum(m - 3.0, 3.0)
@@ -159,6 +186,40 @@ def smaller(first: Floats, second: Floats) -> Floats:
     return np.where(np.abs(second) < np.abs(first), second, first)
 
 
+def studentised(t: Floats, misses: Floats, batches: Ints) -> Floats:
+    """T of history's batches, put on the footing of a new one, with the judged batch's T last: (S, B + 1).
+
+    A miss r of history took part in the scale that it is divided by; r √((m - 2)/(m - 1 - r²)) is what it would be
+    without itself (externally studentised residual, Cook and Weisberg 1982).
+
+    Args:
+        t: T of the judged batch, shape (S,).
+        misses: shape (S, B).
+        batches: m, shape (S,).
+    """
+    m = batches[:, None].astype(np.float64)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        outside = misses * np.sqrt((m - 2) / np.maximum(m - 1 - misses**2, 1e-6))
+    return np.concatenate((outside, t[:, None]), axis=1)
+
+
+def together(scores: Floats) -> OneStep:
+    """One verdict for all series of a feed: the mean of their studentised T, judged by history's means of the same.
+
+    Correlation among the series is in the reference, so that a small change of all is seen at once.
+
+    Args:
+        scores: what ``studentised`` gives, all series below each other, shape (S, B + 1).
+
+    Returns:
+        Arrays of shape (1,).
+    """
+    told = ~np.isnan(scores)
+    count = told.sum(axis=0)
+    mean = np.where(told, scores, 0.0).sum(axis=0) / np.maximum(count, 1)
+    return one_step(np.where(2 * count >= count.max(initial=1), mean, np.nan)[None])
+
+
 def _mean_before(table: Floats) -> Floats:
     """Mean of the seven before each place, of at least four; NaN elsewhere."""
     seen = ~np.isnan(table)
@@ -169,6 +230,11 @@ def _mean_before(table: Floats) -> Floats:
     counts = count[:, DAYS : DAYS + size] - count[:, :size]
     full = np.arange(size) >= DAYS
     return np.where((counts >= LEAST) & full, sums / np.maximum(counts, 1), np.nan)
+
+
+def _rounding(table: Floats) -> Floats:
+    """Scatter that rounding alone may give: 1e-12 of the largest statistic."""
+    return np.asarray(1e-12 * np.max(np.abs(table), axis=1, where=~np.isnan(table), initial=0.0))
 
 
 def _about_mean(x: Floats, used: Bools, m: Ints) -> tuple[Floats, Floats]:

@@ -14,11 +14,8 @@ GAINS = (0.0, 0.04, 0.1, 0.2)
 CLIP = 4.0
 """A deviation counts up to this many running medians (about 2.7 standard deviations of a normal law)."""
 
-CLIP_FROM = 5
-"""Deviations are clipped from the sixth cycle on: fewer have no usable median."""
-
-MEMORY = 13
-"""Cycles in the running median: a quarter of a year of weeks, two weeks of days; odd, so that the middle is a value."""
+MEMORY = 5
+"""Deviations in the running median, and cycles before it is used: deviations are clipped from the sixth cycle on."""
 
 FEWEST = 2
 """Cycles that a phase must have been seen before its profile is used: one alone is an observation, not a profile."""
@@ -114,34 +111,46 @@ def _learn(y: Floats, table: Cycles, lag: int, gain: Floats) -> Floats:
     series, (count, length) = len(y), table.step.shape
     known = np.full((series, count, length), np.nan)
     p = np.zeros((series, length))
-    seen = np.zeros((series, length), dtype=np.int64)
-    recent = np.full((MEMORY, series, length), np.nan)
+    seen = np.zeros((series, length))
+    recent = [np.full((series, length), np.inf) for _ in range(MEMORY)]
     for c in range(count):
         step = table.step[c]
-        value = np.where(step >= 0, y[:, step], np.nan)
-        deviation = value - p
+        deviation = np.where(step >= 0, y[:, step], np.nan) - p
         told = ~np.isnan(deviation)
+        deviation[~told] = 0.0
         size = np.abs(deviation)
-        usual = middle(recent)
-        cap = CLIP * np.fmax(usual, middle(usual.T)[:, None])
-        clipped = np.where(seen >= CLIP_FROM, np.clip(deviation, -cap, cap), deviation)
-        weight = np.maximum(1.0 / (seen + 1), gain[:, None])
-        p = np.where(told, p + weight * np.where(told, clipped, 0.0), p)
+        if c >= MEMORY:
+            usual = middle(recent, np.clip(seen - 1, 0, MEMORY))
+            cap = CLIP * np.maximum(usual, np.median(usual, axis=1)[:, None])
+            np.clip(deviation, -cap, cap, out=deviation, where=seen >= MEMORY)
+        p += np.maximum(1.0 / (seen + 1), gain[:, None]) * deviation
+        again = told & (seen > 0)  # the first value is its own profile and deviates from nothing
+        oldest = recent.pop()
+        if again.all():
+            recent.insert(0, size)
+        else:
+            shifted = [np.where(again, new, old) for new, old in zip([size, *recent], [*recent, oldest], strict=True)]
+            recent = shifted
         seen += told
-        again = told & (seen > 1)  # the first value is its own profile and deviates from nothing
-        recent = np.where(again, np.concatenate((size[None], recent[:-1])), recent)
         if c + lag < count:
             known[:, c + lag] = np.where(seen >= FEWEST, p, np.nan)
     return known
 
 
-def middle(x: Floats) -> Floats:
-    """Median along the first axis over what is not missing; NaN where all is."""
-    ordered = np.sort(x, axis=0)
-    count = (~np.isnan(x)).sum(axis=0)
-    low = np.take_along_axis(ordered, np.maximum(count - 1, 0)[None] // 2, axis=0)[0]
-    high = np.take_along_axis(ordered, np.minimum(count // 2, len(x) - 1)[None], axis=0)[0]
-    return np.where(count > 0, (low + high) / 2, np.nan).astype(np.float64)
+def middle(values: list[Floats], count: Floats) -> Floats:
+    """Median of the ``count`` finite ones of five arrays, element by element (the rest are inf); 0 for none."""
+    a, b, c, d, e = values
+    for _ in range(2):  # odd-even transposition sort: five rounds order five values
+        a, b, c, d = _pair(a, b, c, d)
+        b, c, d, e = _pair(b, c, d, e)
+    a, b, c, d = _pair(a, b, c, d)
+    low = np.select([count >= 5, count >= 3, count >= 1], [c, b, a], 0.0)
+    high = np.select([count >= 4, count >= 2, count >= 1], [c, b, a], 0.0)
+    return np.asarray((low + high) / 2)
+
+
+def _pair(a: Floats, b: Floats, c: Floats, d: Floats) -> tuple[Floats, Floats, Floats, Floats]:
+    return np.minimum(a, b), np.maximum(a, b), np.minimum(c, d), np.maximum(c, d)
 
 
 def around_blocks(x: Floats, block: int) -> Floats:
@@ -193,14 +202,15 @@ def log_unit(x: Floats, profile: Floats) -> Floats:
     """
     residual = x - profile
     told = ~np.isnan(residual)
-    rank = np.argsort(np.argsort(np.where(told, profile, np.inf), axis=1, kind="stable"), axis=1, kind="stable")
-    group = np.where(told, rank * DECILES // np.maximum(told.sum(axis=1, keepdims=True), 1), -1)
-    high, wide = np.full((2, len(x), DECILES), np.nan)
-    for k in range(DECILES):
-        inside = group == k
-        count = np.maximum(inside.sum(axis=1), 1)
-        high[:, k] = np.where(inside, profile, 0.0).sum(axis=1) / count
-        wide[:, k] = np.where(inside, np.abs(residual), 0.0).sum(axis=1) / count
+    order = np.argsort(np.where(told, profile, np.inf), axis=1, kind="stable")
+    edge = np.arange(DECILES + 1) * told.sum(axis=1, keepdims=True) // DECILES
+    size = np.maximum(np.diff(edge, axis=1), 1)
+
+    def decile_means(v: Floats) -> Floats:
+        total = np.cumsum(np.take_along_axis(np.where(told, v, 0.0), order, axis=1), axis=1)
+        return np.asarray(np.diff(np.take_along_axis(np.pad(total, ((0, 0), (1, 0))), edge, axis=1), axis=1) / size)
+
+    high, wide = decile_means(profile), decile_means(np.abs(residual))
     usable = (high > 0) & (wide > 0)
     a, b = (np.log(np.where(usable, part, 1.0)) for part in (high, wide))
     count = np.maximum(usable.sum(axis=1, keepdims=True), 1)
