@@ -149,6 +149,8 @@ FEWEST_STRONG = 672
 """Rows that a literal bound needs where lag-one memory may reach .9: at 336 it fails at 7 times a risk of .001."""
 STRONG = 0.7
 """Fitted memory from which it may; taking the best break out lowers the fit (.1 at 168 rows, simulated)."""
+FARTHEST = 1e100
+"""Jump, in units of the rows' scale, beyond which a bound is as good as endless and squares would overflow."""
 MIDDLE = 0.5
 """Standard deviation of a Brownian bridge in its middle."""
 
@@ -202,7 +204,8 @@ def _literal(panel: Panel, question: Question) -> Measurement:
     endless = np.full((len(n), 1), np.inf)
 
     def against(bound: float) -> Reference:
-        moved = values - np.where(after, (bound / scale)[:, None], 0.0)
+        shift = np.clip(bound / scale, -FARTHEST, FARTHEST)[:, None]
+        moved = values - np.where(after, shift, 0.0)
         walk = cusum(moved)
         excess, unit = cell(found.change * scale - bound), np.full(endless.shape, bound)
         with np.errstate(divide="ignore", invalid="ignore"):

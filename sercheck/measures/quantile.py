@@ -54,7 +54,7 @@ from sercheck.measures._past import (
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats
 from sercheck.serial.quantiles import in_order, order_statistic, quantile
-from sercheck.serial.rates import AgainstShare, cluster_size
+from sercheck.serial.rates import AgainstShare, against_share
 from sercheck.serial.scores import Ranking, ranking
 from sercheck.serial.window_t import window_t, windows
 
@@ -130,10 +130,14 @@ class OrderStatistic:
         return np.where((far > 0) & (far < 1), shift, np.nan)
 
     def _moved(self, share: Floats) -> Floats:
-        """The bound moved by the distance from the observed quantile to the order statistic that would fail."""
+        """The bound moved by the distance from the observed quantile to the order statistic that would fail.
+
+        Endless where not even all rows beyond the bound would.
+        """
         beyond = np.rint(share * self.law.rows)
         place = self.law.rows - beyond if self.upper else beyond - 1
-        return np.asarray(self.bound + (self.observed - order_statistic(self.rows, place)), dtype=np.float64)
+        moved = self.bound + (self.observed - order_statistic(self.rows, place))
+        return np.where(np.isnan(share), np.inf if self.upper else -np.inf, moved)
 
     def _place(self, probability: Floats) -> Floats:
         return quantile(self.everything, self.held, np.clip(probability, 0.0, 1.0))
@@ -151,15 +155,14 @@ def _literal(panel: Panel, question: Question, q: float) -> Measurement:
     def against(*, bound: float, upper: bool) -> OrderStatistic:
         beyond = panel.values > bound if upper else panel.values < bound
         marks = np.where(np.isnan(panel.values), np.nan, beyond)
-        size = cell(cluster_size(marks))
-        tau.append(size)
-        hits = cell(np.nansum(marks[:, panel.start :], axis=1))
-        share = np.full(size.shape, 1 - q if upper else q)
-        law = AgainstShare(hits=hits, rows=n.astype(np.float64), tau=size, power=POWER, share=share)
+        law = against_share(marks, panel.start, 1 - q if upper else q, POWER)
+        tau.append(law.tau)
         with np.errstate(invalid="ignore"):
-            silent = law.too_few & (law.p_value("upper") > question.risk)
-        reasons.add(silent, "fewer than 3 effective rows are expected beyond the bound: a longer window is needed")
-        return OrderStatistic(law, upper, observed, np.full(size.shape, bound), rows, everything, held, q)
+            mute = law.too_few | law.blind.get("upper", False)
+            mute = mute | np.isnan(law.limit("upper", np.full(law.tau.shape, question.risk)))
+            silent = mute & (law.p_value("upper") > question.risk)
+        reasons.add(silent, "too few effective rows are expected beyond the bound to tell: a longer window is needed")
+        return OrderStatistic(law, upper, observed, np.full(law.tau.shape, bound), rows, everything, held, q)
 
     stays = question.stays
     upper = None if stays.high is None else against(bound=stays.high, upper=True)

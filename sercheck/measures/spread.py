@@ -247,7 +247,7 @@ def _alone(panel: Panel, question: Question) -> Measurement:
     at, unit = np.cbrt(corrected), _CubeRoot(told.scale)
 
     def against(bound: float) -> Pivot:
-        root = np.cbrt((bound / told.scale) ** 2)
+        root = np.cbrt(bound / told.scale) ** 2
         centre, scale = cell(root * (1 - 2 / (9 * df))), cell(root * np.sqrt(2 / (9 * df)))
         return Pivot(
             statistic=cell(at),

@@ -99,8 +99,9 @@ def _like_history(panel: Panel, question: Question) -> Measurement:
     spread, df = contrast_variance(spectrum, contrast)
     reasons.add(~(cell(spread) > 0), "history does not vary: there is no sampling error to allow for")
     unit = ToUnit(None, np.zeros(len(at)), quartile_scale(panel))
-    with np.errstate(invalid="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore"):
         scale, naive = np.sqrt(spread), np.sqrt(spectrum.variance * (contrast**2).sum(axis=1))
+        worth = (naive / scale) ** 2
     pivot = Pivot(
         statistic=cell(at),
         centre=np.zeros((len(at), 1)),
@@ -112,7 +113,7 @@ def _like_history(panel: Panel, question: Question) -> Measurement:
         naive_scale=cell(naive),
     )
     return _measured(
-        panel, reasons, (pivot, pivot), unit(cell(at)), (naive / scale) ** 2,
+        panel, reasons, (pivot, pivot), unit(cell(at)), worth,
         "slope of normal scores, overlapping slopes of history (van der Waerden 1952; Meketon and Schmeiser 1984)",
         "stationary history" + without(told),
     )  # fmt: skip

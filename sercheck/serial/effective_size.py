@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from sercheck.serial.arrays import Floats, as_series
+from sercheck.serial.arrays import Floats
 from sercheck.serial.centre import centred
 from sercheck.serial.long_run import cosine_count, cosine_spectrum
 
@@ -34,16 +34,15 @@ def low_frequency_share(x: object) -> tuple[Floats, int]:
 
     White noise has g = B/(n - 1) on average. NaN for a constant series or one of fewer than two values.
     """
-    values = as_series(x)
-    spectrum = cosine_spectrum(values)
+    # in units of the series' scale, so that squares of values such as 1e300 stay finite
+    data = centred(x)
+    spectrum = cosine_spectrum(np.where(data.seen, data.values, np.nan))
     count = min(cosine_count(spectrum.steps), spectrum.power.shape[1])
-    # the same data in units of its scale: squares of values such as 1e300 stay finite
-    varies = centred(values).varies
     weights = np.zeros((1, spectrum.power.shape[1]))
     weights[:, :count] = 1.0
     with np.errstate(divide="ignore", invalid="ignore"):
         share = spectrum.weighted(weights) * count / (spectrum.variance * spectrum.n)
-    return np.where(varies, share, np.nan), count
+    return np.where(data.varies, share, np.nan), count
 
 
 def effective_size(x: object) -> Floats:

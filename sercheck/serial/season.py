@@ -112,7 +112,8 @@ def _distance(x: Floats, profile: Floats, stretch: Ints) -> Floats:
     """Logarithm of the mean squared distance of each stretch from the profile, NaN for an empty one, shape (S, C)."""
     apart = x - profile
     seen = ~np.isnan(apart)
-    power = np.where(seen, apart, 0.0) ** 2
+    peak = np.max(np.abs(apart), axis=1, where=seen, initial=np.finfo(np.float64).tiny)[:, None]
+    power = (np.where(seen, apart, 0.0) / peak) ** 2  # no square of a double overflows
     starts = np.flatnonzero(np.diff(stretch, prepend=-1))
     if not len(starts):
         return np.full((x.shape[0], 0), np.nan)
