@@ -33,6 +33,9 @@ if TYPE_CHECKING:
 
     Rows = str | Path | Sequence[str | Path] | pd.DataFrame
 
+EARLIEST, LATEST = 1678, 2261
+"""Whole years that nanoseconds since 1970 reach in 64 bits."""
+
 
 @dataclass(frozen=True)
 class Facts:
@@ -131,7 +134,7 @@ def gate(
         rules: a compiled rule file (``load_rules``) or its path.
         batch: the newest rows: a DataFrame, a path, several, or a glob.
         history: rows let in before, likewise; default what the rule file names.
-        as_of: the clock to judge by, RFC 3339 or any stamp that pandas reads (UTC when it has no offset); default now.
+        as_of: the clock to judge by, RFC 3339 or ISO 8601 (UTC when it has no offset); default now.
         store: folder of the ledger that the judgement is kept in; default none is kept.
         ledger: SQLAlchemy URL of the ledger, where it is not in the store.
 
@@ -170,13 +173,15 @@ def gate(
         sercheck_version=__version__,
     )
     table = records(book, _judged(book, seen), common)
+    if not np.any(table["action"] == "hold"):
+        counted.must_say_something(seen)
     verdict = Verdict(
         decision="held" if np.any(table["action"] == "hold") else "released",
         batch_id=common.batch_id,
         feed=book.feed,
         table=table,
         facts=facts,
-        notes=(*counted.notes(), *dict.fromkeys(notes)),
+        notes=(*_unjudged(book, seen, table), *counted.notes(past is not None), *dict.fromkeys(notes)),
         paths=source.paths,
         abouts={rule.name: rule.about for rule in book.rules if rule.about},
         expected=expected_false_holds(book),
@@ -214,6 +219,17 @@ def _open_ledger(store: str | Path | None, url: str | None) -> Ledger:
     return open_ledger(None if store is None else str(store), url)
 
 
+def _unjudged(book: Rulebook, seen: Sequence[Seen], table: Records) -> list[str]:
+    """What a release must not hide: rules that judged nothing, a judgement in which nothing was decided."""
+    looked = {part.rule for part in seen}
+    idle = [rule for place, rule in enumerate(book.rules) if place not in looked]
+    told = [f"rule '{rule.name}' judged no series: none is called {' or '.join(rule.only)}" for rule in idle]
+    counts = table.counts()
+    if counts["undecided"] == len(table):
+        told.insert(0, f"nothing could be decided: all {len(table)} records are undecided")
+    return told
+
+
 def _kept(verdict: Verdict, common: Common, book: Rulebook, ledger: Ledger) -> Verdict:
     """Store the judgement; what was stored before stands."""
     from sercheck.store.rows import BatchRow, Filters, JudgementRow
@@ -241,12 +257,15 @@ def _clock(as_of: str | None) -> int:
     """The time to judge by as nanoseconds since 1970 UTC."""
     if as_of is None:
         return time.time_ns()
+    wanted = "a time such as 2026-01-20T06:00:00Z"
     try:
         stamp = datetime.fromisoformat(as_of)
-    except ValueError as trouble:
-        raise UsageError("--as-of", f"'{as_of}' is no time", "a time such as 2026-01-20T06:00:00Z") from trouble
-    utc = stamp.replace(tzinfo=UTC) if stamp.tzinfo is None else stamp.astimezone(UTC)
-    return round((utc - datetime(1970, 1, 1, tzinfo=UTC)) / timedelta(microseconds=1)) * 1000
+        utc = stamp.replace(tzinfo=UTC) if stamp.tzinfo is None else stamp.astimezone(UTC)
+    except (ValueError, OverflowError) as trouble:
+        raise UsageError("--as-of", f"'{as_of}' is no time", wanted) from trouble
+    if not EARLIEST <= utc.year <= LATEST:
+        raise UsageError("--as-of", f"the year {utc.year}", f"{wanted}, in the years {EARLIEST} to {LATEST}")
+    return (utc - datetime(1970, 1, 1, tzinfo=UTC)) // timedelta(microseconds=1) * 1000
 
 
 def _slug(feed: str) -> str:
@@ -259,7 +278,9 @@ class _Counted:
 
     def __init__(self) -> None:
         self._stretch: tuple[int, int] | None = None
-        self._rows = self._series = 0
+        self._rows = self._series = self._placed = self._past = 0
+        self._numbers: Counter[str] = Counter()
+        self._text: Counter[str] = Counter()
         self._odd: Counter[str] = Counter()
 
     def add(self, grid: Grid) -> None:
@@ -268,6 +289,11 @@ class _Counted:
         self._stretch = (int(grid.axis.stamps[grid.start]), int(grid.axis.stamps[-1]))
         self._rows += int(tally.rows.sum())
         self._series += len(grid.keys)
+        self._placed += int(np.count_nonzero(grid.delivered[:, grid.start :]))
+        self._past += grid.start
+        for name, values in grid.values.items():
+            self._numbers[name] += int(np.count_nonzero(np.isfinite(values[:, grid.start :])))
+            self._text[name] += int(tally.unreadable[name].sum())
         self._odd["could not be placed in time (off the cadence, unreadable or far away)"] += int(tally.off_grid.sum())
         self._odd["stand in for an earlier row with the same stamp and other values"] += int(tally.differing.sum())
         self._odd["repeat an earlier row"] += int(tally.doubles.sum())
@@ -282,6 +308,39 @@ class _Counted:
         first, last = utc_text(np.array(self._stretch)).tolist()
         return Facts(first, last, self._rows, self._series)
 
-    def notes(self) -> tuple[str, ...]:
-        """What is odd about the rows, whether or not a rule asks."""
-        return tuple(f"{number} of {self._rows} rows {what}" for what, number in self._odd.items() if number)
+    def notes(self, compared: bool) -> tuple[str, ...]:
+        """What is odd about the rows, whether or not a rule asks; ``compared`` tells that there is a history."""
+        told = [f"{number} of {self._rows} rows {what}" for what, number in self._odd.items() if number]
+        told += [f"no row has a value in {name}" for name, number in self._numbers.items() if not number]
+        if compared and not self._past:
+            told.append("no row of the history lies before the batch: nothing was compared with it")
+        return tuple(told)
+
+    def must_say_something(self, seen: Sequence[Seen]) -> None:
+        """Refuse to release a batch of which nothing could be read or judged.
+
+        Rules that cannot judge leave a batch undecided and do not hold it; a batch without one number would pass.
+
+        Raises:
+            BatchError: no rule looked at any series, no row has a place in time, or no cell that a rule looks at (or
+                no cell of a column that holds text) is a number.
+        """
+        if not seen:
+            raise BatchError(
+                "the batch", f"not one rule judged any of its {self._series} series", "series that a rule is for",
+                "Do the keys still match the `only` of the rules?",
+            )  # fmt: skip
+        if not self._placed:
+            raise BatchError(
+                "the batch", f"not one of its {self._rows} rows could be placed in time", "stamps on the cadence",
+                "Is `every` right, and is the clock of the source?",
+            )  # fmt: skip
+        columns = {part.column for part in seen if part.column}
+        empty = {name for name in columns if not self._numbers[name]}
+        garbled = {name for name in empty if self._text[name]}
+        refused = sorted(garbled or (empty if empty == columns else ()))
+        if refused:
+            came = f"not one of its {self._rows} rows holds a number in {', '.join(refused)}"
+            if garbled:
+                raise BatchError("the batch", came, "a point as the decimal mark, no mark of thousands, no units")
+            raise BatchError("the batch", came, "at least one value", "Look at the source of the feed.")

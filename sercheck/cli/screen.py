@@ -25,6 +25,8 @@ def answer(verdict: Verdict) -> str:
     lines += _undecided(verdict)
     lines.append(_passed(verdict))
     lines += [folded(f"note: {plain(note)}", rest="      ") for note in verdict.notes[:MOST_RULES]]
+    if len(verdict.notes) > MOST_RULES:
+        lines.append(f"  and {len(verdict.notes) - MOST_RULES} more notes")
     lines.append(f"batch {verdict.batch_id}")
     return "\n".join(lines)
 
