@@ -26,6 +26,7 @@ def detectable_reach(risk: Floats, df: Floats) -> Floats:
     t (1 - 1/(4 df)) + z √(1 + t²/(2 df)), t the critical value (Johnson and Welch 1940): with few degrees of freedom
     the critical value is itself uncertain and t + z would promise too much.
     """
+    df = np.where(np.asarray(df) > 0, df, np.nan)  # no history, no degrees of freedom: nothing can be promised
     t, power = t_quantile(1 - risk, df), t_quantile(POWER, np.inf)
     return np.asarray(t * (1 - 1 / (4 * df)) + power * np.sqrt(1 + t**2 / (2 * df)), dtype=np.float64)
 

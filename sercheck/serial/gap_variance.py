@@ -41,11 +41,12 @@ def gapped_variance(rho: Floats, seen: Bools, lag: int) -> Floats:
     wide = np.concatenate([rho, np.zeros((len(rho), reach + lag + 1))], axis=1)
     here, ahead, behind = wide[:, np.abs(d)], wide[:, np.abs(d + lag)], wide[:, np.abs(d - lag)]
     at = rho[:, lag : lag + 1]
-    added = (
-        (pp / all_pp / p**2 - 1) * (here**2 + ahead * behind)
-        - 4 * at * (ps / all_ps / (p * s) - 1) * here * behind
-        + 2 * at**2 * (ss / all_ss / s**2 - 1) * here**2
-    )
+    with np.errstate(invalid="ignore"):  # 0/0 where so short a stretch has no two pairs that far apart: unknown
+        added = (
+            (pp / all_pp / p**2 - 1) * (here**2 + ahead * behind)
+            - 4 * at * (ps / all_ps / (p * s) - 1) * here * behind
+            + 2 * at**2 * (ss / all_ss / s**2 - 1) * here**2
+        )
     rows = pair.sum(axis=1) + lag
     total = (bartlett_variance(rho, lag) + added.sum(axis=1)) * rows / steps
     return np.where(known, total, np.nan)
