@@ -1,0 +1,1 @@
+"""Trying the rules on yesterday's batches, healthy and with faults put in."""

@@ -1,0 +1,143 @@
+"""The catalogue of faults that a rehearsal puts into yesterday's batches; depends on ``serial``, ``causes``, errors."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from importlib import metadata
+
+import numpy as np
+
+from sercheck import causes
+from sercheck.errors import UsageError
+from sercheck.rehearsal import rows, values
+from sercheck.rehearsal.rows import Given
+from sercheck.serial.arrays import Floats
+
+GROUP = "sercheck.faults"
+"""Entry-point group under which another package announces its faults."""
+
+Damage = Callable[[Given], Floats]
+
+BREAKS = (ImportError, SyntaxError, NameError, AttributeError, TypeError, ValueError, LookupError, RuntimeError)
+"""What a broken file raises when it is imported."""
+
+
+@dataclass(frozen=True)
+class Fault:
+    """One thing that goes wrong with feeds.
+
+    Attributes:
+        name: what it is called in tables and options.
+        says: one sentence for a reader.
+        cause: the cause that should be named for it, one of ``sercheck.causes``.
+        sizes: sizes worth trying; what a size means is in ``says``.
+        damage: from what is given to the broken window (S, n). Pure: nothing that comes in is changed, the same seed
+            gives the same damage.
+        fewest_series: series that it needs.
+        history: history that it needs: "", "cycle" or "batch".
+    """
+
+    name: str
+    says: str
+    cause: str
+    sizes: tuple[float, ...]
+    damage: Damage
+    fewest_series: int = 1
+    history: str = ""
+
+    def apply(self, window: Floats, history: Floats, size: float, rng: np.random.Generator, steps: int) -> Floats:
+        """The broken window, shape (S, n).
+
+        Args:
+            window: the batch, shape (S, n), NaN is missing.
+            history: the rows right before it, shape (S, N).
+            size: one of ``sizes``, or another.
+            rng: a seeded generator.
+            steps: steps in one cycle of the season that the fault may be about.
+        """
+        return self.damage(Given(window, history, size, rng, steps))
+
+    def fits(self, series: int, window: int, history: int, steps: int) -> bool:
+        """Whether it can be put into a window of that many series and steps after so much history."""
+        needed = {"": 0, "cycle": steps, "batch": window}[self.history]
+        return series >= self.fewest_series and history >= needed
+
+
+def catalogue() -> tuple[Fault, ...]:
+    """All faults: the built-in ones and those that installed packages announce, in this order.
+
+    Raises:
+        UsageError: when an announced one cannot be loaded, is no ``Fault``, or has the name of another.
+    """
+    found = {fault.name: fault for fault in BUILT_IN}
+    for point in metadata.entry_points(group=GROUP):
+        fault = _load(point)
+        if fault.name in found:
+            raise UsageError(
+                f"fault {fault.name}", f"{point.value} has the name of another fault", todo="Rename one of them."
+            )
+        found[fault.name] = fault
+    return tuple(found.values())
+
+
+def _load(point: metadata.EntryPoint) -> Fault:
+    place = f"fault {point.name} ({point.value})"
+    todo = "Mend it, or uninstall the package that announces it."
+    try:
+        loaded: object = point.load()
+    except BREAKS as reason:
+        raise UsageError(place, f"cannot be loaded: {type(reason).__name__}: {reason}", todo=todo) from reason
+    if not isinstance(loaded, Fault):
+        raise UsageError(place, f"is {type(loaded).__name__}", "a sercheck.rehearsal.faults.Fault", todo)
+    return loaded
+
+
+ONE = (1.0,)
+"""The size of faults that have none."""
+
+BUILT_IN = (
+    Fault("shuffled", "All rows in random order.", causes.WRONG_ORDER, ONE, rows.shuffled),
+    Fault("sorted", "Rows ordered by value.", causes.WRONG_ORDER, ONE, rows.ordered),
+    Fault("reversed", "The newest row first.", causes.WRONG_ORDER, ONE, rows.backwards),
+    Fault("noise", "Independent noise of the same mean and spread.", causes.NOISE, ONE, values.noise),
+    Fault("rows twice", "Each row of the first half twice in a row.", causes.REPEATED, ONE, rows.twice),
+    Fault("filled forward", "This share of rows given the value before.", causes.FILLED, (0.1, 0.3),
+          rows.filled_forward),
+    Fault("interpolated", "Every second row half-way between its neighbours.", causes.INTERPOLATED, ONE,
+          rows.interpolated),
+    Fault("smoothed", "Each value the mean of so many around it.", causes.SMOOTHED, (3.0,), values.smoothed),
+    Fault("exponentially smoothed", "Exponential smoothing with this weight.", causes.SMOOTHED, (0.4,),
+          values.exponentially_smoothed),
+    Fault("stuck", "So many rows at one value.", causes.STUCK, (6.0, 24.0), rows.stuck),
+    Fault("clock slipped", "Stamps so many steps late.", causes.SLIPPED, ONE, rows.late, history="cycle"),
+    Fault("clock slipped in mid-window", "Stamps so many steps late from the middle on.", causes.SLIPPED, ONE,
+          rows.late_from_middle, history="cycle"),
+    Fault("cycle lost", "One whole cycle not delivered.", causes.MISSING, ONE, rows.lost_cycle),
+    Fault("interleaved", "Every second row from a source so many standard deviations higher.", causes.INTERLEAVED,
+          (2.0,), values.interleaved, history="cycle"),
+    Fault("differenced", "Changes in place of values.", causes.DIFFERENCED, ONE, values.differenced, history="cycle"),
+    Fault("differenced twice", "Changes of changes in place of values.", causes.TWICE, (2.0,), values.differenced,
+          history="cycle"),
+    Fault("running total", "The total since the window began.", causes.TOTAL, ONE, values.running_total),
+    Fault("spread evenly", "Means of so many cycles given to each of their rows.", causes.SPREAD, (1.0, 0.25),
+          values.spread_evenly),
+    Fault("sign turned", "Every value with the other sign.", causes.SIGN, ONE, values.sign_turned),
+    Fault("mirrored", "Every value on the other side of the mean.", causes.MIRRORED, ONE, values.mirrored),
+    Fault("unit changed", "Every value times this.", causes.UNIT, (1000.0,), values.unit_changed),
+    Fault("unit changed in mid-window", "Values times this from the middle on.", causes.UNIT, (1000.0, 1.2),
+          values.unit_changed_from_middle),
+    Fault("level shifted", "Values so many standard deviations higher.", causes.SHIFTED, ONE, values.level_shifted,
+          history="cycle"),
+    Fault("cycle again", "The newest cycle is the one before again.", causes.AGAIN, ONE, rows.cycle_again,
+          history="cycle"),
+    Fault("batch again", "The batch of so many batches ago again.", causes.AGAIN, (4.0,), rows.batch_again,
+          history="batch"),
+    Fault("rounded", "Values rounded to this many standard deviations.", causes.ROUNDED, (0.5,), values.rounded),
+    Fault("season flattened", "The season at this part of its strength.", causes.FLATTENED, (0.5,),
+          values.season_weakened, history="cycle"),
+    Fault("season gone", "The season taken out.", causes.GONE, (0.0,), values.season_weakened, history="cycle"),
+    Fault("keys swapped", "So many pairs of series under each other's keys.", causes.SWAPPED, ONE, rows.keys_swapped,
+          fewest_series=2),
+)  # fmt: skip
+"""The faults that are always there, in the order in which they are told."""

@@ -1,0 +1,190 @@
+"""Signs of a fault that leave no doubt: equal values, midpoints, order, earlier rows, rounding; numpy and ``serial``."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from scipy import special
+
+from sercheck.serial.arrays import Bools, Floats
+from sercheck.serial.repeats import equal_to_earlier, midpoints, resting_value
+from sercheck.serial.replay import seen_before
+
+BEYOND_CHANCE = 1e-4
+"""Chance at which a count of coincidences is a sign: several are read, and together they must stay far below 2 %."""
+
+CLUSTERS = 4.0
+"""Coincidences of real feeds come in clusters: their variance is taken as so many times the binomial one."""
+
+FEW = 3
+"""Coincidences that history must have to tell how they come."""
+
+EVEN = 0.8
+"""Share of the runs that must be of one length for rows delivered twice or data spread evenly (the ends may be cut)."""
+
+BY_CHANCE = 8.0
+"""Decimal digits of chance against different values being multiples of a coarser step, from which they are rounded."""
+
+FINEST = 1e-8
+"""Finest step that is looked for."""
+
+LONGEST_HISTORY = 4000
+"""Rows of history that rounding is read from."""
+
+
+class Sign(NamedTuple):
+    """One kind of exact evidence.
+
+    Attributes:
+        name: which fault it is a sign of.
+        found: shape (S,).
+        value: the number that goes with it, shape (S,).
+    """
+
+    name: str
+    found: Bools
+    value: Floats
+
+
+def exact_signs(values: Floats, start: int) -> list[Sign]:
+    """All exact signs of the windows, those first that are told first.
+
+    Args:
+        values: history and window, shape (S, T), NaN is missing.
+        start: first step of the window.
+    """
+    window, history = values[:, start:], values[:, :start]
+    rounded, step = coarser(window, history)
+    return [
+        _in_order(window, history),
+        Sign("rounded", rounded, step),
+        *_runs(values, start),
+        _again(values, start),
+        _midpoints(window, history),
+    ]
+
+
+def _in_order(window: Floats, history: Floats) -> Sign:
+    """All steps up (or all down), and the values are history's: by value, not by time."""
+    step = np.diff(window, axis=1)
+    told = ~np.isnan(step)
+    n = told.sum(axis=1)
+    up = (told & (step > 0)).sum(axis=1)
+    down = (told & (step < 0)).sum(axis=1)
+    low, high = (np.fmin.reduce(history, axis=1, initial=np.inf), np.fmax.reduce(history, axis=1, initial=-np.inf))
+    last = np.nan_to_num(np.maximum.reduce(np.nan_to_num(window, nan=-np.inf), axis=1, initial=-np.inf))
+    one_way = ((down == 0) & (up > n / 2)) | ((up == 0) & (down > n / 2))
+    within = last <= high + (high - low)
+    past = np.diff(history, axis=1)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        rises = np.nansum(past > 0, axis=1) / np.maximum((~np.isnan(past)).sum(axis=1), 1)
+        chance = n * np.log10(np.clip(np.maximum(rises, 1 - rises), 0.5, 1.0))
+    return Sign("sorted", one_way & within & (n >= 7) & (chance < -2), np.where(down == 0, 1.0, -1.0))
+
+
+def _beyond(count: Floats, trials: Floats, marks: Floats) -> Bools:
+    """More coincidences than history's allow: at least two, and a binomial tail at history's share below chance.
+
+    Where history has some itself, counts and trials are divided by their clustering.
+    """
+    per = np.where(np.nansum(marks, axis=1) >= FEW, CLUSTERS, 1.0)
+    k, m = count / per, trials / per
+    tail = special.betainc(np.maximum(k, 1e-9), np.maximum(m - k, 0) + 1, _rate(marks))
+    return np.asarray((count >= 2) & (tail < BEYOND_CHANCE))
+
+
+def _rate(marks: Floats) -> Floats:
+    """History's share of marked rows, one half added so that nothing is impossible."""
+    seen = (~np.isnan(marks)).sum(axis=1)
+    return np.asarray((np.nansum(marks, axis=1) + 0.5) / (seen + 1))
+
+
+def _runs(values: Floats, start: int) -> list[Sign]:
+    """Equal neighbours: rows twice, data spread evenly, a stuck value, or values filled forward."""
+    marks = equal_to_earlier(values)
+    rest = resting_value(values[:, :start])
+    with np.errstate(invalid="ignore"):
+        marks = np.where(values == rest[:, None], np.nan, marks)
+    past, now = marks[:, :start], marks[:, start:]
+    told = (~np.isnan(now)).sum(axis=1).astype(np.float64)
+    equal = np.nansum(now, axis=1)
+    found = _beyond(equal, told, past)
+    lengths = _run_lengths(now[:, 1:] == 1)  # at a run's last row its number of values, 0 elsewhere
+    runs = (lengths > 0).sum(axis=1)
+    longest = lengths.max(axis=1, initial=0).astype(np.float64)
+    whole = np.maximum(runs, 1)
+    pairs = ((lengths == 2).sum(axis=1) >= EVEN * whole) & (2 * runs >= EVEN * (told - 1)) & (runs >= 3)
+    even = (lengths == longest[:, None]).sum(axis=1) >= np.maximum(EVEN * (whole - 1), 2)
+    spread = even & (longest >= 3) & (np.where(lengths > 0, lengths, 0).sum(axis=1) >= EVEN * told)
+    others = np.maximum(equal - (longest - 1), 0) / np.maximum(told - longest, 1)
+    chance = told * np.maximum(others, 1 / np.maximum(told, 1)) ** (longest - 1)
+    stuck = (longest >= 4) & (chance < 0.01) | (longest >= 0.9 * told)
+    share = equal / np.maximum(told, 1)
+    return [
+        Sign("repeated", found & pairs, share),
+        Sign("spread", found & spread & ~pairs, longest),
+        Sign("stuck", found & ~pairs & ~spread & stuck, longest),
+        Sign("filled", found & ~pairs & ~spread & ~stuck, share),
+    ]
+
+
+def _run_lengths(equal: Bools) -> np.ndarray:
+    """Values in the run that ends at each row (marks of equality to the row before), 0 where none ends."""
+    wide = np.pad(equal, ((0, 0), (1, 1)))
+    count = np.cumsum(wide, axis=1)
+    reset = np.maximum.accumulate(np.where(~wide, count, 0), axis=1)
+    inside = (count - reset) * wide
+    ends = wide[:, :-1] & ~wide[:, 1:]
+    return np.where(ends, inside[:, :-1] + 1, 0)
+
+
+def _again(values: Floats, start: int) -> Sign:
+    """Stretches that were delivered before; rows of one stretch recur together, so stretches are counted."""
+    seen = seen_before(values, start)
+    told = (~np.isnan(seen.batch)).sum(axis=1).astype(np.float64)
+    count = np.nansum(seen.batch, axis=1)
+    unusual = _beyond(np.maximum(count / seen.length, (count > 0) * 2.0), told / seen.length, seen.history)
+    return Sign("again", unusual & (count >= seen.length), count / np.maximum(told, 1))
+
+
+def _midpoints(window: Floats, history: Floats) -> Sign:
+    """Rows half-way between their neighbours."""
+    marks = midpoints(window)
+    told = (~np.isnan(marks)).sum(axis=1).astype(np.float64)
+    count = np.nansum(marks, axis=1)
+    return Sign("interpolated", _beyond(count, told, midpoints(history)), count / np.maximum(told, 1))
+
+
+def coarser(window: Floats, history: Floats) -> tuple[Bools, Floats]:
+    """Values that are whole multiples of a coarser step than history's are, and that step; both (S,).
+
+    Steps are 1, 2 and 5 times powers of ten. The window must vary, and on history's scale: a change of unit has its own
+    name.
+    """
+    now, before = _step(window), _step(history[:, -LONGEST_HISTORY:])
+    ordered = np.sort(window, axis=1)
+    different = 1 + (np.diff(ordered, axis=1) > 0).sum(axis=1)
+    scale, usual = _reach(window), _reach(history[:, -LONGEST_HISTORY:])
+    alike = (scale < 5 * usual) & (scale > usual / 20)
+    with np.errstate(divide="ignore"):
+        chance = different * np.log10(now / np.maximum(before, FINEST))
+    return (now > before) & alike & (chance >= BY_CHANCE), now
+
+
+def _reach(x: Floats) -> Floats:
+    seen = ~np.isnan(x)
+    return np.where(seen, np.abs(x), 0.0).max(axis=1, initial=0.0)
+
+
+def _step(x: Floats) -> Floats:
+    """The coarsest step that all values are whole multiples of, 0 where there is none, shape (S,)."""
+    found = np.zeros(len(x))
+    size = np.where(np.isnan(x), 0.0, np.abs(x))
+    for power in range(-8, 7):
+        for digit in (1.0, 2.0, 5.0):
+            count = x / digit * 10.0**-power if power < 0 else x / (digit * 10.0**power)
+            slack = np.minimum(8 * np.finfo(np.float64).eps * (1 + size / digit * 10.0**-power), 0.01)
+            whole = (np.abs(count - np.round(count)) <= slack) | np.isnan(x)
+            found = np.where(whole.all(axis=1) & (size.max(axis=1, initial=0.0) > 0), digit * 10.0**power, found)
+    return found
