@@ -66,13 +66,14 @@ def measure_block(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
         if not chosen.any():
             continue
         for column in rule.columns if measure.of_values else ("",):
-            key = (column, rule.after, rule.window)
+            stretch = (column, rule.window, chosen.tobytes())
+            if stretch not in panels:
+                panels[stretch] = _panel(grid, rule, column, chosen, run)
+            key = (*stretch, rule.after)
             if key not in panels:
-                panels[key] = _panel(grid, rule, column, run)
+                panels[key] = apply(rule.after, panels[stretch])
                 notes.extend(panels[key].notes)
             panel = panels[key]
-            if not chosen.all():
-                panel = replace(panel, values=panel.values[chosen], delivered=panel.delivered[chosen], shared={})
             seen.append(_look(place, rule, measure, panel, grid, chosen, run))
     return seen, notes
 
@@ -83,11 +84,13 @@ def _chosen(rule: Rule, keys: np.ndarray) -> Bools:
     return np.array([any(fnmatchcase(key, glob) for glob in rule.only) for key in keys.tolist()], dtype=bool)
 
 
-def _panel(grid: Grid, rule: Rule, column: str, run: Run) -> Panel:
+def _panel(grid: Grid, rule: Rule, column: str, chosen: Bools, run: Run) -> Panel:
     whole = rule.window == "batch"
     start = grid.start if whole else max(len(grid.axis) - run.cadence.steps(rule.window), 0)
     values = grid.values[column] if column else np.where(grid.delivered, 1.0, np.nan)
-    return apply(rule.after, Panel(values, start, grid.axis, grid.delivered, column))
+    if chosen.all():
+        return Panel(values, start, grid.axis, grid.delivered, column)
+    return Panel(values[chosen], start, grid.axis, grid.delivered[chosen], column)
 
 
 def _look(place: int, rule: Rule, measure: Measure, panel: Panel, grid: Grid, chosen: Bools, run: Run) -> Seen:

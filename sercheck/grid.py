@@ -116,6 +116,8 @@ class Panel:
         axis: the time axis, length T.
         delivered: a row was delivered, shape (S, T).
         column: name of the value column.
+        before: the panel as it was before the rule's ``after``, or None where there was nothing to change.
+        after: what ``after`` did, as the record tells it.
         unable: why a transform of ``after`` could not be carried out (every answer is then undecided), or empty.
         notes: what a transform had to leave out, for the reader.
         shared: memo for what several measures need from the same arrays (autocovariances, models).
@@ -126,6 +128,8 @@ class Panel:
     axis: Axis
     delivered: Bools
     column: str = ""
+    before: Panel | None = field(default=None, compare=False, repr=False)
+    after: str = ""
     unable: str = ""
     notes: tuple[str, ...] = ()
     shared: dict[object, object] = field(default_factory=dict, compare=False, repr=False)

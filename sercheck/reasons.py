@@ -6,6 +6,7 @@ import math
 
 from sercheck.judge import FAIL, PASS, Judged
 from sercheck.rulebook.compiled import Rule
+from sercheck.transforms import spelled
 
 
 def number(x: float, *, integer: bool = False) -> str:
@@ -30,7 +31,7 @@ def subject(rule: Rule, column: str | None, lag: int | None, season: str | None)
 
 def after(rule: Rule) -> str | None:
     """The rule's transforms as the record tells them, or None."""
-    return ", ".join(str(transform) for transform in rule.after) or None
+    return spelled(rule.after) or None
 
 
 def sentences(rule: Rule, judged: Judged) -> list[str]:
@@ -72,7 +73,7 @@ def _sentence(
     if seen.certify:
         return f"{name}: {'is there' if outcome == PASS else 'no season can be certified'}"
     value = number(observed, integer=seen.integer)
-    side = ("above" if upper else "below") if outcome == FAIL else "inside"
+    side = "inside" if outcome == PASS else "at" if observed == limit else "above" if upper else "below"
     from_history = "history's " if rule.stays.kind == "like_history" else ""
     if seen.exact:
         return f"{name} is {value}, {side} the bound {number(bound, integer=seen.integer)}"

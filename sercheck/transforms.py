@@ -9,6 +9,7 @@ comparison, to stretches of history of the window's length.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from dataclasses import replace
 
 import numpy as np
 
@@ -23,10 +24,16 @@ WHOLE_GROUP = 0.9
 
 
 def apply(chain: Sequence[Transform], panel: Panel) -> Panel:
-    """Apply the transforms in order; the memo of the result is its own."""
+    """Apply the transforms in order; the memo of the result is its own, and it remembers what it was made from."""
+    before = panel
     for transform in chain:
         panel = _KINDS[transform.kind](transform, panel)
-    return panel
+    return replace(panel, before=before, after=spelled(chain)) if chain else panel
+
+
+def spelled(chain: Sequence[Transform]) -> str:
+    """The transforms as a record tells them."""
+    return ", ".join(str(transform) for transform in chain)
 
 
 def reach(chain: Sequence[Transform], lengths: dict[str, int]) -> int:
