@@ -6,8 +6,10 @@ taken for Poisson: rows of a feed come and fail together.
 Rows are counted in whole periods from the window's first step on. Against history (``like: history``) a window of at
 least 24 periods is judged as ``level`` judges values: mean of mid-rank normal scores (van der Waerden 1952) with the
 variance of history's cosine powers (Meketon and Schmeiser 1984). A shorter window, and every literal bound with
-history: the mean of √(count + 3/8) (Anscombe 1948) against stretches of history of the window's length by window-t. A
-literal bound without history needs 96 periods and is judged as ``level`` does.
+history: the mean count c against stretches of history of the window's length by window-t, on two scales of which the
+more careful counts: √(c + 3/8) (Anscombe 1948), and -ln(m + ½) of the m rows that a period lacks, which evens out that
+rows fail in bursts. Tails are as heavy as those of history's stretches. A literal bound without history needs 96
+periods and is judged as ``level`` does.
 
 Fixed cycles (``seasons``) that are whole numbers of periods are taken out before a comparison with history. Periods on
 closed days are not compared.
@@ -34,7 +36,7 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict, field_validator
 
 from sercheck.grid import Axis, Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons
+from sercheck.measure import Measure, Measurement, Question, Reasons, Reference
 from sercheck.measures._location import location_with_history
 from sercheck.measures._past import (
     FEWEST_ROWS,
@@ -49,7 +51,7 @@ from sercheck.measures._past import (
     without,
 )
 from sercheck.measures._witnesses import mean_alone, sides
-from sercheck.reference import Pivot
+from sercheck.reference import Larger, Pivot
 from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.window_t import SMALL_RISK, fewest_windows, window_t, windows
 
@@ -103,7 +105,7 @@ class Count(Measure):
         rows = _per_period(panel, size)
         if rows.values.shape[1] == rows.start:
             return _mute(panel, f"the window holds no whole period of {size} steps")
-        return _judged(rows, question)
+        return _judged(rows, question, size)
 
 
 def _steps(per: str | int, question: Question) -> int | None:
@@ -148,34 +150,64 @@ def _axis(axis: Axis, firsts: Ints, size: int, closed: np.ndarray) -> Axis:
     return Axis(axis.stamps[firsts], axis.index[firsts], kept, phases, closed, axis.expected[firsts])
 
 
-def _judged(rows: Panel, question: Question) -> Measurement:
+def _judged(rows: Panel, question: Question, size: int) -> Measurement:
     told = past(rows)
     enough = told.stretches >= fewest_windows(question.risk)
     if question.stays.literal:
         long = told.steps >= FEWEST_ROWS * 4
         return combined(
-            enough | (not long), lambda: _by_windows(rows, question), lambda: mean_alone(rows, question)
+            enough | (not long),
+            lambda: _by_windows(rows, question, size),
+            lambda: mean_alone(rows, question),
         )
     if told.steps >= FEWEST_ROWS:
         return location_with_history(rows, question, raw=False)
-    return _by_windows(rows, question)
+    return _by_windows(rows, question, size)
 
 
 @dataclass(frozen=True)
-class _Rows:
-    """Way from a root r = x + offset to rows per period: r |r| - 3/8, row by row; below 0 it is told as such."""
+class _Root:
+    """√(c + 3/8), told below 0 as -√ so that it increases everywhere, and the way back."""
 
-    offset: Floats
+    def at(self, rows: Floats) -> Floats:
+        return np.asarray(np.sqrt(np.maximum(rows, 0.0) + ANSCOMBE), dtype=np.float64)
 
     def __call__(self, x: Floats) -> Floats:
-        root = x + self.offset[:, None]
-        return np.asarray(root * np.abs(root) - ANSCOMBE, dtype=np.float64)
+        return np.asarray(x * np.abs(x) - ANSCOMBE, dtype=np.float64)
 
 
-def _by_windows(rows: Panel, question: Question) -> Measurement:
-    """Mean root of the counts against history's stretches of as many periods."""
-    roots = rows.changed(np.sqrt(rows.values + ANSCOMBE))
-    told, stays, reasons = past(roots), question.stays, Reasons((len(rows.values), 1))
+@dataclass(frozen=True)
+class _Lack:
+    """-ln(size - c + ½), and the way back."""
+
+    size: int
+
+    def at(self, rows: Floats) -> Floats:
+        return np.asarray(-np.log(np.maximum(self.size - rows, 0.0) + 0.5), dtype=np.float64)
+
+    def __call__(self, x: Floats) -> Floats:
+        with np.errstate(over="ignore"):
+            return np.asarray(self.size + 0.5 - np.exp(-x), dtype=np.float64)
+
+
+def _tails(then: Floats, df: Floats) -> tuple[Floats, Floats]:
+    """Degrees of freedom of tails as heavy as history's, and by what the scale shrinks so that the variance stays.
+
+    Student's t with ν degrees of freedom has the excess kurtosis 6/(ν - 4): ν = min(df, 4 + 6/γ), γ that of history's
+    stretches.
+    """
+    apart = then - mean(then)[:, None]
+    with np.errstate(divide="ignore", invalid="ignore"):
+        excess = mean(apart**4) / mean(apart**2) ** 2 - 3
+        tail = np.where(excess > 0, np.minimum(df, 4 + 6 / excess), df)
+        heavier = np.sqrt(tail / (tail - 2)) / np.sqrt(df / (df - 2))
+    usable = np.isfinite(heavier) & (df > 4)
+    return np.where(usable, tail, df), np.where(usable, np.maximum(heavier, 1.0), 1.0)
+
+
+def _by_windows(rows: Panel, question: Question, size: int) -> Measurement:
+    """Mean count against history's stretches of as many periods, on two scales."""
+    told, stays, reasons = past(rows), question.stays, Reasons((len(rows.values), 1))
     reasons.add(cell(told.known) == 0, NO_HISTORY)
     fewest = fewest_windows(question.risk)
     reasons.add(
@@ -183,42 +215,28 @@ def _by_windows(rows: Panel, question: Question) -> Measurement:
         f"history holds fewer than {fewest} stretches of the window's {told.steps} periods, which a risk of "
         f"{question.risk:g} needs",
     )
-    at = mean(told.window)
+    observed = (mean(told.window) + told.offset) * told.scale
     cut = windows(told.history, told.steps)
     then = mean(cut.reshape(-1, told.steps)).reshape(cut.shape[:2])
     then[np.isnan(cut).sum(axis=2) * 2 > told.steps] = np.nan
-    centre, wide, df = window_t(then, at)
-    unit = _Rows(told.offset * told.scale)
-    scale = wide / np.sqrt(1 + 1 / (df + 1))
-    at, centre, wide, scale = (x * told.scale for x in (at, centre, wide, scale))
+    then = (then + told.offset[:, None]) * told.scale[:, None]
 
-    def pivot(place: Floats, step: Floats, bound: Floats) -> Pivot:
-        place, step = cell(place), cell(step)
-        return Pivot(
-            statistic=cell(at),
-            centre=place,
-            scale=step,
-            df=cell(df),
-            bound=bound,
-            standard_error=(unit(place + step) - unit(place - step)) / 2,
-            to_unit=unit,
-        )
+    def against(bound: float | None) -> Reference:
+        return Larger(*(_pivot(unit, observed, then, bound) for unit in (_Root(), _Lack(size))))
 
-    def against(bound: float) -> Pivot:
-        root = np.sqrt(bound + ANSCOMBE) - unit.offset
-        return pivot(root, np.maximum(scale, LEAST), np.full((len(root), 1), bound))
-
+    upper: Reference | None
+    lower: Reference | None
     if stays.literal:
         upper, lower = sides(question, against)
     else:
         share = TIED_SMALL_RISK if question.risk <= SMALL_RISK else TIED
+        upper = lower = law = against(None)
         with np.errstate(invalid="ignore"):
-            tied = (cell(told.commonest) > share) | ~(cell(wide) > 0)
+            tied = (cell(told.commonest) > share) | ~(law.standard_error > 0)
         reasons.add(tied, "the count of history hardly ever changes: use the measure completeness for it")
-        upper = lower = pivot(centre, wide, unit(cell(centre)))
     n, n_missing = counts(rows)
     return Measurement(
-        observed=unit(cell(at)),
+        observed=cell(observed),
         n=n,
         n_missing=n_missing,
         n_eff=np.full(n.shape, np.nan),
@@ -226,6 +244,29 @@ def _by_windows(rows: Panel, question: Question) -> Measurement:
         lower=lower,
         undecided=reasons.index,
         reasons=tuple(reasons.texts),
-        method="mean root of the counts, window-t (Anscombe 1948)",
+        method="mean count on two scales, window-t (Anscombe 1948)",
         assumes="stationary history" + without(told),
+    )
+
+
+def _pivot(unit: _Root | _Lack, observed: Floats, then: Floats, bound: float | None) -> Pivot:
+    """One scale's pivot; about history for ``bound`` None, else about the author's number with history's scatter."""
+    at, before = unit.at(observed), unit.at(then)
+    centre, wide, df = window_t(before, at)
+    df, heavier = _tails(before, df)
+    if bound is None:
+        place, step = cell(centre), cell(wide / heavier)
+        shown = unit(place)
+    else:
+        place = cell(unit.at(np.full(len(at), bound)))
+        step = cell(np.maximum(wide / np.sqrt(1 + 1 / (df + 1)) / heavier, LEAST))
+        shown = np.full(place.shape, bound)
+    return Pivot(
+        statistic=cell(at),
+        centre=place,
+        scale=step,
+        df=cell(df),
+        bound=shown,
+        standard_error=(unit(place + step) - unit(place - step)) / 2,
+        to_unit=unit,
     )
