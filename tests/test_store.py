@@ -200,7 +200,7 @@ def test_an_older_ledger_is_brought_up_to_date(tmp_path, monkeypatch):
     monkeypatch.setattr(migrations, "MIGRATIONS", tuple(steps))
     for _ in range(2):
         assert len(open_ledger(str(tmp_path)).records("heat-0112-abcd")) == 6
-    assert _tables(tmp_path) == {"batches", "judgements", "records", "migrations", "notes"}
+    assert _tables(tmp_path) >= {"batches", "judgements", "records", "migrations", "notes"}
     assert _steps(tmp_path)[-1] == "900 notes"
 
 

@@ -177,7 +177,7 @@ def feed_grids(
     With a history the batch is held in memory (one batch is small beside it) and history is streamed.
     """
     cadence = feed_cadence(batch, history, layout)
-    if cadence.irregular or (isinstance(batch, MemorySource) and not isinstance(history, StreamSource)):
+    if cadence.irregular or (isinstance(batch, MemorySource) and isinstance(history, MemorySource | None)):
         past = None if history is None else history.rows()
         yield from grids(batch.rows(), past, cadence, layout, need_steps, block_cells)
         return

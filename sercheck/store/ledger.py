@@ -17,9 +17,26 @@ from typing import TYPE_CHECKING, Any, Self
 from sercheck.errors import StoreError, UsageError
 from sercheck.record import COLUMNS, INTEGERS, NUMBERS, Records, storable
 from sercheck.store.database import ConflictError, Database, ledger_url
+from sercheck.store.memory import (
+    facts_of,
+    newest_baseline,
+    put_baseline,
+    put_settlement,
+    relearn_from,
+    settlements_of,
+)
 from sercheck.store.migrations import migrate
 from sercheck.store.queries import COUNT_OF, batches_where, begins_with, judgements_of, records_where
-from sercheck.store.rows import BatchRow, Filters, JudgedBatch, Judgement, JudgementRow, judgement_id
+from sercheck.store.rows import (
+    BaselineRow,
+    BatchRow,
+    Filters,
+    JudgedBatch,
+    Judgement,
+    JudgementRow,
+    Settlement,
+    judgement_id,
+)
 from sercheck.store.tables import BATCH_COLUMNS, RECORD_COLUMNS, tables
 
 if TYPE_CHECKING:
@@ -163,6 +180,39 @@ class Ledger:
             columns = [tables().records.c[name] for name in COLUMNS]
             return _gathered(connection.execute(select(*columns).where(columns[0] == whole)))
 
+    def settle(self, settlement: Settlement) -> None:
+        """Add what a person said about a batch; nothing is changed or erased by it."""
+        self.prepare()
+        with self._database.writing() as connection:
+            put_settlement(connection, settlement)
+
+    def relearn_from(self, feed: str) -> str | None:
+        """The moment (UTC, RFC 3339) before which history no longer teaches this feed, or None."""
+        if not self._there():
+            return None
+        with self._database.reading() as connection:
+            return relearn_from(connection, feed)
+
+    def add_baseline(self, row: BaselineRow) -> None:
+        """Keep what was learned; the same learned before stays as it is."""
+        self.prepare()
+        with self._database.writing() as connection:
+            put_baseline(connection, row)
+
+    def baseline(self, feed: str, rules_fingerprint: str, before: str, since: str | None = None) -> BaselineRow | None:
+        """The newest baseline of rows before ``before`` (and none before ``since``), without its facts."""
+        if not self._there():
+            return None
+        with self._database.reading() as connection:
+            return newest_baseline(connection, feed, rules_fingerprint, before, since)
+
+    def facts(self, baseline_id: str) -> bytes | None:
+        """The facts of a baseline, a Parquet file; None where there is none of this id."""
+        if not self._there():
+            return None
+        with self._database.reading() as connection:
+            return facts_of(connection, baseline_id)
+
     def _there(self) -> bool:
         """A ledger exists; it is brought up to date at the first look."""
         if not self._database.exists:
@@ -259,6 +309,8 @@ def _judged(connection: Connection, ids: list[str]) -> dict[str, JudgedBatch]:
         for row in connection.execute(judgements_of(ids[first : first + ASKED])).mappings():
             before = found.get(row["batch_id"]) or JudgedBatch(_batch(row), ())
             found[row["batch_id"]] = replace(before, judgements=(*before.judgements, _judgement(row)))
+        for batch_id, settlements in settlements_of(connection, ids[first : first + ASKED]).items():
+            found[batch_id] = replace(found[batch_id], settlements=settlements)
     return found
 
 

@@ -74,7 +74,39 @@ def _first_tables(connection: Connection) -> None:
     meta.create_all(connection, checkfirst=False)
 
 
-MIGRATIONS: tuple[Migration, ...] = (Migration("001 batches, judgements and records", _first_tables),)
+def _memory(connection: Connection) -> None:
+    from sqlalchemy import BigInteger, Column, ForeignKey, Index, LargeBinary, MetaData, String, Table, Text, text
+
+    meta = MetaData()
+    Table("batches", meta, Column("batch_id", String(255), primary_key=True))  # there already; named for the key
+    baselines = Table(
+        "baselines",
+        meta,
+        Column("baseline_id", String(64), primary_key=True),
+        *(Column(name, Text, nullable=False) for name in ("feed", "rules_fingerprint", "learned_at")),
+        *(Column(name, Text, nullable=False) for name in ("first_stamp", "last_stamp", "fingerprint")),
+        Column("series", BigInteger, nullable=False),
+        Column("facts", LargeBinary, nullable=False),
+    )
+    settlements = Table(
+        "settlements",
+        meta,
+        Column("settlement_id", String(64), primary_key=True),
+        Column("batch_id", String(255), ForeignKey("batches.batch_id"), nullable=False),
+        *(Column(name, Text, nullable=False) for name in ("feed", "what", "settled_by", "because", "settled_at")),
+        Column("relearn_from", Text),
+        Index("settlements_of_batch", "batch_id"),
+    )
+    meta.create_all(connection, [baselines, settlements], checkfirst=False)
+    if connection.dialect.name in ("sqlite", "postgresql"):  # others want a length for an index on text
+        connection.execute(text("CREATE INDEX settlements_of_feed ON settlements (feed)"))
+        connection.execute(text("CREATE INDEX baselines_of_feed ON baselines (feed)"))
+
+
+MIGRATIONS: tuple[Migration, ...] = (
+    Migration("001 batches, judgements and records", _first_tables),
+    Migration("002 baselines and settlements", _memory),
+)
 
 
 def migrate(database: Database) -> None:

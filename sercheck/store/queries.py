@@ -19,7 +19,7 @@ def batches_where(wanted: Filters) -> Select[Any]:
     """Ids of batches, the newest first. The decision and outcomes are those of the judgement stored last."""
     from sqlalchemy import func, select
 
-    batches, judgements, _ = tables()
+    batches, judgements = tables()[:2]
     later = judgements.alias("later")
     last = (
         select(func.max(later.c.stored_at)).where(later.c.batch_id == batches.c.batch_id).correlate(batches)
@@ -41,7 +41,7 @@ def records_where(wanted: Filters) -> Select[Any]:
     """Records, those of the newest batch first, each judgement's in its own order."""
     from sqlalchemy import select
 
-    batches, judgements, records = tables()
+    batches, judgements, records = tables()[:3]
     query = (
         select(*(records.c[name] for name in COLUMNS))
         .join_from(records, judgements, records.c.judgement_id == judgements.c.judgement_id)
@@ -56,7 +56,7 @@ def judgements_of(batch_ids: list[str]) -> Select[Any]:
     """Batches with all their judgements, the oldest first."""
     from sqlalchemy import select
 
-    batches, judgements, _ = tables()
+    batches, judgements = tables()[:2]
     return (
         select(*(batches.c[name].label(f"of_batch_{name}") for name in BATCH_COLUMNS), *judgements.c)
         .join_from(batches, judgements, judgements.c.batch_id == batches.c.batch_id)
@@ -75,12 +75,12 @@ def begins_with(column: ColumnElement[Any], start: str) -> ColumnElement[bool]:
 def _time() -> ColumnElement[str]:
     from sqlalchemy import func
 
-    batches, judgements, _ = tables()
+    batches, judgements = tables()[:2]
     return func.coalesce(batches.c.last_stamp, judgements.c.judged_at)
 
 
 def _of_batch(wanted: Filters) -> list[ColumnElement[bool]]:
-    batches, judgements, _ = tables()
+    batches, judgements = tables()[:2]
     conditions = []
     if wanted.feed:
         conditions.append(_named(batches.c.feed, wanted.feed))
@@ -112,7 +112,7 @@ def _of_record(wanted: Filters) -> list[ColumnElement[bool]]:
 def _has_record(wanted: Filters) -> ColumnElement[bool]:
     from sqlalchemy import select
 
-    _, judgements, records = tables()
+    judgements, records = tables()[1:3]
     mine = records.c.judgement_id == judgements.c.judgement_id
     return select(records.c.record_id).where(mine, *_of_record(wanted)).correlate(judgements).exists()
 

@@ -73,16 +73,81 @@ class Judgement(JudgementRow):
 
 
 @dataclass(frozen=True)
+class Settlement:
+    """What a person said about a batch or from it on about its feed; added to the ledger, never changed.
+
+    Attributes:
+        what: ``released``, ``discarded`` or ``relearn``.
+        settled_by: who.
+        because: why.
+        settled_at: when.
+        relearn_from: for ``relearn`` the first moment that teaches; history before it no longer does.
+    """
+
+    batch_id: str
+    feed: str
+    what: str
+    settled_by: str
+    because: str
+    settled_at: str
+    relearn_from: str | None = None
+
+    @property
+    def settlement_id(self) -> str:
+        """Derived from all of it."""
+        return _digest(vars(self))
+
+    def sentence(self) -> str:
+        """What was said, by whom, when and why."""
+        what = f"relearn from {self.relearn_from}" if self.what == "relearn" else self.what
+        return f"{what} by {self.settled_by} at {self.settled_at} because {self.because}"
+
+
+@dataclass(frozen=True)
+class BaselineRow:
+    """What was learned from a stretch of a feed's history for one set of rules.
+
+    Attributes:
+        learned_at: the clock when it was learned; the first time stays.
+        first_stamp: of the rows it was learned from.
+        last_stamp: likewise.
+        fingerprint: of those rows' content.
+        series: number of series.
+        facts: a Parquet file with a row for each series and column.
+    """
+
+    feed: str
+    rules_fingerprint: str
+    learned_at: str
+    first_stamp: str
+    last_stamp: str
+    fingerprint: str
+    series: int
+    facts: bytes = field(repr=False, default=b"")
+
+    @property
+    def baseline_id(self) -> str:
+        """Derived from the feed, the rules and the rows: learning the same again gives the same id."""
+        return _digest([self.feed, self.rules_fingerprint, self.first_stamp, self.last_stamp, self.fingerprint])
+
+
+@dataclass(frozen=True)
 class JudgedBatch:
-    """A batch with its judgements, the oldest first; there is at least one."""
+    """A batch with its judgements and settlements, the oldest first; there is at least one judgement."""
 
     batch: BatchRow
     judgements: tuple[Judgement, ...]
+    settlements: tuple[Settlement, ...] = ()
 
     @property
     def last(self) -> Judgement:
         """The judgement that counts: the one stored last."""
         return self.judgements[-1]
+
+    @property
+    def settled(self) -> Settlement | None:
+        """The settlement that counts: the last that released or discarded the batch."""
+        return next((each for each in reversed(self.settlements) if each.what != "relearn"), None)
 
 
 @dataclass(frozen=True)
@@ -116,5 +181,8 @@ class Filters:
 
 def judgement_id(batch_id: str, rules_fingerprint: str, baseline_id: str | None) -> str:
     """32 hex digits of BLAKE2b over the three parts, spelled as a JSON list so that no two are alike."""
-    spelled = json.dumps([batch_id, rules_fingerprint, baseline_id])
-    return blake2b(spelled.encode(), digest_size=16).hexdigest()
+    return _digest([batch_id, rules_fingerprint, baseline_id])
+
+
+def _digest(parts: object) -> str:
+    return blake2b(json.dumps(parts).encode(), digest_size=16).hexdigest()

@@ -18,6 +18,13 @@ JUDGEMENT_COLUMNS = (
     "judgement_id", "batch_id", "rules_fingerprint", "baseline_id", "decision", "judged_at", "stored_at",
     "passed", "failed", "undecided", "rules", "sercheck_version",
 )  # fmt: skip
+BASELINE_COLUMNS = (
+    "baseline_id", "feed", "rules_fingerprint", "learned_at", "first_stamp", "last_stamp", "fingerprint", "series",
+    "facts",
+)  # fmt: skip
+SETTLEMENT_COLUMNS = (
+    "settlement_id", "batch_id", "feed", "what", "settled_by", "because", "settled_at", "relearn_from",
+)  # fmt: skip
 RECORD_COLUMNS = (*COLUMNS, "judgement_id", "place")
 """``place`` is the position of a record in its judgement."""
 
@@ -28,6 +35,8 @@ class Tables(NamedTuple):
     batches: TableClause
     judgements: TableClause
     records: TableClause
+    baselines: TableClause
+    settlements: TableClause
 
 
 @cache
@@ -45,4 +54,6 @@ def tables() -> Tables:
         table("batches", *(column(name, kind(name)) for name in BATCH_COLUMNS)),
         table("judgements", *(column(name) for name in JUDGEMENT_COLUMNS)),
         table("records", *(column(name, Text() if name in texts else kind(name)) for name in RECORD_COLUMNS)),
+        table("baselines", *(column(name) for name in BASELINE_COLUMNS)),
+        table("settlements", *(column(name) for name in SETTLEMENT_COLUMNS)),
     )
