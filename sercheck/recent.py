@@ -25,8 +25,8 @@ from sercheck.serial.walk_forward import Profile, log_unit, on_scale, walk_forwa
 BATCHES = 90
 """Stretches of history that a new one is compared with: a quarter of days."""
 
-FEWEST, FEWEST_WEEKS, FEWEST_PANEL = 56, 26, 16
-"""Stretches that the method needs: of a day or so, of seven rows, and of one series among several (simulated)."""
+FEWEST, FEWEST_WEEKS = 56, 26
+"""Stretches that the method needs: of a day or so, and of up to seven rows (simulated)."""
 
 FEWEST_TOLD = 16
 """Stretches of history that have the statistic, in any case: t with fewer degrees of freedom sees nothing."""
@@ -46,13 +46,22 @@ ASSUMES = "the batch is to the week before it as the last batches were to theirs
 
 
 def enough(panel: Panel) -> Bools:
-    """Series whose history holds enough stretches of the window's length, shape (S,)."""
+    """Series whose history holds enough stretches of the window's length, shape (S,).
+
+    A window shorter than the feed's shortest cycle is not compared in this way: its forerunners lie at other places of
+    the cycle.
+    """
     n = panel.values.shape[1] - panel.start
-    if not n or not panel.start:
+    if not panel.start or n < min(panel.axis.lengths.values(), default=1) or not n:
         return np.zeros(len(panel.values), dtype=bool)
-    fewest = FEWEST_PANEL if len(panel.values) > 1 else FEWEST_WEEKS if n <= 7 else FEWEST
+    fewest = FEWEST_WEEKS if n <= 7 else FEWEST
     known = (~np.isnan(panel.history)).sum(axis=1)
     return np.asarray((known >= n * fewest // 2) & (panel.start // n >= fewest))
+
+
+def has_profile(panel: Panel) -> bool:
+    """History teaches a season's profile."""
+    return season_of(panel.axis, panel.start) is not None
 
 
 def ask_told(reasons: Reasons, told: Comparison) -> None:
@@ -65,7 +74,12 @@ def ask_told(reasons: Reasons, told: Comparison) -> None:
 
 
 def recent_measurement(
-    panel: Panel, told: Comparison, *, season: str | None = None, idle: Bools | None = None
+    panel: Panel,
+    told: Comparison,
+    *,
+    season: str | None = None,
+    lag: int | None = None,
+    idle: Bools | None = None,
 ) -> Measurement:
     """What a measure hands to the judge for ``like: history``.
 
@@ -73,6 +87,7 @@ def recent_measurement(
         panel: history and window.
         told: what one of the methods of ``RecentPast`` gave.
         season: name of the season looked at, or None.
+        lag: the lag looked at, or None.
         idle: series in which the fault could hardly be seen, shape (S,): a pass of theirs says nothing.
     """
     counted = isinstance(told.reference, Least)
@@ -94,6 +109,7 @@ def recent_measurement(
         reasons=tuple(texts),
         method=COUNTED if counted else METHOD,
         assumes=ASSUMES,
+        lags=None if lag is None else (lag,),
         season=season,
         unsure=unsure,
     )
@@ -139,8 +155,9 @@ def season_of(axis: Axis, history: int) -> str | None:
 
 
 def day_steps(axis: Axis) -> float:
-    """Steps in a day by the stamps (0 for a single stamp)."""
-    return DAY / float(np.median(np.diff(axis.stamps))) if len(axis) > 1 else 0.0
+    """Steps in a day by the stamps (0 for a single stamp, or stamps that do not go on)."""
+    step = float(np.median(np.diff(axis.stamps))) if len(axis) > 1 else 0.0
+    return DAY / step if step > 0 else 0.0
 
 
 def _recent_past(panel: Panel, *, logs: bool) -> RecentPast:

@@ -358,12 +358,12 @@ def test_what_the_judge_gets():
 
 
 def test_when_it_applies():
-    """Fifty-six days of history for one series, sixteen for several, twenty-six weeks of days."""
+    """Fifty-six days of history, whatever stands beside a series; never a window shorter than a cycle."""
     x = feeds(np.random.default_rng(20), 2, days=58)
     assert not enough(panel_of(x[:1, : FEWEST * 24])).any()
     assert enough(panel_of(x[:1, : (FEWEST + 1) * 24])).all()
-    assert enough(panel_of(x[:, : 17 * 24])).all()
-    assert not enough(panel_of(x[:, : 16 * 24])).any()
+    assert not enough(panel_of(x[:, : FEWEST * 24])).any()
+    assert not enough(panel_of(x, n=7)).any()
     assert not enough(replace(panel_of(x), start=0)).any()
 
 
@@ -381,6 +381,18 @@ def test_no_season_is_no_trouble():
     assert not np.isnan(p_of(past.level())).any()
     with pytest.raises(ValueError, match="without a season"):
         past.amplitude()
+
+
+def test_months():
+    """A monthly feed has no day or week to deliver again, and its profile never holds rows of the window."""
+    x = np.random.default_rng(28).standard_normal((1, 240))
+    panel = panel_of(x, seasons=(24,), n=1)
+    panel = replace(panel, axis=replace(panel.axis, stamps=panel.axis.stamps * 24 * 30))
+    past = recent_past(panel)
+    assert past.repeats_at == ()
+    assert not np.isnan(past.level().observed).any() or np.isnan(past.level().t).all()
+    with pytest.raises(ValueError, match="day or week"):
+        past.replay()
 
 
 def test_whiteness_of_a_week():

@@ -54,6 +54,8 @@ from sercheck.measures._lags import (
     seasons_left,
     window_counts,
 )
+from sercheck.measures._past import combined
+from sercheck.recent import enough, recent_measurement, recent_past
 from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.autocovariance import autocorrelation as sample
 from sercheck.serial.autoregression import root_beyond
@@ -73,7 +75,14 @@ class Autocorrelation(Measure):
         assert isinstance(fields, LagFields)  # the engine hands over what ``Fields`` validated
         if question.stays.literal:
             return _against_bounds(panel, question, fields.chosen)
-        return _against_history(panel, question, fields.chosen)
+        raw = panel.before
+        if raw is None or panel.after != "difference" or fields.chosen != (1,):
+            return _against_history(panel, question, fields.chosen)
+        return combined(
+            enough(raw),
+            lambda: recent_measurement(raw, recent_past(raw).difference_autocorrelation(), lag=1),
+            lambda: _against_history(panel, question, fields.chosen),
+        )
 
 
 def _against_bounds(panel: Panel, question: Question, lags: tuple[int, ...]) -> Measurement:

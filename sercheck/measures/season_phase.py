@@ -34,8 +34,18 @@ from sercheck.errors import UsageError
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Question, Reasons
 from sercheck.measures._lags import window_counts
-from sercheck.measures._season import ask_history, ask_window, effective, learned, named_season, told_reasons
+from sercheck.measures._past import combined
+from sercheck.measures._season import (
+    Named,
+    ask_history,
+    ask_window,
+    effective,
+    learned,
+    named_season,
+    told_reasons,
+)
 from sercheck.measures._season_laws import Best
+from sercheck.recent import enough, has_profile, idle_phase, recent_measurement, recent_past
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats
 from sercheck.serial.matched_filter import Amplitude, matched_amplitude
@@ -70,43 +80,54 @@ class SeasonPhase(Measure):
                 f"less than half of the season's {season.cycle.length} steps",
                 "A slip of half a cycle forward is the same as one backward: ask for a smaller reach.",
             )
-        n, n_missing = window_counts(panel, (season.cycle.length,))
-        reasons, unsure = Reasons(n.shape), Reasons(n.shape)
-        enough = ask_history(reasons, panel, season)
-        stays = question.stays
-        both = stays.kind in ("like_history", "between")
-        unknown = np.full(len(n), np.nan)
-        slip = Slip(unknown, unknown, unknown, np.zeros(len(n), np.int64), unknown, np.zeros(len(n), np.int64), unknown)
-        if enough.any():
-            told = learned(panel, season)
-            slip = phase_slip(
-                told.window, told.model, panel.start, fields.reach, question.risk if both else 2 * question.risk
+        if question.stays.kind == "like_history" and fields.reach == 1:
+            return combined(
+                enough(panel) & has_profile(panel),
+                lambda: recent_measurement(
+                    panel, recent_past(panel).phase(), season=season.name, idle=idle_phase(panel, question.risk)
+                ),
+                lambda: _searched(panel, question, season, fields.reach),
             )
-            reasons.add(
-                told.model.evolving[:, None],
-                f"history's season {season.name} evolves: a slip cannot be told from its changes",
-            )
-            amplitude = matched_amplitude(told.window, told.model, panel.start)
-            ask_window(reasons, season, slip.points, amplitude.shrinkage)
-            _ask_power(reasons, slip)
-            _ask_season(unsure, amplitude)
-        low, high = (0.0, 0.0) if stays.kind == "like_history" else (stays.low, stays.high)
-        texts, unsure_at = told_reasons(reasons, unsure)
-        return Measurement(
-            observed=slip.value[:, None],
-            n=n,
-            n_missing=n_missing,
-            n_eff=effective(n, slip.naive, slip.scale),
-            upper=None if high is None else _reference(slip, high),
-            lower=None if low is None else _reference(slip, low),
-            undecided=reasons.index,
-            reasons=texts,
-            unsure=unsure_at,
-            method="regression on history's whitened seasonal profile moved either way, Student's t, the best of the "
-            "whole window and its later half (Bonferroni)",
-            assumes="stationary history, a season that stays the same",
-            season=season.name,
+        return _searched(panel, question, season, fields.reach)
+
+
+def _searched(panel: Panel, question: Question, season: Named, reach: int) -> Measurement:
+    """By history's profile moved either way."""
+    n, n_missing = window_counts(panel, (season.cycle.length,))
+    reasons, unsure = Reasons(n.shape), Reasons(n.shape)
+    enough = ask_history(reasons, panel, season)
+    stays = question.stays
+    both = stays.kind in ("like_history", "between")
+    unknown = np.full(len(n), np.nan)
+    slip = Slip(unknown, unknown, unknown, np.zeros(len(n), np.int64), unknown, np.zeros(len(n), np.int64), unknown)
+    if enough.any():
+        told = learned(panel, season)
+        slip = phase_slip(told.window, told.model, panel.start, reach, question.risk if both else 2 * question.risk)
+        reasons.add(
+            told.model.evolving[:, None],
+            f"history's season {season.name} evolves: a slip cannot be told from its changes",
         )
+        amplitude = matched_amplitude(told.window, told.model, panel.start)
+        ask_window(reasons, season, slip.points, amplitude.shrinkage)
+        _ask_power(reasons, slip)
+        _ask_season(unsure, amplitude)
+    low, high = (0.0, 0.0) if stays.kind == "like_history" else (stays.low, stays.high)
+    texts, unsure_at = told_reasons(reasons, unsure)
+    return Measurement(
+        observed=slip.value[:, None],
+        n=n,
+        n_missing=n_missing,
+        n_eff=effective(n, slip.naive, slip.scale),
+        upper=None if high is None else _reference(slip, high),
+        lower=None if low is None else _reference(slip, low),
+        undecided=reasons.index,
+        reasons=texts,
+        unsure=unsure_at,
+        method="regression on history's whitened seasonal profile moved either way, Student's t, the best of the "
+        "whole window and its later half (Bonferroni)",
+        assumes="stationary history, a season that stays the same",
+        season=season.name,
+    )
 
 
 def _ask_power(reasons: Reasons, slip: Slip) -> None:

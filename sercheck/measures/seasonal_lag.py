@@ -45,9 +45,11 @@ from pydantic import BaseModel, ConfigDict, Field
 from sercheck.grid import Panel
 from sercheck.measure import POWER, Measure, Measurement, Question, Reasons
 from sercheck.measures._lags import window_counts
+from sercheck.measures._past import combined
 from sercheck.measures._season import Named, ask_history, ask_window, effective, learned, named_season, told_reasons
 from sercheck.measures._season_bound import bounded
 from sercheck.measures._season_laws import ChiSquare
+from sercheck.recent import enough, has_profile, idle_amplitude, recent_measurement, recent_past
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.serial.autocovariance import autocorrelation
@@ -86,7 +88,17 @@ class SeasonalLag(Measure):
         assert isinstance(fields, SeasonalLagFields)
         season = named_season(panel, fields.season, fields.multiple)
         if question.stays.kind == "like_history":
-            return _like_history(panel, question, season)
+            return combined(
+                enough(panel) & has_profile(panel) & (fields.multiple == 1),
+                lambda: recent_measurement(
+                    panel,
+                    recent_past(panel).amplitude(),
+                    season=season.name,
+                    lag=season.cycle.length,
+                    idle=idle_amplitude(panel, question.risk),
+                ),
+                lambda: _like_history(panel, question, season),
+            )
         if question.stays.kind == "present":
             return _present(panel, question, season)
         return bounded(panel, question, season, fields.multiple)
@@ -163,9 +175,7 @@ def _window_lags(history: Floats, length: int, lag: int) -> Floats:
     return forward(r)
 
 
-def _ask_evolving(
-    reasons: Reasons, panel: Panel, season: Named, evolving: Bools, count: Ints, told: WindowT
-) -> None:
+def _ask_evolving(reasons: Reasons, panel: Panel, season: Named, evolving: Bools, count: Ints, told: WindowT) -> None:
     length = season.cycle.length
     reasons.add(
         (evolving & (panel.window.shape[1] < FEWEST_EVOLVING * length))[:, None],
@@ -251,4 +261,3 @@ def _present(panel: Panel, question: Question, season: Named) -> Measurement:
         season=season.name,
         certify=True,
     )
-
