@@ -241,7 +241,11 @@ class RecentPast:
         return self._equal((1,))
 
     def replay(self) -> Comparison:
-        """Values equal to those a day or a week earlier: their share, and the longest run as a share of the batch."""
+        """Values equal to those a day or a week earlier: their share, and the longest run as a share of the batch.
+
+        Raises:
+            ValueError: for a feed whose steps are longer than a week.
+        """
         return self._equal(self.repeats_at)
 
     def sight(self, fit: statistic.Fitted | None) -> Floats:
@@ -278,7 +282,7 @@ class RecentPast:
         """A variance on the logarithm and on the cube root (Wilson and Hilferty 1931): the more careful one counts."""
         scales: tuple[tuple[Map, Map], ...] = ((np.log, np.exp), (np.cbrt, _cube))
         steps = [one_step(np.asarray(change(table))) for change, _ in scales]
-        backs: list[Map] = [lambda u, back=back: to_unit(back(u)) for _, back in scales]  # type: ignore[misc]
+        backs = [_then(back, to_unit) for _, back in scales]
         look = self._look(smaller(steps[0].misses, steps[1].misses), paused)
         naive = np.sqrt(2 / np.maximum(n - 1, 1))
         thirds = (naive, naive / 3 * np.exp(steps[0].centre / 3)[:, None])
@@ -296,13 +300,16 @@ class RecentPast:
         def to_unit(score: Floats) -> Floats:
             return fit.of_score(score[..., 0], usual)[:, None]
 
-        n = self._count(self.y)
-        return self._two_looks(self._without_held(fit.score), to_unit, n, np.ones((len(self.x), 1)), paused)
+        told = self._two_looks(
+            self._without_held(fit.score), to_unit, self._count(self.y), np.ones((len(self.x), 1)), paused
+        )
+        return replace(told, observed=fit.estimate[:, -1:])  # the score is clipped, the estimate is not
 
     def _equal(self, distances: tuple[int, ...]) -> Comparison:
+        if not distances:
+            raise ValueError("a feed whose steps are longer than a week has no day or week to deliver again")
         parts: list[Shares] = []
         counts: list[Ints] = []
-        past = self.x[:, : self.x.shape[1] - self.n]
         for distance in distances:
             marks = statistic.equal_before(self.x, distance, self.n)
             n = np.maximum(marks.count[:, -1:], 1).astype(np.float64)
@@ -314,11 +321,17 @@ class RecentPast:
             runs = statistic.run_tails(marks, self.n)
             parts.append(Shares(runs * told, marks.longest[:, None], 1 / n, np.zeros_like(n)))
         reference = Least(tuple(parts))
-        count = np.max(np.stack(counts), axis=0) if counts else np.zeros((len(past), 1), dtype=np.int64)
-        nothing = np.full(len(self.x), np.nan)
-        history = np.full((len(self.x), 1), self.held.shape[1], dtype=np.int64)
-        return Comparison(reference.observed, reference, count, nothing[:, None], nothing, np.empty((len(past), 0)),
-                      history)  # fmt: skip
+        count = np.max(np.stack(counts), axis=0)
+        series = len(self.x)
+        nothing = np.full(series, np.nan)
+        history = np.full((series, 1), self.held.shape[1], dtype=np.int64)
+        return Comparison(
+            reference.observed, reference, count, nothing[:, None], nothing, np.empty((series, 0)), history
+        )
+
+
+def _then(first: Map, second: Map) -> Map:
+    return lambda u: second(first(u))
 
 
 def _cube(u: Floats) -> Floats:

@@ -134,7 +134,8 @@ class Fitted:
 
     def of_score(self, score: Floats, usual: float) -> Floats:
         """The newest batch's estimate that would have this score, shape (S,): the way back to the unit."""
-        t = special.stdtrit(np.maximum(self.df[:, -1], 1.0), special.ndtr(np.clip(score, -FARTHEST, FARTHEST)))
+        tail = special.ndtr(-np.minimum(np.abs(score), FARTHEST))  # the smaller tail keeps its digits
+        t = -np.sign(score) * special.stdtrit(np.maximum(self.df[:, -1], 1.0), tail)
         return np.asarray(usual + t * self.error[:, -1])
 
 
