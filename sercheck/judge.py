@@ -82,6 +82,8 @@ def judge(rule: Rule, parts: Sequence[Seen]) -> list[Judged]:
     A cell is undecided where the measure says so, where it has no p-value, and where it passes although the smallest
     change that it could have found is larger than what ``matters``.
     """
+    if not parts:
+        return []
     evidence = [_evidence(part.measurement) for part in parts]
     levels = _levels(rule, parts, evidence)
     return [_outcome(rule, part, told, level) for part, told, level in zip(parts, evidence, levels, strict=True)]
@@ -109,7 +111,7 @@ def _references(seen: Measurement) -> list[tuple[Side, Reference]]:
 
 def _levels(rule: Rule, parts: Sequence[Seen], evidence: Sequence[_Evidence]) -> list[Floats]:
     """The risk at which each cell is judged: the largest that any of the rule's ways across series grants it."""
-    pooled = np.concatenate([told.p.ravel() for told in evidence]) if evidence else np.empty(0)
+    pooled = np.concatenate([told.p.ravel() for told in evidence])
     share = rule.false_alarm / len(rule.across)
     granted = [_across(way, share, pooled, evidence) for way in rule.across]
     level = np.max(granted, axis=0)

@@ -52,6 +52,22 @@ def whole_file(path: str | Path) -> Iterator[BinaryIO]:
         _settle(target.parent)
 
 
+def check_place(path: str | Path, *, folder: bool = False) -> None:
+    """Refuse, before any work is done, the name of a file (or of a folder for files) that cannot be written.
+
+    Raises:
+        OutputError: the folder around it is missing or may not be written to, or a file stands where a folder must be.
+    """
+    with _as_output_error(path):
+        there = folder and os.path.lexists(path)
+        around = Path(path) if there else Path(os.path.realpath(path)).parent
+        if not around.is_dir():
+            number = errno.ENOTDIR if there else errno.ENOENT
+            raise OSError(number, os.strerror(number))
+        if not os.access(around, os.W_OK | os.X_OK, effective_ids=os.access in os.supports_effective_ids):
+            raise PermissionError(errno.EACCES, os.strerror(errno.EACCES))
+
+
 def move_batch(paths: Sequence[str | Path], folder: str | Path) -> tuple[Path, ...]:
     """Move the files of a batch into ``folder`` and tell where each one is now. Call it when the decision is stored.
 

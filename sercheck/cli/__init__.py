@@ -26,8 +26,8 @@ COMMANDS = {
     "schema": "JSON Schema of rule files and records",
 }
 TROUBLE = 2
-LONGEST = 2_000
-"""Letters of a sentence about trouble: names of columns and files come from outside and may be endless."""
+HEAD, TAIL = 400, 1_400
+"""Letters of a sentence about trouble, from its beginning and its end: names from outside may be endless."""
 
 
 @contextmanager
@@ -118,7 +118,10 @@ def _run() -> int:
 def _tell(sentence: str) -> None:
     """One line on stderr, without the control characters that names from outside may hold."""
     with suppress(OSError):
-        click.echo(plain(" ".join(sentence.splitlines()), LONGEST), err=True)
+        line = " ".join(sentence.splitlines())
+        if len(line) > HEAD + TAIL:
+            line = f"{line[:HEAD]} … {line[-TAIL:]}"
+        click.echo(plain(line, len(line)), err=True)
 
 
 def _trace() -> None:

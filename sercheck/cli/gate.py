@@ -40,7 +40,7 @@ def command(
     Ends with 0 when the batch is released, 1 when it is held, 2 in trouble.
     """
     from sercheck.cli.screen import answer
-    from sercheck.outputs import move_batch
+    from sercheck.outputs import check_place, move_batch
     from sercheck.record import check_suffix
     from sercheck.verdict import gate
 
@@ -48,6 +48,9 @@ def command(
         raise click.UsageError("--format json and --records - both want stdout; give the records a file")
     if records and records != "-":
         check_suffix(records)
+        check_place(records)
+    for folder in filter(None, (released_to, held_to)):
+        check_place(folder, folder=True)
     verdict = gate(rules, list(batch), history=list(history) or None, as_of=as_of, store=None if no_keep else store)
     if records:
         verdict.table.write(records)
@@ -55,7 +58,7 @@ def command(
         click.echo(json.dumps(verdict.summary(), allow_nan=False, ensure_ascii=False))
     else:
         say(answer(verdict))
-    folder = released_to if verdict.released else held_to
-    if folder:
-        move_batch(verdict.paths, folder)
+    into = released_to if verdict.released else held_to
+    if into:
+        move_batch(verdict.paths, into)
     sys.exit(0 if verdict.released else 1)
