@@ -97,9 +97,9 @@ class Count(Measure):
 
     def run(self, panel: Panel, question: Question) -> Measurement:
         assert isinstance(question.fields, CountFields)
-        size = _steps(question.fields.per, question)
         if question.clock is not None and question.clock.grid.irregular:
             return _mute(panel, "the feed is irregular: its steps have no length to count in")
+        size = _steps(question.fields.per, question)
         if size is None:
             return _mute(panel, f"a period of {question.fields.per} is not a whole number of steps of the feed")
         rows = _per_period(panel, size)
