@@ -1,4 +1,4 @@
-"""Whatever comes as a batch: a verdict, or one clear sentence and status 2; nothing half done, nothing released unread."""
+"""Whatever comes as a batch: a verdict, or one clear sentence and status 2; nothing is released unread."""
 
 from __future__ import annotations
 

@@ -16,7 +16,7 @@ from disks import make_read_only, small_disk, somebody_else
 from gate_runs import NOW, Place, command, place, process
 
 import sercheck.verdict
-from sercheck.judge import judge
+from sercheck.collect import records
 
 GATE = ("gate", "rules.yaml", "batch.csv", "--history", "history.csv", "--as-of", NOW)
 
@@ -194,9 +194,9 @@ def test_a_batch_that_vanishes_while_it_is_judged(here: Place, monkeypatch: pyte
 
     def take_away(*parts: object) -> object:
         (here.folder / "batch.csv").unlink(missing_ok=True)
-        return judge(*parts)  # type: ignore[arg-type]
+        return records(*parts)  # type: ignore[arg-type]
 
-    monkeypatch.setattr(sercheck.verdict, "judge", take_away)
+    monkeypatch.setattr(sercheck.verdict, "records", take_away)
     ended = here.gate("batch.csv", "--released-to", "released")
     assert ended.status == 2
     assert "it is in neither place" in ended.err
@@ -209,7 +209,7 @@ def test_a_person_who_interrupts(here: Place, monkeypatch: pytest.MonkeyPatch) -
     def interrupt(*_: object) -> object:
         raise KeyboardInterrupt
 
-    monkeypatch.setattr(sercheck.verdict, "judge", interrupt)
+    monkeypatch.setattr(sercheck.verdict, "records", interrupt)
     ended = here.gate("batch.csv", "--released-to", "released")
     assert ended.status == 2
     assert "interrupted" in ended.err
@@ -222,7 +222,7 @@ def test_a_bug_is_trouble(here: Place, monkeypatch: pytest.MonkeyPatch) -> None:
     def break_down(*_: object) -> object:
         raise ZeroDivisionError("first\nsecond")
 
-    monkeypatch.setattr(sercheck.verdict, "judge", break_down)
+    monkeypatch.setattr(sercheck.verdict, "records", break_down)
     ended = here.gate("batch.csv", "--released-to", "released")
     assert ended.status == 2
     assert ended.err.startswith("sercheck: internal error, nothing was released: ZeroDivisionError: first second.")
