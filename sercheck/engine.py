@@ -1,11 +1,12 @@
 """The line from a block of series to what the judge decides on: grid, transforms, measures.
 
-``gate``, the rehearsal and a distributed run all call ``measure_block``; nothing else measures. Depends on the grid,
-the transforms, the measures and the compiled rules.
+``gate``, the rehearsal and a distributed run all call ``measure_block`` and ``decide``; nothing else measures. Depends
+on the grid, the transforms, the measures and the compiled rules.
 """
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from fnmatch import fnmatchcase
 from typing import Protocol
@@ -14,11 +15,12 @@ import numpy as np
 
 from sercheck.errors import UsageError
 from sercheck.grid import Grid, Panel
-from sercheck.judge import Seen
+from sercheck.judge import Judged, Seen, judge
 from sercheck.measure import Clock, Measure, Measurement, Question
 from sercheck.measures import get
 from sercheck.rulebook.compiled import Rule, Rulebook
 from sercheck.serial.arrays import Bools, Ints
+from sercheck.together import pooled
 from sercheck.transforms import apply
 
 
@@ -60,22 +62,45 @@ def measure_block(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
     panels: dict[object, Panel] = {}
     seen: list[Seen] = []
     notes: list[str] = []
+
+    def transformed(column: str, rule: Rule, chosen: Bools) -> Panel:
+        stretch = (column, rule.window, chosen.tobytes())
+        if stretch not in panels:
+            panels[stretch] = _panel(grid, rule, column, chosen, run)
+        key = (*stretch, rule.after)
+        if key not in panels:
+            panels[key] = apply(rule.after, panels[stretch])
+            notes.extend(panels[key].notes)
+        return panels[key]
+
     for place, rule in enumerate(run.book.rules):
         measure = get(rule.measure)
         chosen = _chosen(rule, grid.keys)
         if not chosen.any():
             continue
         for column in rule.columns if measure.of_values else ("",):
-            stretch = (column, rule.window, chosen.tobytes())
-            if stretch not in panels:
-                panels[stretch] = _panel(grid, rule, column, chosen, run)
-            key = (*stretch, rule.after)
-            if key not in panels:
-                panels[key] = apply(rule.after, panels[stretch])
-                notes.extend(panels[key].notes)
-            panel = panels[key]
+            panel = transformed(column, rule, chosen)
+            others = measure.beside(rule.fields)
+            if others:
+                panel = replace(panel, beside={name: transformed(name, rule, chosen) for name in others})
             seen.append(_look(place, rule, measure, panel, grid, chosen, run))
     return seen, notes
+
+
+def decide(book: Rulebook, seen: Sequence[Seen]) -> list[Judged]:
+    """Judge everything that was measured, rule by rule: the risk of a rule is shared among all its blocks."""
+    told: list[Judged] = []
+    for place, rule in enumerate(book.rules):
+        parts = [part for part in seen if part.rule == place]
+        alone = tuple(way for way in rule.across if way != "together")
+        share = rule.false_alarm / len(rule.across)
+        if alone:
+            told += judge(replace(rule, across=alone, false_alarm=share * len(alone)), parts)
+        if parts and "together" in rule.across:
+            columns = dict.fromkeys(part.column for part in parts)
+            whole = [pooled([part for part in parts if part.column == column]) for column in columns]
+            told += judge(replace(rule, across=("batch",), false_alarm=share), whole)
+    return told
 
 
 def _chosen(rule: Rule, keys: np.ndarray) -> Bools:
@@ -95,14 +120,17 @@ def _panel(grid: Grid, rule: Rule, column: str, chosen: Bools, run: Run) -> Pane
 
 def _look(place: int, rule: Rule, measure: Measure, panel: Panel, grid: Grid, chosen: Bools, run: Run) -> Seen:
     clock = Clock(_part(grid, chosen), run.as_of, run.cadence.step, run.book.timezone)
-    question = Question(rule.fields, rule.stays, rule.false_alarm, dict(panel.axis.lengths), clock)
+    question = Question(
+        rule.fields, rule.stays, rule.false_alarm, dict(panel.axis.lengths), clock, together="together" in rule.across
+    )
     if panel.values.shape[1] == panel.start:
         raise UsageError(
             f"rule '{rule.name}'", "after its transforms no step of the window is left", todo="Ask for a longer window."
         )
     measurement = measure.run(panel, question)
-    if panel.unable:
-        measurement = _unable(measurement, panel.unable)
+    unable = next((one.unable for one in (panel, *panel.beside.values()) if one.unable), "")
+    if unable:
+        measurement = _unable(measurement, unable)
     first, last = int(panel.axis.stamps[panel.start]), int(panel.axis.stamps[-1])
     return Seen(place, grid.keys[chosen], panel.column or None, measurement, first, last)
 

@@ -81,6 +81,8 @@ class Measurement:
         season: name of the season the measure looked at, or None.
         integer: the observed value is a count (shown without decimals).
         certify: the p-value is that of 'there is nothing': small means the rule is kept (``stays: {present: true}``).
+        scores: the statistic in standard deviations of the series' recent past, history's stretches first and the
+            window last, shape (S, B + 1), for a verdict on all series together; None where the method has none.
         unsure: index into ``reasons`` where a pass would say nothing although a failure stands, -1 elsewhere (all
             cells keep their p-value, so that the risk is shared as if nothing were known of them), or None. With
             ``certify`` it is the failure that would say nothing.
@@ -101,6 +103,7 @@ class Measurement:
     season: str | None = None
     integer: bool = False
     certify: bool = False
+    scores: Floats | None = None
     unsure: Ints | None = None
 
 
@@ -131,6 +134,7 @@ class Question:
         risk: false-alarm risk asked of the rule, over all its series and lags (a measure may abstain because of it).
         lengths: steps in one cycle of each named season.
         clock: for the measures of the clock.
+        together: one verdict is asked for all series: values are pooled as delivered, on no scale of their own.
         rests: the rule's longer look held a batch within the last seven and rests (see ``looks.Sooner``).
     """
 
@@ -139,6 +143,7 @@ class Question:
     risk: float
     lengths: dict[str, int] = field(default_factory=dict)
     clock: Clock | None = None
+    together: bool = False
     rests: bool = False
 
 
@@ -165,6 +170,10 @@ class Measure(ABC):
     bounds_in: ClassVar[Literal["numbers", "time"]] = "numbers"
     span: ClassVar[tuple[float, float]] = (float("-inf"), float("inf"))
     Fields: ClassVar[type[BaseModel]]
+
+    def beside(self, fields: BaseModel) -> tuple[str, ...]:
+        """Further value columns that the fields name: ``Panel.beside`` holds them when the measure runs."""
+        return ()
 
     @abstractmethod
     def run(self, panel: Panel, question: Question) -> Measurement:

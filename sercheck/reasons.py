@@ -38,7 +38,8 @@ def sentences(rule: Rule, judged: Judged) -> list[str]:
     """One sentence for every cell, in the order of the flattened arrays."""
     seen = judged.seen.measurement
     lags = seen.lags or (None,) * seen.observed.shape[1]
-    names = [subject(rule, judged.seen.column, lag, seen.season) for lag in lags] * seen.observed.shape[0]
+    whole = " over all series, in standard deviations," if judged.seen.keys[:1].tolist() == [None] else ""
+    names = [subject(rule, judged.seen.column, lag, seen.season) + whole for lag in lags] * seen.observed.shape[0]
     cells = zip(
         names,
         judged.outcome.ravel().tolist(),

@@ -19,6 +19,7 @@ from sercheck.looks import Least
 from sercheck.measure import POWER, Measurement, Reasons
 from sercheck.recent_past import Comparison, RecentPast
 from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.recent import studentised
 from sercheck.serial.risk import t_quantile
 from sercheck.serial.walk_forward import Profile, log_unit, on_scale, walk_forward
 
@@ -111,6 +112,7 @@ def recent_measurement(
         assumes=ASSUMES,
         lags=None if lag is None else (lag,),
         season=season,
+        scores=studentised(told.t, told.misses, told.batches[:, 0]) if told.misses.shape[1] else None,
         unsure=unsure,
     )
 

@@ -15,11 +15,12 @@ import numpy as np
 
 from sercheck import __version__
 from sercheck.collect import Common, records
-from sercheck.engine import Run, measure_block
+from sercheck.engine import Run, decide, measure_block
 from sercheck.errors import BatchError, BatchHeld, UsageError
+from sercheck.history import find_past, open_memory
 from sercheck.intake.layout import Layout
 from sercheck.intake.stream import feed_cadence, feed_grids, open_feed
-from sercheck.judge import Judged, Seen, judge
+from sercheck.judge import Seen
 from sercheck.record import Records, utc_text
 from sercheck.rulebook import load_rules
 from sercheck.rulebook.budget import expected_false_holds
@@ -30,6 +31,7 @@ if TYPE_CHECKING:
 
     from sercheck.grid import Grid
     from sercheck.store.ledger import Ledger
+    from sercheck.store.rows import Settlement
 
     Rows = str | Path | Sequence[str | Path] | pd.DataFrame
 
@@ -127,16 +129,18 @@ def gate(
     as_of: str | None = None,
     store: str | Path | None = None,
     ledger: str | None = None,
+    keep: bool = True,
 ) -> Verdict:
     """Judge a batch.
 
     Args:
         rules: a compiled rule file (``load_rules``) or its path.
         batch: the newest rows: a DataFrame, a path, several, or a glob.
-        history: rows let in before, likewise; default what the rule file names.
+        history: rows let in before, likewise; default what the store's archive holds, else what the rule file names.
         as_of: the clock to judge by, RFC 3339 or ISO 8601 (UTC when it has no offset); default now.
-        store: folder of the ledger that the judgement is kept in; default none is kept.
+        store: folder of ledger and archive, which the judgement and the rows are kept in; default none are kept.
         ledger: SQLAlchemy URL of the ledger, where it is not in the store.
+        keep: write to ledger and archive; without it they are only read.
 
     The same batch judged again by the same rules against the same history changes nothing: what the ledger has stands
     and is returned.
@@ -147,19 +151,22 @@ def gate(
     book = rules if isinstance(rules, Rulebook) else load_rules(rules)
     judged_at = _clock(as_of)
     kept_in = _open_ledger(store, ledger) if store is not None or ledger is not None else None
-    if kept_in:
-        kept_in.prepare()  # an unusable store is told before the work, not after it
     layout = layout_of(book)
+    memory = open_memory(book, layout, kept_in, store, writes=keep) if kept_in and store is not None else None
+    if kept_in and keep:  # an unusable store is told before the work, not after it
+        kept_in.prepare()
+        if memory:
+            memory.prepare()
     source = open_feed(batch, layout)
-    given = history if history is not None else list(book.history) or None
-    past = None if given is None else open_feed(given, layout)
+    past = find_past(book, layout, source, history, memory, str(utc_text(judged_at)[0]))
     counted = _Counted()
-    run = Run(book, feed_cadence(source, past, layout), judged_at)
+    cadence = feed_cadence(source, past.source, layout)
+    run = Run(book, cadence, judged_at)
     seen: list[Seen] = []
-    notes: list[str] = []
-    for grid in feed_grids(source, past, layout):
+    notes: list[str] = [*past.notes]
+    for grid in feed_grids(source, past.source, layout):
         counted.add(grid)
-        block, said = measure_block(grid, run)
+        block, said = measure_block(past.marked(grid), run)
         seen += block
         notes += said
     facts = counted.facts()
@@ -169,10 +176,10 @@ def gate(
         batch_fingerprint=source.fingerprint,
         judged_at=str(utc_text(judged_at)[0]),
         rules_fingerprint=book.fingerprint,
-        baseline_id=None if past is None else past.fingerprint,
+        baseline_id=past.baseline_id,
         sercheck_version=__version__,
     )
-    table = records(book, _judged(book, seen), common)
+    table = records(book, decide(book, seen), common)
     if not np.any(table["action"] == "hold"):
         counted.must_say_something(seen)
     verdict = Verdict(
@@ -181,12 +188,18 @@ def gate(
         feed=book.feed,
         table=table,
         facts=facts,
-        notes=(*_unjudged(book, seen, table), *counted.notes(past is not None), *dict.fromkeys(notes)),
+        notes=(*_unjudged(book, seen, table), *counted.notes(past.source is not None), *dict.fromkeys(notes)),
         paths=source.paths,
         abouts={rule.name: rule.about for rule in book.rules if rule.about},
         expected=expected_false_holds(book),
     )
-    return _kept(verdict, common, book, kept_in) if kept_in else verdict
+    if kept_in is None or not keep:
+        return verdict
+    verdict = _kept(verdict, common, book, kept_in)
+    settled = kept_in.batch(verdict.batch_id).settled
+    if memory:
+        memory.keep(verdict.batch_id, source, cadence, verdict.decision, settled)
+    return _overruled(verdict, settled) if settled else verdict
 
 
 def layout_of(book: Rulebook) -> Layout:
@@ -204,13 +217,6 @@ def layout_of(book: Rulebook) -> Layout:
         batch_every=book.batch_every,
         group_lengths=tuple(length for length in groups if length is not None),
     )
-
-
-def _judged(book: Rulebook, seen: Sequence[Seen]) -> list[Judged]:
-    told: list[Judged] = []
-    for place, rule in enumerate(book.rules):
-        told += judge(rule, [part for part in seen if part.rule == place])
-    return told
 
 
 def _open_ledger(store: str | Path | None, url: str | None) -> Ledger:
@@ -251,6 +257,13 @@ def _kept(verdict: Verdict, common: Common, book: Rulebook, ledger: Ledger) -> V
         return verdict
     note = f"this batch was judged by these rules before, at {stored.judged_at}; that judgement stands"
     return replace(verdict, decision=stored.decision, table=table, notes=(*verdict.notes, note))
+
+
+def _overruled(verdict: Verdict, settled: Settlement) -> Verdict:
+    """What a person said about the batch counts before what the rules decided."""
+    decision = "released" if settled.what == "released" else "held"
+    note = f"{verdict.decision} by its rules; {settled.sentence()}"
+    return replace(verdict, decision=decision, notes=(*verdict.notes, note))
 
 
 def _clock(as_of: str | None) -> int:

@@ -134,7 +134,7 @@ def test_reasons():
     assert "no history" in look(Level(), values, 0).reasons[0]
     assert "fewer than 8 stretches" in look(Level(), values, 500).reasons[0]
     assert "fewer than 20 stretches" in look(Level(), values, 960, risk=0.001).reasons[0]
-    assert "fewer than 24 values" in look(Level(), values, 1040).reasons[0]
+    assert "fewer than 24 values" in look(Level(), values, 1036).reasons[0]
     assert "fewer than 96 values" in look(Level(), values[:, :90], 0, Stays("below", high=1.0)).reasons[0]
     seen = look(Level(), values, 500)
     assert np.isfinite(seen.observed).all()

@@ -170,10 +170,15 @@ def ask_history(reasons: Reasons, told: Past, risk: float, what: str) -> None:
 
 def ask_variety(reasons: Reasons, told: Past, risk: float) -> None:
     """Undecided where one value makes up most of the rows."""
+    ask_commonest(reasons, told.commonest, risk)
+
+
+def ask_commonest(reasons: Reasons, commonest: Floats, risk: float) -> None:
+    """The same, given the share of the commonest value, shape (S,)."""
     share = TIED_SMALL_RISK if risk <= SMALL_RISK else TIED
     with np.errstate(invalid="ignore"):
         reasons.add(
-            cell(told.commonest) > share,
+            cell(commonest) > share,
             f"one value makes up more than {share:.0%} of the rows: use the measure rate for it",
         )
 
@@ -255,6 +260,15 @@ def combined(pick: Bools, make_first: Callable[[], Measurement], make_second: Ca
         method=f"{first.method}; where history is too short: {second.method}",
         assumes=f"{first.assumes}; where history is too short: {second.assumes}",
     )
+
+
+def varied(told: Measurement, panel: Panel, risk: float) -> Measurement:
+    """The same measurement, undecided where one value makes up most of history's rows."""
+    reasons = Reasons(told.observed.shape)
+    reasons.index = np.where(told.undecided < 0, -1, told.undecided)
+    reasons.texts = list(told.reasons)
+    ask_commonest(reasons, panel.remember("commonest", lambda: ranking(panel.history).commonest), risk)
+    return replace(told, undecided=reasons.index, reasons=tuple(reasons.texts))
 
 
 @dataclass(frozen=True)

@@ -80,7 +80,9 @@ class Autocorrelation(Measure):
             return _against_history(panel, question, fields.chosen)
         return combined(
             enough(raw),
-            lambda: recent_measurement(raw, recent_past(raw).difference_autocorrelation(), lag=1),
+            lambda: recent_measurement(
+                raw, recent_past(raw, logs=not question.together).difference_autocorrelation(), lag=1
+            ),
             lambda: _against_history(panel, question, fields.chosen),
         )
 

@@ -40,8 +40,10 @@ from pydantic import BaseModel, ConfigDict
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Question
 from sercheck.measures._location import location_with_history
-from sercheck.measures._past import combined, past
+from sercheck.measures._past import combined, past, varied
 from sercheck.measures._witnesses import mean_alone
+from sercheck.recent import enough as recent_enough
+from sercheck.recent import recent_measurement, recent_past
 from sercheck.serial.window_t import fewest_windows
 
 
@@ -66,6 +68,16 @@ class Level(Measure):
         if not question.stays.literal:
             enough = np.ones_like(enough)
         raw = fields.of_the == "mean"
+        if question.stays.kind == "like_history" and not raw:
+            return combined(
+                recent_enough(panel),
+                lambda: varied(
+                    recent_measurement(panel, recent_past(panel, logs=not question.together).level()),
+                    panel,
+                    question.risk,
+                ),
+                lambda: location_with_history(panel, question, raw=False),
+            )
         return combined(
             enough,
             lambda: location_with_history(panel, question, raw=raw),

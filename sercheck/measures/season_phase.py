@@ -84,7 +84,10 @@ class SeasonPhase(Measure):
             return combined(
                 enough(panel) & has_profile(panel),
                 lambda: recent_measurement(
-                    panel, recent_past(panel).phase(), season=season.name, idle=idle_phase(panel, question.risk)
+                    panel,
+                    recent_past(panel, logs=not question.together).phase(),
+                    season=season.name,
+                    idle=idle_phase(panel, question.risk),
                 ),
                 lambda: _searched(panel, question, season, fields.reach),
             )

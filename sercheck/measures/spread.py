@@ -50,10 +50,13 @@ from sercheck.measures._past import (
     past,
     scored,
     variance,
+    varied,
     window_scores,
     without,
 )
 from sercheck.measures._witnesses import STRONG, own_cycles_out, sides
+from sercheck.recent import enough as recent_enough
+from sercheck.recent import recent_measurement, recent_past
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats
 from sercheck.serial.autoregression import burg, model_autocorrelation
@@ -85,7 +88,15 @@ class Spread(Measure):
 
     def run(self, panel: Panel, question: Question) -> Measurement:
         if not question.stays.literal:
-            return _like_history(panel, question)
+            return combined(
+                recent_enough(panel),
+                lambda: varied(
+                    recent_measurement(panel, recent_past(panel, logs=not question.together).spread()),
+                    panel,
+                    question.risk,
+                ),
+                lambda: _like_history(panel, question),
+            )
         enough = past(panel).stretches >= fewest_windows(question.risk)
         return combined(enough, lambda: _literal(panel, question), lambda: _alone(panel, question))
 
