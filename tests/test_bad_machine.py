@@ -57,6 +57,11 @@ def ledger(here: Place) -> tuple[str, str]:
     return batches, here.sercheck("ledger", "records", "--format", "json").out
 
 
+def state(here: Place) -> tuple[object, ...]:
+    """What a judgement leaves: the ledger, the records, and which files there are (entries of a log have own names)."""
+    return ledger(here), (here.folder / "r.jsonl").read_bytes(), {name for name in here.files if "/log/" not in name}
+
+
 @pytest.mark.parametrize(
     ("line", "status", "said"),
     [
@@ -140,7 +145,7 @@ def test_a_store_that_became_read_only(here: Place) -> None:
         rows = (here.folder / "batch.csv").read_text()
         ended = here.gate(here.write("in.csv", rows.replace("200", "201")), "--store", "disk", "--released-to", "out")
         assert ended.status == 2
-        assert "read-only" in ended.err
+        assert "read-only" in ended.err or "no permission to write" in ended.err
         assert (here.folder / "in.csv").exists()
         assert here.sercheck("ledger", "batches", "--store", "disk", "--format", "json").out.count("\n") == 1
 
@@ -247,7 +252,7 @@ def test_killed_at_any_moment_and_repeated(here: Place) -> None:
     start = time.perf_counter()
     assert process(*whole).returncode == 0
     took = time.perf_counter() - start
-    wanted = ledger(here), here.files, (here.folder / "r.jsonl").read_bytes()
+    wanted = state(here)
     content = (here.folder / "released" / "batch.csv").read_bytes()
     chance = random.Random(7)
     for share in (0.5, 0.7, 0.8, 0.9, 1.0):
@@ -261,4 +266,4 @@ def test_killed_at_any_moment_and_repeated(here: Place) -> None:
         one.wait()
         if (here.folder / "batch.csv").exists():
             assert here.sercheck(*whole).status == 0
-        assert (ledger(here), here.files, (here.folder / "r.jsonl").read_bytes()) == wanted
+        assert state(here) == wanted
