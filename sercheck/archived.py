@@ -16,6 +16,7 @@ from sercheck.intake.calendar import Cadence
 from sercheck.intake.layout import Layout
 from sercheck.intake.paths import told
 from sercheck.intake.rows import Fingerprint, Rows
+from sercheck.intake.since import compact
 from sercheck.intake.stream import MemorySource, Source
 from sercheck.intake.stretch import Extent, extent, span, within
 from sercheck.intake.zone import DAY, EARLIEST, LATEST
@@ -352,12 +353,3 @@ def _joined(pieces: list[_Piece], layout: Layout) -> Rows:
     number = np.repeat([piece.number for piece in pieces], [len(piece.stamps) for piece in pieces])
     grouped = whole.by_series()
     return compact(grouped if _in_order(grouped) else _each_once(whole, number))
-
-
-def compact(rows: Rows) -> Rows:
-    """The same rows with only the series that have one."""
-    present = np.bincount(rows.codes, minlength=len(rows.keys)) > 0
-    if present.all():
-        return rows
-    place = (np.cumsum(present) - 1).astype(np.int32)
-    return Rows(rows.keys[present], place[rows.codes], rows.stamps, rows.values)

@@ -20,7 +20,9 @@ from sercheck.cli.say import plain
 from sercheck.errors import OutputError, RuleFileError, SercheckError
 
 COMMANDS = {
+    "learn": "learn the baseline, fill the archive",
     "gate": "judge a batch",
+    "settle": "a person overrules: release or discard a held batch, or declare a new regime",
     "ledger": "look up what was judged",
     "measures": "the measures, their fields, formulas and sources",
     "schema": "JSON Schema of rule files and records",

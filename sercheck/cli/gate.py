@@ -51,7 +51,7 @@ def command(
         check_place(records)
     for folder in filter(None, (released_to, held_to)):
         check_place(folder, folder=True)
-    verdict = gate(rules, list(batch), history=list(history) or None, as_of=as_of, store=None if no_keep else store)
+    verdict = gate(rules, list(batch), list(history) or None, as_of=as_of, store=store, keep=not no_keep)
     if records:
         verdict.table.write(records)
     if form == "json":

@@ -200,19 +200,22 @@ def _batch_facts(each: JudgedBatch) -> dict[str, Any]:
         "baseline_id": last.baseline_id,
         "sercheck_version": last.sercheck_version,
         "judgements": len(each.judgements),
+        "settlements": [vars(settlement) for settlement in each.settlements],
     }
 
 
 def _print_csv(found: tuple[JudgedBatch, ...]) -> None:
-    """One line a batch; counts become three columns, the files a JSON list."""
+    """One line a batch; counts become three columns, files and settlements JSON lists."""
     lines = []
     for each in found:
         facts = _batch_facts(each)
-        facts |= {"received": json.dumps(facts["received"], ensure_ascii=False)} | facts.pop("counts")
+        facts |= {name: json.dumps(facts[name], ensure_ascii=False) for name in ("received", "settlements")}
+        facts |= facts.pop("counts")
         lines.append(facts)
     names = [
         "batch_id", "feed", "batch_fingerprint", "first_stamp", "last_stamp", "rows", "series", "received", "decision",
         "judged_at", "pass", "fail", "undecided", "rules_fingerprint", "baseline_id", "sercheck_version", "judgements",
+        "settlements",
     ]  # fmt: skip
     writer = csv.DictWriter(sys.stdout, names, lineterminator="\n")
     writer.writeheader()

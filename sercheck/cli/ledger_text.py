@@ -36,7 +36,8 @@ def _batch_line(each: JudgedBatch) -> list[object]:
     batch, last = each.batch, each.last
     counts = [last.counts[outcome] for outcome in ("pass", "fail", "undecided")]
     newest = batch.last_stamp and batch.last_stamp[: len("2026-01-12T23:00")].replace("T", " ")
-    return [batch.fingerprint[:SHORT_BATCH], batch.feed, newest, last.decision, *counts, batch.rows, batch.series]
+    decision = last.decision if each.settled is None else f"{last.decision}, then {each.settled.what}"
+    return [batch.fingerprint[:SHORT_BATCH], batch.feed, newest, decision, *counts, batch.rows, batch.series]
 
 
 def record_table(found: Records) -> str:
@@ -71,6 +72,8 @@ def batch_page(each: JudgedBatch, found: Records) -> str:
         _fact("fingerprint", batch.fingerprint),
         *(_fact("received", path) for path in batch.received),
         *(line for judgement in each.judgements for line in _judgement(judgement)),
+        *([""] if each.settlements else []),
+        *(_fact("settled", settlement.sentence()) for settlement in each.settlements),
     ]
     if len(found):
         lines += ["", record_table(found)]

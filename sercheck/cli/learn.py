@@ -1,0 +1,30 @@
+"""``sercheck learn``: parse, call, print."""
+
+from __future__ import annotations
+
+import json
+
+import click
+
+from sercheck.cli.say import say
+
+
+@click.command("learn")
+@click.argument("rules", type=click.Path())
+@click.argument("history", type=click.Path(), nargs=-1, required=True)
+@click.option("--store", envvar="SERCHECK_STORE", default=".sercheck", show_default=True, metavar="DIR|URL")
+@click.option("--no-keep", is_flag=True, help="Write nothing to store or archive.")
+@click.option("--format", "form", type=click.Choice(["text", "json"]), default="text", show_default=True)
+def command(rules: str, history: tuple[str, ...], store: str, no_keep: bool, form: str) -> None:
+    """Learn the baseline of the rule file RULES from HISTORY (files or globs) and fill the archive with its rows.
+
+    Tells what is odd in the history and which rules will be undecided for want of more of it.
+    """
+    from sercheck.cli.lessons_text import facts, page
+    from sercheck.taught import teach
+
+    taught = teach(rules, list(history), store, keep=not no_keep)
+    if form == "json":
+        click.echo(json.dumps(facts(taught), allow_nan=False, ensure_ascii=False))
+    else:
+        say(page(taught))
