@@ -9,8 +9,9 @@ of autocorrelation, amplitude and phase.
 
 Measured (``--every 14``), false-hold episodes per 90 days with exact interval: airport weather .84 (.56-1.21), wind and
 solar .95 (.31-2.21), road 1.00 (.40-2.07), bicycles .51 (.23-.96), electricity 2.27 (1.47-3.35; 1.54 (.90-2.47) without
-the days whose rows are broken, the rest mostly public holidays), Seattle 2.76 (1.19-5.44; hourly normals, a smooth
-curve without weather whose yearly turn is what is held). All: 1.06 (.84-1.31). Found on the first day / within seven:
+the days whose rows are broken, 1.00 (.50-1.79) with public holidays closed too), Seattle 2.76 (1.19-5.44; hourly
+normals, a smooth curve without weather whose yearly turn is what is held). All: 1.06 (.84-1.31). Found on the first
+day / within seven:
 
 =================  ===============  =============
 fault              human activity   weather
