@@ -1,8 +1,8 @@
 """Signatures of a failing window to its likely cause; depends on ``serial``, ``grid``, ``baseline`` and ``causes``.
 
-Exact evidence is told first: equal values, midpoints, order, stretches seen before, rounding. Then every fault that can
-be undone is undone, and the one whose mended window history finds most likely is told, if it is likelier than the window
-as it came and than any autoregression of the window's own.
+Exact evidence is told first: equal values, midpoints, order, stretches seen before, rounding. Then every fault that
+can be undone is undone, and the one whose mended window history finds most likely is told, if it is likelier than the
+window as it came and than any autoregression of the window's own.
 """
 
 from __future__ import annotations
@@ -23,14 +23,27 @@ from sercheck.serial.identity import likeliest_other
 from sercheck.serial.matched_filter import Cycle
 from sercheck.serial.signature import Look, Looker
 
-LIKELIER = 5.0
+LIKELIER = 3.0
 """Log-likelihood by which the mended window must beat the one as it came (e^5 = 150 to 1): on healthy windows a cause
 is then named in less than 2 % (simulated by ``python -m tests.causes``)."""
+
+TAIL = 2.43
+"""ln(.5/.01)/ln(.5/.1): from the median and the upper tenth of an exponential tail to its upper hundredth."""
+
+MOST_WINDOWS, FEWEST_WINDOWS, ROWS = 16, 6, 2000
+"""Windows of history that are mended for comparison: sixteen, fewer where many series fail (2,000 in all)."""
+
+FALSE_ORDER = 1.5
+"""Log-likelihood that disorder must have over noise: in a day of hours the one is then taken for the other as often as
+the other for the one (simulated); without it noise was taken for disorder three times as often."""
 
 MORE_MISSING = 0.05
 """Share of rows by which the missing ones must exceed history's to be a cause by themselves: a row of a day."""
 
-WEAK, TURNED = 0.25, -0.25
+FARTHEST = 1e60
+"""Values are cut here, in units of history's largest: their fourth powers stay within doubles."""
+
+WEAK, TURNED = 0.25, -0.5
 """Strength of a season below which it is gone, and below which it is turned over."""
 
 NAMES = {
@@ -50,9 +63,11 @@ EVIDENCE = {
     "filled": "%.0f %% of the rows equal the one before", "interpolated": "%.0f %% of the rows are midpoints",
     "smoothed": "history as it looks when smoothed", "stuck": "%.0f rows at one value",
     "repeated": "%.0f %% of the rows equal the one before, in pairs",
-    "again": "%.0f %% of the rows were delivered before, in the same order", "slipped": "history's season %+.0f steps late",
+    "again": "%.0f %% of the rows were delivered before, in the same order",
+    "slipped": "history's season %+.0f steps late",
     "interleaved": "odd rows lie %.4g apart from even ones", "total": "their differences go on as history did",
-    "differenced": "their running total goes on as history did", "twice": "the total of their total goes on as history did",
+    "differenced": "their running total goes on as history did",
+    "twice": "the total of their total goes on as history did",
     "unit": "history goes on when divided by %.4g", "spread": "all runs of equal values are %.0f rows long",
     "sign": "history goes on with the other sign", "mirrored": "history goes on when mirrored at the mean",
     "swapped": "it goes on the history of another series", "shifted": "history goes on %+.4g away",
@@ -60,6 +75,9 @@ EVIDENCE = {
     "flattened": "season at %.2f of its strength", "grown": "season at %.2f of its strength",
 }  # fmt: skip
 """What is told for each, with its number."""
+
+IN_UNIT = {"shifted", "interleaved"}
+"""Those whose number is in the feed's unit."""
 
 PERCENT = {"filled", "interpolated", "repeated", "again"}
 
@@ -114,13 +132,26 @@ def likely_causes(panel: Panel, season: str | None = None, keys: Sequence[str] |
     values = panel.values
     names = np.array([str(k) for k in range(len(values))] if keys is None else list(keys), dtype=object)
     told = _Told(len(values))
-    law = foresee(values, panel.start, _cycles(panel, season)) if panel.start else None
+    if not values.size or panel.start == values.shape[1]:
+        return told.causes()
+    scaled, unit = _scaled(values, panel.start)
+    law = foresee(scaled, panel.start, _cycles(panel, season)) if panel.start else None
     if law is not None:
-        _weigh(told, law, names)
+        _weigh(told, law, names, unit)
     for sign in reversed(exact_signs(values, panel.start)):
         told.exact(sign.name, sign.found, sign.value)
     _missing(told, panel)
     return told.causes()
+
+
+def _scaled(values: Floats, start: int) -> tuple[Floats, Floats]:
+    """Values in units of a power of two near history's largest, and that unit: squares neither overflow nor vanish."""
+    history = values[:, :start]
+    peak = np.where(np.isnan(history), 0.0, np.abs(history)).max(axis=1, initial=0.0)
+    exponent = np.clip(np.frexp(peak)[1], -1021, 1022)
+    with np.errstate(over="ignore", under="ignore"):
+        scaled = np.ldexp(values, -exponent[:, None])
+    return np.clip(scaled, -FARTHEST, FARTHEST), np.ldexp(1.0, exponent)
 
 
 def _cycles(panel: Panel, season: str | None) -> list[Cycle]:
@@ -170,10 +201,9 @@ class _Told:
         return Causes(self.cause, self.support, self.evidence, self.kind, self.ranked)
 
 
-def _weigh(told: _Told, law: Foreseen, names: np.ndarray) -> None:
+def _weigh(told: _Told, law: Foreseen, names: np.ndarray, unit: Floats) -> None:
     """Compare the mended windows: posterior odds at equal prior odds, by kind."""
-    looks = [look for one in Looker(law).all() for look in _by_strength(one)]
-    looks.append(Look("shuffled", any_order(law), np.full(len(law.window), np.nan)))
+    looks = _looks(law)
     other, score = likeliest_other(law)
     looks.append(Look("swapped", score, other.astype(np.float64)))
     scores = np.stack([np.nan_to_num(look.score, nan=-np.inf, posinf=-np.inf) for look in looks])
@@ -187,11 +217,41 @@ def _weigh(told: _Told, law: Foreseen, names: np.ndarray) -> None:
     _rank(told, groups, total)
     best = np.argmax(scores, axis=0)
     named = np.isfinite(healthy) & (top - healthy >= LIKELIER)
+    unsure = np.flatnonzero(named)
+    if len(unsure):
+        named[unsure] = (top - healthy)[unsure] > _by_chance(law.rows(unsure))
     for place, look in enumerate(looks):
         if look.name not in NAMES:
             continue
         where = named & (best == place)
-        told.tell(look.name, where, look.value, groups[NAMES[look.name]] / total, _detail(look, names))
+        value = look.value * unit if look.name in IN_UNIT else look.value
+        told.tell(look.name, where, value, groups[NAMES[look.name]] / total, _detail(look, names))
+
+
+def _looks(law: Foreseen) -> list[Look]:
+    """All looks but that at other series, the unbroken window first."""
+    looks = [look for one in Looker(law).all() for look in _by_strength(one)]
+    looks.append(Look("shuffled", any_order(law) - FALSE_ORDER, np.full(len(law.window), np.nan)))
+    return looks
+
+
+def _by_chance(law: Foreseen) -> Floats:
+    """How much likelier history's own windows look when mended: what a mended window must beat, shape (S,).
+
+    The median over the last windows of history plus ``TAIL`` times the distance from it to the upper tenth: where the
+    law fits history the windows gain next to nothing, and where it does not (counts, wild tails) they show it.
+    """
+    series = len(law.window)
+    count = min(max(ROWS // series, FEWEST_WINDOWS), MOST_WINDOWS)
+    while (past := law.earlier(count)) is None and count > FEWEST_WINDOWS:
+        count -= 1
+    if past is None:
+        return np.zeros(series)
+    scores = np.stack([np.nan_to_num(look.score, nan=-np.inf, posinf=-np.inf) for look in _looks(past)])
+    with np.errstate(invalid="ignore"):
+        gain = np.nan_to_num(scores.max(axis=0) - scores[0], nan=0.0, posinf=0.0).reshape(count, series)
+    usual, high = np.quantile(gain, (0.5, 0.9), axis=0)
+    return np.asarray(usual + TAIL * (high - usual))
 
 
 def _by_strength(look: Look) -> list[Look]:

@@ -1,8 +1,8 @@
 """Is the right cause named: every fault of the catalogue in simulated feeds, and the table of what was named for it.
 
-Run it with ``python -m tests.causes`` (``--replications 200 --n 168 336 24``). Hourly feeds have a strong daily cycle with
-weekly modulation and AR(1) noise, daily feeds a weekly cycle; the daily windows that stand beside 24, 168 and 336 hours
-are one, four and eight weeks. A fault counts where the battery detects it: level, spread, innovations variance,
+Run it with ``python -m tests.causes`` (``--replications 200 --n 168 336 24``). Hourly feeds have a strong daily cycle
+with weekly modulation and AR(1) noise, daily feeds a weekly cycle; the daily windows that stand beside 24, 168 and 336
+hours are one, four and eight weeks. A fault counts where the battery detects it: level, spread, innovations variance,
 amplitude, phase, autocorrelation of the difference, repeats and replay against the recent past, and the hash of earlier
 stretches, each at a risk of 1/720.
 """
@@ -131,7 +131,7 @@ def run(kind: Kind, n: int, series: int, seed: int) -> tuple[list[Row], float, l
     false_names = healthy.kind[healthy.kind != causes.UNKNOWN]
     rows = []
     for fault in catalogue():
-        steps = kind.lengths[kind.season]
+        steps = fault.steps(kind.lengths, start)
         if not fault.fits(series, n, start, steps):
             continue
         for size in fault.sizes:
@@ -172,8 +172,10 @@ def main(argv: list[str]) -> int:
     for hours in asked.n:
         for kind, n in ((HOURLY, hours), (DAILY, DAILY_WINDOWS[hours])):
             rows, falsely, names = run(kind, n, asked.replications, asked.seed)
-            print(f"\n{kind.name}, windows of {n}: right {overall(rows):.3f}; healthy windows with a cause {falsely:.3f}"
-                  f" {dict(Counter(names))}")
+            print(
+                f"\n{kind.name}, windows of {n}: right {overall(rows):.3f}; healthy windows with a cause {falsely:.3f}"
+                f" {dict(Counter(names))}"
+            )
             print(table(rows))
             sys.stdout.flush()
     return 0

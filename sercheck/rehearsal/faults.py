@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from importlib import metadata
 
 import numpy as np
 
 from sercheck import causes
+from sercheck.baseline import FEWEST_CYCLES
 from sercheck.errors import UsageError
 from sercheck.rehearsal import rows, values
 from sercheck.rehearsal.rows import Given
@@ -36,6 +37,7 @@ class Fault:
             gives the same damage.
         fewest_series: series that it needs.
         history: history that it needs: "", "cycle" or "batch".
+        longest: it is about the longest season that history teaches (a week of hours), not the shortest.
     """
 
     name: str
@@ -45,6 +47,19 @@ class Fault:
     damage: Damage
     fewest_series: int = 1
     history: str = ""
+    longest: bool = False
+
+    def steps(self, lengths: Mapping[str, int], history: int) -> int:
+        """Steps in one cycle of the season that it is about, of those that ``history`` steps teach; 1 without any.
+
+        Args:
+            lengths: steps in one cycle of each season of the feed.
+            history: steps of history.
+        """
+        able = [length for length in lengths.values() if length * FEWEST_CYCLES <= history]
+        if not able:
+            return 1
+        return max(able) if self.longest else min(able)
 
     def apply(self, window: Floats, history: Floats, size: float, rng: np.random.Generator, steps: int) -> Floats:
         """The broken window, shape (S, n).
@@ -135,8 +150,9 @@ BUILT_IN = (
           history="batch"),
     Fault("rounded", "Values rounded to this many standard deviations.", causes.ROUNDED, (0.5,), values.rounded),
     Fault("season flattened", "The season at this part of its strength.", causes.FLATTENED, (0.5,),
-          values.season_weakened, history="cycle"),
-    Fault("season gone", "The season taken out.", causes.GONE, (0.0,), values.season_weakened, history="cycle"),
+          values.season_weakened, history="cycle", longest=True),
+    Fault("season gone", "The season taken out.", causes.GONE, (0.0,), values.season_weakened, history="cycle",
+          longest=True),
     Fault("keys swapped", "So many pairs of series under each other's keys.", causes.SWAPPED, ONE, rows.keys_swapped,
           fewest_series=2),
 )  # fmt: skip

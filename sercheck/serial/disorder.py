@@ -1,4 +1,4 @@
-"""Are these the foretold values in another order: likelihood over all orders at once; depends on numpy and ``serial``."""
+"""Are these the foretold values in another order: likelihood over all orders; depends on numpy and ``serial``."""
 
 from __future__ import annotations
 
@@ -25,10 +25,10 @@ def any_order(law: Foreseen) -> Floats:
     """Log-likelihood of the window as history's values in an order of which nothing is known, shape (S,).
 
     The density is the permanent of K over n!, K_ij the normal density of value i around the foretold value j (the
-    profile, moved to the window's own mean, with the scatter of a window of history around its own mean). The permanent
-    is that of the doubly stochastic matrix D which Sinkhorn's (1964) scaling makes of K, divided by the scales; ln per D
-    is taken as Σ_i [ln(2πk_i)/(2k_i) − 1], k_i = 1/Σ_j D_ij² being the places that row i is spread over: Stirling's
-    formula for blocks of size k, exact for D = 1/n up to its error.
+    profile, moved to the window's own mean, with the scatter of a window of history around its own mean). The
+    permanent is that of the doubly stochastic matrix D which Sinkhorn's (1964) scaling makes of K, divided by the
+    scales; ln per D is taken as Σ_i [ln(2πk_i)/(2k_i) − 1], k_i = 1/Σ_j D_ij² being the places that row i is spread
+    over: Stirling's formula for blocks of size k, within .8 of the exact value for twelve rows.
     """
     y = law.on_scale(law.window)
     shape = law.here

@@ -1,4 +1,4 @@
-"""Signs of a fault that leave no doubt: equal values, midpoints, order, earlier rows, rounding; numpy and ``serial``."""
+"""Signs that leave no doubt: equal values, midpoints, order, earlier rows, rounding; depends on numpy, ``serial``."""
 
 from __future__ import annotations
 
@@ -7,9 +7,10 @@ from typing import NamedTuple
 import numpy as np
 from scipy import special
 
-from sercheck.serial.arrays import Bools, Floats
-from sercheck.serial.repeats import equal_to_earlier, midpoints, resting_value
+from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.repeats import FLOAT_SLACK, equal_to_earlier, midpoints, resting_value
 from sercheck.serial.replay import seen_before
+from sercheck.serial.window_t import windows
 
 BEYOND_CHANCE = 1e-4
 """Chance at which a count of coincidences is a sign: several are read, and together they must stay far below 2 %."""
@@ -23,11 +24,26 @@ FEW = 3
 EVEN = 0.8
 """Share of the runs that must be of one length for rows delivered twice or data spread evenly (the ends may be cut)."""
 
+ORDERED_BY_CHANCE = 1e-3
+"""Chance that rows in random order are sorted, under which sorted ones are called so: seven rows or more."""
+
+UNLIKELY = 0.01
+"""Chance that rows filled at random make the longest run, under which it is a stretch stuck by itself."""
+
 BY_CHANCE = 8.0
 """Decimal digits of chance against different values being multiples of a coarser step, from which they are rounded."""
 
 FINEST = 1e-8
 """Finest step that is looked for."""
+
+COMMON = 0.01
+"""Share of history's rows with a value that came before, under which values hardly ever come twice."""
+
+LARGEST = 1e290
+"""Values are cut here, so that eight decimals more are still doubles."""
+
+EXACT = 1e15
+"""Largest value whose decimals a double still tells."""
 
 LONGEST_HISTORY = 4000
 """Rows of history that rounding is read from."""
@@ -54,6 +70,7 @@ def exact_signs(values: Floats, start: int) -> list[Sign]:
         values: history and window, shape (S, T), NaN is missing.
         start: first step of the window.
     """
+    values = np.clip(values, -LARGEST, LARGEST)
     window, history = values[:, start:], values[:, :start]
     rounded, step = coarser(window, history)
     return [
@@ -66,21 +83,26 @@ def exact_signs(values: Floats, start: int) -> list[Sign]:
 
 
 def _in_order(window: Floats, history: Floats) -> Sign:
-    """All steps up (or all down), and the values are history's: by value, not by time."""
-    step = np.diff(window, axis=1)
-    told = ~np.isnan(step)
-    n = told.sum(axis=1)
-    up = (told & (step > 0)).sum(axis=1)
-    down = (told & (step < 0)).sum(axis=1)
-    low, high = (np.fmin.reduce(history, axis=1, initial=np.inf), np.fmax.reduce(history, axis=1, initial=-np.inf))
-    last = np.nan_to_num(np.maximum.reduce(np.nan_to_num(window, nan=-np.inf), axis=1, initial=-np.inf))
-    one_way = ((down == 0) & (up > n / 2)) | ((up == 0) & (down > n / 2))
+    """All steps up (or all down), as no window of history has them, and the values are history's: by value, not time.
+
+    In random order it happens twice in n! windows.
+    """
+    steps, up, down = _one_way(window[:, None, :])
+    many, rises, falls = _one_way(windows(history, window.shape[1]))
+    usual = ((rises | falls) & (many > 0)).any(axis=1)
+    low, high = np.fmin.reduce(history, axis=1, initial=np.inf), np.fmax.reduce(history, axis=1, initial=-np.inf)
+    last = np.where(np.isnan(window), -np.inf, window).max(axis=1, initial=-np.inf)
     within = last <= high + (high - low)
-    past = np.diff(history, axis=1)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        rises = np.nansum(past > 0, axis=1) / np.maximum((~np.isnan(past)).sum(axis=1), 1)
-        chance = n * np.log10(np.clip(np.maximum(rises, 1 - rises), 0.5, 1.0))
-    return Sign("sorted", one_way & within & (n >= 7) & (chance < -2), np.where(down == 0, 1.0, -1.0))
+    rare = special.gammaln(steps[:, 0] + 2.0) > np.log(2 / ORDERED_BY_CHANCE)
+    return Sign("sorted", (up | down)[:, 0] & within & ~usual & rare, np.where(up[:, 0], 1.0, -1.0))
+
+
+def _one_way(cut: Floats) -> tuple[Ints, Bools, Bools]:
+    """Steps of each window, and whether all go up or all go down (level ones are neither), each (S, m)."""
+    step = np.diff(cut, axis=2)
+    up, down = (step > 0).sum(axis=2), (step < 0).sum(axis=2)
+    steps = (~np.isnan(step)).sum(axis=2)
+    return steps, (down == 0) & (2 * up > steps), (up == 0) & (2 * down > steps)
 
 
 def _beyond(count: Floats, trials: Floats, marks: Floats) -> Bools:
@@ -110,16 +132,18 @@ def _runs(values: Floats, start: int) -> list[Sign]:
     told = (~np.isnan(now)).sum(axis=1).astype(np.float64)
     equal = np.nansum(now, axis=1)
     found = _beyond(equal, told, past)
-    lengths = _run_lengths(now[:, 1:] == 1)  # at a run's last row its number of values, 0 elsewhere
+    lengths = _run_lengths(now == 1)  # at a run's last row its number of values, 0 elsewhere
     runs = (lengths > 0).sum(axis=1)
     longest = lengths.max(axis=1, initial=0).astype(np.float64)
     whole = np.maximum(runs, 1)
     pairs = ((lengths == 2).sum(axis=1) >= EVEN * whole) & (2 * runs >= EVEN * (told - 1)) & (runs >= 3)
     even = (lengths == longest[:, None]).sum(axis=1) >= np.maximum(EVEN * (whole - 1), 2)
-    spread = even & (longest >= 3) & (np.where(lengths > 0, lengths, 0).sum(axis=1) >= EVEN * told)
-    others = np.maximum(equal - (longest - 1), 0) / np.maximum(told - longest, 1)
-    chance = told * np.maximum(others, 1 / np.maximum(told, 1)) ** (longest - 1)
-    stuck = (longest >= 4) & (chance < 0.01) | (longest >= 0.9 * told)
+    spread = even & (longest >= 3) & (lengths.sum(axis=1) >= EVEN * told)
+    spread |= _usual_mean(values, start)
+    rest_rows = told - (longest - 1)
+    others = np.maximum(equal - (longest - 1), 1) / np.maximum(rest_rows, 1)
+    chance = told * np.minimum(others, 1.0) ** (longest - 1)
+    stuck = (longest >= 4) & (chance < UNLIKELY) | (longest >= EVEN * told)
     share = equal / np.maximum(told, 1)
     return [
         Sign("repeated", found & pairs, share),
@@ -127,6 +151,20 @@ def _runs(values: Floats, start: int) -> list[Sign]:
         Sign("stuck", found & ~pairs & ~spread & stuck, longest),
         Sign("filled", found & ~pairs & ~spread & ~stuck, share),
     ]
+
+
+def _usual_mean(values: Floats, start: int) -> Bools:
+    """One value all through the window that is not history's last and lies among the means of history's windows."""
+    window, history = values[:, start:], values[:, :start]
+    constant = ((window == window[:, :1]) | np.isnan(window)).all(axis=1)
+    cut = windows(history, window.shape[1])
+    seen = ~np.isnan(cut)
+    mean = np.where(seen, cut, 0.0).sum(axis=2) / np.maximum(seen.sum(axis=2), 1)
+    low, high = mean.min(axis=1, initial=np.inf), mean.max(axis=1, initial=-np.inf)
+    value = window[:, 0]
+    with np.errstate(invalid="ignore"):
+        last = history[:, -1] if start else np.full(len(values), np.nan)
+        return np.asarray(constant & (value != last) & (value >= low) & (value <= high))
 
 
 def _run_lengths(equal: Bools) -> np.ndarray:
@@ -140,12 +178,18 @@ def _run_lengths(equal: Bools) -> np.ndarray:
 
 
 def _again(values: Floats, start: int) -> Sign:
-    """Stretches that were delivered before; rows of one stretch recur together, so stretches are counted."""
+    """Stretches that were delivered before; rows of one stretch recur together, so stretches are counted.
+
+    One stretch is enough where hardly any value of history came twice.
+    """
     seen = seen_before(values, start)
+    ordered = np.sort(values[:, :start], axis=1)
+    ties = (ordered[:, 1:] == ordered[:, :-1]).sum(axis=1)
+    least = np.where(ties < COMMON * start, 2.0, 0.0)
     told = (~np.isnan(seen.batch)).sum(axis=1).astype(np.float64)
     count = np.nansum(seen.batch, axis=1)
-    unusual = _beyond(np.maximum(count / seen.length, (count > 0) * 2.0), told / seen.length, seen.history)
-    return Sign("again", unusual & (count >= seen.length), count / np.maximum(told, 1))
+    pieces = np.where(count > 0, np.maximum(count / seen.length, least), 0.0)
+    return Sign("again", _beyond(pieces, told / seen.length, seen.history), count / np.maximum(told, 1))
 
 
 def _midpoints(window: Floats, history: Floats) -> Sign:
@@ -174,17 +218,20 @@ def coarser(window: Floats, history: Floats) -> tuple[Bools, Floats]:
 
 def _reach(x: Floats) -> Floats:
     seen = ~np.isnan(x)
-    return np.where(seen, np.abs(x), 0.0).max(axis=1, initial=0.0)
+    return np.asarray(np.where(seen, np.abs(x), 0.0).max(axis=1, initial=0.0))
 
 
 def _step(x: Floats) -> Floats:
     """The coarsest step that all values are whole multiples of, 0 where there is none, shape (S,)."""
     found = np.zeros(len(x))
     size = np.where(np.isnan(x), 0.0, np.abs(x))
+    largest = size.max(axis=1, initial=0.0)
+    able = (largest > 0) & (largest < EXACT)
+    x, size = np.where(able[:, None], x, np.nan), np.where(able[:, None], size, 0.0)
     for power in range(-8, 7):
         for digit in (1.0, 2.0, 5.0):
             count = x / digit * 10.0**-power if power < 0 else x / (digit * 10.0**power)
-            slack = np.minimum(8 * np.finfo(np.float64).eps * (1 + size / digit * 10.0**-power), 0.01)
+            slack = np.minimum(FLOAT_SLACK * (1 + size / digit * 10.0**-power), 0.01)
             whole = (np.abs(count - np.round(count)) <= slack) | np.isnan(x)
-            found = np.where(whole.all(axis=1) & (size.max(axis=1, initial=0.0) > 0), digit * 10.0**power, found)
+            found = np.where(whole.all(axis=1) & able, digit * 10.0**power, found)
     return found

@@ -7,13 +7,13 @@ recognised by how much likelier the mended window is.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.serial.autoregression import Autoregression, burg, step_up
-from sercheck.serial.batch_statistics import through_filter
+from sercheck.serial.batch_statistics import existing, through_filter
 from sercheck.serial.matched_filter import HIGHEST_ORDER, Cycle
 from sercheck.serial.walk_forward import log_unit, off_scale, on_scale, walk_forward
 from sercheck.serial.window_t import windows
@@ -23,6 +23,33 @@ SCALING_FIRST = 104
 
 FEWEST_DF = 3.0
 """Degrees of freedom granted to the scatter of log variances when history holds fewer than five windows."""
+
+
+@dataclass(frozen=True)
+class Law:
+    """How a statistic of a window varies over history's windows: Student's t; every array has shape (S,).
+
+    Attributes:
+        centre: its mean.
+        scatter: standard deviation with which one more varies around it.
+        df: degrees of freedom.
+    """
+
+    centre: Floats
+    scatter: Floats
+    df: Floats
+
+    def rows(self, pick: Ints | Bools | slice) -> Law:
+        """Some of the series."""
+        return Law(self.centre[pick], self.scatter[pick], self.df[pick])
+
+    def surprise(self, value: Floats, error: Floats) -> Floats:
+        """Log-likelihood lost by a value fitted with variance ``error``: its place in the law, and the fitting.
+
+        Laplace's approximation: the law widened by the error at the fitted value, and ½ ln of what the fit narrowed it.
+        """
+        z = (value - self.centre) / np.sqrt(self.scatter**2 + error)
+        return np.asarray((self.df + 1) / 2 * np.log1p(z**2 / self.df) + np.log1p(self.scatter**2 / error) / 2)
 
 
 @dataclass(frozen=True)
@@ -39,9 +66,14 @@ class Foreseen:
         rest: what the profile left of history, shape (S, N).
         noise: its autoregression, of order at most 6.
         variance: mean squared innovation of history, shape (S,).
-        centre: mean of the logarithm of the windows' mean squared innovations over ``variance``, shape (S,).
-        scatter: the standard deviation with which a new window's varies around it, shape (S,).
-        df: degrees of freedom of ``scatter``, shape (S,).
+        powers: law of the logarithm of the windows' mean squared innovations over ``variance``.
+        means: law of the windows' means, in the feed's unit.
+        variances: law of the logarithm of the windows' variances, in the feed's unit.
+        levels: law of the means of what the profile left of the windows, on the judged scale.
+        scatters: law of the logarithm of the variances of the same.
+        cycle: steps in one cycle of the shortest season, 1 without one.
+        course: the profile all through history and window, shape (S, T).
+        values: history and window as delivered, shape (S, T).
     """
 
     window: Floats
@@ -51,14 +83,19 @@ class Foreseen:
     rest: Floats
     noise: Autoregression
     variance: Floats
-    centre: Floats
-    scatter: Floats
-    df: Floats
+    powers: Law
+    means: Law
+    variances: Law
+    levels: Law
+    scatters: Law
+    cycle: int
+    course: Floats
+    values: Floats
 
     @property
     def n(self) -> int:
         """Steps of the window."""
-        return self.window.shape[1]
+        return int(self.window.shape[1])
 
     @property
     def here(self) -> Floats:
@@ -73,12 +110,40 @@ class Foreseen:
 
     def rows(self, pick: Ints | Bools | slice) -> Foreseen:
         """Some of the series."""
-        parts = {part.name: getattr(self, part.name) for part in fields(self)}
-        return Foreseen(**{name: part.rows(pick) if name == "noise" else part[pick] for name, part in parts.items()})
+        return Foreseen(
+            self.window[pick], self.before[pick], self.log[pick], self.profile[pick], self.rest[pick],
+            self.noise.rows(pick), self.variance[pick], self.powers.rows(pick), self.means.rows(pick),
+            self.variances.rows(pick), self.levels.rows(pick), self.scatters.rows(pick), self.cycle,
+            self.course[pick], self.values[pick],
+        )  # fmt: skip
+
+    def earlier(self, count: int) -> Foreseen | None:
+        """The same law for the last ``count`` windows of history, one below the other: shape (count · S, ...).
+
+        None where history is too short for so many.
+        """
+        n, N = self.n, self.rest.shape[1]
+        T, length, known = self.values.shape[1], self.profile.shape[1] - n, self.before.shape[1]
+        kept = N - count * n
+        if count < 1 or kept < 2 * n or T - (count + 1) * n < max(length, known):
+            return None
+        ends = [T - back * n for back in range(1, count + 1)]
+
+        def stacked(x: Floats, width: int, shift: int) -> Floats:
+            return np.concatenate([x[:, end - shift - width : end - shift] for end in ends])
+
+        every = self.rows(np.tile(np.arange(len(self.values)), count))
+        rest = np.concatenate([self.rest[:, N - (back * n) - kept : N - back * n] for back in range(1, count + 1)])
+        return replace(
+            every, window=stacked(self.values, n, 0), before=_carried(stacked(self.values, known, n)),
+            profile=stacked(self.course, length + n, 0), rest=rest, course=self.course[:0], values=self.values[:0],
+        )  # fmt: skip
 
     def on_scale(self, x: Floats) -> Floats:
-        """From the feed's unit to the scale that is judged."""
-        return on_scale(x, self.log)
+        """From the feed's unit to the scale that is judged; a logarithm goes on in a straight line below 0."""
+        c = self.log[:, None]
+        with np.errstate(invalid="ignore"):
+            return np.where(x < 0, np.where(np.isnan(c), x, x / c), on_scale(x, self.log))
 
     def usual(self) -> Floats:
         """What was foretold of the window in the feed's unit, shape (S, n)."""
@@ -115,19 +180,21 @@ class Foreseen:
 
         Args:
             power: sum of squared innovations, shape (S,) or (S, K).
-            count: how many there are, likewise.
+            count: how many there are, likewise; with less than half of the rows nothing is likely (-inf).
             n: observed values of the window, shape (S,).
             variance: innovation variance to compare with, shape (S,); history's own by default.
         """
         last = (-1, *[1] * (power.ndim - 1))
+        law = self.powers
         usual, centre, scatter, df, n = (
             part.reshape(last)
-            for part in (self.variance if variance is None else variance, self.centre, self.scatter, self.df, n)
+            for part in (self.variance if variance is None else variance, law.centre, law.scatter, law.df, n)
         )
         with np.errstate(divide="ignore", invalid="ignore"):
             s2 = power / count
             z = (np.log(s2 / usual) - centre) / scatter
-            return np.asarray(gaussian(s2, n) - (df + 1) / 2 * np.log1p(z**2 / df))
+            told = gaussian(s2, n) - (df + 1) / 2 * np.log1p(z**2 / df)
+            return np.where(2 * count >= n, told, -np.inf)
 
 
 def gaussian(variance: Floats, n: Floats) -> Floats:
@@ -190,19 +257,36 @@ def foresee(values: Floats, start: int, cycles: Sequence[Cycle]) -> Foreseen | N
     rest = rest[:, begin:]
     if rest.shape[1] < max(n, 2 * HIGHEST_ORDER):
         return None
-    noise = burg(rest, max_order=HIGHEST_ORDER)
+    noise = existing(burg(rest, max_order=HIGHEST_ORDER), rest, ~np.isnan(rest))
     e = through_filter(rest - noise.mean[:, None], noise)
     total, count = power(e)
     with np.errstate(divide="ignore", invalid="ignore"):
         variance = total / count
-        cut = windows(e, n)
-        seen = (~np.isnan(cut)).sum(axis=2)
-        logs = np.log(np.where(np.isnan(cut), 0.0, cut**2).sum(axis=2) / seen / variance[:, None])
-    centre, scatter, df = _scatter(np.where(seen * 2 >= n, logs, np.nan), n)
+        powers = _log_power(windows(e, n) / np.sqrt(variance)[:, None, None])
+        middle, spreads = _moments(windows(values[:, :start], n))
+        levels, scatters = _moments(windows(rest, n))
     return Foreseen(
-        values[:, start:], _carried(values[:, max(start - longest, 0) : start]), log,
-        profile[:, start - longest :], rest, noise, variance, centre, scatter, df,
+        values[:, start:], _carried(values[:, max(start - max(longest, 2), 0) : start]), log,
+        profile[:, start - longest :], rest, noise, variance,
+        _law(powers, 2.0 / n), _law(middle, 0.0), _law(spreads, 2.0 / n), _law(levels, 0.0),
+        _law(scatters, 2.0 / n), min((cycle.length for cycle in cycles), default=1),
+        profile, values,
     )  # fmt: skip
+
+
+def _moments(cut: Floats) -> tuple[Floats, Floats]:
+    """Mean of each window and the logarithm of its variance, NaN where less than half of it is there, both (S, m)."""
+    seen = ~np.isnan(cut)
+    count = seen.sum(axis=2)
+    middle = np.where(seen, cut, 0.0).sum(axis=2) / np.maximum(count, 1)
+    return np.where(count * 2 >= cut.shape[2], middle, np.nan), _log_power(cut - middle[:, :, None])
+
+
+def _log_power(cut: Floats) -> Floats:
+    """Logarithm of each window's mean square, NaN where less than half of it is there, shape (S, m)."""
+    seen = (~np.isnan(cut)).sum(axis=2)
+    logs = np.log(np.where(np.isnan(cut), 0.0, cut**2).sum(axis=2) / seen)
+    return np.where((seen * 2 >= cut.shape[2]) & np.isfinite(logs), logs, np.nan)
 
 
 def _middle(x: Floats) -> Floats:
@@ -224,22 +308,20 @@ def _profile(y: Floats, cycles: Sequence[Cycle], n: int, first: int, *, plain: b
         walk_forward(y, cycle.phase[:steps], cycle.length, max(n, cycle.length), first=first, block=n, gain=gain).here
         for cycle in cycles
     ]
-    if len(every) == 1:
-        return every[0]
+    every.append(np.broadcast_to(_middle(y[:, : steps - n])[:, None], y.shape))  # no season: its noise is no profile
     errors = np.stack([(y - one) ** 2 for one in every])
-    told = ~np.isnan(errors).any(axis=0)
-    told[:, steps - n :] = False  # the window has no say in it
-    best = np.argmin(np.where(told, errors, 0.0).sum(axis=2), axis=0)
-    return np.take_along_axis(np.stack(every), best[None, :, None], axis=0)[0]
+    errors[:, :, steps - n :] = np.nan  # the window has no say in it
+    missing = np.isnan(errors).any(axis=0)
+    best = np.argmin(np.where(missing, 0.0, errors).sum(axis=2), axis=0)
+    chosen = np.take_along_axis(np.stack(every), best[None, :, None], axis=0)[0]
+    return np.where(np.isnan(every[0]), np.nan, chosen)
 
 
-def _scatter(logs: Floats, n: int) -> tuple[Floats, Floats, Floats]:
-    """Mean, standard deviation for one more, and degrees of freedom of the windows' log variances."""
-    seen = ~np.isnan(logs)
+def _law(statistics: Floats, least: float) -> Law:
+    """Law of one more value of a statistic; its variance is at least ``least``, that of independent normal rows."""
+    seen = ~np.isnan(statistics)
     m = seen.sum(axis=1)
-    usable = np.where(seen & np.isfinite(logs), logs, 0.0)
-    centre = usable.sum(axis=1) / np.maximum(m, 1)
-    square = np.where(seen & np.isfinite(logs), usable - centre[:, None], 0.0) ** 2
-    least = 2.0 / n  # variance of the log of a mean of n squared normal values
+    centre = np.where(seen, statistics, 0.0).sum(axis=1) / np.maximum(m, 1)
+    square = np.where(seen, statistics - centre[:, None], 0.0) ** 2
     variance = np.maximum(square.sum(axis=1) / np.maximum(m - 1, 1), least)
-    return centre, np.sqrt(variance * (1 + 1 / np.maximum(m, 1))), np.maximum(m - 1.0, FEWEST_DF)
+    return Law(centre, np.sqrt(variance * (1 + 1 / np.maximum(m, 1))), np.maximum(m - 1.0, FEWEST_DF))

@@ -7,6 +7,10 @@ import numpy as np
 from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.foreseen import Foreseen, power
 
+ALIKE = 0.25
+"""Mean squared distance of two profiles, in variances of what the profile leaves, below which they are the same: half
+a standard deviation."""
+
 BLOCK = 1 << 22
 """Pairs of series compared at a time."""
 
@@ -37,4 +41,5 @@ def likeliest_other(law: Foreseen) -> tuple[Ints, Floats]:
     total, count = power(e)
     n = seen.sum(axis=1).astype(np.float64)
     score = theirs.likelihood(total, count, n) + theirs.stretching(law.window) - np.log(max(S - 1, 1))
-    return other, score
+    apart = ((usual - usual[other]) ** 2).mean(axis=1)
+    return other, np.where(apart > ALIKE * np.exp(law.scatters.centre), score, -np.inf)

@@ -1,7 +1,7 @@
 """Undo a fault and see how much likelier the window becomes: one look for every fault; depends on numpy and ``serial``.
 
-Every look gives the log-likelihood of the window as it was delivered, under history's law put through the fault. A fault
-that adds a free number pays ½ ln n for it (Schwarz 1978), one that was searched among K places pays ln K.
+Every look gives the log-likelihood of the window as it was delivered, under history's law put through the fault. A
+fault that adds a free number pays ½ ln n for it (Schwarz 1978), one that was searched among K places pays ln K.
 """
 
 from __future__ import annotations
@@ -30,6 +30,12 @@ SMOOTH_ORDER = 20
 
 OWN_ORDER = 4
 """Order of the window's own model, by which anything may be explained at its price."""
+
+FEWEST_ROWS = 3
+"""Rows in either unit: fewer are outliers."""
+
+FAR = 3.0
+"""Standard deviations of history's window means beyond which a mean is another one (as far as 1 in 370)."""
 
 PAIR_ORDER = 2
 """Order of each of two interleaved sources."""
@@ -76,49 +82,69 @@ class Looker:
         yield from self.clock()
         yield from self.smooth()
         yield self.two_sources()
-        yield self.noise()
+        yield from self.noise()
 
     def _score(self, e: Floats) -> Floats:
         total, count = power(e)
         return self.law.likelihood(total, count, self.n)
 
+    def away(self, rows: slice) -> Floats:
+        """How far some rows lie above what was foretold, on average, in the feed's unit, shape (S,)."""
+        apart = (self.x - self.law.usual())[:, rows]
+        seen = ~np.isnan(apart)
+        return np.asarray(np.where(seen, apart, 0.0).sum(axis=1) / np.maximum(seen.sum(axis=1), 1))
+
     def healthy(self) -> Look:
         """As it came."""
         return Look("healthy", self._score(self.e) + self.jacobian, self.none)
 
+    def _price(self, numbers: np.ndarray) -> Floats:
+        """Price of free numbers fitted to the window itself: Schwarz's, or for short ones that of AICc."""
+        short = numbers * self.n / np.maximum(self.n - numbers - 1, 0.5)
+        return np.asarray(np.maximum(numbers * self.free, short))
+
     def own(self) -> Iterator[Look]:
         """An autoregression of the window's own, around its own mean, with history's season or without any.
 
-        Without a season, but with innovations of history's size, the season is gone. Without memory as well it is
-        noise, which has a look of its own.
+        Where its innovations have history's size all the same, it is known what happened: without a season, the season
+        is gone (without memory as well, if the values scatter as history's do around its season; else it is noise,
+        which has a look of its own); around a mean that history's windows do not have, the level shifted.
         """
         y = self.law.on_scale(self.x)
         for rest, seasonal in ((y - self.law.here, True), (y, False)):
             model = burg(rest, max_order=min(OWN_ORDER, self.law.n // 6))
-            paid = self.jacobian - (model.order + 1) * self.free
-            score = gaussian(model.variance, self.n) + paid - self.free
+            e, half = from_the_start(rest, model)
+            total, count = power(e)
+            with np.errstate(divide="ignore", invalid="ignore"):
+                score = gaussian(total / count, self.n) - half + self.jacobian - self._price(model.order + 2.0)
             yield Look("own", np.where(seasonal | (model.order > 0), score, -np.inf), self.none)
-            if not seasonal:
-                score = self.law.likelihood(model.variance, np.ones(len(y)), self.n) + paid
-                varied = (np.nan_to_num(self.shape) != 0).any(axis=1) & (model.order > 0)
-                yield Look("season", np.where(varied, score, -np.inf), np.zeros(len(y)))
+            likely = self.law.likelihood(total, count, self.n) - half + self.jacobian
+            likely = likely - (model.order + 1) * self.free
+            if seasonal:
+                moved = np.asarray(model.mean - self.law.levels.centre)
+                far = np.abs(moved) > FAR * self.law.levels.scatter
+                yield Look("shifted", np.where(far, likely, -np.inf), self.away(slice(None)))
+                continue
+            with np.errstate(divide="ignore", invalid="ignore"):
+                lost = self.law.scatters.surprise(np.log(model.variance), 2 / self.n) + self.free
+            white = gaussian(model.variance, self.n) + self.jacobian - lost
+            score = np.where(model.order > 0, likely, white)
+            varied = (np.nan_to_num(self.shape) != 0).any(axis=1)
+            yield Look("season", np.where(varied, score, -np.inf), np.zeros(len(y)))
 
     def level(self) -> Iterator[Look]:
         """A constant added to all values, or from some step on."""
         step = self.law.response(np.ones(self.x.shape))
-        total, count, beta = _without(self.e, step)
-        score = self.law.likelihood(total, count, self.n) - self.free
-        yield Look("shifted", score + self.jacobian, beta)
-        place, gain, beta = _step_anywhere(self.e, step)
-        total, count = power(self.e)
-        score = self.law.likelihood(total - gain, count, self.n) - 3 * self.free
-        yield Look("shifted", np.where(place > 0, score, -np.inf) + self.jacobian, beta)
+        rest, _ = _without(self.e, step)
+        yield Look("shifted", self._score(rest) - self.free + self.jacobian, self.away(slice(None)))
+        place, rest = _step_anywhere(self.e, step)
+        score = np.where(place > 0, self._score(rest) - 3 * self.free, -np.inf)
+        yield Look("shifted", score + self.jacobian, self.away(slice(None)))
 
     def season(self) -> Look:
         """The season at another strength."""
-        total, count, beta = _without(self.e, self.law.response(self.shape))
-        score = self.law.likelihood(total, count, self.n) - self.free
-        return Look("season", score + self.jacobian, 1 + beta)
+        rest, beta = _without(self.e, self.law.response(self.shape))
+        return Look("season", self._score(rest) - self.free + self.jacobian, 1 + beta)
 
     def _mended(self, name: str, x: Floats, stretch: Floats | float = 0.0, value: Floats | None = None) -> Look:
         """The window mended to ``x``, a map whose log-determinant is ``stretch``."""
@@ -166,25 +192,48 @@ class Looker:
         return np.where(k > 0, k, np.nan)
 
     def _unit_from_some_step(self, k: Floats, paid: Floats) -> Look:
+        """Rows before some step as they came, those from it on divided by ``k``: all steps at once."""
         mended = self.x / k[:, None]
         after = self.law.innovations(mended)
         order = int(self.law.noise.order.max(initial=0))
-        some = np.arange(1, self.law.n - order)  # the first rows after the change have neighbours in the other unit
-        if not len(some):
+        n = self.law.n
+        first = np.arange(FEWEST_ROWS, n - FEWEST_ROWS + 1)
+        if not len(first):
             return Look("unit", np.full(len(self.x), -np.inf), k)
 
-        def joined(before: Floats, later: Floats, skip: int = 0) -> Floats:
+        def joined(before: Floats | Bools, later: Floats | Bools, skip: int = 0) -> Floats:
             before, later = _running(before), _running(later)
-            return np.asarray(before[:, some] + later[:, -1:] - later[:, some + skip])
+            return np.asarray(before[:, first] + later[:, -1:] - later[:, np.minimum(first + skip, n)])
 
         total = joined(self.e**2, after**2, order)
         count = joined(~np.isnan(self.e), ~np.isnan(after), order)
+        for late, e in enumerate(self._across(mended, order)):
+            some = first[first + late < n]
+            here = e[:, some + late]
+            total[:, : len(some)] += np.nan_to_num(here**2)
+            count[:, : len(some)] += ~np.isnan(here)
         stretch = joined(self._slope(self.x), self._slope(mended))
-        later = joined(np.zeros(self.x.shape), ~np.isnan(after), order)
+        later = joined(np.zeros(self.x.shape), self.seen)
         with np.errstate(divide="ignore", invalid="ignore"):
             score = self.law.likelihood(total, count, self.n) + stretch - later * np.log(k)[:, None]
-        score = np.where(count * 2 >= self.n[:, None], score, -np.inf)
-        return Look("unit", np.nan_to_num(score, nan=-np.inf).max(axis=1) - paid - 2 * self.free, k)
+        score = np.where(np.isfinite(score), score, -np.inf)
+        return Look("unit", score.max(axis=1, initial=-np.inf) - paid - 2 * self.free, k)
+
+    def _across(self, mended: Floats, order: int) -> Iterator[Floats]:
+        """Innovations 0, 1, ... rows after a change: the rows before it in the old unit, those since in the new."""
+        mean = self.law.noise.mean[:, None]
+        tail = self.law.rest[:, self.law.rest.shape[1] - order :]
+        old, new = (
+            np.concatenate([tail, self.law.on_scale(x) - self.law.here], axis=1) - mean for x in (self.x, mended)
+        )
+        n = self.law.n
+        for late in range(order):
+            e = new[:, order:].copy()
+            for j in range(1, order + 1):
+                part = (new if j <= late else old)[:, order - j : order - j + n]
+                a = self.law.noise.coefficients[:, j - 1 : j]
+                e -= np.where(a == 0, 0.0, a * part)
+            yield e
 
     def _slope(self, x: Floats) -> Floats:
         """Logarithm of the slope of the judged scale, 0 where it is the unit's own."""
@@ -193,15 +242,14 @@ class Looker:
 
     def clock(self) -> Iterator[Look]:
         """Stamps late or early, in the whole window or from some step on."""
-        length = self.law.profile.shape[1] - self.law.n
-        reach = length // 2
+        reach = self.law.cycle // 2
         choices = np.log(max(2 * reach, 1))
-        still = _running(np.nan_to_num(self.e) ** 2)
+        still = _running(self.e**2)
         for d in (*range(-reach + 1, 0), *range(1, reach + 1)):
             moved = self.law.innovations(self.x, self.law.shifted(d))
             value = np.full(len(self.x), float(d))
             yield Look("slipped", self._score(moved) + self.jacobian - choices, value)
-            later = _running(np.nan_to_num(moved) ** 2)
+            later = _running(moved**2)
             total = (still + later[:, -1:] - later).min(axis=1)
             count = (~np.isnan(self.e)).sum(axis=1).astype(np.float64)
             score = self.law.likelihood(total, count, self.n) - choices - 2 * self.free
@@ -212,7 +260,7 @@ class Looker:
         before = np.concatenate([np.full((len(self.x), 1), np.nan), self.x[:, :-1]], axis=1)
         for weight in WEIGHTS:
             mended = (self.x - (1 - weight) * before) / weight
-            yield self._mended("smoothed", mended, -self.n * np.log(weight) - np.log(len(WEIGHTS)))
+            yield self._mended("smoothed", mended, -self.n * np.log(weight) - self.free - np.log(len(WEIGHTS)))
         y = self.law.on_scale(self.x)
         for width in WIDTHS:
             model = burg(_moving_mean(self.law.rest, width), max_order=SMOOTH_ORDER)
@@ -227,22 +275,31 @@ class Looker:
         rest = self.law.on_scale(self.x) - self.law.here
         model = burg(self.law.rest[:, ::2], max_order=PAIR_ORDER)
         total, count, half = np.zeros(len(rest)), np.zeros(len(rest)), np.zeros(len(rest))
-        middle = []
         for parity in (0, 1):
             part = rest[:, parity::2]
             mean = np.nansum(part, axis=1) / np.maximum((~np.isnan(part)).sum(axis=1), 1)
-            middle.append(mean)
             e, logs = from_the_start(part - mean[:, None] + model.mean[:, None], model)
             some, rows = power(e)
             total, count, half = total + some, count + rows, half + logs
         score = self.law.likelihood(total, count, self.n, model.variance) - half - 2 * self.free
-        return Look("interleaved", score + self.jacobian, middle[1] - middle[0])
+        return Look("interleaved", score + self.jacobian, self.away(slice(1, None, 2)) - self.away(slice(0, None, 2)))
 
-    def noise(self) -> Look:
-        """Independent normal values."""
-        mean = np.where(self.seen, self.x, 0.0).sum(axis=1) / np.maximum(self.n, 1)
-        square = np.where(self.seen, self.x - mean[:, None], 0.0) ** 2
-        return Look("noise", gaussian(square.sum(axis=1) / self.n, self.n) - 2 * self.free, self.none)
+    def noise(self) -> Iterator[Look]:
+        """Independent normal values: of any mean and variance, or of those that history's windows have."""
+        x = self.x
+        rows = np.maximum(self.n, 1.0)
+        mean = np.where(self.seen, x, 0.0).sum(axis=1) / rows
+        variance = (np.where(self.seen, x - mean[:, None], 0.0) ** 2).sum(axis=1) / rows
+        score = gaussian(variance, self.n)
+        other = self._price(np.full(len(x), 2.0)) + self.free  # once more, for not being history's
+        yield Look("noise", score - other, self.none)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            for value, law, error in (
+                (mean, self.law.means, variance / rows),
+                (np.log(variance), self.law.variances, 2 / rows),
+            ):
+                score = score - law.surprise(value, error)
+        yield Look("noise", score, self.none)
 
 
 def _running(x: Floats | Bools) -> Floats:
@@ -250,31 +307,30 @@ def _running(x: Floats | Bools) -> Floats:
     return np.pad(np.cumsum(np.nan_to_num(x), axis=1), ((0, 0), (1, 0)))
 
 
-def _without(e: Floats, g: Floats) -> tuple[Floats, Floats, Floats]:
-    """Least squares of e on g without a constant: what is left, pairs, the coefficient."""
+def _without(e: Floats, g: Floats) -> tuple[Floats, Floats]:
+    """Least squares of e on g without a constant: what is left, shape (S, n), and the coefficient, shape (S,)."""
     told = ~np.isnan(e) & ~np.isnan(g)
-    e, g = np.where(told, e, 0.0), np.where(told, g, 0.0)
+    known, g = np.where(told, e, 0.0), np.where(told, g, 0.0)
     norm = (g * g).sum(axis=1)
-    beta = np.divide((e * g).sum(axis=1), norm, out=np.zeros(len(e)), where=norm > 0)
-    return ((e - beta[:, None] * g) ** 2).sum(axis=1), told.sum(axis=1).astype(np.float64), beta
+    beta = np.divide((known * g).sum(axis=1), norm, out=np.zeros(len(e)), where=norm > 0)
+    return e - beta[:, None] * g, beta
 
 
-def _step_anywhere(e: Floats, step: Floats) -> tuple[Floats, Floats, Floats]:
-    """The step that explains most of the innovations, by its response from its first row on.
+def _step_anywhere(e: Floats, step: Floats) -> tuple[Floats, Floats]:
+    """The step that explains most of the squares, by its response from its first row on.
 
     Returns:
-        Its place, the squares it explains and its height, each (S,).
+        Its place, shape (S,), and what it leaves of the innovations, shape (S, n).
     """
     n = e.shape[1]
-    e = np.nan_to_num(e)
-    spectrum = np.fft.rfft(e, 2 * n, axis=1) * np.conj(np.fft.rfft(step, 2 * n, axis=1))
+    spectrum = np.fft.rfft(np.nan_to_num(e), 2 * n, axis=1) * np.conj(np.fft.rfft(step, 2 * n, axis=1))
     top = np.fft.irfft(spectrum, 2 * n, axis=1)[:, :n]
     norm = np.cumsum(step**2, axis=1)[:, ::-1]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        gain = np.where(norm > 0, top**2 / norm, 0.0)
-        place = np.argmax(gain, axis=1)
-        pick = (np.arange(len(e)), place)
-        return place.astype(np.float64), gain[pick], top[pick] / norm[pick]
+    gain = np.divide(top**2, norm, out=np.zeros(top.shape), where=norm > 0)
+    place = np.argmax(gain, axis=1)
+    since = np.arange(n) - place[:, None]
+    moved = np.where(since >= 0, np.take_along_axis(step, np.maximum(since, 0), axis=1), 0.0)
+    return place.astype(np.float64), _without(e, moved)[0]
 
 
 def _moving_mean(x: Floats, width: int) -> Floats:
