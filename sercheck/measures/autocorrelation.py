@@ -151,10 +151,10 @@ def _against_history(panel: Panel, question: Question, lags: tuple[int, ...]) ->
         f"{panel.window.shape[1]} steps: {need} are needed at a risk of {question.risk:g}",
     )
     reasons.add(past.by_windows & past.thin, "the window has many more gaps than those of history")
-    with np.errstate(divide="ignore"):
+    with np.errstate(divide="ignore", invalid="ignore"):  # no rows, or windows that are all alike
         naive = np.sqrt(1 / past.rows + 1 / past.past_rows)
+        n_eff = np.where(past.by_windows & (past.windows < need), np.nan, n * (naive / past.law.error) ** 2)
     reference = correlation_reference(past.batch, past.law, past.r, naive)
-    n_eff = np.where(past.by_windows & (past.windows < need), np.nan, n * (naive / past.law.error) ** 2)
     cycles = f", cycles of {', '.join(without.seasons)} taken out" if without.seasons else ""
     return _told(past.batch, n_eff, n, n_missing, reference, reasons, lags, cycles)
 

@@ -151,5 +151,6 @@ def longest(history: Floats, past_values: Ranking) -> Floats:
         mark = quantile(past_values.values, held, np.full(held.shape, q))
         model = burg(np.where(np.isnan(history), np.nan, history <= mark))
         # long-run variance over variance of an autoregression in terms of its reflection coefficients
-        tau = np.maximum(tau, np.exp(2 * np.arctanh(model.reflection).sum(axis=1)))
+        with np.errstate(divide="ignore"):  # a share that never forgets: no number of rows would do
+            tau = np.maximum(tau, np.exp(2 * np.arctanh(model.reflection).sum(axis=1)))
     return np.asarray(tau, dtype=np.float64)

@@ -180,7 +180,7 @@ class _Cosines:
 
     @property
     def standard_error(self) -> Floats:
-        return np.asarray(self.bound * np.sqrt(2 / self.count), dtype=np.float64)
+        return np.asarray(self.bound * np.sqrt(2 / max(self.count, 1)), dtype=np.float64)
 
     def p_value(self, side: Side) -> Floats:
         del side

@@ -200,11 +200,13 @@ def _against_history(panel: Panel, question: Question, lags: tuple[int, ...]) ->
         naive_to_unit=same,
     )
     cycles = f", cycles of {', '.join(without.seasons)} taken out" if without.seasons else ""
+    with np.errstate(divide="ignore", invalid="ignore"):  # windows that are all alike have no error
+        n_eff = np.where(count < need, np.nan, n * (naive / error) ** 2)
     return Measurement(
         observed=observed,
         n=n,
         n_missing=n_missing,
-        n_eff=np.where(count < need, np.nan, n * (naive / error) ** 2),
+        n_eff=n_eff,
         upper=reference,
         lower=reference,
         undecided=reasons.index,

@@ -148,7 +148,7 @@ def _chosen(data: Centred, reflection: Floats, weight: Floats, max_order: int | 
         gain = weight * np.log1p(-(reflection**2))
         penalty = n * (n + orders) / (n - orders - 2)
         start = np.where(n > 2, n * n / (n - 2), np.inf)
-    above = np.where(able, np.cumsum(np.where(able, gain, 0.0), axis=1) + penalty, np.inf)
+        above = np.where(able, np.cumsum(np.where(able, gain, 0.0), axis=1) + penalty, np.inf)
     criterion = np.concatenate([start, above], axis=1)
     early = np.arange(width + 1) < np.minimum(min_order, reached)[:, None]
     order = np.argmin(np.where(early, np.inf, criterion), axis=1)
@@ -211,7 +211,8 @@ def impose_autocorrelation(model: Autoregression, lag: int, b: Floats | float) -
     """
     series, width = model.reflection.shape
     reflection = np.zeros((series, max(width, lag)))
-    reflection[:, :width] = model.reflection
+    below_one = np.nextafter(1.0, 0.0)  # a series that is foretold without error leaves no variance to divide by
+    reflection[:, :width] = np.clip(model.reflection, -below_one, below_one)
     before_change = np.prod(1 - reflection**2, axis=1)
     moving = min(lag - 1, int(model.order.max(initial=0)), MOVING)
     if moving:

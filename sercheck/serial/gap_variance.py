@@ -41,7 +41,9 @@ def gapped_variance(rho: Floats, seen: Bools, lag: int) -> Floats:
     wide = np.concatenate([rho, np.zeros((len(rho), reach + lag + 1))], axis=1)
     here, ahead, behind = wide[:, np.abs(d)], wide[:, np.abs(d + lag)], wide[:, np.abs(d - lag)]
     at = rho[:, lag : lag + 1]
-    with np.errstate(invalid="ignore"):  # 0/0 where so short a stretch has no two pairs that far apart: unknown
+    # So short a stretch may have no two pairs that far apart: unknown.
+    all_ss, all_ps, all_pp = (np.where(together > 0.5, together, np.nan) for together in (all_ss, all_ps, all_pp))
+    with np.errstate(invalid="ignore"):
         added = (
             (pp / all_pp / p**2 - 1) * (here**2 + ahead * behind)
             - 4 * at * (ps / all_ps / (p * s) - 1) * here * behind

@@ -229,10 +229,12 @@ def _model_law(past: Lagged, rows: Ints, seen: Bools) -> tuple[Law, Floats]:
     n, N = np.maximum(rows, 1), np.maximum(past.rows, 1)
     error = np.sqrt(kappa * (once / n + ever / N))
     shift = bias * (1 / n - 1 / N)
-    centre = forward(past.r) + shift / g + at / g**2 * (once / n - ever / N)
+    with np.errstate(divide="ignore", invalid="ignore"):  # a series that is foretold without error has no law
+        centre = forward(past.r) + shift / g + at / g**2 * (once / n - ever / N)
+        error_forward = error / g
     gaps = np.logical_not(seen.all(axis=1) & past.seen.all(axis=1))[:, np.newaxis]
     plain = past.r + shift
-    return Law(centre, error / g, np.full(shape, np.inf), plain, error, np.broadcast_to(gaps, shape)), kappa
+    return Law(centre, error_forward, np.full(shape, np.inf), plain, error, np.broadcast_to(gaps, shape)), kappa
 
 
 def _in_windows(history: Floats, length: int, lags: Ints, rows: Ints) -> tuple[Floats, Floats]:

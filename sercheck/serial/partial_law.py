@@ -125,7 +125,8 @@ def partial_expansion(model: Autoregression, lag: int, b: float) -> tuple[Floats
     """
     series, width = model.reflection.shape
     reflection = np.zeros((series, max(width, lag)))
-    reflection[:, :width] = model.reflection
+    below_one = np.nextafter(1.0, 0.0)  # a series that is foretold without error leaves no variance to divide by
+    reflection[:, :width] = np.clip(model.reflection, -below_one, below_one)
     reflection[:, lag - 1] = b
     order = np.maximum(model.order, lag)
     phi = step_up(reflection[:, :lag])
