@@ -120,6 +120,7 @@ class Panel:
         after: what ``after`` did, as the record tells it.
         unable: why a transform of ``after`` could not be carried out (every answer is then undecided), or empty.
         notes: what a transform had to leave out, for the reader.
+        beside: panels of the further value columns that the rule names, cut and transformed alike.
         shared: memo for what several measures need from the same arrays (autocovariances, models).
     """
 
@@ -132,6 +133,7 @@ class Panel:
     after: str = ""
     unable: str = ""
     notes: tuple[str, ...] = ()
+    beside: Mapping[str, Panel] = field(default_factory=dict, compare=False, repr=False)
     shared: dict[object, object] = field(default_factory=dict, compare=False, repr=False)
 
     @property

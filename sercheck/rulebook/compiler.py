@@ -267,6 +267,7 @@ class Compiler:
             "after": self._after(data, path, measure),
             "fields": self._fields(data, path, rule.measure, measure),
         }
+        self._set_apart(rule, path, get(rule.measure), compiled)
         self._check_series(rule, path)
         self._check_weight(rule, path, measure, keys)
         return (rule, measure, compiled) if len(self.mistakes.found) == before else None
@@ -322,6 +323,17 @@ class Compiler:
         other = given.get("with")
         if isinstance(other, str) and self.columns and other not in self.columns.values:
             self.mistakes.unknown((*path, "with"), "value column", other, self.columns.values)
+
+    def _set_apart(self, rule: RuleKeys, path: Path, measure: Measure, compiled: dict[str, Any]) -> None:
+        """A column that the measure's fields name is compared with the others, never with itself."""
+        others = measure.beside(compiled["fields"]) if compiled["fields"] else ()
+        for name in set(others) & set(rule.of or ()):
+            came = f"the value column '{name}' against itself"
+            self.mistakes.add((*path, "of"), came, f"columns of which '{name}' is none")
+        compiled["columns"] = tuple(name for name in compiled["columns"] if name not in others)
+        if others and not rule.of and self.columns and self.columns.values and not compiled["columns"]:
+            came = f"the measure {rule.measure} in a feed whose only value column is '{others[0]}'"
+            self.mistakes.add((*path, "measure"), came, "another column under 'columns: values' to compare it with")
 
     def _check_series(self, rule: RuleKeys, path: Path) -> None:
         if rule.only and self.columns and not self.columns.series:
