@@ -79,4 +79,5 @@ def _sentence(
     if seen.exact:
         return f"{name} is {value}, {side} the bound {number(bound, integer=seen.integer)}"
     sizes = f"{n} rows" if math.isnan(n_eff) else f"{n} rows that count for {number(n_eff)}"
-    return f"{name} is {value}, {side} the limit {number(limit)} ({from_history}bound {number(bound)}, {sizes})"
+    edge = "a limit beyond all that could be seen" if math.isnan(limit) else f"the limit {number(limit)}"
+    return f"{name} is {value}, {side} {edge} ({from_history}bound {number(bound)}, {sizes})"

@@ -60,7 +60,7 @@ class Pivot:
     naive_to_unit: Callable[[Floats], Floats] | None = None
 
     def p_value(self, side: Side) -> Floats:
-        with np.errstate(divide="ignore", invalid="ignore"):  # undecided cells may have no scale
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):  # there may be no scale, or next to none
             t = (self.statistic - self.centre) / self.scale
         return t_tail(t if side == "upper" else -t, self.df)
 
