@@ -6,7 +6,7 @@ Depends on ``intake`` and ``store.archive``.
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -28,6 +28,8 @@ if TYPE_CHECKING:
 
 BLOCK_ROWS = 4_000_000
 """Rows of a block, about (ours: some 80 MB of compact columns; sixteen weeks of hours of 1,500 series)."""
+SILENT = 366 * DAY
+"""Silence of a feed after which a batch is rather stamped with a wrong year (ours)."""
 OPEN_DAYS = 92
 """Days whose files are written at a time (ours: a quarter; a process may usually open 1,024 files)."""
 
@@ -169,7 +171,30 @@ def archived(
     if source.streams:
         return source
     rows = source.rows()
-    return MemorySource(rows, layout) if len(rows) else None
+    return Remembered(rows, layout) if len(rows) else None
+
+
+class Remembered(Source):
+    """History of a feed in memory. A batch may come long after it: a feed may have been silent, or held."""
+
+    def __init__(self, rows: Rows, layout: Layout, paths: tuple[str, ...] = ()) -> None:
+        self._inner, self.layout, self.paths = MemorySource(rows, layout), layout, paths
+
+    @property
+    def fingerprint(self) -> str:
+        return self._inner.fingerprint
+
+    def sample(self) -> Ints:
+        return self._inner.sample()
+
+    def extent(self, cadence: Cadence) -> Extent:
+        return replace(self._inner.extent(cadence), reach=SILENT)
+
+    def blocks(self) -> Iterator[Rows]:
+        return self._inner.blocks()
+
+    def rows(self) -> Rows:
+        return self._inner.rows()
 
 
 @dataclass(frozen=True)
@@ -240,9 +265,10 @@ class ArchiveSource(Source):
         some = next(self.blocks())
         own = extent(some, cadence)
         if cadence.irregular or cadence.index_of(np.array([first, last]))[1].all():
-            return Extent(first, last, low, high, own.per_series)
+            return Extent(first, last, low, high, own.per_series, SILENT)
         parts = [span(rows.stamps, cadence, low, high, own.per_series) for rows in self.blocks()]
-        return Extent(min(p.first for p in parts), max(p.last for p in parts), low, high, own.per_series)
+        ends = min(part.first for part in parts), max(part.last for part in parts)
+        return Extent(*ends, low, high, own.per_series, SILENT)
 
     def blocks(self) -> Iterator[Rows]:
         whole = Fingerprint(self.layout.values)

@@ -14,14 +14,14 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from sercheck.archived import archived, keep
+from sercheck.archived import SILENT, Remembered, archived, keep
 from sercheck.errors import BatchError
 from sercheck.grid import Grid
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.layout import Layout
 from sercheck.intake.since import both, compact, cut
-from sercheck.intake.stream import MemorySource, Source, open_feed
-from sercheck.intake.stretch import NEAREST_FENCE, Extent
+from sercheck.intake.stream import Source, open_feed
+from sercheck.intake.stretch import Extent
 from sercheck.intake.zone import DAY, EARLIEST, NOT_A_STAMP
 from sercheck.record import utc_text
 from sercheck.rulebook.compiled import Rulebook
@@ -48,8 +48,6 @@ are learned of."""
 LEFT = 0.5
 """Share of a stretch that must have been let in for it to teach: with less, what was learned before stays."""
 SECOND = 1_000_000_000
-SILENT = 366 * DAY
-"""Silence after which a batch is rather stamped with a wrong year (ours)."""
 
 
 @dataclass(frozen=True)
@@ -176,9 +174,9 @@ def _remembered(memory: Memory, cadence: Cadence, extent: Extent, since: int | N
             f"{known.first_stamp} to {known.last_stamp} is kept"
         )
     source = _joined(memory, memory.archived(first, extent.first), first)
-    far = _far(memory.log, source, extent, cadence)
-    if far or source is None:
-        return Past(None, notes=(*notes, *far))
+    _not_another_year(memory.log, extent)
+    if source is None:
+        return Past(None, notes=tuple(notes))
     age = None if known is None else extent.first - _stamp(known.last_stamp)
     refresh = round(seconds(book.baseline.get("refresh", REFRESH)) * SECOND)
     if known is None or (age is not None and age > refresh and not locked):
@@ -192,27 +190,22 @@ def _remembered(memory: Memory, cadence: Cadence, extent: Extent, since: int | N
     return Past(source, known, _held(memory), tuple(notes))
 
 
-def _far(log: Log, source: Source | None, extent: Extent, cadence: Cadence) -> tuple[str, ...]:
-    """A note where the newest row before the batch is too old to be compared with it: a feed that was silent.
+def _not_another_year(log: Log, extent: Extent) -> None:
+    """Refuse a batch that begins more than a year after the newest row let in, and longer after it than all that was
+    ever let in is long.
 
     Raises:
-        BatchError: it is a year older and more, and older than all that was ever let in is long.
+        BatchError: it does.
     """
     before = [entry for entry in log.history if entry.first < extent.first]
     if not before:
-        return ()
+        return
     newest = min(max(entry.last for entry in before), extent.first)
-    gap, span = extent.first - newest, newest - min(entry.first for entry in before)
-    if gap > max(SILENT, span):
+    if extent.first - newest > max(SILENT, newest - min(entry.first for entry in before)):
         raise BatchError(
             "the batch", f"it begins {_text(extent.first)}, the newest row let in before it is of {_text(newest)}",
             "at most a year between", "Is the year right? A feed that was silent so long begins in a new store.",
         )  # fmt: skip
-    told = None if source is None else source.extent(cadence.anchored(source.sample()))
-    reach = NEAREST_FENCE * cadence.step if told is None else max(NEAREST_FENCE * cadence.step, told.last - told.first)
-    if cadence.irregular or (told is not None and extent.first - told.last <= reach):
-        return ()
-    return (f"nothing was compared: the newest row let in before is of {_text(newest)}",)
 
 
 def _joined(memory: Memory, kept: Source | None, first: int) -> Source | None:
@@ -229,7 +222,7 @@ def _joined(memory: Memory, kept: Source | None, first: int) -> Source | None:
         return older or kept
     rows = older.rows()
     early = compact(rows.take((rows.stamps < begins) & (rows.stamps != NOT_A_STAMP)))
-    return MemorySource(both(early, kept.rows()), layout, older.paths) if len(early) else kept
+    return Remembered(both(early, kept.rows()), layout, older.paths) if len(early) else kept
 
 
 def _mostly_left_out(log: Log, first: int, before: int) -> bool:

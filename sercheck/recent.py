@@ -49,15 +49,19 @@ ASSUMES = "the batch is to the week before it as the last batches were to theirs
 def enough(panel: Panel) -> Bools:
     """Series whose history holds enough stretches of the window's length, shape (S,).
 
-    A window shorter than the feed's shortest cycle is not compared in this way: its forerunners lie at other places of
-    the cycle.
+    Sixteen of the last ninety must have half of their values: a feed that was silent or held for months has a history
+    and no recent past. A window shorter than the feed's shortest cycle is not compared in this way: its forerunners lie
+    at other places of the cycle.
     """
     n = panel.values.shape[1] - panel.start
     if not panel.start or n < min(panel.axis.lengths.values(), default=1) or not n:
         return np.zeros(len(panel.values), dtype=bool)
     fewest = FEWEST_WEEKS if n <= 7 else FEWEST
-    known = (~np.isnan(panel.history)).sum(axis=1)
-    return np.asarray((known >= n * fewest // 2) & (panel.start // n >= fewest))
+    seen = ~np.isnan(panel.history)
+    batches = min(BATCHES, panel.start // n)
+    near = seen[:, panel.start - batches * n :].reshape(len(seen), batches, n).sum(axis=2)
+    alive = (2 * near >= n).sum(axis=1) >= FEWEST_TOLD
+    return np.asarray((seen.sum(axis=1) >= n * fewest // 2) & alive & (panel.start // n >= fewest))
 
 
 def has_profile(panel: Panel) -> bool:

@@ -36,6 +36,7 @@ class Extent:
         low: stamps before are wild.
         high: stamps after are wild.
         per_series: rows of a series, on average.
+        reach: nanoseconds within which a batch may lie from this history where that is more than the history is long.
     """
 
     first: int
@@ -43,6 +44,7 @@ class Extent:
     low: int
     high: int
     per_series: float
+    reach: int = 0
 
 
 def fences(stamps: Ints, step: int) -> tuple[int, int]:
@@ -130,7 +132,7 @@ def plan(batch: Extent, history: Extent | None, cadence: Cadence, layout: Layout
     first = begin
     if history is not None and (need_steps is None or need_steps > 0):
         first, last = (_index(cadence, stamp) for stamp in (history.first, history.last))
-        _near(begin, end, first, last, cadence)
+        _near(begin, end, first, last, cadence, history.reach)
         first = min(begin, first if need_steps is None else max(first, begin - need_steps))
         _not_too_thin("the history", begin - first, history.per_series, cadence)
     return Plan(cadence, build_axis(cadence, layout, first, end), begin - first, batch.low, batch.high)
@@ -178,9 +180,9 @@ def _not_too_thin(what: str, steps: int, rows: float, cadence: Cadence) -> None:
         )  # fmt: skip
 
 
-def _near(begin: int, end: int, first: int, last: int, cadence: Cadence) -> None:
+def _near(begin: int, end: int, first: int, last: int, cadence: Cadence, granted: int) -> None:
     """Refuse a batch farther from its history than that is long: no rule could look at the two together."""
-    reach = max(NEAREST_FENCE, last - first + 1)
+    reach = max(NEAREST_FENCE, last - first + 1, granted // cadence.step)
     gap = max(begin - last, first - end)
     if gap > reach:
         raise BatchError(
