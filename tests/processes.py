@@ -39,8 +39,20 @@ def autoregressive(seed, series, steps, phi, warm=400):
     for t in range(len(coefficients), steps + warm):
         x[:, t] = noise[:, t]
         for j, a in enumerate(coefficients, start=1):
-            x[:, t] += a * x[:, t - j]
+            if a:
+                x[:, t] += a * x[:, t - j]
     return x[:, warm:]
+
+
+def garch(seed, series, steps, phi=0.6, warm=400):
+    """AR(1) whose innovations have variance 1 on average, σ_t² = .05 + .15 e_{t-1}² + .8 σ_{t-1}² (GARCH)."""
+    shocks = np.random.default_rng(seed).normal(size=(steps + warm, series))
+    x, variance = np.zeros_like(shocks), np.ones(series)
+    for t in range(1, steps + warm):
+        shocks[t] *= np.sqrt(variance)
+        variance = 0.05 + 0.15 * shocks[t] ** 2 + 0.8 * variance
+        x[t] = phi * x[t - 1] + shocks[t]
+    return x[warm:].T
 
 
 def make(kind, seed, series, steps):
@@ -53,6 +65,10 @@ def make(kind, seed, series, steps):
     if kind == "ma":
         noise = seeded.normal(size=(series, steps + 1))
         return noise[:, 1:] + 0.6 * noise[:, :-1]
+    if kind == "garch":
+        return garch(seed, series, steps)
+    if kind == "seasonal_ar":  # (1 - .4 B)(1 - .6 B^24) x = e, multiplied out
+        return autoregressive(seed, series, steps, [0.4, *[0.0] * 22, 0.6, -0.24], warm=960)
     if kind == "t3":
         return seeded.standard_t(3, size=(series, steps))
     if kind == "lognormal":

@@ -1,0 +1,221 @@
+"""False-alarm rates through the public path: ``python -m tests.calibration`` prints how often healthy batches fail.
+
+A panel of simulated series in which nothing is wrong goes through ``sercheck.gate``, each series judged by itself:
+what fails is a false alarm. Bounds are the process's true values, so that the null hypothesis holds exactly. Depends
+on ``processes``, ``cells`` and sercheck's public functions only.
+"""
+
+from __future__ import annotations
+
+import argparse
+import sys
+import zlib
+from collections.abc import Collection, Iterable, Iterator
+from copy import deepcopy
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+import yaml
+from scipy import special, stats
+
+import sercheck
+
+if __package__:  # python -m tests.calibration
+    from tests.cells import DAY, LIKE, LONG, PAST, PROCESSES, RISKS, SHORT, Group
+    from tests.processes import make
+else:
+    from cells import DAY, LIKE, LONG, PAST, PROCESSES, RISKS, SHORT, Group
+    from processes import make
+
+BLOCK = 2_000_000
+"""Values simulated at a time, about."""
+CHANCE = 0.999
+MARKS = """
+Rates are of records with a p-value. MISSES: above the target by more than chance makes in 999 of 1000 runs; above: less
+than that; careful: below what is asked at least; none: nothing judged; no mark: no target."""
+
+
+def rules_of(
+    group: Group, risks: Iterable[float], measures: Collection[str] = ()
+) -> tuple[str, dict[str, tuple[str, str, float]]]:
+    """The rule file of a group as YAML, and for each rule's name its question, form (with its side) and risk."""
+    process = PROCESSES[group.process]
+    rules, told = [], {}
+    for name, question in group.questions.items():
+        keys = question.rule(process)
+        for form in question.forms:
+            wanted = not measures or keys["measure"] in measures
+            if not wanted or form not in group.forms or not question.fits(process, form, group.n):
+                continue
+            stays: dict[str, dict[str, object]] = {LIKE: {"like": "history"}}
+            if form != LIKE:
+                bound = float(question.truth(process, form))
+                stays = {f"below {form}": {"below": bound}, f"above {form}": {"above": bound}}
+                if "lag" in keys and process.season == "fixed":
+                    keys = keys | {"after": {"without_season": "day"}}
+            for label, bounds in stays.items():
+                for risk in risks:
+                    rule = f"{name}, {label}, {risk}"
+                    told[rule] = (name, label, risk)
+                    asked = {"name": rule, **keys, "stays": bounds, "false_alarm": risk, "across": "series"}
+                    rules.append(deepcopy(asked))  # the same object twice would be written as an alias
+    seasons = {"seasons": {"day": DAY}} if process.season else {}
+    columns = {"time": "at", "series": "key", "values": ["x"]}
+    book = {"feed": "simulated", "columns": columns, "every": "1h", **seasons, "rules": rules}
+    return yaml.safe_dump(book, sort_keys=False), told
+
+
+def frame(values: np.ndarray, start: np.datetime64) -> pd.DataFrame:
+    """Rows of hourly series, sorted by key."""
+    series, steps = values.shape
+    stamps = start + np.arange(steps) * np.timedelta64(1, "h")
+    return pd.DataFrame({
+        "at": np.tile(stamps, series), "key": np.repeat(np.arange(series), steps), "x": values.ravel()
+    })  # fmt: skip
+
+
+def gated(text: str, values: np.ndarray, start: int) -> pd.DataFrame:
+    """Records of the steps from ``start`` on, those before being history."""
+    first = np.datetime64("2026-01-05T00", "ns")
+    batch = frame(values[:, start:], first + start * np.timedelta64(1, "h"))
+    history = frame(values[:, :start], first) if start else None
+    return sercheck.gate(sercheck.load_rules(text), batch, history, keep=False).records
+
+
+def count(group: Group, risks: Iterable[float], replications: int, measures: Collection[str] = (), seed: int = 1):
+    """Counts of the group's cells, one row for each question, form and risk.
+
+    A record is judged where it has a p-value: a pass that says little is undecided and still no false alarm, and left
+    out it would make the failures look frequent. Naive is an observation at the limit for independent rows or beyond.
+    """
+    text, told = rules_of(group, risks, measures)
+    if not told:
+        return pd.DataFrame()
+    steps = group.n * (group.windows + 1)
+    size = min(max(BLOCK // steps, 50), replications)
+    total: pd.DataFrame | None = None
+    for block, first in enumerate(range(0, replications, size)):
+        key = [seed, zlib.crc32(group.process.encode()), group.n, group.windows, block]
+        series = min(size, replications - first)
+        records = gated(text, make(PROCESSES[group.process].kind, key, series, steps), group.n * group.windows)
+        numbers = {name: records[name].astype(float) for name in ("observed", "bound", "naive_limit", "n_eff")}
+        judged = records["p_value"].notna()
+        side = np.sign(numbers["naive_limit"] - numbers["bound"])
+        beyond = side * (numbers["observed"] - numbers["naive_limit"]) >= 0
+        counts = pd.DataFrame({
+            "rule": records["rule"].astype(str),
+            "records": 1,
+            "judged": judged,
+            "failed": records["outcome"] == "fail",
+            "compared": judged & numbers["naive_limit"].notna(),
+            "naive": judged & beyond,
+            "undecided": records["outcome"] == "undecided",
+            "sized": numbers["n_eff"].notna(),
+            "n_eff": numbers["n_eff"].fillna(0.0),
+        })  # fmt: skip
+        sums = counts.astype(dict.fromkeys(counts.columns[1:], float)).groupby("rule", sort=False).sum()
+        total = sums if total is None else total + sums
+    assert total is not None
+    names = pd.DataFrame([told[rule] for rule in total.index], columns=["question", "asked", "risk"])
+    where = {"process": group.process, "n": group.n, "windows": group.windows}
+    return pd.concat([names.assign(**where), total.reset_index(drop=True)], axis=1)
+
+
+def rated(counts: pd.DataFrame) -> pd.DataFrame:
+    """Counts with rates, their exact 95 % intervals (Clopper and Pearson 1934), targets and how they compare."""
+    table = counts.copy()
+    with np.errstate(divide="ignore", invalid="ignore"):
+        table["rate"] = table["failed"] / table["judged"]
+        table["naive_rate"] = table["naive"] / table["compared"]
+        table["mean_n_eff"] = table["n_eff"] / table["sized"]
+    table["undecided"] /= table["records"]
+    failed, judged = table["failed"].to_numpy(), table["judged"].to_numpy()
+    low = special.betaincinv(np.maximum(failed, 0.5), judged - failed + 1, 0.025)
+    high = special.betaincinv(failed + 1, np.maximum(judged - failed, 0.5), 0.975)
+    table["low"], table["high"] = np.where(failed > 0, low, 0.0), np.where(failed < judged, high, 1.0)
+    targets = [_target(row) for row in table.itertuples()]
+    table["least"], table["most"] = zip(*targets, strict=True) if targets else ((), ())
+    marks = {
+        "none": judged == 0,
+        "": table["most"].isna(),
+        "MISSES": too_many(table),
+        "above": table["rate"] > table["most"],
+        "careful": table["high"] < table["least"],
+    }
+    table["mark"] = np.select(list(marks.values()), list(marks), "ok")
+    return table
+
+
+def too_many(table: pd.DataFrame, what: str = "failed", out_of: str = "judged") -> np.ndarray:
+    """Cells whose count is larger than what chance makes of the target in 999 of 1000 runs (exact binomial)."""
+    most = stats.binom.ppf(CHANCE, table[out_of].to_numpy(), table["most"].to_numpy())
+    return np.asarray(table[what].to_numpy() > most)
+
+
+def _target(row) -> tuple[float, float]:
+    """Smallest and largest rate that count as healthy; NaN where none is demanded."""
+    question = Group(row.process, row.n, row.windows).questions[row.question]
+    form = row.asked.removeprefix("below ").removeprefix("above ")
+    times, fewest = question.target.get(form, ({}, 0))
+    if row.n < fewest or row.risk not in times:
+        return np.nan, np.nan
+    if times is LONG[0] and row.windows < 20:
+        times = SHORT[0]
+    least = question.least.get(row.risk, 0.0) if times is LONG[0] else 0.0
+    return least * row.risk, times[row.risk] * row.risk
+
+
+def as_text(table: pd.DataFrame) -> str:
+    """The table for people: a line for each cell, the risks side by side, each with the naive rate behind it."""
+    risks = sorted(table["risk"].unique(), reverse=True)
+    head = f"{'process':<22}{'question':<27}{'asked':<24}{'n':>4}{'past':>5}{'undecided':>10}{'n_eff':>6}"
+    lines = [head + "".join(f"   {f'rate at {risk:g} (95 %)':<23}{'naive':>6}{'':8}" for risk in risks).rstrip()]
+    for keys, cell in table.groupby(["process", "question", "asked", "n", "windows"], sort=False):
+        process, question, asked, n, past = keys
+        line = f"{process:<22}{question:<27}{asked:<24}{n:>4}{past:>5}"
+        line += f"{cell['undecided'].max():>10.3f}{cell['mean_n_eff'].iloc[0]:>6.0f}"
+        by_risk = cell.set_index("risk")
+        for risk in risks:
+            row = by_risk.loc[risk]
+            rate = f"{row['rate']:.4f} ({row['low']:.4f}-{row['high']:.4f})"
+            line += f"   {rate:<23}{row['naive_rate']:>6.4f} {row['mark']:<7}"
+        lines.append(line.replace("nan", "  -").rstrip())
+    return "\n".join([*lines, MARKS])
+
+
+def groups(processes: Iterable[str] = (), rows: Iterable[int] = ()) -> Iterator[Group]:
+    """The groups of the long run."""
+    for process in processes or PROCESSES:
+        for n in rows or (168, 336):
+            if n != DAY:
+                yield Group(process, n, 0)
+                yield Group(process, n, 20)
+        if PROCESSES[process].season == "fixed" and (not rows or DAY in rows):
+            yield Group(process, DAY, PAST)
+
+
+def main(arguments: list[str] | None = None) -> int:
+    """Print the table; 1 when a cell misses its target."""
+    reader = argparse.ArgumentParser(prog="python -m tests.calibration", description=str(__doc__).split("\n\n")[0])
+    reader.add_argument("--measure", nargs="*", default=(), help="only these measures")
+    reader.add_argument("--replications", type=int, default=2000, help="series of a cell (20000 for a risk of .001)")
+    reader.add_argument("--processes", nargs="*", default=(), choices=list(PROCESSES), help="only these processes")
+    reader.add_argument("--n", nargs="*", type=int, default=(), help="rows of a window (24: a day against ninety)")
+    reader.add_argument("--seed", type=int, default=1)
+    reader.add_argument("--out", type=Path, help="write the table as Parquet too")
+    asked = reader.parse_args(arguments)
+    parts = []
+    for group in groups(asked.processes, asked.n):
+        print(f"{group.process}, {group.n} rows, {group.windows} windows of history", file=sys.stderr)
+        parts.append(count(group, RISKS, asked.replications, asked.measure, asked.seed))
+    counts = pd.concat([part for part in parts if len(part)], ignore_index=True)
+    table = rated(counts)
+    print(as_text(table))
+    if asked.out:
+        table.to_parquet(asked.out)
+    return int((table["mark"] == "MISSES").any())
+
+
+if __name__ == "__main__":
+    sys.exit(main())

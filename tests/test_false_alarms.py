@@ -1,0 +1,146 @@
+"""How often healthy batches fail at the gate: the small seeded version of ``python -m tests.calibration``."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+import numpy as np
+import pandas as pd
+import pytest
+from calibration import RISKS, as_text, count, groups, rated, too_many
+from cells import ALONE, DAY, LIKE, PAST, Group
+
+from sercheck.reference import Pivot
+from sercheck.serial import rates
+from sercheck.serial.risk import t_tail
+
+MEASURES = ("level", "autocorrelation", "seasonal_lag", "spread", "rate")
+PROCESSES = ("white", "AR .6", "AR .9", "MA(1)", "profile + AR .6")
+WINDOWS = 12
+SERIES = 300
+FIVE_AND_ONE = RISKS[:2]
+
+NAIVE = {
+    "level": ("AR .6", "AR .9", "profile + AR .6"),
+    "spread": ("AR .9",),
+    "rate": ("AR .9",),
+    "autocorrelation 6": ("AR .9",),
+    "seasonal_lag": ("AR .9",),
+    "seasonal_lag, amplitude": ("profile + AR .6",),
+}
+"""Where limits for independent rows fail: variances that memory widens. (At lag 1 they are too wide rather.)"""
+
+SELECTED = [("spread", ALONE, "AR .9")]
+"""Cells that are nearly always undecided because the window shows strong memory, which the few that are not hide: their
+failures are held against all records."""
+
+
+def judged(some: Iterable[Group], risks: Iterable[float], series: int, measures: Iterable[str] = ()) -> pd.DataFrame:
+    """The table of these groups."""
+    counts = pd.concat([count(group, risks, series, tuple(measures)) for group in some], ignore_index=True)
+    cells = rated(counts)
+    form = cells["asked"].str.replace("^(below|above) ", "", regex=True)
+    known = pd.Series(list(zip(cells["question"], form, cells["process"], strict=True)))
+    return cells.assign(selected=known.isin(SELECTED))
+
+
+@pytest.fixture(scope="module")
+def table() -> pd.DataFrame:
+    """Every cell with its rates and the naive ones."""
+    some = [Group(process, n, past) for process in PROCESSES for n in (168, 336) for past in (0, WINDOWS)]
+    return judged(some, FIVE_AND_ONE, SERIES, MEASURES)
+
+
+def told(cells: pd.DataFrame) -> str:
+    """Cells as a message."""
+    return "\n" + as_text(cells)
+
+
+def test_healthy_batches_fail_no_more_often_than_asked(table):
+    """No cell fails more often than its target and chance allow, and hardly any record is left undecided."""
+    print(told(table))
+    asked = table[table["most"].notna() & ~table["selected"]]
+    assert len(asked) > 400
+    assert not too_many(asked).any(), told(asked[too_many(asked)])
+    share = asked["judged"] / asked["records"]
+    assert (share > 0.95).all(), told(asked[share <= 0.95])
+
+
+def test_the_rates_hold_over_all_processes_together(table):
+    """Summed over processes and lengths, chance allows little beyond the target; and no rule is merely deaf."""
+    asked = table[table["most"].notna() & ~table["selected"]]
+    keys = ["question", "asked", "risk"]
+    pooled = asked.groupby(keys, sort=False)[["failed", "judged", "most"]].agg(
+        {"failed": "sum", "judged": "sum", "most": "max"}
+    )
+    assert not too_many(pooled).any(), str(pooled[too_many(pooled)])
+    pooled = pooled[pooled.index.get_level_values("risk") == 0.05]
+    rate = pooled["failed"] / pooled["judged"]
+    careful = pooled.index.get_level_values("question") == "rate"  # careful by design
+    assert (rate[~careful] > 0.02).all(), str(rate)
+    assert (rate[careful] > 0.005).all(), str(rate)
+
+
+def test_selected_cells_are_undecided_and_hardly_ever_fail(table):
+    """Where the window shows memory too strong for the question, the answer is undecided, and seldom a false alarm."""
+    cells = table[table["selected"]]
+    assert len(cells) == 4
+    assert (cells["undecided"] > 0.95).all()
+    assert not too_many(cells, out_of="records").any(), told(cells)
+
+
+def breaks(cells: pd.DataFrame) -> pd.DataFrame:
+    """The cells in which the limits for independent rows are known to be too narrow."""
+    known = [cells["question"].eq(question) & cells["process"].isin(where) for question, where in NAIVE.items()]
+    # memory scatters a correlation, and its bias takes it downwards: too low is found too often, too high less
+    narrow = ~(cells["question"].isin(["autocorrelation 6", "seasonal_lag"]) & cells["asked"].str.startswith("below"))
+    return cells[np.any(known, axis=0) & narrow & cells["most"].notna() & ~cells["selected"]]
+
+
+def test_limits_for_independent_rows_would_fail(table):
+    """Where rows depend on each other, the naive limits are broken by far more healthy batches than asked."""
+    cells = breaks(table)
+    assert set(cells["question"]) == set(NAIVE)
+    enough = too_many(cells, "naive", "compared")
+    assert enough.all(), told(cells[~enough])
+
+
+def test_a_method_swapped_for_its_naive_form_is_noticed(monkeypatch):
+    """With the judgement of independent rows in place of the measures' own, the table shows misses."""
+    own = Pivot.p_value
+
+    def naive(pivot: Pivot, side):
+        if pivot.naive_scale is None:
+            return own(pivot, side)
+        plain = pivot.naive_to_unit is not None  # limits on the scale of what is observed
+        at = pivot.to_unit(pivot.statistic) if plain else pivot.statistic
+        centre = pivot.centre if pivot.naive_centre is None else pivot.naive_centre
+        t = (at - centre) / pivot.naive_scale
+        return t_tail(t if side == "upper" else -t, np.inf)
+
+    monkeypatch.setattr(Pivot, "p_value", naive)
+    monkeypatch.setattr(rates, "cluster_size", lambda marks, **_: np.ones(len(marks)))
+    some = [Group("AR .9", 168, WINDOWS), Group("AR .9", 336, 0), Group("profile + AR .6", 168, WINDOWS)]
+    cells = breaks(judged(some, FIVE_AND_ONE, SERIES, MEASURES))
+    missed = too_many(cells)
+    assert set(cells["question"][missed]) == set(NAIVE), told(cells[~missed])
+    assert missed.mean() > 0.9, told(cells[~missed])  # a rate without history has a second guard
+
+
+def test_a_day_against_ninety_fails_no_more_often_than_asked():
+    """A day's batch is compared with the days before it, and healthy ones seldom fail."""
+    cells = judged([Group("profile + AR .6", DAY, PAST)], FIVE_AND_ONE, SERIES)
+    print(told(cells))
+    assert set(cells["asked"]) == {LIKE}
+    assert (cells["judged"] / cells["records"] > 0.95).all()
+    assert not too_many(cells).any(), told(cells[too_many(cells)])
+
+
+@pytest.mark.calibration
+@pytest.mark.parametrize("group", [pytest.param(group, id=str(group)) for group in groups()])
+def test_calibration(group):
+    """20,000 healthy batches of each process, down to a risk of .001."""
+    cells = judged([group], RISKS, 20_000)
+    print(told(cells))
+    wrong = too_many(cells) & ~cells["selected"]
+    assert not wrong.any(), told(cells[wrong])
