@@ -61,9 +61,10 @@ def facts_of(grid: Grid, column: str, rules: Sequence[Rule]) -> Facts:
     """The facts of one column of a block of history.
 
     A broken day (see ``robust_phase_means``) teaches nothing, and a change of level is taken out before days are called
-    broken, so that neither bends moments, model and autocorrelations.
+    broken, so that neither bends moments, model and autocorrelations. Closed days teach nothing and miss nothing.
     """
-    axis, values = grid.axis, grid.values[column]
+    axis = grid.axis
+    values = np.where(axis.closed, np.nan, grid.values[column])
     T = values.shape[1]
     panel = Panel(values, T, axis, grid.delivered, column)
     told = residual(panel)
@@ -80,7 +81,7 @@ def facts_of(grid: Grid, column: str, rules: Sequence[Rule]) -> Facts:
     broken, broken_at, _ = _runs(~kept & ~np.isnan(values))
     numbers = {
         "n": kept.sum(axis=1).astype(np.float64),
-        "n_missing": np.isnan(values).sum(axis=1).astype(np.float64),
+        "n_missing": (np.isnan(values) & ~axis.closed).sum(axis=1).astype(np.float64),
         **moments,
         "season_share": _share(rest, moments["deviation"]),
         "log_unit": log_unit(clean, told.profile) if told.seasons else np.full(len(values), np.nan),
@@ -117,7 +118,7 @@ def _per_day(axis: Axis) -> int:
 def _due(grid: Grid) -> Bools:
     """Steps at which a row of the series was due: from its first row on, the days it rests left out."""
     first = np.where(grid.delivered.any(axis=1), grid.delivered.argmax(axis=1), grid.delivered.shape[1])
-    return np.asarray(grid.axis.expected & (np.arange(grid.delivered.shape[1]) >= first[:, None]))
+    return np.asarray(grid.axis.expected & ~grid.axis.closed & (np.arange(grid.delivered.shape[1]) >= first[:, None]))
 
 
 def _runs(marks: Bools) -> tuple[Floats, Ints, Floats]:

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import io
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -204,7 +204,7 @@ class _Trial:
     def __init__(self, book: Rulebook, layout: Layout, cadence: Cadence, grid: Grid, n: int) -> None:
         self._cadence = cadence
         self._run = Run(book, cadence, int(grid.axis.stamps[-1]) + cadence.step)
-        self._layout, self._grid, self._n = layout, grid, n
+        self._layout, self._grid, self._n = replace(layout, closed_days=()), grid, n
         longest = max((length for length in grid.axis.lengths.values() if length <= len(grid.axis)), default=1)
         self._cycle = len(grid.axis) // longest * longest
         self._told: dict[int, dict[str, str]] = {}
