@@ -274,7 +274,7 @@ def _clock(as_of: str | None) -> int:
     try:
         stamp = datetime.fromisoformat(as_of)
         utc = stamp.replace(tzinfo=UTC) if stamp.tzinfo is None else stamp.astimezone(UTC)
-    except (ValueError, OverflowError) as trouble:
+    except (TypeError, ValueError, OverflowError) as trouble:
         raise UsageError("--as-of", f"'{as_of}' is no time", wanted) from trouble
     if not EARLIEST <= utc.year <= LATEST:
         raise UsageError("--as-of", f"the year {utc.year}", f"{wanted}, in the years {EARLIEST} to {LATEST}")

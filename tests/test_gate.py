@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable, Iterator
+from decimal import Decimal
 from pathlib import Path
 
 import numpy as np
@@ -364,3 +365,40 @@ def test_an_irregular_feed_is_judged(healthy: pd.DataFrame, past: pd.DataFrame) 
     assert by_rule["gaps"] == by_rule["complete"] == by_rule["rows"] == {"undecided"}
     broken = judged(jittered(pd.read_csv(BATCHES / "stuck.csv")), history, sercheck.load_rules(rules))
     assert set(broken.loc[broken["rule"] == "stuck", "outcome"]) == {"fail"}
+
+
+# what is given for a batch, what the sentence says
+NO_BATCH: dict[str, tuple[object, str]] = {
+    "nothing": (None, "a NoneType"),
+    "a number": (5, "a int"),
+    "a list of frames": ([pd.DataFrame()], "a DataFrame; wanted a path"),
+    "bytes": (b"batch.csv", "a int; wanted a path"),
+    "a column": (pd.Series([1.0]), "a Series"),
+    "an array": (np.zeros(3), "a ndarray"),
+    "an empty list": ([], "no file is named"),
+    "an empty frame": (pd.DataFrame(), "no column 'read_at'"),
+}
+
+
+@pytest.mark.parametrize("case", NO_BATCH)
+def test_what_is_no_batch_is_refused(past: pd.DataFrame, case: str) -> None:
+    """Python callers get one sentence about what they gave and what was wanted."""
+    given, said = NO_BATCH[case]
+    with pytest.raises(sercheck.SercheckError, match=said):
+        sercheck.gate(RULES, given, history=past, as_of=NOW)  # type: ignore[arg-type]
+
+
+def test_keys_and_numbers_that_no_file_could_hold(healthy: pd.DataFrame, past: pd.DataFrame) -> None:
+    """Half a surrogate pair in a key, and whole numbers of any length, are judged and stored like others."""
+    keys = healthy["substation"].astype(object).where(healthy["substation"] != "Furumo", "Furumo\ud800")
+    long = [10**30 if place == 0 else kwh for place, kwh in enumerate(healthy["kwh"])]
+    odd = healthy.assign(substation=keys, kwh=long)
+    told = judged(odd.astype({"kwh": object}), past)
+    assert "Furumo\\ud800" in set(told["series"])
+    assert "Furumo" in set(told["series"])
+
+
+def test_decimals_are_the_numbers_they_say(usual: pd.DataFrame, healthy: pd.DataFrame, past: pd.DataFrame) -> None:
+    """A column of decimals, as databases write them, gives the records of the same digits as text."""
+    decimals = healthy.assign(kwh=[Decimal(str(kwh)) for kwh in healthy["kwh"]])
+    pd.testing.assert_frame_equal(judged(decimals, past), usual, check_exact=True)

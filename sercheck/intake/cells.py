@@ -44,7 +44,9 @@ def to_values(column: pa.Array, place: str) -> Floats:
         return _from_text(column.cast(pa.string()))
     if pa.types.is_boolean(kind):
         column = pc.cast(column, pa.uint8())
-    elif not (pa.types.is_integer(kind) or pa.types.is_floating(kind) or pa.types.is_decimal(kind)):
+    elif pa.types.is_decimal(kind):
+        column = pc.cast(column, pa.string())  # digits as in a text file: a direct cast may miss the last bit
+    elif not (pa.types.is_integer(kind) or pa.types.is_floating(kind)):
         raise BatchError(place, f"the value column is of type {kind}", "numbers")
     if column.type != pa.float64():
         column = pc.cast(column, pa.float64(), safe=False)

@@ -21,8 +21,11 @@ def frame_chunk(frame: pd.DataFrame, layout: Layout, cadence: Cadence, place: st
     Raises:
         BatchError: a needed column is missing, twice or of a type that cannot serve.
     """
+    import pandas as pd
     import pyarrow as pa
 
+    if not isinstance(frame, pd.DataFrame):
+        raise BatchError("input", f"a {type(frame).__name__}", "a path, several, a glob, or one DataFrame")
     levels = [str(name) for name in frame.index.names if name is not None and name not in frame.columns]
     check_columns([*map(str, frame.columns), *levels], layout, place)
     columns = {}
@@ -45,9 +48,10 @@ def _frame_column(values: Any, *, always_text: bool) -> pa.Array:
     if plain:
         try:
             column = pa.array(values, from_pandas=True)
-        except (pa.ArrowInvalid, pa.ArrowTypeError, pa.ArrowNotImplementedError):
+        except (pa.ArrowInvalid, pa.ArrowTypeError, pa.ArrowNotImplementedError, OverflowError, UnicodeEncodeError):
             plain = False
-    if not plain:  # a column of mixed objects is what its texts say
-        texts = values.astype(str)
-        column = pa.array(texts.where(values.notna(), None), pa.string(), from_pandas=True)
+    if not plain:  # a column of mixed objects is what its texts say; half a surrogate pair is told by its escape
+        cells = zip(values, values.notna(), strict=True)
+        texts = [str(cell).encode("utf-8", "backslashreplace").decode() if here else None for cell, here in cells]
+        column = pa.array(texts, pa.string())
     return column.combine_chunks() if isinstance(column, pa.ChunkedArray) else column

@@ -31,6 +31,8 @@ def expand(paths: str | Path | Sequence[str | Path]) -> list[Path]:
         raise BatchError("input", "no file is named", "one file, several, or a glob")
     files: list[Path] = []
     for path in given:
+        if not isinstance(path, str | Path):
+            raise BatchError("input", f"a {type(path).__name__}", "a path, several, a glob, or one DataFrame")
         with told(Path(path)):
             files.extend(_expand_one(str(path)))
     return files
