@@ -49,16 +49,17 @@ def rules_of(
             if not wanted or form not in group.forms or not question.fits(process, form, group.n):
                 continue
             stays: dict[str, dict[str, object]] = {LIKE: {"like": "history"}}
+            after: dict[str, object] = {}
             if form != LIKE:
                 bound = float(question.truth(process, form))
                 stays = {f"below {form}": {"below": bound}, f"above {form}": {"above": bound}}
                 if "lag" in keys and process.season == "fixed":
-                    keys = keys | {"after": {"without_season": "day"}}
+                    after = {"after": {"without_season": "day"}}
             for label, bounds in stays.items():
                 for risk in risks:
                     rule = f"{name}, {label}, {risk}"
                     told[rule] = (name, label, risk)
-                    asked = {"name": rule, **keys, "stays": bounds, "false_alarm": risk, "across": "series"}
+                    asked = {"name": rule, **keys, **after, "stays": bounds, "false_alarm": risk, "across": "series"}
                     rules.append(deepcopy(asked))  # the same object twice would be written as an alias
     seasons = {"seasons": {"day": DAY}} if process.season else {}
     columns = {"time": "at", "series": "key", "values": ["x"]}

@@ -8,14 +8,15 @@ import numpy as np
 import pandas as pd
 import pytest
 from calibration import RISKS, as_text, count, groups, rated, too_many
-from cells import ALONE, DAY, LIKE, PAST, Group
+from cells import ALONE, DAY, LIKE, PAST, PROCESSES, Group
+from processes import make
 
 from sercheck.reference import Pivot
 from sercheck.serial import rates
 from sercheck.serial.risk import t_tail
 
+FEW = ("white", "AR .6", "AR .9", "MA(1)", "profile + AR .6")
 MEASURES = ("level", "autocorrelation", "seasonal_lag", "spread", "rate")
-PROCESSES = ("white", "AR .6", "AR .9", "MA(1)", "profile + AR .6")
 WINDOWS = 12
 SERIES = 300
 FIVE_AND_ONE = RISKS[:2]
@@ -47,13 +48,31 @@ def judged(some: Iterable[Group], risks: Iterable[float], series: int, measures:
 @pytest.fixture(scope="module")
 def table() -> pd.DataFrame:
     """Every cell with its rates and the naive ones."""
-    some = [Group(process, n, past) for process in PROCESSES for n in (168, 336) for past in (0, WINDOWS)]
+    some = [Group(process, n, past) for process in FEW for n in (168, 336) for past in (0, WINDOWS)]
     return judged(some, FIVE_AND_ONE, SERIES, MEASURES)
 
 
 def told(cells: pd.DataFrame) -> str:
     """Cells as a message."""
     return "\n" + as_text(cells)
+
+
+@pytest.mark.parametrize("name", PROCESSES)
+def test_the_true_values_are_true(name):
+    """What the bounds are set to is what the simulated series have, so that the null hypothesis holds exactly."""
+    process = PROCESSES[name]
+    x = make(process.kind, 99, 600, 1200)
+    assert abs(x.mean() - process.mean) < 0.03 * process.deviation
+    if process.tenth is not None:
+        assert abs((x > process.tenth).mean() - 0.1) < 0.004
+    hours = x.reshape(-1, DAY).mean(axis=0)
+    z = x - (np.tile(hours, 1200 // DAY) if process.season == "fixed" else process.mean)
+    assert abs(z.std() / process.deviation - 1) < 0.03
+    if name != "lognormal of AR .6":
+        assert abs(np.median(x) - process.location) < 0.05 or process.season == "fixed"
+    for lag in (1, 2, 6, DAY):
+        r = (z[:, lag:] * z[:, :-lag]).mean() / z.var()
+        assert abs(r - process.rho(lag)) < 0.02
 
 
 def test_healthy_batches_fail_no_more_often_than_asked(table):
