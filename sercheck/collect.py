@@ -7,6 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from sercheck.causes import UNKNOWN
 from sercheck.judge import FAIL, OUTCOMES, UNDECIDED, Judged
 from sercheck.reasons import after, sentences
 from sercheck.record import Records, record_ids, utc_text
@@ -42,6 +43,7 @@ def _part(rule: Rule, judged: Judged, common: Common) -> Records:
     def flat(values: np.ndarray) -> np.ndarray:
         return np.broadcast_to(values, seen.observed.shape).ravel()
 
+    cause, support = _causes(judged)
     keys = np.repeat(part.keys, lags)
     lag = np.tile(np.array(seen.lags or [np.nan] * lags, dtype=np.float64), series)
     columns = {
@@ -81,7 +83,23 @@ def _part(rule: Rule, judged: Judged, common: Common) -> Records:
         "outcome": [OUTCOMES[code] for code in outcomes],
         "reason": sentences(rule, judged),
         "action": [acts.get(code) for code in outcomes],
-        "likely_cause": None,
-        "cause_support": None,
+        "likely_cause": cause,
+        "cause_support": support,
     }
     return Records(columns)
+
+
+def _causes(judged: Judged) -> tuple[np.ndarray | None, np.ndarray | None]:
+    """Likely cause and support of every cell; only what failed has one."""
+    failed = judged.outcome == FAIL
+    if not failed.any():
+        return None, None
+    part, shape = judged.seen, failed.shape
+    cause = np.full(shape, None, dtype=object)
+    support = np.full(shape, np.nan)
+    cause[failed], support[failed] = UNKNOWN, 0.0
+    if part.cause is not None and part.support is not None:
+        known = failed & np.array([name is not None for name in part.cause])[:, None]
+        cause[known] = np.broadcast_to(part.cause[:, None], shape)[known]
+        support[known] = np.broadcast_to(part.support[:, None], shape)[known]
+    return cause.ravel(), support.ravel()

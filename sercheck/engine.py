@@ -20,6 +20,7 @@ from sercheck.measure import Clock, Measure, Measurement, Question
 from sercheck.measures import get
 from sercheck.rulebook.compiled import Rule, Rulebook
 from sercheck.serial.arrays import Bools, Ints
+from sercheck.suspects import with_causes
 from sercheck.together import pooled
 from sercheck.transforms import apply
 
@@ -84,7 +85,7 @@ def measure_block(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
             if others:
                 panel = replace(panel, beside={name: transformed(name, rule, chosen) for name in others})
             seen.append(_look(place, rule, measure, panel, grid, chosen, run))
-    return seen, notes
+    return with_causes(run.book, seen, grid), notes
 
 
 def decide(book: Rulebook, seen: Sequence[Seen]) -> list[Judged]:

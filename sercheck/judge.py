@@ -31,6 +31,9 @@ class Seen:
         measurement: what was seen, arrays of shape (S, L).
         window_start: int64 nanoseconds since 1970 UTC of the window's first step.
         window_end: the same of its last step.
+        cause: likely cause of each series that may fail, object array of str or None, shape (S,); None: not asked.
+        support: how far the evidence is for it alone, shape (S,).
+        whole: likely cause of the block as a whole and its support, where all of its series may fail.
     """
 
     rule: int
@@ -39,6 +42,9 @@ class Seen:
     measurement: Measurement
     window_start: int
     window_end: int
+    cause: np.ndarray | None = None
+    support: Floats | None = None
+    whole: tuple[str, float] | None = None
 
 
 @dataclass(frozen=True)
@@ -102,6 +108,13 @@ def _evidence(seen: Measurement) -> _Evidence:
     else:
         p, upper = np.full(shape, np.nan), np.zeros(shape, dtype=bool)
     return _Evidence(np.where(undecided, np.nan, p), upper, max(len(tails), 1))
+
+
+def breaks(seen: Measurement, risk: float) -> Bools:
+    """Series that break their bound at ``risk`` at one lag or more, whatever is shared with others, shape (S,)."""
+    p = _evidence(seen).p
+    beyond = broken(p, np.asarray(risk))
+    return np.asarray((~beyond & ~np.isnan(p) if seen.certify else beyond).any(axis=1))
 
 
 def _references(seen: Measurement) -> list[tuple[Side, Reference]]:

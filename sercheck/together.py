@@ -68,4 +68,12 @@ def pooled(parts: Sequence[Seen]) -> Seen:
         lags=seen.lags[:1] if seen.lags else None,
         season=seen.season,
     )
-    return replace(first, keys=np.array([None], dtype=object), measurement=told)
+    known = [part.whole for part in parts if part.whole is not None]
+    best = max(known, key=lambda whole: whole[1]) if known else None
+    return replace(
+        first,
+        keys=np.array([None], dtype=object),
+        measurement=told,
+        cause=None if best is None else np.array([best[0]], dtype=object),
+        support=None if best is None else np.array([best[1]]),
+    )

@@ -98,6 +98,19 @@ class Verdict:
         """The records as a DataFrame with nullable types."""
         return self.table.to_frame()
 
+    @property
+    def likely_causes(self) -> list[dict[str, Any]]:
+        """What probably broke, the best supported first: ``cause``, mean ``support``, and the ``series`` it is for."""
+        told: dict[str, dict[str | None, float]] = {}
+        for row in self.table.rows_where("outcome", "fail"):
+            series = told.setdefault(str(row["likely_cause"]), {})
+            series[row["series"]] = max(series.get(row["series"], 0.0), row["cause_support"] or 0.0)
+        ranked = sorted(told.items(), key=lambda item: -sum(item[1].values()))
+        return [
+            {"cause": cause, "support": sum(by.values()) / len(by), "series": [key for key in by if key is not None]}
+            for cause, by in ranked
+        ]
+
     def summary(self) -> dict[str, Any]:
         """The verdict as plain data, as ``sercheck gate --format json`` prints it."""
         expected = None if self.expected is None else {"per": self.expected[1], "count": self.expected[0]}
@@ -106,6 +119,7 @@ class Verdict:
             "batch_id": self.batch_id,
             "counts": self.counts,
             "failed": list(self.table.rows_where("outcome", "fail")),
+            "likely_causes": self.likely_causes,
             "false_holds_expected": expected,
             "notes": list(self.notes),
         }

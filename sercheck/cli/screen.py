@@ -14,6 +14,8 @@ if TYPE_CHECKING:
 
 MOST_RULES = 6
 """Rules told one by one; more are counted, so that the answer stays on a screen of 24 lines."""
+MOST_CAUSES = 2
+"""Likely causes told."""
 MOST_SERIES = 2
 """Series told for each failed rule, the clearest first."""
 
@@ -21,6 +23,7 @@ MOST_SERIES = 2
 def answer(verdict: Verdict) -> str:
     """The whole answer as text."""
     lines = [_head(verdict)]
+    lines += _causes(verdict)
     lines += _failed(verdict)
     lines += _undecided(verdict)
     lines.append(_passed(verdict))
@@ -69,6 +72,23 @@ def _failed(verdict: Verdict) -> list[str]:
 
 def _who(row: dict[str, Any]) -> str:
     return f"{plain(str(row['series']), 60)}: " if row["series"] else ""
+
+
+def _causes(verdict: Verdict) -> list[str]:
+    """What probably broke: one or two lines."""
+    lines = []
+    for told in verdict.likely_causes[:MOST_CAUSES]:
+        series = told["series"]
+        who = (
+            ""
+            if not series
+            else f", in {plain(str(series[0]), 60)}"
+            if len(series) == 1
+            else f", in {len(series)} series"
+        )
+        weight = f" (support {told['support']:.2f}{who})" if told["support"] else who
+        lines.append(folded(f"likely cause: {plain(str(told['cause']))}{weight}", "  ", "    "))
+    return lines
 
 
 def _undecided(verdict: Verdict) -> list[str]:
