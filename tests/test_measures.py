@@ -99,6 +99,8 @@ def run(name: str, stays: Stays, panel: Panel, risk: float = 0.01) -> Measuremen
     measure = get(name)
     if not measure.of_values:
         panel = dataclasses.replace(panel, values=np.where(panel.delivered, 1.0, np.nan), column="", shared={})
+    later = panel_of(np.roll(panel.values, 3, axis=1), panel.start)
+    panel = dataclasses.replace(panel, beside=dict.fromkeys(measure.beside(rules_of(name)[0].fields), later))
     return measure.run(panel, question(name, stays, panel, risk))
 
 
