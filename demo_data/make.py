@@ -22,6 +22,7 @@ STATIONS = [
 ]  # fmt: skip
 WEEKS = 16
 BATCH_DAY = "2026-01-19"
+SWAPPED = ("Kirsebakk", "Lindetunet")
 
 
 def heat(rng: np.random.Generator, hours: pd.DatetimeIndex) -> pd.DataFrame:
@@ -83,13 +84,48 @@ def rows_twice(_: np.random.Generator, day: np.ndarray) -> np.ndarray:
     return np.repeat(day[::2], 2)[: len(day)]
 
 
+def smoothed(_: np.random.Generator, day: np.ndarray) -> np.ndarray:
+    """A running mean over three hours, as a gateway makes that averages before it sends."""
+    padded = np.concatenate((day[:1], day, day[-1:]))
+    return np.round(np.convolve(padded, np.ones(3) / 3, mode="valid"), 1)
+
+
+def flattened(_: np.random.Generator, day: np.ndarray) -> np.ndarray:
+    """The daily cycle all but gone: what is metered is the return pipe."""
+    return np.round(day.mean() + 0.15 * (day - day.mean()), 1)
+
+
 FAULTS = {
     "shuffled": shuffled,
     "filled_forward": filled_forward,
     "stuck": stuck,
     "noise_instead": noise_instead,
     "rows_twice": rows_twice,
+    "smoothed": smoothed,
+    "flattened": flattened,
 }
+
+
+def slipped(table: pd.DataFrame, day: pd.Timestamp) -> pd.DataFrame:
+    """All clocks an hour late: each stamp carries the reading of the hour before."""
+    return table.shift(1)[table.index >= day]
+
+
+def yesterday_again(table: pd.DataFrame, day: pd.Timestamp) -> pd.DataFrame:
+    """The delivery of the day before under today's stamps."""
+    return table.shift(24)[table.index >= day]
+
+
+def keys_swapped(table: pd.DataFrame, day: pd.Timestamp) -> pd.DataFrame:
+    """Two meters of like size were exchanged in the register."""
+    swapped = table[table.index >= day].copy()
+    one, other = SWAPPED
+    swapped[[one, other]] = swapped[[other, one]].to_numpy()
+    return swapped
+
+
+WHOLE = {"slipped": slipped, "yesterday_again": yesterday_again, "keys_swapped": keys_swapped}
+"""Faults that move readings between days or meters."""
 
 
 def long_form(table: pd.DataFrame) -> pd.DataFrame:
@@ -113,6 +149,8 @@ def main() -> None:
     batch = table[table.index >= day]
     (HERE / "batches").mkdir(exist_ok=True)
     long_form(batch).to_csv(HERE / "batches" / "healthy.csv", index=False)
+    for name, move in WHOLE.items():
+        long_form(move(table, day)).to_csv(HERE / "batches" / f"{name}.csv", index=False)
     for name, fault in FAULTS.items():
         broken = batch.apply(lambda column, fault=fault: fault(rng, column.to_numpy()), raw=False)
         long_form(pd.DataFrame(broken, index=batch.index)).to_csv(HERE / "batches" / f"{name}.csv", index=False)
