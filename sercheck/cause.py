@@ -27,6 +27,9 @@ LIKELIER = 3.0
 """Log-likelihood by which the mended window must beat the one as it came (e^5 = 150 to 1): on healthy windows a cause
 is then named in less than 2 % (simulated by ``python -m tests.causes``)."""
 
+PLAIN = 2.0
+"""Log-likelihood a row that is plain without a comparison with history's windows: e^2 = 7 to 1 in every single row."""
+
 TAIL = 2.43
 """ln(.5/.01)/ln(.5/.1): from the median and the upper tenth of an exponential tail to its upper hundredth."""
 
@@ -42,6 +45,9 @@ MORE_MISSING = 0.05
 
 FARTHEST = 1e60
 """Values are cut here, in units of history's largest: their fourth powers stay within doubles."""
+
+FAR_APART = 100
+"""Powers of two between series that share a unit."""
 
 WEAK, TURNED = 0.25, -0.5
 """Strength of a season below which it is gone, and below which it is turned over."""
@@ -134,21 +140,28 @@ def likely_causes(panel: Panel, season: str | None = None, keys: Sequence[str] |
     told = _Told(len(values))
     if not values.size or panel.start == values.shape[1]:
         return told.causes()
+    signs = exact_signs(values, panel.start)
+    sure = np.any([sign.found for sign in signs], axis=0)
     scaled, unit = _scaled(values, panel.start)
     law = foresee(scaled, panel.start, _cycles(panel, season)) if panel.start else None
     if law is not None:
-        _weigh(told, law, names, unit)
-    for sign in reversed(exact_signs(values, panel.start)):
+        _weigh(told, law, names, unit, sure)
+    for sign in reversed(signs):
         told.exact(sign.name, sign.found, sign.value)
     _missing(told, panel)
     return told.causes()
 
 
 def _scaled(values: Floats, start: int) -> tuple[Floats, Floats]:
-    """Values in units of a power of two near history's largest, and that unit: squares neither overflow nor vanish."""
+    """Values in units of a power of two near history's largest, and that unit: squares neither overflow nor vanish.
+
+    One unit for all series, which are compared with each other, but for those that would vanish in it.
+    """
     history = values[:, :start]
     peak = np.where(np.isnan(history), 0.0, np.abs(history)).max(axis=1, initial=0.0)
-    exponent = np.clip(np.frexp(peak)[1], -1021, 1022)
+    own = np.clip(np.frexp(peak)[1], -1021, 1022)
+    largest = own.max(initial=-1021)
+    exponent = np.where(largest - own > FAR_APART, own, largest)
     with np.errstate(over="ignore", under="ignore"):
         scaled = np.ldexp(values, -exponent[:, None])
     return np.clip(scaled, -FARTHEST, FARTHEST), np.ldexp(1.0, exponent)
@@ -201,12 +214,12 @@ class _Told:
         return Causes(self.cause, self.support, self.evidence, self.kind, self.ranked)
 
 
-def _weigh(told: _Told, law: Foreseen, names: np.ndarray, unit: Floats) -> None:
+def _weigh(told: _Told, law: Foreseen, names: np.ndarray, unit: Floats, sure: Bools) -> None:
     """Compare the mended windows: posterior odds at equal prior odds, by kind."""
     looks = _looks(law)
     other, score = likeliest_other(law)
     looks.append(Look("swapped", score, other.astype(np.float64)))
-    scores = np.stack([np.nan_to_num(look.score, nan=-np.inf, posinf=-np.inf) for look in looks])
+    scores = np.stack([np.nan_to_num(look.score, nan=-np.inf, posinf=-np.inf, neginf=-np.inf) for look in looks])
     healthy = scores[0]
     top = scores.max(axis=0)
     with np.errstate(invalid="ignore"):
@@ -216,10 +229,11 @@ def _weigh(told: _Told, law: Foreseen, names: np.ndarray, unit: Floats) -> None:
     total = np.maximum(sum(groups.values()), np.finfo(np.float64).tiny)
     _rank(told, groups, total)
     best = np.argmax(scores, axis=0)
-    named = np.isfinite(healthy) & (top - healthy >= LIKELIER)
-    unsure = np.flatnonzero(named)
+    gain = np.where(np.isfinite(healthy), top - np.where(np.isfinite(healthy), healthy, 0.0), -np.inf)
+    named = gain >= LIKELIER
+    unsure = np.flatnonzero(named & ~sure & (gain < PLAIN * law.n))
     if len(unsure):
-        named[unsure] = (top - healthy)[unsure] > _by_chance(law.rows(unsure))
+        named[unsure] = gain[unsure] > _by_chance(law.rows(unsure))
     for place, look in enumerate(looks):
         if look.name not in NAMES:
             continue
@@ -247,9 +261,9 @@ def _by_chance(law: Foreseen) -> Floats:
         count -= 1
     if past is None:
         return np.zeros(series)
-    scores = np.stack([np.nan_to_num(look.score, nan=-np.inf, posinf=-np.inf) for look in _looks(past)])
+    scores = np.stack([np.nan_to_num(look.score, nan=-np.inf, posinf=-np.inf, neginf=-np.inf) for look in _looks(past)])
     with np.errstate(invalid="ignore"):
-        gain = np.nan_to_num(scores.max(axis=0) - scores[0], nan=0.0, posinf=0.0).reshape(count, series)
+        gain = np.where(np.isfinite(scores[0]), scores.max(axis=0) - scores[0], 0.0).reshape(count, series)
     usual, high = np.quantile(gain, (0.5, 0.9), axis=0)
     return np.asarray(usual + TAIL * (high - usual))
 

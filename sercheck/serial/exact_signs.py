@@ -18,6 +18,12 @@ BEYOND_CHANCE = 1e-4
 CLUSTERS = 4.0
 """Coincidences of real feeds come in clusters: their variance is taken as so many times the binomial one."""
 
+FEWEST_WINDOWS = 8
+"""Windows of history from which the clustering is estimated, as for any variance over windows."""
+
+LEAST_RUN = 3
+"""Equal neighbours in a run before it is called long: four equal values."""
+
 FEW = 3
 """Coincidences that history must have to tell how they come."""
 
@@ -36,11 +42,14 @@ BY_CHANCE = 8.0
 FINEST = 1e-8
 """Finest step that is looked for."""
 
+SOME = 0.1
+"""Share of a window that must have come before: a clock that slipped repeats a few rows too, at its seam."""
+
 COMMON = 0.01
 """Share of history's rows with a value that came before, under which values hardly ever come twice."""
 
-LARGEST = 1e290
-"""Values are cut here, so that eight decimals more are still doubles."""
+LARGEST = 900
+"""Largest power of two that is worked with, so that eight decimals more are still doubles."""
 
 EXACT = 1e15
 """Largest value whose decimals a double still tells."""
@@ -70,7 +79,7 @@ def exact_signs(values: Floats, start: int) -> list[Sign]:
         values: history and window, shape (S, T), NaN is missing.
         start: first step of the window.
     """
-    values = np.clip(values, -LARGEST, LARGEST)
+    values = _within_reach(values)
     window, history = values[:, start:], values[:, :start]
     rounded, step = coarser(window, history)
     return [
@@ -80,6 +89,13 @@ def exact_signs(values: Floats, start: int) -> list[Sign]:
         _again(values, start),
         _midpoints(window, history),
     ]
+
+
+def _within_reach(values: Floats) -> Floats:
+    """Series with huge values over a power of two, which leaves what is equal equal."""
+    peak = np.where(np.isnan(values), 0.0, np.abs(values)).max(axis=1, initial=0.0)
+    over = np.maximum(np.frexp(peak)[1] - LARGEST, 0)
+    return np.asarray(np.ldexp(values, -over[:, None])) if over.any() else values
 
 
 def _in_order(window: Floats, history: Floats) -> Sign:
@@ -105,15 +121,39 @@ def _one_way(cut: Floats) -> tuple[Ints, Bools, Bools]:
     return steps, (down == 0) & (2 * up > steps), (up == 0) & (2 * down > steps)
 
 
-def _beyond(count: Floats, trials: Floats, marks: Floats) -> Bools:
+def _beyond(count: Floats, trials: Floats, marks: Floats, n: int) -> Bools:
     """More coincidences than history's allow: at least two, and a binomial tail at history's share below chance.
 
-    Where history has some itself, counts and trials are divided by their clustering.
+    Counts and trials are divided by τ, the variance of the counts in history's windows of n rows over the binomial
+    one, ``CLUSTERS`` where there are too few windows to tell (Rao and Scott 1992).
     """
-    per = np.where(np.nansum(marks, axis=1) >= FEW, CLUSTERS, 1.0)
-    k, m = count / per, trials / per
-    tail = special.betainc(np.maximum(k, 1e-9), np.maximum(m - k, 0) + 1, _rate(marks))
+    rate = _rate(marks)
+    cut = windows(marks, n)
+    m = cut.shape[1]
+    if m >= FEWEST_WINDOWS:
+        counts = np.nansum(cut, axis=2)
+        binomial = np.maximum((~np.isnan(cut)).sum(axis=2).mean(axis=1) * rate * (1 - rate), np.finfo(np.float64).tiny)
+        per = np.maximum(counts.var(axis=1, ddof=1) / binomial, 1.0)
+    else:
+        per = np.full(len(marks), CLUSTERS)
+    per = np.where(np.nansum(marks, axis=1) >= FEW, per, 1.0)
+    k, trials = count / per, trials / per
+    tail = special.betainc(np.maximum(k, 1e-9), np.maximum(trials - k, 0) + 1, rate)
     return np.asarray((count >= 2) & (tail < BEYOND_CHANCE))
+
+
+def _long_run(marks: Floats, longest: Floats, n: int) -> Bools:
+    """A run of ``longest`` equal values is too long for n rows: 1 − exp(−n p01 p11^(r−1)), r its marks.
+
+    p01 is history's chance that an equal value follows an unequal one, p11 that one follows an equal one.
+    """
+    before, now = marks[:, :-1], marks[:, 1:]
+    told = ~np.isnan(before) & ~np.isnan(now)
+    after = (told & (before == 1)).sum(axis=1)
+    p11 = ((told & (before == 1) & (now == 1)).sum(axis=1) + 0.5) / (after + 1)
+    p01 = ((told & (before == 0) & (now == 1)).sum(axis=1) + 0.5) / ((told & (before == 0)).sum(axis=1) + 1)
+    r = np.maximum(longest - 1, 0)
+    return np.asarray((r >= LEAST_RUN) & (-np.expm1(-n * p01 * p11 ** (r - 1)) < BEYOND_CHANCE))
 
 
 def _rate(marks: Floats) -> Floats:
@@ -129,26 +169,28 @@ def _runs(values: Floats, start: int) -> list[Sign]:
     with np.errstate(invalid="ignore"):
         marks = np.where(values == rest[:, None], np.nan, marks)
     past, now = marks[:, :start], marks[:, start:]
+    window_steps = now.shape[1]
     told = (~np.isnan(now)).sum(axis=1).astype(np.float64)
     equal = np.nansum(now, axis=1)
-    found = _beyond(equal, told, past)
+    found = _beyond(equal, told, past, window_steps)
     lengths = _run_lengths(now == 1)  # at a run's last row its number of values, 0 elsewhere
     runs = (lengths > 0).sum(axis=1)
     longest = lengths.max(axis=1, initial=0).astype(np.float64)
     whole = np.maximum(runs, 1)
     pairs = ((lengths == 2).sum(axis=1) >= EVEN * whole) & (2 * runs >= EVEN * (told - 1)) & (runs >= 3)
     even = (lengths == longest[:, None]).sum(axis=1) >= np.maximum(EVEN * (whole - 1), 2)
+    long = _long_run(past, longest, window_steps)
     spread = even & (longest >= 3) & (lengths.sum(axis=1) >= EVEN * told)
     spread |= _usual_mean(values, start)
     rest_rows = told - (longest - 1)
     others = np.maximum(equal - (longest - 1), 1) / np.maximum(rest_rows, 1)
     chance = told * np.minimum(others, 1.0) ** (longest - 1)
-    stuck = (longest >= 4) & (chance < UNLIKELY) | (longest >= EVEN * told)
+    stuck = (longest > LEAST_RUN) & (chance < UNLIKELY) | (longest >= EVEN * told)
     share = equal / np.maximum(told, 1)
     return [
         Sign("repeated", found & pairs, share),
         Sign("spread", found & spread & ~pairs, longest),
-        Sign("stuck", found & ~pairs & ~spread & stuck, longest),
+        Sign("stuck", (found | long) & ~pairs & ~spread & stuck, longest),
         Sign("filled", found & ~pairs & ~spread & ~stuck, share),
     ]
 
@@ -183,13 +225,15 @@ def _again(values: Floats, start: int) -> Sign:
     One stretch is enough where hardly any value of history came twice.
     """
     seen = seen_before(values, start)
+    window_steps = values.shape[1] - start
     ordered = np.sort(values[:, :start], axis=1)
     ties = (ordered[:, 1:] == ordered[:, :-1]).sum(axis=1)
     least = np.where(ties < COMMON * start, 2.0, 0.0)
     told = (~np.isnan(seen.batch)).sum(axis=1).astype(np.float64)
     count = np.nansum(seen.batch, axis=1)
     pieces = np.where(count > 0, np.maximum(count / seen.length, least), 0.0)
-    return Sign("again", _beyond(pieces, told / seen.length, seen.history), count / np.maximum(told, 1))
+    unusual = _beyond(pieces, told / seen.length, seen.history, window_steps)
+    return Sign("again", unusual & (count >= SOME * told), count / np.maximum(told, 1))
 
 
 def _midpoints(window: Floats, history: Floats) -> Sign:
@@ -197,7 +241,7 @@ def _midpoints(window: Floats, history: Floats) -> Sign:
     marks = midpoints(window)
     told = (~np.isnan(marks)).sum(axis=1).astype(np.float64)
     count = np.nansum(marks, axis=1)
-    return Sign("interpolated", _beyond(count, told, midpoints(history)), count / np.maximum(told, 1))
+    return Sign("interpolated", _beyond(count, told, midpoints(history), window.shape[1]), count / np.maximum(told, 1))
 
 
 def coarser(window: Floats, history: Floats) -> tuple[Bools, Floats]:

@@ -31,8 +31,8 @@ SMOOTH_ORDER = 20
 OWN_ORDER = 4
 """Order of the window's own model, by which anything may be explained at its price."""
 
-FEWEST_ROWS = 3
-"""Rows in either unit: fewer are outliers."""
+FEWEST_ROWS, FEWEST_PART = 3, 8
+"""Rows in either unit, three and an eighth of the window: fewer are outliers."""
 
 FAR = 3.0
 """Standard deviations of history's window means beyond which a mean is another one (as far as 1 in 370)."""
@@ -176,7 +176,7 @@ class Looker:
         price = [np.full(len(self.x), choices)] * len(known) + [self.free]
         for k, paid in zip([*known, free], price, strict=True):
             with np.errstate(divide="ignore", invalid="ignore"):
-                stretch = -self.n * np.log(k) - paid
+                stretch = -(self.seen & (self.x != 0)).sum(axis=1) * np.log(k) - paid  # 0 is 0 in any unit
                 yield self._mended("unit", self.x / k[:, None], stretch, k)
         price = [np.full(len(self.x), choices)] * len(known) + [self.free]
         for k, paid in zip([*known, self._ratio(self.law.n // 2)], price, strict=True):
@@ -197,7 +197,8 @@ class Looker:
         after = self.law.innovations(mended)
         order = int(self.law.noise.order.max(initial=0))
         n = self.law.n
-        first = np.arange(FEWEST_ROWS, n - FEWEST_ROWS + 1)
+        fewest = max(FEWEST_ROWS, n // FEWEST_PART)
+        first = np.arange(fewest, n - fewest + 1)
         if not len(first):
             return Look("unit", np.full(len(self.x), -np.inf), k)
 
@@ -213,7 +214,7 @@ class Looker:
             total[:, : len(some)] += np.nan_to_num(here**2)
             count[:, : len(some)] += ~np.isnan(here)
         stretch = joined(self._slope(self.x), self._slope(mended))
-        later = joined(np.zeros(self.x.shape), self.seen)
+        later = joined(np.zeros(self.x.shape), self.seen & (self.x != 0))
         with np.errstate(divide="ignore", invalid="ignore"):
             score = self.law.likelihood(total, count, self.n) + stretch - later * np.log(k)[:, None]
         score = np.where(np.isfinite(score), score, -np.inf)
@@ -260,7 +261,8 @@ class Looker:
         before = np.concatenate([np.full((len(self.x), 1), np.nan), self.x[:, :-1]], axis=1)
         for weight in WEIGHTS:
             mended = (self.x - (1 - weight) * before) / weight
-            yield self._mended("smoothed", mended, -self.n * np.log(weight) - self.free - np.log(len(WEIGHTS)))
+            changed = (self.seen & (self.x != before)).sum(axis=1)
+            yield self._mended("smoothed", mended, -changed * np.log(weight) - self.free - np.log(len(WEIGHTS)))
         y = self.law.on_scale(self.x)
         for width in WIDTHS:
             model = burg(_moving_mean(self.law.rest, width), max_order=SMOOTH_ORDER)
