@@ -43,8 +43,8 @@ teach the profile."""
 WINDOWS = 21
 """Windows of a rule that looks farther back than the batch: its own and twenty of history, what small risks need."""
 REFRESH = "7D"
-"""Age at which a baseline is learned anew where the rule file names none: the week is the longest cycle that profiles
-are learned of."""
+"""Length of newer history from which a baseline is learned anew where the rule file names none: the week is the longest
+cycle that profiles are learned of."""
 LEFT = 0.5
 """Share of a stretch that must have been let in for it to teach: with less, what was learned before stays."""
 SECOND = 1_000_000_000
@@ -177,9 +177,9 @@ def _remembered(memory: Memory, cadence: Cadence, extent: Extent, since: int | N
     _not_another_year(memory.log, extent)
     if source is None:
         return Past(None, notes=tuple(notes))
-    age = None if known is None else extent.first - _stamp(known.last_stamp)
     refresh = round(seconds(book.baseline.get("refresh", REFRESH)) * SECOND)
-    if known is None or (age is not None and age > refresh and not locked):
+    newer = 0 if known is None else source.extent(cadence).last - _stamp(known.last_stamp)
+    if known is None or (newer >= refresh and not locked):
         before = known
         known = memory.learned(source, cadence, judged_at)
         if before is not None:

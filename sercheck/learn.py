@@ -29,8 +29,9 @@ if TYPE_CHECKING:
 
 LOOKED = 8
 """Series on which the rules are tried for want of history (ours: the others are as long)."""
-MOST_STEPS = 40_000
-"""Steps of history up to which it is tried whether more would help (ours: four and a half years of hours)."""
+MOST_STEPS, MOST_TIMES, MOST_BATCHES = 40_000, 8, 128
+"""Steps of history up to which it is tried whether more would help (ours: four and a half years of hours), and no
+farther than eight times what is there or 128 batches."""
 KINDS = {
     "gap": "steps without a row",
     "level change": "change of level",
@@ -262,9 +263,10 @@ def _first_enough(trial: _Trial, rule: str, have: int, n: int) -> int | None:
         return rule not in trial.undecided(steps)
 
     low, high = have, max(2 * have, have + n)
-    while high <= max(MOST_STEPS, 8 * have) and not decides(high):
+    most = min(max(MOST_TIMES * have, MOST_BATCHES * n), max(MOST_STEPS, 2 * have))
+    while high <= most and not decides(high):
         low, high = high, 2 * high
-    if high > max(MOST_STEPS, 8 * have):
+    if high > most:
         return None
     while high - low > max(n, high // 10):
         middle = (low + high) // 2

@@ -93,12 +93,19 @@ def _taught(memory: Memory, source: Source, cadence: Cadence) -> Taught:
     if memory.writes:
         archived, there = keep_history(memory.archive, source, cadence, memory.log, (extent.first, extent.last))
         memory.ledger.add_baseline(lessons.baseline)
-    return Taught(lessons, lacks, archived, there, (*regime_note(since), *_short(extent, wanted)))
+    return Taught(lessons, lacks, archived, there, (*regime_note(since), *_short(extent, wanted), *_unsaid(book)))
 
 
 def _next_batch(extent: Extent, cadence: Cadence) -> Extent:
     after = extent.last + max(cadence.step, 1)
     return replace(extent, first=after, last=after)
+
+
+def _unsaid(book: Rulebook) -> tuple[str, ...]:
+    """A note where the length of a batch had to be guessed."""
+    if book.batch_every is not None or book.every == "irregular":
+        return ()
+    return ("the rule file does not say `batch_every`: the rules were tried on a batch of a day or of one step",)
 
 
 def _short(extent: Extent, wanted: int) -> tuple[str, ...]:

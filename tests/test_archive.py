@@ -119,6 +119,17 @@ def test_rows_that_wait_are_no_history(archive):
     assert read(archive) == {("a", 1): 1.0, ("a", 2): 1.0}
 
 
+def test_a_broken_entry_of_the_log_is_told(archive):
+    """The history cannot be known then; files of others in the folder disturb nobody."""
+    put(archive, "one", [("a", 1, 1.0)])
+    (archive.folder / "log" / "notes.txt").write_text("mine")
+    assert len(read(archive)) == 1
+    (entry,) = (archive.folder / "log").glob("*.json")
+    entry.write_text("{")
+    with pytest.raises(SercheckError, match="this entry of the archive's log cannot be read"):
+        Archive(archive.folder.parent, "tide").log()
+
+
 def test_only_the_days_asked_for_are_opened(archive):
     """A broken file of another day disturbs nobody; one of the day asked for is told."""
     put(archive, "one", [("a", 10, 1.0), ("a", 24 * 9 + 10, 2.0)])
@@ -359,6 +370,16 @@ def test_the_baseline_is_learned_anew_when_it_is_old(feed):
     assert [any("learned anew" in note for note in notes) for notes in told] == [False, True, False]
 
 
+def test_a_baseline_that_ends_with_the_newest_row_is_new(tmp_path):
+    """However long a batch is, the same one judged again is not learned for again."""
+    feed = Feed(tmp_path, RULES.replace("batch_every: 1D", "batch_every: 14D"))
+    for first in ("2026-03-01", "2026-03-15"):
+        feed.gate(wave(first, 14, seed=1))
+    last = wave("2026-03-29", 14, seed=2)
+    assert any("learned anew" in note for note in feed.gate(last).notes)
+    assert not any("learned anew" in note for note in feed.gate(last).notes)
+
+
 def test_corrected_rows_win_and_stand_once(feed):
     """A day delivered again with other values replaces the first; the history of the next day has it once."""
     feed.gate(wave("2026-03-01", 1, seed=1))
@@ -435,6 +456,53 @@ def test_a_crash_between_ledger_and_archive_is_healed_by_a_repeat(feed, monkeypa
     assert read(feed.archive) == {}
     assert feed.gate(wave("2026-03-01", 1, seed=1)).released
     assert len(read(feed.archive)) == 48
+
+
+GATE_DIES = """
+import os, signal
+import sercheck.history as history
+history.keep = lambda *_: os.kill(os.getpid(), signal.SIGKILL)
+from sercheck.verdict import gate
+gate("rules.yaml", "batch.csv", store="store", as_of="2026-12-01")
+"""
+
+
+def test_a_kill_between_ledger_and_archive_is_healed_by_a_repeat(feed):
+    """As above, by a real kill: the decision stands, the rows follow, the records are the same."""
+    folder = feed.store.parent
+    wave("2026-03-01", 1, seed=1).to_csv(folder / "batch.csv", index=False)
+    assert dying(GATE_DIES, folder).returncode == -signal.SIGKILL
+    with open_ledger(str(feed.store)) as ledger:
+        (stored,) = ledger.batches()
+        ids = ledger.records(stored.batch.batch_id)["record_id"].tolist()
+    assert read(feed.archive) == {}
+    again = feed.gate(pd.read_csv(folder / "batch.csv"))
+    assert again.table["record_id"].tolist() == ids
+    assert len(read(feed.archive)) == 48
+
+
+GATES = """
+import sys
+from sercheck.verdict import gate
+for day in sys.argv[1:]:
+    gate("rules.yaml", f"{day}.csv", store="store", as_of="2026-12-01")
+"""
+
+
+def test_two_gates_at_once_lose_nothing(feed):
+    """Two processes judge days of one feed at the same time, some of them both: every day is kept once."""
+    folder = feed.store.parent
+    days = [f"2026-03-{day:02d}" for day in range(1, 7)]
+    for number, day in enumerate(days):
+        wave(day, 1, seed=number).to_csv(folder / f"{day}.csv", index=False)
+    gates = [
+        subprocess.Popen([sys.executable, "-c", GATES, *own], cwd=folder, env=environment())
+        for own in (days[:4], days[2:])
+    ]
+    assert [gate.wait(timeout=120) for gate in gates] == [0, 0]
+    assert len(read(feed.archive)) == 6 * 48
+    with open_ledger(str(feed.store)) as ledger:
+        assert len(ledger.batches()) == 6
 
 
 def test_an_archive_that_cannot_be_written_is_told_before_the_work(feed):

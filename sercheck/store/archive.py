@@ -105,6 +105,7 @@ class Archive:
     def __init__(self, folder: str | Path, feed: str) -> None:
         self.feed = feed
         self.folder = Path(folder) / feed_folder(feed)
+        self._read: dict[str, Entry] = {}
 
     def prepare(self) -> None:
         """Make the folder and see that files can be made in it, to learn of trouble before long work.
@@ -118,7 +119,8 @@ class Archive:
 
     def log(self) -> Log:
         """What became of every batch; empty where there is no archive."""
-        return Log(tuple(sorted(self._entries(), key=lambda entry: (entry.number, entry.batch_id))))
+        entries = [self._entry(name) for name in self._names_of_entries()]
+        return Log(tuple(sorted(entries, key=lambda entry: (entry.number, entry.batch_id))))
 
     def parts(self, first_day: str, last_day: str, log: Log | None = None) -> list[Part]:
         """The files of history on the local days ``first_day`` to ``last_day`` (as 2026-01-12), in order of day, then
@@ -149,23 +151,28 @@ class Archive:
             self._enter(replace(known, what=what))
 
     def _enter(self, entry: Entry) -> None:
-        newest = max((each.number for each in self._entries()), default=0)
+        newest = max((int(name.partition("-")[0]) for name in self._names_of_entries()), default=0)
         entry = replace(entry, number=max(time.time_ns(), newest + 1))
         folder = _made(self.folder / "log")
         with whole_file(folder / f"{entry.number:020d}-{secrets.token_hex(4)}.json") as file:
             file.write(json.dumps(asdict(entry), ensure_ascii=False).encode())
 
-    def _entries(self) -> Iterator[Entry]:
-        for name in _names(self.folder / "log"):
-            if not name.startswith(".") and name.endswith(".json"):
-                path = self.folder / "log" / name
-                try:
-                    yield Entry(**json.loads(path.read_bytes()))
-                except (OSError, ValueError, TypeError) as error:
-                    raise StoreError(
-                        str(path), "this entry of the archive's log cannot be read", "as it was written",
-                        "Put back a copy of the file.",
-                    ) from error  # fmt: skip
+    def _names_of_entries(self) -> list[str]:
+        entries = [name for name in _names(self.folder / "log") if name.endswith(".json")]
+        return [name for name in entries if name.partition("-")[0].isdigit()]
+
+    def _entry(self, name: str) -> Entry:
+        """An entry, read once: it never changes."""
+        if name not in self._read:
+            path = self.folder / "log" / name
+            try:
+                self._read[name] = Entry(**json.loads(path.read_bytes()))
+            except (OSError, ValueError, TypeError) as error:
+                raise StoreError(
+                    str(path), "this entry of the archive's log cannot be read", "as it was written",
+                    "Put back a copy of the file.",
+                ) from error  # fmt: skip
+        return self._read[name]
 
 
 class Adding:
