@@ -14,7 +14,7 @@ from sercheck.baseline import residual
 from sercheck.grid import Axis, Grid, Panel
 from sercheck.rulebook.compiled import Rule
 from sercheck.serial.arrays import Bools, Floats, Ints
-from sercheck.serial.autocovariance import autocorrelation
+from sercheck.serial.autocovariances import autocorrelation
 from sercheck.serial.autoregression import burg
 from sercheck.serial.centre import centred
 from sercheck.serial.change_point import most_likely_break, self_normalized, self_normalized_tail

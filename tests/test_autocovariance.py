@@ -9,7 +9,7 @@ from processes import autoregressive
 from reference_values import closed, published, season, series, told
 
 from sercheck.serial import autocovariance as module
-from sercheck.serial.autocovariance import autocorrelation, autocovariance, differences, partial_autocorrelation
+from sercheck.serial.autocovariances import autocorrelation, autocovariance, differences, partial_autocorrelation
 from sercheck.serial.season import detrended
 
 # A correlation near zero is a small difference of terms of size one, each rounded at 1e-16: there relative agreement

@@ -10,7 +10,7 @@ from processes import agrees, alarms, look, make, p_values
 from sercheck.measure import Stays
 from sercheck.measures.distribution import Distribution, distance
 from sercheck.measures.effective_size import EffectiveSize
-from sercheck.serial.effective_size import effective_size_of
+from sercheck.serial.effective_sizes import effective_size_of
 from sercheck.serial.scores import ranking
 
 

@@ -8,7 +8,7 @@ import pytest
 from naive import long_run as slow
 from processes import autoregressive
 
-from sercheck.serial.effective_size import effective_size, effective_size_of, low_frequency_share
+from sercheck.serial.effective_sizes import effective_size, effective_size_of, low_frequency_share
 from sercheck.serial.long_run import (
     autoregressive_long_run,
     bridge_weights,

@@ -7,7 +7,7 @@ from processes import agrees, autoregressive, look, make, p_values
 
 from sercheck.measure import Stays
 from sercheck.measures.partial_autocorrelation import PartialAutocorrelation
-from sercheck.serial.autocovariance import partial_autocorrelation, step_down
+from sercheck.serial.autocovariances import partial_autocorrelation, step_down
 from sercheck.serial.autoregression import burg, model_autocorrelation
 from sercheck.serial.partial_law import partial_expansion, reflections
 from sercheck.serial.sampling_error import autocorrelation_bias, bartlett_weights

@@ -8,7 +8,7 @@ from naive import autoregression as naive
 from processes import autoregressive
 from reference_values import closed, opened, published, series, told
 
-from sercheck.serial.autocovariance import autocorrelation
+from sercheck.serial.autocovariances import autocorrelation
 from sercheck.serial.autoregression import burg, innovations, model_autocorrelation, step_up
 from sercheck.serial.gap_variance import gapped_variance
 from sercheck.serial.sampling_error import (

@@ -8,7 +8,7 @@ import pytest
 from reference_values import season, series, told
 from scipy import stats
 
-from sercheck.serial.autocovariance import autocorrelation
+from sercheck.serial.autocovariances import autocorrelation
 from sercheck.serial.season import (
     cycle_numbers,
     decomposed,

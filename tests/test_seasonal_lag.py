@@ -13,7 +13,7 @@ from sercheck.judge import FAIL, PASS, UNDECIDED, Seen, judge
 from sercheck.measure import Question, Stays
 from sercheck.measures import get
 from sercheck.rulebook.compiled import Rule
-from sercheck.serial.autocovariance import autocorrelation
+from sercheck.serial.autocovariances import autocorrelation
 from sercheck.serial.matched_filter import Cycle, learn_season, matched_amplitude
 from sercheck.serial.season import detrended
 

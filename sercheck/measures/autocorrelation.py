@@ -57,7 +57,7 @@ from sercheck.measures._lags import (
 from sercheck.measures._past import combined
 from sercheck.recent import enough, recent_measurement, recent_past
 from sercheck.serial.arrays import Floats, Ints
-from sercheck.serial.autocovariance import autocorrelation as sample
+from sercheck.serial.autocovariances import autocorrelation as sample
 from sercheck.serial.autoregression import root_beyond
 from sercheck.serial.lag_law import ROOT, bound_law, history_law, lagged
 from sercheck.serial.window_t import fewest_windows

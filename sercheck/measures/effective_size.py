@@ -40,7 +40,7 @@ from sercheck.measures._witnesses import own_cycles_out
 from sercheck.reference import Larger, Pivot
 from sercheck.serial.arrays import Floats
 from sercheck.serial.autoregression import burg
-from sercheck.serial.effective_size import low_frequency_share
+from sercheck.serial.effective_sizes import low_frequency_share
 from sercheck.serial.long_run import autoregressive_long_run
 from sercheck.serial.risk import t_quantile, t_tail
 from sercheck.serial.window_t import window_t, windows

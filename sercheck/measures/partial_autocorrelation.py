@@ -54,7 +54,7 @@ from sercheck.measures._lags import (
 )
 from sercheck.reference import Pivot, same
 from sercheck.serial.arrays import Floats, Ints
-from sercheck.serial.autocovariance import partial_autocorrelation as sample
+from sercheck.serial.autocovariances import partial_autocorrelation as sample
 from sercheck.serial.autoregression import root_beyond
 from sercheck.serial.lag_law import ROOT, forward
 from sercheck.serial.partial_law import PartialLaws, reflections

@@ -52,7 +52,7 @@ from sercheck.measures._season_laws import ChiSquare
 from sercheck.recent import enough, has_profile, idle_amplitude, recent_measurement, recent_past
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Bools, Floats, Ints
-from sercheck.serial.autocovariance import autocorrelation
+from sercheck.serial.autocovariances import autocorrelation
 from sercheck.serial.lag_law import forward
 from sercheck.serial.matched_filter import Amplitude, matched_amplitude
 from sercheck.serial.phase import SURE

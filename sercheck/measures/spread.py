@@ -60,7 +60,7 @@ from sercheck.recent import recent_measurement, recent_past
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats
 from sercheck.serial.autoregression import burg, model_autocorrelation
-from sercheck.serial.effective_size import effective_size_of
+from sercheck.serial.effective_sizes import effective_size_of
 from sercheck.serial.window_t import fewest_windows, window_t, windows
 
 FEWEST_ALONE = 336

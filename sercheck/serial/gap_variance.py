@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from sercheck.serial.arrays import Bools, Floats, Ints
-from sercheck.serial.autocovariance import good_length
+from sercheck.serial.autocovariances import good_length
 from sercheck.serial.sampling_error import bartlett_variance
 
 

@@ -8,7 +8,7 @@ import numpy as np
 from scipy import special
 
 from sercheck.serial.arrays import Bools, Floats, Ints
-from sercheck.serial.autocovariance import autocorrelation_of
+from sercheck.serial.autocovariances import autocorrelation_of
 from sercheck.serial.autoregression import (
     Autoregression,
     burg,

@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from sercheck.serial.arrays import Floats, Ints
-from sercheck.serial.autocovariance import good_length
+from sercheck.serial.autocovariances import good_length
 from sercheck.serial.autoregression import (
     Autoregression,
     burg,

@@ -8,7 +8,7 @@ import numpy as np
 from scipy import special
 
 from sercheck.serial.arrays import Floats, Ints
-from sercheck.serial.autocovariance import autocorrelation_of
+from sercheck.serial.autocovariances import autocorrelation_of
 from sercheck.serial.centre import centred
 
 THRESHOLD = 2.0

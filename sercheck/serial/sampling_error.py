@@ -10,7 +10,7 @@ import numpy as np
 from scipy import special
 
 from sercheck.serial.arrays import Floats, Ints, as_series
-from sercheck.serial.autocovariance import Lags, good_length
+from sercheck.serial.autocovariances import Lags, good_length
 from sercheck.serial.autoregression import burg, largest_order, model_autocorrelation
 
 REACH = 100
