@@ -24,6 +24,9 @@ from sercheck.suspects import with_causes
 from sercheck.together import pooled
 from sercheck.transforms import apply
 
+LARGE, SMALL = 1e150, 1e-150
+"""Magnitudes whose squares are near the ends of float64 (1.8e308 and 2.2e-308)."""
+
 
 class Steps(Protocol):
     """What the engine needs to know of a cadence."""
@@ -60,6 +63,24 @@ def measure_block(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
     Returns:
         What was seen, in the order of the rules, and notes for the reader.
     """
+    with np.errstate(all="ignore" if _extreme(grid) else None):
+        return _measured(grid, run)
+
+
+def _extreme(grid: Grid) -> bool:
+    """Squares of the values leave the range of float64: sums become infinite, variances nought.
+
+    What cannot be computed then is judged undecided; it needs no warning beside the answer.
+    """
+    for values in grid.values.values():
+        for part in (values[:, : grid.start], values[:, grid.start :]):
+            largest = max(np.fmax.reduce(part, axis=None, initial=0.0), -np.fmin.reduce(part, axis=None, initial=0.0))
+            if largest > LARGE or 0 < largest < SMALL:
+                return True
+    return False
+
+
+def _measured(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
     panels: dict[object, Panel] = {}
     seen: list[Seen] = []
     notes: list[str] = []
