@@ -18,7 +18,7 @@ from sercheck.serial.risk import t_tail
 FEW = ("white", "AR .6", "AR .9", "MA(1)", "profile + AR .6")
 MEASURES = ("level", "autocorrelation", "seasonal_lag", "spread", "rate")
 WINDOWS = 12
-SERIES = 300
+SERIES = 240
 FIVE_AND_ONE = RISKS[:2]
 
 NAIVE = {
