@@ -29,13 +29,13 @@ def heat(rng: np.random.Generator, hours: pd.DatetimeIndex) -> pd.DataFrame:
     """Hourly heat in kWh, one column a substation: daily and weekly cycle on the local clock, correlated noise."""
     local = hours.tz_convert(ZONE)
     hour, weekend = local.hour.to_numpy(), local.day_of_week.to_numpy() >= 5
-    morning = np.exp(-0.5 * ((hour - np.where(weekend, 9.5, 7.0)) / 2.2) ** 2)
-    evening = np.exp(-0.5 * ((hour - 19.0) / 2.8) ** 2)
     weather = ar1(rng, len(hours), memory=0.95, spread=0.045)
     table = {}
     for station in STATIONS:
-        base = rng.uniform(60, 240)
-        peaks = rng.uniform(0.35, 0.55) * morning * np.where(weekend, 0.75, 1.0) + rng.uniform(0.25, 0.4) * evening
+        base, early, late = rng.uniform(60, 240), rng.uniform(5.5, 9.0), rng.uniform(16.5, 21.0)
+        morning = np.exp(-0.5 * ((hour - early - 2.5 * weekend) / 2.2) ** 2) * np.where(weekend, 0.75, 1.0)
+        evening = np.exp(-0.5 * ((hour - late) / 2.8) ** 2)
+        peaks = rng.uniform(0.35, 0.55) * morning + rng.uniform(0.25, 0.4) * evening
         noise = ar1(rng, len(hours), memory=0.6, spread=0.05)
         table[station] = np.round(base * (0.8 + peaks + weather + noise), 1)
     return pd.DataFrame(table, index=hours)
