@@ -75,9 +75,9 @@ def _sentence(
         return f"{name}: {'is there' if outcome == PASS else 'no season can be certified'}"
     value = number(observed, integer=seen.integer)
     side = "inside" if outcome == PASS else "at" if observed == limit else "above" if upper else "below"
-    from_history = "history's " if rule.stays.kind == "like_history" else ""
+    source = "history" if rule.stays.kind == "like_history" else "bound"
     if seen.exact:
         return f"{name} is {value}, {side} the bound {number(bound, integer=seen.integer)}"
-    sizes = f"{n} rows" if math.isnan(n_eff) else f"{n} rows that count for {number(n_eff)}"
+    sizes = f"{n} rows" if math.isnan(n_eff) else f"{n} rows, worth {number(n_eff)} independent ones"
     edge = "a limit beyond all that could be seen" if math.isnan(limit) else f"the limit {number(limit)}"
-    return f"{name} is {value}, {side} {edge} ({from_history}bound {number(bound)}, {sizes})"
+    return f"{name} is {value}, {side} {edge} ({source} {number(bound)}; {sizes})"
