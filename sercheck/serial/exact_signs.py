@@ -42,8 +42,8 @@ BY_CHANCE = 8.0
 FINEST = 1e-8
 """Finest step that is looked for."""
 
-SOME = 0.1
-"""Share of a window that must have come before: a clock that slipped repeats a few rows too, at its seam."""
+SOME, SEAM = 0.1, 6
+"""A tenth of a window, six rows at most, must have come before: a clock that slipped repeats a few at its seam."""
 
 COMMON = 0.01
 """Share of history's rows with a value that came before, under which values hardly ever come twice."""
@@ -233,7 +233,7 @@ def _again(values: Floats, start: int) -> Sign:
     count = np.nansum(seen.batch, axis=1)
     pieces = np.where(count > 0, np.maximum(count / seen.length, least), 0.0)
     unusual = _beyond(pieces, told / seen.length, seen.history, window_steps)
-    return Sign("again", unusual & (count >= SOME * told), count / np.maximum(told, 1))
+    return Sign("again", unusual & (count >= np.minimum(SOME * told, SEAM)), count / np.maximum(told, 1))
 
 
 def _midpoints(window: Floats, history: Floats) -> Sign:
