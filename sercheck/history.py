@@ -22,7 +22,7 @@ from sercheck.intake.layout import Layout
 from sercheck.intake.since import both, compact, cut
 from sercheck.intake.stream import Source, open_feed
 from sercheck.intake.stretch import Extent
-from sercheck.intake.zone import DAY, EARLIEST, NOT_A_STAMP
+from sercheck.intake.zone import DAY, EARLIEST, LATEST, NOT_A_STAMP
 from sercheck.record import utc_text
 from sercheck.rulebook.compiled import Rulebook
 from sercheck.rulebook.lengths import mean_seconds, seconds
@@ -156,7 +156,8 @@ def find_past(
         named = given if given is not None else list(book.history) or None
         source = None if named is None else open_feed(named, layout)
         first = max(teaches_from(book, cadence, extent, default=given is None), since or EARLIEST)
-        return Past(cut(source, first), held=_held(memory), notes=regime_note(since))
+        before = extent.first if given is None else LATEST
+        return Past(cut(source, cadence, first, before), held=_held(memory), notes=regime_note(since))
     return _remembered(memory, cadence, extent, since, judged_at)
 
 
@@ -173,7 +174,7 @@ def _remembered(memory: Memory, cadence: Cadence, extent: Extent, since: int | N
             f"less than half of the rows since {_text(max(first, EARLIEST))} were let in: the baseline of "
             f"{known.first_stamp} to {known.last_stamp} is kept"
         )
-    source = _joined(memory, memory.archived(first, extent.first), first)
+    source = _joined(memory, memory.archived(first, extent.first), cadence, (first, extent.first))
     _not_another_year(memory.log, extent)
     if source is None:
         return Past(None, notes=tuple(notes))
@@ -208,16 +209,15 @@ def _not_another_year(log: Log, extent: Extent) -> None:
         )  # fmt: skip
 
 
-def _joined(memory: Memory, kept: Source | None, first: int) -> Source | None:
+def _joined(memory: Memory, kept: Source | None, cadence: Cadence, between: tuple[int, int]) -> Source | None:
     """The archive's rows, and before their first one what the rule file names."""
     book, layout = memory.book, memory.layout
     if not book.history:
         return kept
-    cadence = Cadence(layout.every, layout.timezone)
-    begins = None if kept is None else kept.extent(cadence.anchored(kept.sample())).first
-    if begins is not None and begins <= first + DAY:
+    begins = None if kept is None else kept.extent(cadence).first
+    if begins is not None and begins <= between[0] + DAY:
         return kept
-    older = cut(open_feed(list(book.history), layout), first)
+    older = cut(open_feed(list(book.history), layout), cadence, *between)
     if older is None or kept is None or begins is None:
         return older or kept
     rows = older.rows()

@@ -83,7 +83,7 @@ def _taught(memory: Memory, source: Source, cadence: Cadence) -> Taught:
     since = regime(memory)
     wanted = teaches_from(book, cadence, _next_batch(extent, cadence), default=True)
     first = max(wanted, since or EARLIEST)
-    teaching = cut(source, first)
+    teaching = cut(source, cadence, first)
     if teaching is None:
         raise BatchError("the history", "no row of the time that teaches", "newer rows", "Look at `baseline: from`.")
     learned_at = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ")

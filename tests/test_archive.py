@@ -446,6 +446,24 @@ def test_what_the_rule_file_names_fills_in_before_the_archive(tmp_path, monkeypa
     assert starts == [40 * 48, 41 * 48]
 
 
+@pytest.mark.parametrize("stream", [False, True])
+def test_a_history_file_that_holds_the_batch_teaches_only_what_lies_before_it(tmp_path, monkeypatch, stream):
+    """The baseline ends before the window, also where the file is read block by block."""
+    frame = wave("2026-01-01", 45, seed=1).sort_values(["key", "t"])
+    frame["t"] = pd.to_datetime(frame["t"])
+    frame.to_parquet(tmp_path / "all.parquet", row_group_size=300)
+    if stream:
+        monkeypatch.setattr("sercheck.intake.stream.open_feed.__defaults__", (500,))
+    feed = Feed(tmp_path, RULES + f"history: [{tmp_path}/all.parquet]\n")
+    batch = frame[frame["t"] >= pd.Timestamp("2026-02-10", tz="UTC")][:24]
+    verdict = feed.gate(batch)
+    with open_ledger(str(feed.store)) as ledger:
+        kept = ledger.baseline("tide", feed.book.fingerprint, "2026-12-01T00:00:00Z")
+    assert kept is not None
+    assert (kept.first_stamp, kept.last_stamp) == ("2026-01-01T00:00:00Z", "2026-02-09T23:00:00Z")
+    assert verdict.table["baseline_id"][0] == kept.baseline_id
+
+
 def test_a_crash_between_ledger_and_archive_is_healed_by_a_repeat(feed, monkeypatch):
     """The ledger has the decision, the archive failed: the same call again keeps the rows."""
     with monkeypatch.context() as broken:

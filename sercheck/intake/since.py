@@ -7,33 +7,44 @@ from dataclasses import replace
 
 import numpy as np
 
-from sercheck.errors import BatchError
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.rows import Fingerprint, Rows
 from sercheck.intake.stream import MemorySource, Source
 from sercheck.intake.stretch import Extent
-from sercheck.intake.zone import EARLIEST
+from sercheck.intake.zone import EARLIEST, LATEST
 from sercheck.serial.arrays import Ints
 
 
-def cut(source: Source | None, first: int) -> Source | None:
-    """A source without the rows before ``first``; None when nothing is left."""
-    if source is None or first <= EARLIEST:
+def cut(source: Source | None, cadence: Cadence, first: int, before: int = LATEST) -> Source | None:
+    """A source without the rows before ``first`` and from ``before`` on (nanoseconds UTC); None when nothing is left.
+
+    Args:
+        source: rows in memory or a stream; None gives None.
+        cadence: the anchored cadence.
+        first: rows before are left out.
+        before: rows at or after are left out; by default none.
+    """
+    if source is None or (first <= EARLIEST and before >= LATEST):
         return source
     if isinstance(source, MemorySource):
-        rows = source.rows()
-        late = rows.stamps >= first
-        if late.all():
+        rows = _between(source.rows(), first, before)
+        if len(rows) == len(source.rows()):
             return source
-        return MemorySource(compact(rows.take(late)), source.layout, source.paths) if late.any() else None
-    return _Since(source, first)
+        return MemorySource(rows, source.layout, source.paths) if len(rows) else None
+    whole = source.extent(cadence)
+    return _Cut(source, first, before) if whole.last >= first and whole.first < before else None
 
 
-class _Since(Source):
-    """A stream without its rows before a moment."""
+def _between(rows: Rows, first: int, before: int) -> Rows:
+    inside = (rows.stamps >= first) & (rows.stamps < before)
+    return rows if inside.all() else compact(rows.take(inside))
 
-    def __init__(self, whole: Source, first: int) -> None:
-        self._whole, self._first = whole, first
+
+class _Cut(Source):
+    """A stream without its rows before one moment and from another on."""
+
+    def __init__(self, whole: Source, first: int, before: int) -> None:
+        self._whole, self._first, self._before = whole, first, before
         self.layout, self.paths = whole.layout, whole.paths
         self._fingerprint: str | None = None
 
@@ -49,23 +60,24 @@ class _Since(Source):
 
     def extent(self, cadence: Cadence) -> Extent:
         whole = self._whole.extent(cadence)
-        if whole.last < self._first:
-            since = np.datetime64(self._first, "ns").astype("datetime64[s]")
-            raise BatchError("the history", f"no row since {since}Z", "rows of the time that teaches")
-        return replace(whole, first=max(whole.first, self._first), low=max(whole.low, self._first))
+        inside = replace(whole, first=max(whole.first, self._first), last=min(whole.last, self._before - 1))
+        if cadence.irregular:
+            return inside
+        ends = cadence.stamp_of(cadence.index_of(np.array([inside.first, inside.last]))[0])
+        first = int(ends[0]) if ends[0] >= inside.first else int(ends[0]) + cadence.step
+        return replace(inside, first=min(first, int(ends[1])), last=int(ends[1]))
 
     def blocks(self) -> Iterator[Rows]:
         counted = Fingerprint(self.layout.values)
         for rows in self._whole.blocks():
-            late = compact(rows.take(rows.stamps >= self._first))
-            if len(late):
-                counted.add(late)
-                yield late
+            inside = _between(rows, self._first, self._before)
+            if len(inside):
+                counted.add(inside)
+                yield inside
         self._fingerprint = counted.text()
 
     def rows(self) -> Rows:
-        whole = self._whole.rows()
-        return compact(whole.take(whole.stamps >= self._first))
+        return _between(self._whole.rows(), self._first, self._before)
 
 
 def both(one: Rows, other: Rows) -> Rows:
