@@ -19,7 +19,7 @@ from sercheck.judge import Judged, Seen, judge
 from sercheck.measure import Clock, Measure, Measurement, Question
 from sercheck.measures import get
 from sercheck.rulebook.compiled import Rule, Rulebook
-from sercheck.serial.arrays import Bools, Ints
+from sercheck.serial.arrays import Bools
 from sercheck.suspects import with_causes
 from sercheck.together import pooled
 from sercheck.transforms import apply
@@ -152,14 +152,20 @@ def _look(place: int, rule: Rule, measure: Measure, panel: Panel, grid: Grid, ch
     measurement = measure.run(panel, question)
     unable = next((one.unable for one in (panel, *panel.beside.values()) if one.unable), "")
     if unable:
-        measurement = _unable(measurement, unable)
+        measurement = _undecided(measurement, np.ones(len(panel.values), dtype=bool), unable)
+    if measure.of_values and not measure.of_missing:
+        silent = np.isnan(grid.values[panel.column][chosen, grid.start :]).all(axis=1)
+        measurement = _undecided(measurement, silent, "the batch holds no value of this series")
     first, last = int(panel.axis.stamps[panel.start]), int(panel.axis.stamps[-1])
     return Seen(place, grid.keys[chosen], panel.column or None, measurement, first, last)
 
 
-def _unable(seen: Measurement, reason: str) -> Measurement:
-    everywhere: Ints = np.full(seen.observed.shape, 0, dtype=np.int64)
-    return replace(seen, undecided=everywhere, reasons=(reason,))
+def _undecided(seen: Measurement, series: Bools, reason: str) -> Measurement:
+    """Nothing can be said of some series, whatever their history lets a measure say."""
+    if not series.any():
+        return seen
+    index = np.where(series[:, None], len(seen.reasons), seen.undecided)
+    return replace(seen, undecided=index, reasons=(*seen.reasons, reason))
 
 
 def _part(grid: Grid, chosen: Bools) -> Grid:

@@ -156,6 +156,7 @@ class Measure(ABC):
     Attributes:
         kinds: which kinds of ``stays`` it accepts.
         of_values: reads a value column; False: reads the clock, judged once a series whatever the columns.
+        of_missing: has something to say about a series of which the batch holds no value.
         exact: no sampling error, so that no false alarm comes by chance: its rules take no share of the alarm budget.
         weight: what a rule of this measure weighs in the alarm budget unless it says so itself.
         bounds_in: numbers, or lengths in time that the rule file compiles to seconds.
@@ -165,6 +166,7 @@ class Measure(ABC):
 
     kinds: ClassVar[frozenset[str]] = frozenset({"below", "above", "between"})
     of_values: ClassVar[bool] = True
+    of_missing: ClassVar[bool] = False
     exact: ClassVar[bool] = False
     weight: ClassVar[float] = 1.0
     bounds_in: ClassVar[Literal["numbers", "time"]] = "numbers"

@@ -81,3 +81,16 @@ def test_other_ways_stand_beside_it(across):
     verdict = judged(feed(np.random.default_rng(4), days=70, series=3), rules)
     assert verdict.records["series"].isna().tolist() == [False, False, False, True]
     assert verdict.records["false_alarm_used"].iloc[-1] == pytest.approx(0.005)
+
+
+def test_a_silent_series_is_undecided_though_its_history_would_pass():
+    """A window longer than the batch says nothing of a series that the batch has no value of."""
+    frame = feed(np.random.default_rng(5), days=40, series=2)
+    rules = RULES.replace(
+        "measure: season_phase\n    season: day\n    across: together", "measure: level\n    window: 20D"
+    )
+    rules = rules.replace("{like: history}", "{below: 40}")
+    frame.loc[(frame["s"] == "m1") & (frame["t"] >= frame["t"].max() - pd.Timedelta(hours=23)), "v"] = np.nan
+    verdict = judged(frame, rules)
+    assert verdict.records.set_index("series")["outcome"].to_dict() == {"m0": "pass", "m1": "undecided"}
+    assert "holds no value" in verdict.records["reason"][1]

@@ -148,3 +148,13 @@ def seasons_left(panel: Panel) -> str:
     """What ``assumes`` says about the seasons that a feed has, where the rule judges lags by the author's numbers."""
     named = ", ".join(f"{name} ({length} steps)" for name, length in sorted(panel.axis.lengths.items()))
     return f", and that the cycles of {named} are taken out by after (left in, they decide)" if named else ""
+
+
+def no_level(panel: Panel) -> str:
+    """Why a series has no level that it returns to, and what to do about it."""
+    seasons = [name for name in sorted(panel.axis.lengths) if f"without_season {name}" not in panel.after]
+    difference = "" if "difference" in panel.after else "difference first (after: difference)"
+    cycle = f"take the cycle out (after: {{without_season: {seasons[0]}}})" if seasons else ""
+    advice = " or ".join(part for part in (cycle, difference) if part) or "look at the feed by itself first"
+    what = "follows a cycle or wanders" if seasons else "wanders"
+    return f"the series {what} without a level to return to: {advice}"

@@ -51,6 +51,7 @@ from sercheck.measures._lags import (
     correlation_reference,
     fewest_for_bound,
     literal_bounds,
+    no_level,
     seasons_left,
     window_counts,
 )
@@ -98,7 +99,7 @@ def _against_bounds(panel: Panel, question: Question, lags: tuple[int, ...]) -> 
     reasons.add(np.isnan(seen.r), "the window varies by no more than the rounding of its numbers")
     reasons.add(
         root_beyond(seen.model, ROOT)[:, None],
-        "the series wanders without a level to return to: difference first (after: difference)",
+        no_level(panel),
     )
     references: dict[Side, Reference] = {}
     error = np.full(n.shape, np.nan)

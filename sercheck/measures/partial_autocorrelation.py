@@ -49,6 +49,7 @@ from sercheck.measures._lags import (
     ask_rows,
     ask_variety,
     literal_bounds,
+    no_level,
     seasons_left,
     window_counts,
 )
@@ -92,7 +93,7 @@ def _against_bounds(panel: Panel, question: Question, lags: tuple[int, ...]) -> 
     )
     reasons.add(
         root_beyond(laws.model, ROOT)[:, None],
-        "the series wanders without a level to return to: difference first (after: difference)",
+        no_level(panel),
     )
     references: dict[Side, Reference] = {}
     error = np.full(n.shape, np.nan)

@@ -89,6 +89,7 @@ class Fields(BaseModel):
 class Rate(Measure):
     """Share of rows of a kind."""
 
+    of_missing = True
     kinds = frozenset({"below", "above", "between", "like_history"})
     span = (0.0, 1.0)
     Fields = Fields

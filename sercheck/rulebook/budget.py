@@ -99,7 +99,7 @@ def expected_false_holds(book: Rulebook) -> tuple[float, str] | None:
         return None
     per = book.false_holds.per if book.false_holds else "90D"
     apart = mean_seconds(book.batch_every)
-    return (_held_risk(book) * seconds(per) / apart, per) if apart else None
+    return (round(_held_risk(book) * seconds(per) / apart, 9), per) if apart else None
 
 
 def _held_risk(book: Rulebook) -> float:
