@@ -17,7 +17,8 @@ Unit: none; D is 0 where a window lies as near to another series as to its own.
 Missing values: a value takes part where those before it that the model needs are there; nothing is closed up.
 Minimum: two series, one cycle of the shortest season and 12 whitened values in the window, 8 stretches of history of
 the window's length (20 at a risk of .001 or less) after the three cycles that a profile needs. A pass is undecided
-where the profile of another series is so similar that a swap with it would not be found with probability .8.
+where the profile of another series is so similar that a swap with it would not be found with probability .8. Of 2,000
+series of twelve weeks of hours a day is compared in 12 s beside 3 s for the profiles; the time grows with the square.
 
 Example::
 
@@ -38,11 +39,11 @@ from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Question, Reasons, Side
 from sercheck.measures._past import NO_HISTORY, cell, counts
 from sercheck.recent import has_profile, recent_past
-from sercheck.recent_past import WHITENER
 from sercheck.reference import Pivot, detectable_reach
 from sercheck.serial.arrays import Floats
 from sercheck.serial.batch_statistics import batches
 from sercheck.serial.identity import own_or_other, swap_size
+from sercheck.serial.matched_filter import HIGHEST_ORDER
 from sercheck.serial.window_t import count_windows, fewest_windows, window_t
 
 FEWEST = 12
@@ -102,7 +103,7 @@ def _nothing(panel: Panel, reasons: Reasons) -> Measurement:
 def _compared(panel: Panel, question: Question, reasons: Reasons, fewest: int) -> Measurement:
     recent = recent_past(panel, logs=False)
     n = recent.n
-    model = recent.model(min(WHITENER, n // ORDER_SHARE))
+    model = recent.model(min(HIGHEST_ORDER, n // ORDER_SHARE))
     x, expected = _in_one_unit(recent.y, recent.expected, recent.scale)
     seen = own_or_other(batches(x, n), batches(expected, n), model)
     enough = seen.values >= max(FEWEST, OBSERVED * (n - int(model.order.max(initial=0))))
