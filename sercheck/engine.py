@@ -47,11 +47,14 @@ class Run:
         book: the rule file.
         cadence: turns lengths in time into steps.
         as_of: int64 nanoseconds since 1970 UTC at which the batch is judged.
+        rests: names of the rules that held one of the last seven batches: their longer look, which would see the same
+            days again, rests.
     """
 
     book: Rulebook
     cadence: Steps
     as_of: int
+    rests: frozenset[str] = frozenset()
 
 
 def measure_block(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
@@ -143,7 +146,13 @@ def _panel(grid: Grid, rule: Rule, column: str, chosen: Bools, run: Run) -> Pane
 def _look(place: int, rule: Rule, measure: Measure, panel: Panel, grid: Grid, chosen: Bools, run: Run) -> Seen:
     clock = Clock(_part(grid, chosen), run.as_of, run.cadence.step, run.book.timezone)
     question = Question(
-        rule.fields, rule.stays, rule.false_alarm, dict(panel.axis.lengths), clock, together="together" in rule.across
+        rule.fields,
+        rule.stays,
+        rule.false_alarm,
+        dict(panel.axis.lengths),
+        clock,
+        rests=rule.name in run.rests,
+        together="together" in rule.across,
     )
     if panel.values.shape[1] == panel.start:
         raise UsageError(
@@ -154,7 +163,7 @@ def _look(place: int, rule: Rule, measure: Measure, panel: Panel, grid: Grid, ch
     if unable:
         measurement = _undecided(measurement, np.ones(len(panel.values), dtype=bool), unable)
     if measure.of_values and not measure.of_missing:
-        silent = np.isnan(grid.values[panel.column][chosen, grid.start :]).all(axis=1)
+        silent = np.asarray(np.isnan(grid.values[panel.column][chosen, grid.start :]).all(axis=1))
         measurement = _undecided(measurement, silent, "the batch holds no value of this series")
     first, last = int(panel.axis.stamps[panel.start]), int(panel.axis.stamps[-1])
     return Seen(place, grid.keys[chosen], panel.column or None, measurement, first, last)

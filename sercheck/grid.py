@@ -26,7 +26,7 @@ class Axis:
             own wall clock.
         closed: steps that lie on a closed day, shape (T,).
         expected: steps at which a row is due (closed days of daily and longer cadences are not), shape (T,).
-        groups: for lengths that ``after: {every: ...}`` asks for, the number of the group each step lies in, shape (T,).
+        groups: for lengths that ``after: {every: ...}`` asks for, the number of the group of every step, shape (T,).
         held: steps of batches that were held and then let in by a person, shape (T,); empty when there are none.
     """
 

@@ -50,6 +50,10 @@ LEFT = 0.5
 SECOND = 1_000_000_000
 
 
+LOOK = 7
+"""Batches over which a rule's longer look rests after it held one: those that the look takes together."""
+
+
 @dataclass(frozen=True)
 class Past:
     """The history of one judgement.
@@ -59,12 +63,14 @@ class Past:
         baseline: the baseline that its records name, where the ledger has one or will have.
         held: first and last stamp of the batches that were held and then let in by a person.
         notes: what the reader should know.
+        rests: rules that held one of the last seven batches.
     """
 
     source: Source | None
     baseline: BaselineRow | None = None
     held: tuple[tuple[int, int], ...] = ()
     notes: tuple[str, ...] = ()
+    rests: frozenset[str] = frozenset()
 
     @property
     def baseline_id(self) -> str | None:
@@ -119,6 +125,18 @@ class Memory:
         elif said is not None or known.what == "held":
             self.archive.mark(known, what)
 
+    def held_by(self, before: int, reach: int) -> frozenset[str]:
+        """The rules that held a batch of this feed whose newest row lies in the stretch of ``reach`` before a stamp."""
+        from sercheck.store.rows import Filters
+
+        first, last = (_text(max(stamp, EARLIEST)) for stamp in (before - reach, before - 1))
+        held = Filters(feed=self.book.feed, since=first, until=last, decision="held")
+        names: set[str] = set()
+        for batch in self.ledger.batches(held):
+            table = self.ledger.records(Filters(batch_id=batch.batch.batch_id, outcome="fail"))
+            names.update(table["rule"][table["action"] == "hold"].tolist())
+        return frozenset(names)
+
     def learned(self, source: Source, cadence: Cadence, learned_at: str) -> BaselineRow:
         """Learn from the rows and keep it in the ledger."""
         from sercheck.learn import identity, learn
@@ -142,6 +160,18 @@ def open_memory(
 
 
 def find_past(
+    book: Rulebook, layout: Layout, batch: Source, given: Given | None, memory: Memory | None, judged_at: str
+) -> Past:
+    """The history of a batch, with what was decided about the batches just before it."""
+    past = _found(book, layout, batch, given, memory, judged_at)
+    if memory is None:
+        return past
+    cadence = Cadence(layout.every, layout.timezone).anchored(batch.sample())
+    extent = batch.extent(cadence)
+    return replace(past, rests=memory.held_by(extent.first, LOOK * _batch_length(book, cadence, extent)))
+
+
+def _found(
     book: Rulebook, layout: Layout, batch: Source, given: Given | None, memory: Memory | None, judged_at: str
 ) -> Past:
     """The history of a batch: what was given, else the archive, before its first row what the rule file names.

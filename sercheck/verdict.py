@@ -175,7 +175,7 @@ def gate(
     past = find_past(book, layout, source, history, memory, str(utc_text(judged_at)[0]))
     counted = _Counted()
     cadence = feed_cadence(source, past.source, layout)
-    run = Run(book, cadence, judged_at)
+    run = Run(book, cadence, judged_at, past.rests)
     seen: list[Seen] = []
     notes: list[str] = [*past.notes]
     for grid in feed_grids(source, past.source, layout):

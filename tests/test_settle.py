@@ -17,6 +17,7 @@ from gate_runs import process
 from sercheck.archived import keep
 from sercheck.engine import measure_block
 from sercheck.errors import SercheckError, UsageError
+from sercheck.history import Memory
 from sercheck.intake.stream import open_feed
 from sercheck.rulebook import load_rules
 from sercheck.settle import settle
@@ -144,8 +145,9 @@ def test_its_steps_are_marked_for_what_must_not_learn_from_them(feed, monkeypatc
     assert grid.start == DAYS * 24 + 24
 
 
-def test_a_day_let_in_leaves_the_memory_of_steps_alone(feed, tmp_path):
+def test_a_day_let_in_leaves_the_memory_of_steps_alone(feed, tmp_path, monkeypatch):
     """The autocorrelation of the next day is judged as if the odd day had not been, its level is not."""
+    monkeypatch.setattr(Memory, "held_by", lambda *_: frozenset())  # what rests after a hold is another matter
     odd = healthy(0)
     odd["x"] = np.random.default_rng(5).permutation(odd["x"].to_numpy()) + 25
     held = feed.gate(odd)
@@ -169,6 +171,25 @@ def test_a_day_let_in_leaves_the_memory_of_steps_alone(feed, tmp_path):
     assert limits(after, "steps as ever") == pytest.approx(limits(without, "steps as ever"), rel=0.03)
     assert limits(plain, "steps as ever") != pytest.approx(limits(without, "steps as ever"), rel=0.03)
     assert limits(after, "level as usual") == limits(plain, "level as usual")
+
+
+def test_a_rule_that_held_rests_its_longer_look_for_seven_batches(feed, monkeypatch):
+    """The days of a hold are not held against the next ones again: for a week each is looked at by itself."""
+    odd = healthy(0)
+    odd["x"] = np.random.default_rng(5).permutation(odd["x"].to_numpy()) + 25
+    feed.settle(feed.gate(odd), "released")
+    asked = []
+
+    def looked(grid, run):
+        asked.append(run.rests)
+        return measure_block(grid, run)
+
+    monkeypatch.setattr("sercheck.verdict.measure_block", looked)
+    for day in range(1, 9):
+        feed.gate(healthy(day))
+    assert "steps as ever" in asked[0]
+    assert all("steps as ever" in rests for rests in asked[:7])
+    assert "steps as ever" not in asked[7]
 
 
 def test_a_new_regime_forgets_what_was_before(feed):

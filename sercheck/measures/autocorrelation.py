@@ -82,7 +82,7 @@ class Autocorrelation(Measure):
         return combined(
             enough(raw),
             lambda: recent_measurement(
-                raw, recent_past(raw, logs=not question.together).difference_autocorrelation(), lag=1
+                raw, recent_past(raw, logs=not question.together).difference_autocorrelation(question.rests), lag=1
             ),
             lambda: _against_history(panel, question, fields.chosen),
         )

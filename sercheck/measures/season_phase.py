@@ -85,7 +85,7 @@ class SeasonPhase(Measure):
                 enough(panel) & has_profile(panel),
                 lambda: recent_measurement(
                     panel,
-                    recent_past(panel, logs=not question.together).phase(),
+                    recent_past(panel, logs=not question.together).phase(question.rests),
                     season=season.name,
                     idle=idle_phase(panel, question.risk),
                 ),

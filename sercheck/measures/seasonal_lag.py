@@ -92,7 +92,7 @@ class SeasonalLag(Measure):
                 enough(panel) & has_profile(panel) & (fields.multiple == 1),
                 lambda: recent_measurement(
                     panel,
-                    recent_past(panel, logs=not question.together).amplitude(),
+                    recent_past(panel, logs=not question.together).amplitude(question.rests),
                     season=season.name,
                     lag=season.cycle.length,
                     idle=idle_amplitude(panel, question.risk),

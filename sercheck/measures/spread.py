@@ -91,7 +91,7 @@ class Spread(Measure):
             return combined(
                 recent_enough(panel),
                 lambda: varied(
-                    recent_measurement(panel, recent_past(panel, logs=not question.together).spread()),
+                    recent_measurement(panel, recent_past(panel, logs=not question.together).spread(question.rests)),
                     panel,
                     question.risk,
                 ),
