@@ -126,6 +126,14 @@ def test_sizes_at_a_thousandth(kind, past, n, stays, shared):
     assert (found <= (0.06, 0.016, 0.0027)).all()
 
 
+@pytest.mark.parametrize(("past", "n"), [(0, 96), (96, 168), (336, 168)])
+def test_profiles_taken_out_of_both_columns_are_allowed_for(past, n):
+    """Four cycles of the window's own, or of history: their errors meet in the products and are allowed for."""
+    x, y = columns("seasonal", 16, 3000, past + n, 0.0)
+    p = p_values(look(x, y, past, ZERO, {"day": 24}))
+    assert abs(np.mean(p <= 0.05) - 0.05) <= 0.015
+
+
 def test_a_lost_relation_is_found():
     """The second column comes from somewhere else, or an hour late: found; the lag tells which."""
     x, y = columns("ar0.6", 6, 200, 1344 + 168, 2.0)

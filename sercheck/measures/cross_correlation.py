@@ -8,8 +8,8 @@ stretches of the window's length: Student's t on m - 1 degrees of freedom, two-s
 
 A bound of 0 (``above: 0`` or ``below: 0``): is there any relation of that sign? Null hypothesis: there is none. Two
 columns with memory correlate by chance, so each is whitened by its own autoregression first (Haugh 1976; Burg 1975);
-with the innovations e and f, Σ e f/√Σ (e f)² is standard normal (Dalla, Giraitis and Phillips 2022). What is observed
-is the correlation of the innovations. No history is asked.
+with the innovations e and f, Σ e f/√Σ (e f)² is standard normal (Dalla, Giraitis and Phillips 2022), a little wider
+where phase means were taken out. What is observed is the correlation of the innovations. No history is asked.
 
 Any other bound. Null hypothesis: the correlation is the bound. r is that of the rows themselves, and atanh r scatters
 about the bound as it does in history's stretches. Undecided without history.
@@ -250,18 +250,35 @@ def _no_relation(pair: _Pair, question: Question) -> Measurement:
     cross = robust_cross(_whitened(pair.panel), _whitened(pair.other), pair.lags)
     gaps = "gaps leave too few innovations, or one of the columns does not vary in the window"
     reasons.add(np.isnan(cross.t) | (2 * cross.pairs < pair.n), gaps)
-    unit, zero = cross.unit, np.zeros(cross.t.shape)
+    unit, zero, widen = cross.unit, np.zeros(cross.t.shape), _by_profiles(pair.panel)
     with np.errstate(divide="ignore", invalid="ignore"):
         naive = 1 / np.sqrt(cross.pairs) / unit
-        n_eff = pair.n / cross.pairs / unit**2
-    law = Pivot(
-        cross.t, zero, np.ones_like(zero), np.full_like(zero, np.inf), zero, unit, lambda t: t * unit, naive_scale=naive
-    )
+        n_eff = pair.n / cross.pairs / (widen * unit) ** 2
+    scale, normal = np.full_like(zero, widen), np.full_like(zero, np.inf)
+    law = Pivot(cross.t, zero, scale, normal, zero, widen * unit, lambda t: t * unit, naive_scale=naive)
     laws: dict[Side, Reference] = {side: law for side, _ in literal_bounds(question)}
     method = "correlation of innovations (Haugh 1976), robust error (Dalla, Giraitis and Phillips 2022)"
     return pair.measured(
         reasons, cross.t * unit, n_eff, laws, method, "an autoregression for each column" + pair.cycles()
     )
+
+
+def _by_profiles(panel: Panel) -> float:
+    """Standard deviation of t when phase means were taken out of both columns, 1 without.
+
+    Means of the window's own C cycles leave n (1 - 1/C) free products of n: √(C/(C - 1)). Errors of means of history's
+    C cycles repeat over the k cycles of the window: √((1 + 2/C + k/C²)/(1 + 1/C)²).
+    """
+    n, lengths = panel.window.shape[1], panel.axis.lengths
+    by_history = past(panel).seasons
+    taken = by_history or chosen_seasons(panel.axis, n)
+    if not taken:
+        return 1.0
+    length = max(lengths[name] for name in taken)
+    if not by_history:
+        return float(np.sqrt(n / (n - length)))
+    C, k = panel.start / length, max(n / length, 1.0)
+    return float(np.sqrt((1 + 2 / C + k / C**2) / (1 + 1 / C) ** 2))
 
 
 def _whitened(panel: Panel) -> Floats:
