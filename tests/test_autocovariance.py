@@ -8,7 +8,7 @@ from naive import autocovariance as naive
 from processes import autoregressive
 from reference_values import closed, published, season, series, told
 
-from sercheck.serial import autocovariance as module
+from sercheck.serial import autocovariances as module
 from sercheck.serial.autocovariances import autocorrelation, autocovariance, differences, partial_autocorrelation
 from sercheck.serial.season import detrended
 
