@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import errno
 import os
+import platform
 import secrets
 import shutil
 import stat
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager, suppress
+from hashlib import blake2b
 from itertools import count
 from pathlib import Path
 from typing import BinaryIO, NoReturn
@@ -199,9 +201,27 @@ def _mode_of_old(path: str | Path, target: Path) -> int | None:
 
 
 def _draft_in(folder: Path) -> tuple[Path, int]:
-    """A new hidden file in the folder, with the permissions that any new file of this user gets."""
-    draft = folder / f".sercheck-{secrets.token_hex(8)}.tmp"
+    """A new hidden file in the folder, with the permissions that any new file of this user gets.
+
+    Its name tells machine and process, so that what a killed process left behind is known and cleared away.
+    """
+    machine = blake2b(platform.node().encode(), digest_size=4).hexdigest()
+    for old in folder.glob(f".sercheck-{machine}-*.tmp"):
+        if _is_dead(old.name.split("-")[2]):
+            with suppress(OSError):
+                old.unlink()
+    draft = folder / f".sercheck-{machine}-{os.getpid()}-{secrets.token_hex(8)}.tmp"
     return draft, os.open(draft, os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, 0o666)
+
+
+def _is_dead(process: str) -> bool:
+    try:
+        os.kill(int(process), 0)
+    except ProcessLookupError:
+        return True
+    except (ValueError, OverflowError, OSError):
+        return False
+    return False
 
 
 def _settle(folder: Path) -> None:

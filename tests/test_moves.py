@@ -223,3 +223,18 @@ def test_no_permission_is_told(tmp_path, monkeypatch):
     monkeypatch.chdir(tmp_path)
     with somebody_else(), pytest.raises(OutputError, match="no permission"):
         records(2).write("private/r.csv")
+
+
+def test_what_a_killed_process_left_behind_is_cleared_away(tmp_path):
+    """A draft of a process that is no more goes with the next file written there; that of a living one stays."""
+    code = (
+        "import os, signal; from sercheck.outputs import whole_file\n"
+        "with whole_file('out.csv') as file:\n    file.write(b'half'); file.flush(); os.kill(os.getpid(), signal.SIGKILL)\n"
+    )
+    subprocess.run([sys.executable, "-c", code], cwd=tmp_path, check=False)
+    (left,) = tmp_path.glob(".sercheck-*.tmp")
+    alive = left.with_name(left.name.replace(left.name.split("-")[2], str(os.getpid())))
+    alive.write_bytes(b"going on")
+    with whole_file(tmp_path / "other.csv") as file:
+        file.write(b"whole")
+    assert sorted(path.name for path in tmp_path.iterdir()) == sorted([alive.name, "other.csv"])
