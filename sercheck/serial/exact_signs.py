@@ -8,7 +8,7 @@ import numpy as np
 from scipy import special
 
 from sercheck.serial.arrays import Bools, Floats, Ints
-from sercheck.serial.repeats import FLOAT_SLACK, equal_to_earlier, midpoints, resting_value
+from sercheck.serial.repeats import FLOAT_SLACK, equal_to_earlier, midpoints, resting_value, rounding
 from sercheck.serial.replay import seen_before
 from sercheck.serial.window_t import windows
 
@@ -48,6 +48,9 @@ SOME, SEAM = 0.1, 6
 COMMON = 0.01
 """Share of history's rows with a value that came before, under which values hardly ever come twice."""
 
+ROUNDS = 40
+"""Repetitions in which the share of coincidences settles to a hundredth at worst, where every other row coincides."""
+
 LARGEST = 900
 """Largest power of two that is worked with, so that eight decimals more are still doubles."""
 
@@ -82,12 +85,13 @@ def exact_signs(values: Floats, start: int) -> list[Sign]:
     values = _within_reach(values)
     window, history = values[:, start:], values[:, :start]
     rounded, step = coarser(window, history)
+    grain = _rounding(values, start)
     return [
         _in_order(window, history),
         Sign("rounded", rounded, step),
-        *_runs(values, start),
+        *_runs(values, start, grain),
         _again(values, start),
-        _midpoints(window, history),
+        _midpoints(window, history, grain),
     ]
 
 
@@ -121,8 +125,10 @@ def _one_way(cut: Floats) -> tuple[Ints, Bools, Bools]:
     return steps, (down == 0) & (2 * up > steps), (up == 0) & (2 * down > steps)
 
 
-def _beyond(count: Floats, trials: Floats, marks: Floats, n: int) -> Bools:
+def _beyond(count: Floats, trials: Floats, marks: Floats, n: int, chance: Floats | float = 0.0) -> Bools:
     """More coincidences than history's allow: at least two, and a binomial tail at history's share below chance.
+
+    The share is no less than ``chance``, what the window's own rounding gives.
 
     Counts and trials are divided by τ, the variance of the counts in history's windows of n rows over the binomial
     one, ``CLUSTERS`` where there are too few windows to tell (Rao and Scott 1992).
@@ -138,22 +144,52 @@ def _beyond(count: Floats, trials: Floats, marks: Floats, n: int) -> Bools:
         per = np.full(len(marks), CLUSTERS)
     per = np.where(np.nansum(marks, axis=1) >= FEW, per, 1.0)
     k, trials = count / per, trials / per
-    tail = special.betainc(np.maximum(k, 1e-9), np.maximum(trials - k, 0) + 1, rate)
+    tail = special.betainc(np.maximum(k, 1e-9), np.maximum(trials - k, 0) + 1, np.maximum(rate, chance))
     return np.asarray((count >= 2) & (tail < BEYOND_CHANCE))
 
 
-def _long_run(marks: Floats, longest: Floats, n: int) -> Bools:
+def _long_run(marks: Floats, longest: Floats, n: int, chance: Floats) -> Bools:
     """A run of ``longest`` equal values is too long for n rows: 1 − exp(−n p01 p11^(r−1)), r its marks.
 
-    p01 is history's chance that an equal value follows an unequal one, p11 that one follows an equal one.
+    p01 is history's chance that an equal value follows an unequal one, p11 that one follows an equal one; neither is
+    less than ``chance``, what the window's own rounding gives.
     """
     before, now = marks[:, :-1], marks[:, 1:]
     told = ~np.isnan(before) & ~np.isnan(now)
     after = (told & (before == 1)).sum(axis=1)
     p11 = ((told & (before == 1) & (now == 1)).sum(axis=1) + 0.5) / (after + 1)
     p01 = ((told & (before == 0) & (now == 1)).sum(axis=1) + 0.5) / ((told & (before == 0)).sum(axis=1) + 1)
+    p01, p11 = np.maximum(p01, chance), np.maximum(p11, chance)
     r = np.maximum(longest - 1, 0)
     return np.asarray((r >= LEAST_RUN) & (-np.expm1(-n * p01 * p11 ** (r - 1)) < BEYOND_CHANCE))
+
+
+def _by_rounding(step: Floats, within: Floats) -> Floats:
+    """Chance that a normal difference lies within ``within`` of 0 and so coincides with it, shape (S,).
+
+    Its scale is read from the differences that do not coincide, whose median is the (1 + q)/2 quantile of all absolute
+    ones when a share of q coincides: rows that were filled in leave it as it is. Solved by repetition.
+
+    Args:
+        step: differences, NaN where they coincide or are not known, shape (S, m).
+        within: half the width of what coincides, shape (S,).
+    """
+    size = np.sort(np.abs(step), axis=1)  # missing ones last
+    count = (~np.isnan(size)).sum(axis=1)
+    if not size.shape[1]:
+        return np.zeros(len(step))
+    middle = np.take_along_axis(size, np.maximum(count[:, None] - 1, 0) // 2, axis=1)[:, 0]
+    q = np.zeros(len(step))
+    for _ in range(ROUNDS):
+        with np.errstate(divide="ignore", invalid="ignore"):
+            q = 2 * special.ndtr(within / (middle / special.ndtri((3 + q) / 4))) - 1
+        q = np.where((count > 0) & np.isfinite(q), q, 0.0)
+    return np.asarray(q)
+
+
+def _rounding(values: Floats, start: int) -> Floats:
+    """Decimal step to which both the window and history are rounded, 0 where one is not, shape (S,)."""
+    return np.minimum(rounding(values[:, start:]), rounding(values[:, max(start - LONGEST_HISTORY, 0) : start]))
 
 
 def _rate(marks: Floats) -> Floats:
@@ -162,7 +198,7 @@ def _rate(marks: Floats) -> Floats:
     return np.asarray((np.nansum(marks, axis=1) + 0.5) / (seen + 1))
 
 
-def _runs(values: Floats, start: int) -> list[Sign]:
+def _runs(values: Floats, start: int, grain: Floats) -> list[Sign]:
     """Equal neighbours: rows twice, data spread evenly, a stuck value, or values filled forward."""
     marks = equal_to_earlier(values)
     rest = resting_value(values[:, :start])
@@ -172,14 +208,16 @@ def _runs(values: Floats, start: int) -> list[Sign]:
     window_steps = now.shape[1]
     told = (~np.isnan(now)).sum(axis=1).astype(np.float64)
     equal = np.nansum(now, axis=1)
-    found = _beyond(equal, told, past, window_steps)
+    step = np.diff(values[:, start:], axis=1)
+    by_rounding = _by_rounding(np.where(step == 0, np.nan, step), grain / 2)
+    found = _beyond(equal, told, past, window_steps, by_rounding)
     lengths = _run_lengths(now == 1)  # at a run's last row its number of values, 0 elsewhere
     runs = (lengths > 0).sum(axis=1)
     longest = lengths.max(axis=1, initial=0).astype(np.float64)
     whole = np.maximum(runs, 1)
     pairs = ((lengths == 2).sum(axis=1) >= EVEN * whole) & (2 * runs >= EVEN * (told - 1)) & (runs >= 3)
     even = (lengths == longest[:, None]).sum(axis=1) >= np.maximum(EVEN * (whole - 1), 2)
-    long = _long_run(past, longest, window_steps)
+    long = _long_run(past, longest, window_steps, by_rounding)
     spread = even & (longest >= 3) & (lengths.sum(axis=1) >= EVEN * told)
     spread |= _usual_mean(values, start)
     rest_rows = told - (longest - 1)
@@ -236,12 +274,18 @@ def _again(values: Floats, start: int) -> Sign:
     return Sign("again", unusual & (count >= np.minimum(SOME * told, SEAM)), count / np.maximum(told, 1))
 
 
-def _midpoints(window: Floats, history: Floats) -> Sign:
-    """Rows half-way between their neighbours."""
+def _midpoints(window: Floats, history: Floats, grain: Floats) -> Sign:
+    """Rows half-way between their neighbours.
+
+    A bend is a multiple of half the rounding; 0 and both halves are within it, three halves in all.
+    """
     marks = midpoints(window)
     told = (~np.isnan(marks)).sum(axis=1).astype(np.float64)
     count = np.nansum(marks, axis=1)
-    return Sign("interpolated", _beyond(count, told, midpoints(history), window.shape[1]), count / np.maximum(told, 1))
+    bend = window[:, 1:-1] - (window[:, :-2] + window[:, 2:]) / 2
+    chance = _by_rounding(np.where(marks[:, 1:-1] == 1, np.nan, bend), 0.75 * grain)
+    found = _beyond(count, told, midpoints(history), window.shape[1], chance)
+    return Sign("interpolated", found, count / np.maximum(told, 1))
 
 
 def coarser(window: Floats, history: Floats) -> tuple[Bools, Floats]:

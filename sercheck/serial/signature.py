@@ -31,6 +31,9 @@ SMOOTH_ORDER = 20
 OWN_ORDER = 4
 """Order of the window's own model, by which anything may be explained at its price."""
 
+LEAST_STRENGTH = 1e-3
+"""Part of its strength under which nothing is left of a window to be mended: three decimals of the values are gone."""
+
 FEWEST_ROWS, FEWEST_PART = 3, 8
 """Rows in either unit, three and an eighth of the window: fewer are outliers."""
 
@@ -76,6 +79,7 @@ class Looker:
         yield from self.own()
         yield from self.level()
         yield self.season()
+        yield from self.weaker()
         yield from self.turned()
         yield from self.sums()
         yield from self.units()
@@ -145,6 +149,27 @@ class Looker:
         """The season at another strength."""
         rest, beta = _without(self.e, self.law.response(self.shape))
         return Look("season", self._score(rest) - self.free + self.jacobian, 1 + beta)
+
+    def weaker(self) -> Iterator[Look]:
+        """Everything around the window's mean at a part of its strength, season and noise alike.
+
+        Two estimates of the strength are tried: the regression on what was foretold, and the standard deviation over
+        that of history's windows.
+        """
+        mean = np.where(self.seen, self.x, 0.0).sum(axis=1) / np.maximum(self.n, 1)
+        apart = self.x - mean[:, None]
+        usual = self.law.usual()
+        told = self.seen & ~np.isnan(usual)
+        middle = np.where(told, usual, 0.0).sum(axis=1) / np.maximum(told.sum(axis=1), 1)
+        shape = np.where(told, usual - middle[:, None], 0.0)
+        square = np.where(self.seen, apart, 0.0) ** 2
+        with np.errstate(divide="ignore", invalid="ignore"):
+            slope = np.where(told, apart * shape, 0.0).sum(axis=1) / (shape**2).sum(axis=1)
+            ratio = np.sqrt(square.sum(axis=1) / self.n / np.exp(self.law.variances.centre))
+        for strength in (slope, ratio):
+            a = np.where((strength > LEAST_STRENGTH) & (strength < 1), strength, np.nan)
+            stretch = -np.maximum(self.n - 1, 0) * np.log(a) - self.free
+            yield self._mended("weaker", mean[:, None] + apart / a[:, None], stretch, a)
 
     def _mended(self, name: str, x: Floats, stretch: Floats | float = 0.0, value: Floats | None = None) -> Look:
         """The window mended to ``x``, a map whose log-determinant is ``stretch``."""
