@@ -17,10 +17,11 @@ from sercheck.baseline import FEWEST_CYCLES
 from sercheck.grid import Panel
 from sercheck.serial.arrays import Bools, Floats
 from sercheck.serial.disorder import any_order
-from sercheck.serial.exact_signs import exact_signs
+from sercheck.serial.exact_signs import Sign, exact_signs
 from sercheck.serial.foreseen import Foreseen, foresee
 from sercheck.serial.identity import likeliest_other
 from sercheck.serial.matched_filter import Cycle
+from sercheck.serial.mixture import responsibilities, shared_odds
 from sercheck.serial.signature import Look, Looker
 
 LIKELIER = 3.0
@@ -123,13 +124,17 @@ class Causes:
         return str(told), float(total[best] / len(self.kind))
 
 
-def likely_causes(panel: Panel, season: str | None = None, keys: Sequence[str] | None = None) -> Causes:
+def likely_causes(
+    panel: Panel, season: str | None = None, keys: Sequence[str] | None = None, *, shared: bool = False
+) -> Causes:
     """Name the likely cause for every series of a panel.
 
     Args:
         panel: history and window of the series that fail, not transformed (the values as they were delivered).
         season: name of the shortest season whose profile may be meant; by default the shortest of the feed.
         keys: names of the series, for "keys swapped with".
+        shared: the series failed in one batch, and what the others say counts: where a series cannot tell two causes
+            apart, it follows those that can (``serial.mixture``). Otherwise each is judged by itself.
 
     Returns:
         A cause for each, or "no known signature": where nothing explains the window much better than the window as it
@@ -141,11 +146,10 @@ def likely_causes(panel: Panel, season: str | None = None, keys: Sequence[str] |
     if not values.size or panel.start == values.shape[1]:
         return told.causes()
     signs = exact_signs(values, panel.start)
-    sure = np.any([sign.found for sign in signs], axis=0)
     scaled, unit = _scaled(values, panel.start)
     law = foresee(scaled, panel.start, _cycles(panel, season)) if panel.start else None
     if law is not None:
-        _weigh(told, law, names, unit, sure)
+        _weigh(told, law, names, unit, signs, shared)
     for sign in reversed(signs):
         told.exact(sign.name, sign.found, sign.value)
     _missing(told, panel)
@@ -214,21 +218,26 @@ class _Told:
         return Causes(self.cause, self.support, self.evidence, self.kind, self.ranked)
 
 
-def _weigh(told: _Told, law: Foreseen, names: np.ndarray, unit: Floats, sure: Bools) -> None:
-    """Compare the mended windows: posterior odds at equal prior odds, by kind."""
+def _weigh(told: _Told, law: Foreseen, names: np.ndarray, unit: Floats, signs: Sequence[Sign], shared: bool) -> None:
+    """Compare the mended windows: posterior odds by kind, at prior odds that are equal or the other series'."""
     looks = _looks(law)
     other, score = likeliest_other(law)
     looks.append(Look("swapped", score, other.astype(np.float64)))
     scores = np.stack([np.nan_to_num(look.score, nan=-np.inf, posinf=-np.inf, neginf=-np.inf) for look in looks])
-    healthy = scores[0]
-    top = scores.max(axis=0)
-    with np.errstate(invalid="ignore"):
-        weight = np.where(np.isfinite(top), np.exp(scores - top), 0.0)
     kinds = np.array([NAMES.get(look.name, look.name) for look in looks], dtype=object)
-    groups = {kind: weight[kinds == kind].sum(axis=0) for kind in dict.fromkeys(kinds.tolist())}
-    total = np.maximum(sum(groups.values()), np.finfo(np.float64).tiny)
-    _rank(told, groups, total)
-    best = np.argmax(scores, axis=0)
+    exact = [NAMES[sign.name] for sign in signs]
+    rows = {kind: row for row, kind in enumerate(dict.fromkeys([*kinds.tolist(), *exact]))}
+    of_look = np.array([rows[kind] for kind in kinds])
+    by_kind = np.full((len(rows), scores.shape[1]), -np.inf)
+    np.logaddexp.at(by_kind, of_look, scores)
+    sure = np.any([sign.found for sign in signs], axis=0)
+    odds = shared_odds(_with_signs(by_kind, signs, rows)) if shared else np.zeros(by_kind.shape)
+    share = responsibilities(by_kind, odds)
+    _rank(told, {kind: share[row] for kind, row in rows.items()})
+    weighed = scores + odds[of_look]
+    best = np.argmax(weighed, axis=0)
+    every = np.arange(scores.shape[1])
+    top, healthy = scores[best, every], scores[0]
     gain = np.where(np.isfinite(healthy), top - np.where(np.isfinite(healthy), healthy, 0.0), -np.inf)
     named = gain >= LIKELIER
     unsure = np.flatnonzero(named & ~sure & (gain < PLAIN * law.n))
@@ -239,7 +248,17 @@ def _weigh(told: _Told, law: Foreseen, names: np.ndarray, unit: Floats, sure: Bo
             continue
         where = named & (best == place)
         value = look.value * unit if look.name in IN_UNIT else look.value
-        told.tell(look.name, where, value, groups[NAMES[look.name]] / total, _detail(look, names))
+        told.tell(look.name, where, value, share[of_look[place]], _detail(look, names))
+
+
+def _with_signs(by_kind: Floats, signs: Sequence[Sign], rows: dict[str, int]) -> Floats:
+    """Log-likelihoods with exact evidence, which leaves room for one kind only, that of the first sign."""
+    out = by_kind.copy()
+    for sign in reversed(signs):
+        where = np.flatnonzero(sign.found)
+        out[:, where] = -np.inf
+        out[rows[NAMES[sign.name]], where] = 0.0
+    return out
 
 
 def _looks(law: Foreseen) -> list[Look]:
@@ -269,7 +288,12 @@ def _by_chance(law: Foreseen) -> Floats:
 
 
 def _by_strength(look: Look) -> list[Look]:
-    """A season at another strength is gone, flattened, exaggerated or turned over."""
+    """A season at another strength is gone, flattened, exaggerated or turned over.
+
+    One that is weaker together with its noise can be made out at any strength, and so is not gone.
+    """
+    if look.name == "weaker":
+        return [look._replace(name="flattened")]
     if look.name != "season":
         return [look]
     a = look.value
@@ -281,9 +305,9 @@ def _by_strength(look: Look) -> list[Look]:
     return [Look(name, np.where(where, look.score, -np.inf), a) for name, where in bins.items()]
 
 
-def _rank(told: _Told, groups: dict[str, Floats], total: Floats) -> None:
-    kinds = [kind for kind in groups if kind in causes.CAUSES]
-    share = np.stack([groups[kind] / total for kind in kinds])
+def _rank(told: _Told, shares: dict[str, Floats]) -> None:
+    kinds = [kind for kind in shares if kind in causes.CAUSES]
+    share = np.stack([shares[kind] for kind in kinds])
     order = np.argsort(-share, axis=0, kind="stable")[: told.ranked.shape[1]]
     best = np.take_along_axis(share, order, axis=0)
     words = np.array(kinds, dtype=object)[order]

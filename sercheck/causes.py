@@ -27,10 +27,12 @@ SWAPPED = "keys swapped"
 SHIFTED = "level shifted"
 ROUNDED = "values rounded"
 MISSING = "rows missing"
+LATE = "delivery late"
 UNKNOWN = "no known signature"
 
 CAUSES = (
     WRONG_ORDER, NOISE, FILLED, INTERPOLATED, SMOOTHED, STUCK, REPEATED, AGAIN, SLIPPED, GONE, FLATTENED, GROWN,
     INTERLEAVED, TOTAL, DIFFERENCED, TWICE, UNIT, SPREAD, SIGN, MIRRORED, SWAPPED, SHIFTED, ROUNDED, MISSING,
+    LATE,
 )  # fmt: skip
 """All causes that can be named."""

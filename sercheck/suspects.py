@@ -12,30 +12,66 @@ from dataclasses import replace
 
 import numpy as np
 
+from sercheck import causes
 from sercheck.cause import Causes, likely_causes
 from sercheck.grid import Grid, Panel
 from sercheck.judge import Seen, breaks
-from sercheck.rulebook.compiled import Rulebook
+from sercheck.rulebook.compiled import Rule, Rulebook
 from sercheck.serial.arrays import Bools, Ints
 from sercheck.together import pooled
+
+MOST = 200
+"""Series of a block whose causes are looked for one by one, those that break the most rules; the others get the cause
+of these together, with its support over them. Two hundred days of hours take a second and a half."""
+
+OF_LOOKS = {"gaps": causes.MISSING, "doubles": causes.REPEATED, "disorder": causes.WRONG_ORDER}
+"""What a failing ``spacing`` says by itself."""
 
 
 def with_causes(book: Rulebook, seen: Sequence[Seen], grid: Grid) -> list[Seen]:
     """The same measurements with the likely causes of the series that may fail.
 
-    The stretch that is searched is the batch, against the history before it, whatever window the rule looked at.
+    The stretch that is searched is the batch, against the history before it, whatever window the rule looked at. Rules
+    that ask for missing, doubled, disordered or late rows name their cause themselves.
     """
-    if not book.values:
-        return list(seen)
-    suspects = {column: np.zeros(len(grid.keys), dtype=bool) for column in book.values}
-    rows = [_rows(part, grid) for part in seen]
-    for part, where in zip(seen, rows, strict=True):
-        suspects[part.column or book.values[0]][where[_may_fail(book, part)]] = True
-    causes = {column: _causes(grid, column, mask) for column, mask in suspects.items() if mask.any()}
-    return [
-        _told(part, where, causes.get(part.column or book.values[0]), suspects[part.column or book.values[0]])
-        for part, where in zip(seen, rows, strict=True)
-    ]
+    told = list(seen)
+    broken = {column: np.zeros(len(grid.keys), dtype=np.int64) for column in book.values}
+    open_parts = []
+    for place, part in enumerate(seen):
+        own = evident(book.rules[part.rule])
+        if own is not None:
+            told[place] = _evidently(part, own)
+        elif book.values:
+            rows = _rows(part, grid)
+            broken[part.column or book.values[0]][rows[_may_fail(book, part)]] += 1
+            open_parts.append((place, part, rows))
+    found = {column: _causes(grid, column, count) for column, count in broken.items() if count.any()}
+    for place, part, rows in open_parts:
+        column = part.column or book.values[0]
+        told[place] = _told(part, rows, found.get(column), broken[column] > 0)
+    return told
+
+
+def evident(rule: Rule) -> str | None:
+    """The cause that a failure of this rule is itself: rows that are missing, doubled, out of order or late.
+
+    ``count`` and a ``completeness`` that stays below a bound fail for too many rows as well and say nothing.
+    """
+    fields = rule.fields.model_dump()
+    if rule.measure == "spacing":
+        return OF_LOOKS.get(fields["look"])
+    if rule.measure == "freshness" and rule.stays.kind == "below":
+        return causes.LATE
+    if rule.measure == "completeness" and rule.stays.kind in ("above", "like_history"):
+        return causes.MISSING
+    if rule.measure == "rate" and fields["of_rows"] == "missing" and rule.stays.kind in ("below", "like_history"):
+        return causes.MISSING
+    return None
+
+
+def _evidently(part: Seen, cause: str) -> Seen:
+    series = len(part.keys)
+    return replace(part, cause=np.full(series, cause, dtype=object), support=np.ones(series), whole=(cause, 1.0))
 
 
 def _rows(part: Seen, grid: Grid) -> Ints:
@@ -54,16 +90,19 @@ def _may_fail(book: Rulebook, part: Seen) -> Bools:
     return np.asarray(alone | whole[0] if rule.across != ("together",) else np.full(alone.shape, whole[0]))
 
 
-def _causes(grid: Grid, column: str, suspects: Bools) -> Causes:
-    panel = Panel(grid.values[column][suspects], grid.start, grid.axis, grid.delivered[suspects], column)
-    return likely_causes(panel, keys=grid.keys[suspects].tolist())
+def _causes(grid: Grid, column: str, broken: Ints) -> tuple[Ints, Causes]:
+    """The series that are looked at, the clearest, and their causes."""
+    chosen = np.sort(np.argsort(-broken, kind="stable")[: min(MOST, np.count_nonzero(broken))])
+    panel = Panel(grid.values[column][chosen], grid.start, grid.axis, grid.delivered[chosen], column)
+    return chosen, likely_causes(panel, keys=grid.keys[chosen].tolist(), shared=True)
 
 
-def _told(part: Seen, rows: Ints, causes: Causes | None, suspects: Bools) -> Seen:
-    if causes is None:
+def _told(part: Seen, rows: Ints, found: tuple[Ints, Causes] | None, suspects: Bools) -> Seen:
+    if found is None:
         return part
-    cause = np.full(len(suspects), None, dtype=object)
-    support = np.full(len(suspects), np.nan)
-    cause[suspects], support[suspects] = causes.cause, causes.support
-    whole = causes.of_the_batch() if suspects.all() else None
-    return replace(part, cause=cause[rows], support=support[rows], whole=whole)
+    chosen, told = found
+    joint = told.of_the_batch()
+    cause = np.where(suspects, joint[0], np.array(None, dtype=object))
+    support = np.where(suspects, joint[1], np.nan)
+    cause[chosen], support[chosen] = told.cause, told.support
+    return replace(part, cause=cause[rows], support=support[rows], whole=joint if suspects.all() else None)

@@ -100,14 +100,21 @@ class Verdict:
 
     @property
     def likely_causes(self) -> list[dict[str, Any]]:
-        """What probably broke, the best supported first: ``cause``, mean ``support``, and the ``series`` it is for."""
+        """What probably broke: ``cause``, mean ``support``, and the ``series`` it is for.
+
+        Those that hold the batch come before those only noted; then the one with the most support over all series.
+        """
         told: dict[str, dict[str | None, float]] = {}
+        holding: set[str] = set()
         for row in self.table.rows_where("outcome", "fail"):
-            series = told.setdefault(str(row["likely_cause"]), {})
+            cause = str(row["likely_cause"])
+            series = told.setdefault(cause, {})
             series[row["series"]] = max(series.get(row["series"], 0.0), row["cause_support"] or 0.0)
-        ranked = sorted(told.items(), key=lambda item: -sum(item[1].values()))
+            if row["action"] == "hold":
+                holding.add(cause)
+        ranked = sorted(told.items(), key=lambda item: (item[0] not in holding, -sum(item[1].values())))
         return [
-            {"cause": cause, "support": sum(by.values()) / len(by), "series": [key for key in by if key is not None]}
+            {"cause": cause, "support": sum(by.values()) / len(by), "series": [key for key in by if key]}
             for cause, by in ranked
         ]
 

@@ -5,6 +5,9 @@ with weekly modulation and AR(1) noise, daily feeds a weekly cycle; the daily wi
 hours are one, four and eight weeks. A fault counts where the battery detects it: level, spread, innovations variance,
 amplitude, phase, autocorrelation of the difference, repeats and replay against the recent past, and the hash of earlier
 stretches, each at a risk of 1/720.
+
+With ``--together`` the series come in batches of twelve, of which all are broken alike, and each is judged with the
+others of its batch, as ``gate`` does it; without it each is judged by itself.
 """
 
 from __future__ import annotations
@@ -12,6 +15,7 @@ from __future__ import annotations
 import argparse
 import sys
 from collections import Counter
+from collections.abc import Collection
 from dataclasses import dataclass
 
 import numpy as np
@@ -41,6 +45,8 @@ class Kind:
 HOURLY = Kind("hourly", HOUR, "day", {"day": 24, "week": 168})
 DAILY = Kind("daily", 24 * HOUR, "week", {"week": 7})
 DAILY_WINDOWS = {24: 7, 168: 28, 336: 56}
+BATCH = 12
+"""Series of a batch that are judged together, as many as the demo has."""
 
 
 def axis(kind: Kind, steps: int) -> Axis:
@@ -121,16 +127,20 @@ class Row:
         return self.named[self.fault.cause] / max(self.caught, 1)
 
 
-def run(kind: Kind, n: int, series: int, seed: int) -> tuple[list[Row], float, list[float]]:
-    """Every fault in windows of n steps; the rows, the share of healthy windows with a cause, and their supports."""
+def run(
+    kind: Kind, n: int, series: int, seed: int, names: Collection[str] = (), *, together: bool = False
+) -> tuple[list[Row], float, list[str]]:
+    """Every fault (of some names) in windows of n steps; the rows, the share of healthy windows with a cause, which."""
     rng = np.random.default_rng([seed, n, len(kind.name)])
     start = history_steps(kind, n)
     values = simulate(kind, series, start + n, rng)
-    healthy = likely_causes(panel_of(values, start, kind), kind.season)
+    healthy = likely_causes(panel_of(values, start, kind), kind.season, shared=together)
     falsely = float(np.mean(healthy.kind != causes.UNKNOWN))
     false_names = healthy.kind[healthy.kind != causes.UNKNOWN]
     rows = []
     for fault in catalogue():
+        if names and fault.name not in names:
+            continue
         steps = fault.steps(kind.lengths, start)
         if not fault.fits(series, n, start, steps):
             continue
@@ -140,10 +150,23 @@ def run(kind: Kind, n: int, series: int, seed: int) -> tuple[list[Row], float, l
             broken[:, start:] = fault.apply(values[:, start:], values[:, :start], asked, rng, steps)
             panel = panel_of(broken, start, kind)
             caught = detected(panel)
-            named = likely_causes(panel, kind.season)
+            named = likely_causes(panel, kind.season, shared=together)
             picked = Counter(named.kind[caught].tolist())
             rows.append(Row(fault, size, series, int(caught.sum()), picked, named.of_the_batch()[0]))
     return rows, falsely, false_names
+
+
+def run_together(kind: Kind, n: int, batches: int, seed: int, names: Collection[str] = ()) -> list[Row]:
+    """Every fault in batches of twelve series that are judged together; the summary counts the batches named right."""
+    parts = [run(kind, n, BATCH, seed + 1000 * batch, names, together=True)[0] for batch in range(batches)]
+    rows = []
+    for same in zip(*parts, strict=True):
+        right = sum(row.summary.startswith(row.fault.cause) for row in same)
+        rows.append(
+            Row(same[0].fault, same[0].size, sum(row.tried for row in same), sum(row.caught for row in same),
+                sum((row.named for row in same), Counter()), f"{right} of {batches} batches")
+        )  # fmt: skip
+    return rows
 
 
 def table(rows: list[Row]) -> str:
@@ -168,9 +191,16 @@ def main(argv: list[str]) -> int:
     parser.add_argument("--replications", type=int, default=100)
     parser.add_argument("--n", type=int, nargs="*", default=[168, 336, 24], choices=sorted(DAILY_WINDOWS))
     parser.add_argument("--seed", type=int, default=1)
+    parser.add_argument("--together", action="store_true", help="batches of twelve series, each judged as one")
     asked = parser.parse_args(argv)
     for hours in asked.n:
         for kind, n in ((HOURLY, hours), (DAILY, DAILY_WINDOWS[hours])):
+            if asked.together:
+                rows = run_together(kind, n, max(asked.replications // BATCH, 1), asked.seed)
+                print(f"\n{kind.name}, windows of {n}, batches of {BATCH}: right {overall(rows):.3f}")
+                print(table(rows))
+                sys.stdout.flush()
+                continue
             rows, falsely, names = run(kind, n, asked.replications, asked.seed)
             print(
                 f"\n{kind.name}, windows of {n}: right {overall(rows):.3f}; healthy windows with a cause {falsely:.3f}"

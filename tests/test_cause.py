@@ -11,7 +11,8 @@ from sercheck import causes
 from sercheck.cause import Causes, likely_causes
 from sercheck.rehearsal.faults import catalogue
 from sercheck.serial.disorder import _permanent
-from tests.causes import DAILY, HOURLY, Kind, history_steps, overall, panel_of, run, simulate
+from sercheck.serial.exact_signs import exact_signs
+from tests.causes import DAILY, HOURLY, Kind, history_steps, overall, panel_of, run, run_together, simulate
 
 HARD = {("unit changed in mid-window", 1.2), ("level shifted", 1.0)}
 """Right in more than three of four cases, but not in every eight of them (``python -m tests.causes``)."""
@@ -182,6 +183,43 @@ def test_any_order_is_near_the_sum_over_all_orders():
         density = np.exp(-((y[:, None] - shape) ** 2) / (2 * scatter**2)) / np.sqrt(2 * np.pi) / scatter
         exact = np.log(np.mean([np.prod(density[range(7), order]) for order in itertools.permutations(range(7))]))
         assert _permanent(y[None], shape[None], np.array([scatter**2]))[0] == pytest.approx(exact, abs=0.8)
+
+
+def test_day_batches_of_several_series_together():
+    """What a day of one series leaves open twelve of them decide: noise, disorder, level and season in nearly all."""
+    names = ("shuffled", "noise", "season gone", "level shifted")
+    for row in run_together(HOURLY, 24, 2, 5, names):
+        assert row.caught >= 20
+        assert row.right >= 0.95
+        assert row.summary == "2 of 2 batches"
+
+
+def test_a_season_weaker_with_its_noise():
+    """Deviations from the mean at a part of their size are a flattened season, rounded to few steps or not."""
+    values, start = feed(series=12)
+    mean = values[:, start:].mean(axis=1, keepdims=True)
+    for part, decimals in ((0.15, 1), (0.15, 0), (0.5, 2), (0.02, 3)):
+        broken = np.round(values, decimals)
+        broken[:, start:] = np.round(mean + part * (values[:, start:] - mean), decimals)
+        told = named(broken, start)
+        assert (told.kind == causes.FLATTENED).sum() >= (11 if decimals else 9)
+
+
+def test_coincidences_of_rounding_are_no_signs():
+    """Steps of a few units of rounding meet and lie half-way by chance; values filled in among large steps do not."""
+    rng = np.random.default_rng(7)
+    for scale in (0.7, 1.5, 4.0):
+        values = np.round(50 * rng.normal(size=(400, 2000)), 0)
+        values[:, 1976:] = np.round(scale * np.cumsum(rng.normal(size=(400, 24)), axis=1), 0)
+        found = {sign.name: sign.found.mean() for sign in exact_signs(values, 1976)}
+        assert found["filled"] <= 0.01
+        assert found["interpolated"] <= 0.01
+    values = np.round(50 * rng.normal(size=(50, 2000)), 0)
+    values[:, 1981:2000:5] = values[:, 1980:1999:5]
+    assert {sign.name: sign.found.mean() for sign in exact_signs(values, 1976)}["filled"] >= 0.9
+    values = np.round(50 * rng.normal(size=(50, 2000)), 0)
+    values[:, 1977:1999:2] = np.round((values[:, 1976:1998:2] + values[:, 1978:2000:2]) / 2, 0)
+    assert {sign.name: sign.found.mean() for sign in exact_signs(values, 1976)}["interpolated"] == 1
 
 
 @pytest.mark.calibration
