@@ -101,7 +101,7 @@ def test_the_answer_names_rule_series_and_numbers(here: Place) -> None:
     """The screen tells which rule held the batch, for which series, with observation, limit and what to do."""
     _, _, err = demo(here, "stuck", "--no-keep")
     assert err.startswith("HELD  substation_heat")
-    assert "  failed: no meter is stuck\n" in err
+    assert "  failed: no meter is stuck (12 records)\n" in err
     assert "repeats (run) of kwh is 9, above the limit" in err
     assert "A reading repeated for hours is a dead meter or a gateway that sends its last value." in err
 

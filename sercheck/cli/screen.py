@@ -12,8 +12,10 @@ from sercheck.cli.say import folded, plain, strong
 if TYPE_CHECKING:
     from sercheck.verdict import Verdict
 
-MOST_RULES = 6
-"""Rules told one by one; more are counted, so that the answer stays on a screen of 24 lines."""
+MOST_RULES = 4
+"""Failed rules told one by one; more are counted, so that the answer stays on a screen of 30 lines."""
+MOST_UNDECIDED = 2
+"""Rules told that could not decide, and notes; more are counted."""
 MOST_CAUSES = 2
 """Likely causes told."""
 MOST_SERIES = 2
@@ -27,9 +29,9 @@ def answer(verdict: Verdict) -> str:
     lines += _failed(verdict)
     lines += _undecided(verdict)
     lines.append(_passed(verdict))
-    lines += [folded(f"note: {plain(note)}", rest="      ") for note in verdict.notes[:MOST_RULES]]
-    if len(verdict.notes) > MOST_RULES:
-        lines.append(f"  and {len(verdict.notes) - MOST_RULES} more notes")
+    lines += [folded(f"note: {plain(note)}", rest="      ") for note in verdict.notes[:MOST_UNDECIDED]]
+    if len(verdict.notes) > MOST_UNDECIDED:
+        lines.append(f"  and {len(verdict.notes) - MOST_UNDECIDED} more notes")
     lines.append(f"batch {verdict.batch_id}")
     return "\n".join(lines)
 
@@ -52,21 +54,20 @@ def _rows(verdict: Verdict, outcome: str) -> dict[str, list[dict[str, Any]]]:
 
 
 def _failed(verdict: Verdict) -> list[str]:
+    """For each failed rule its clearest series, how many others there are, and what the rule's author says of it."""
     lines: list[str] = []
     by_rule = _rows(verdict, "fail")
-    for rule, rows in list(by_rule.items())[:MOST_RULES]:
-        action = "" if rows[0]["action"] == "hold" else " (noted, does not hold)"
-        lines.append(f"  failed: {click.style(plain(rule, 80), bold=True)}{action}")
-        lines += [
-            folded(f"{_who(row)}{plain(str(row['reason']), 400)}", "    ", "      ") for row in rows[:MOST_SERIES]
-        ]
-        more = len(rows) - MOST_SERIES
-        if more > 0:
-            lines.append(f"    and {more} more")
+    told = list(by_rule.items())[:MOST_RULES]
+    for rule, rows in told:
+        action = "" if rows[0]["action"] == "hold" else ", noted only"
+        many = f" ({len(rows)} records{action})" if len(rows) > 1 or action else ""
+        lines.append(f"  failed: {click.style(plain(rule, 80), bold=True)}{many}")
+        each = MOST_SERIES if len(by_rule) == 1 else 1
+        lines += [folded(f"{_who(row)}{plain(str(row['reason']), 400)}", "    ", "      ") for row in rows[:each]]
         if rule in verdict.abouts:
             lines.append(folded(plain(verdict.abouts[rule], 300), "    ", "    "))
-    if len(by_rule) > MOST_RULES:
-        lines.append(f"  and {len(by_rule) - MOST_RULES} more rules failed")
+    if len(by_rule) > len(told):
+        lines.append(f"  and {len(by_rule) - len(told)} more rules failed")
     return lines
 
 
@@ -94,13 +95,13 @@ def _causes(verdict: Verdict) -> list[str]:
 def _undecided(verdict: Verdict) -> list[str]:
     lines = []
     by_rule = _rows(verdict, "undecided")
-    for rule, rows in list(by_rule.items())[:MOST_RULES]:
+    for rule, rows in list(by_rule.items())[:MOST_UNDECIDED]:
         (reason, times), *others = Counter(str(row["reason"]) for row in rows).most_common()
         count = f"{times} series: " if times > 1 else _who(rows[0])
         more = f" (and {len(others)} other reasons)" if others else ""
         lines.append(folded(f"undecided: {plain(rule, 80)}: {count}{plain(reason, 300)}{more}", "  ", "    "))
-    if len(by_rule) > MOST_RULES:
-        lines.append(f"  and {len(by_rule) - MOST_RULES} more rules undecided")
+    if len(by_rule) > MOST_UNDECIDED:
+        lines.append(f"  and {len(by_rule) - MOST_UNDECIDED} more rules undecided")
     return lines
 
 
