@@ -18,8 +18,8 @@ from sercheck.measures._past import (
     ask_variety,
     at_the_end,
     cell,
-    counts,
     mean,
+    measured,
     out_of_reach,
     past,
     score_spectrum,
@@ -118,18 +118,14 @@ def location_with_history(panel: Panel, question: Question, *, raw: bool) -> Mea
         if not raw:
             reasons.add(out_of_reach(scored(panel), law.centre, law.scale, law.df, question.risk)[:, None], MUTE)
     reasons.add(~(cell(law.scale) > 0), "history does not vary: there is no sampling error to allow for")
-    n, n_missing = counts(panel)
     with np.errstate(divide="ignore", invalid="ignore"):
         n_eff = told.n * (law.naive / law.scale) ** 2
-    return Measurement(
-        observed=_observed(panel, law),
-        n=n,
-        n_missing=n_missing,
+    return measured(
+        panel,
+        reasons,
+        _observed(panel, law),
+        (upper, lower),
         n_eff=cell(n_eff),
-        upper=upper,
-        lower=lower,
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
         method=("mean" if raw else "mean of normal scores (van der Waerden 1952)")
         + ", overlapping batch means of history (Meketon and Schmeiser 1984; Welch 1987)",
         assumes="stationary history" + (", light tails" if raw else "") + without(told),

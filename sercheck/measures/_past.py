@@ -5,7 +5,7 @@ Depends on ``serial``, ``grid``, ``measure`` and ``baseline``. Everything here i
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Collection
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -203,7 +203,38 @@ def at_the_end(rank: Ranking, score: Floats) -> Bools:
 
 def without(told: Past) -> str:
     """What was taken out, for ``assumes``."""
-    return f", fixed cycles ({', '.join(told.seasons)}) taken out" if told.seasons else ""
+    return taken_out(told.seasons)
+
+
+def taken_out(seasons: Collection[str]) -> str:
+    """The same, given the names of the cycles."""
+    return f", fixed cycles ({', '.join(seasons)}) taken out" if seasons else ""
+
+
+def measured(
+    panel: Panel,
+    reasons: Reasons,
+    observed: Floats,
+    both: tuple[Reference | None, Reference | None],
+    *,
+    n_eff: Floats | None = None,
+    method: str,
+    assumes: str,
+) -> Measurement:
+    """What a measure without lags saw; ``both``: for too large and too small, ``n_eff`` None: it has no meaning."""
+    n, n_missing = counts(panel)
+    return Measurement(
+        observed=observed,
+        n=n,
+        n_missing=n_missing,
+        n_eff=np.full(n.shape, np.nan) if n_eff is None else n_eff,
+        upper=both[0],
+        lower=both[1],
+        undecided=reasons.index,
+        reasons=tuple(reasons.texts),
+        method=method,
+        assumes=assumes,
+    )
 
 
 @dataclass(frozen=True)

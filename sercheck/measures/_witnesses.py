@@ -12,7 +12,7 @@ import numpy as np
 from sercheck.baseline import chosen_seasons
 from sercheck.grid import Panel
 from sercheck.measure import Measurement, Question, Reasons, Reference
-from sercheck.measures._past import ToUnit, ask_rows, ask_variety, cell, counts, mean, past, variance
+from sercheck.measures._past import ToUnit, ask_rows, ask_variety, cell, mean, measured, past, taken_out, variance
 from sercheck.reference import Larger, Pivot
 from sercheck.serial.arrays import Floats
 from sercheck.serial.long_run import LongRun, autoregressive_long_run, cosine_long_run
@@ -89,19 +89,14 @@ def mean_alone(panel: Panel, question: Question) -> Measurement:
 
         return Larger(witness(first), witness(second))
 
-    upper, lower = sides(question, against)
-    n, n_missing = counts(panel)
     with np.errstate(divide="ignore", invalid="ignore"):
         n_eff = rows * spread / np.maximum(first.variance, second.variance)
-    return Measurement(
-        observed=cell(level * told.scale),
-        n=n,
-        n_missing=n_missing,
+    return measured(
+        panel,
+        reasons,
+        cell(level * told.scale),
+        sides(question, against),
         n_eff=cell(n_eff),
-        upper=upper,
-        lower=lower,
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
         method="mean, two long-run variances (Berk 1974; Lazarus, Lewis, Stock and Watson 2018)",
-        assumes="short memory" + (f", fixed cycles ({', '.join(taken)}) taken out" if taken else ""),
+        assumes="short memory" + taken_out(taken),
     )

@@ -47,6 +47,7 @@ from sercheck.measures._past import (
     combined,
     counts,
     mean,
+    measured,
     past,
     without,
 )
@@ -234,16 +235,11 @@ def _by_windows(rows: Panel, question: Question, size: int) -> Measurement:
         with np.errstate(invalid="ignore"):
             tied = (cell(told.commonest) > share) | ~(law.standard_error > 0)
         reasons.add(tied, "the count of history hardly ever changes: use the measure completeness for it")
-    n, n_missing = counts(rows)
-    return Measurement(
-        observed=cell(observed),
-        n=n,
-        n_missing=n_missing,
-        n_eff=np.full(n.shape, np.nan),
-        upper=upper,
-        lower=lower,
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
+    return measured(
+        rows,
+        reasons,
+        cell(observed),
+        (upper, lower),
         method="mean count on two scales, window-t (Anscombe 1948)",
         assumes="stationary history" + without(told),
     )

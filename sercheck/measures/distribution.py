@@ -32,7 +32,7 @@ from scipy import special
 
 from sercheck.grid import Panel
 from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Side
-from sercheck.measures._past import ask_history, cell, counts, past, scored, without
+from sercheck.measures._past import ask_history, cell, measured, past, scored, without
 from sercheck.serial.arrays import Floats
 from sercheck.serial.autoregression import burg
 from sercheck.serial.quantiles import in_order, quantile
@@ -62,16 +62,12 @@ class Distribution(Measure):
         observed = cell(distance(told.window, scored(panel)))
         tau = cell(longest(told.history, scored(panel)))
         law = Stephens(observed, cell(told.n) / tau, cell(told.known) / tau, tau)
-        n, n_missing = counts(panel)
-        return Measurement(
-            observed=observed,
-            n=n,
-            n_missing=n_missing,
+        return measured(
+            panel,
+            reasons,
+            observed,
+            (law, None),
             n_eff=cell(told.n) / tau,
-            upper=law,
-            lower=None,
-            undecided=reasons.index,
-            reasons=tuple(reasons.texts),
             method="Kolmogorov-Smirnov on effective sizes (Stephens 1970)",
             assumes="stationary history, short memory" + without(told),
         )

@@ -34,8 +34,18 @@ from pydantic import BaseModel, ConfigDict
 from scipy import special
 
 from sercheck.grid import Panel
-from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Reference, Side
-from sercheck.measures._past import ask_history, ask_rows, ask_variety, cell, counts, past, variance, without
+from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Side
+from sercheck.measures._past import (
+    ask_history,
+    ask_rows,
+    ask_variety,
+    cell,
+    measured,
+    past,
+    taken_out,
+    variance,
+    without,
+)
 from sercheck.measures._witnesses import own_cycles_out
 from sercheck.reference import Larger, Pivot
 from sercheck.serial.arrays import Floats
@@ -99,35 +109,19 @@ def _like_history(panel: Panel, question: Question) -> Measurement:
         standard_error=(unit(place + step) - unit(place - step)) / 2,
         to_unit=unit,
     )
-    method = "share of the first cosines, window-t (Müller 2007; Lazarus, Lewis, Stock and Watson 2018)"
-    return _measured(panel, reasons, (pivot, pivot), unit(cell(at)), method, "stationary history" + without(told))
+    return measured(
+        panel,
+        reasons,
+        unit(cell(at)),
+        (pivot, pivot),
+        n_eff=unit(cell(at)),
+        method="share of the first cosines, window-t (Müller 2007; Lazarus, Lewis, Stock and Watson 2018)",
+        assumes="stationary history" + without(told),
+    )
 
 
 def _angle(share: Floats) -> Floats:
     return np.asarray(np.arcsin(np.sqrt(np.clip(share, 0.0, 1.0))), dtype=np.float64)
-
-
-def _measured(
-    panel: Panel,
-    reasons: Reasons,
-    sides: tuple[Reference | None, Reference | None],
-    observed: Floats,
-    method: str,
-    assumes: str,
-) -> Measurement:
-    n, n_missing = counts(panel)
-    return Measurement(
-        observed=observed,
-        n=n,
-        n_missing=n_missing,
-        n_eff=observed,
-        upper=sides[0],
-        lower=sides[1],
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
-        method=method,
-        assumes=assumes,
-    )
 
 
 @dataclass(frozen=True)
@@ -232,8 +226,12 @@ def _literal(panel: Panel, question: Question) -> Measurement:
         upper = Larger(about(stays.high, corrected), chi)
     if stays.low is not None:
         lower = about(stays.low, plain)
-    return _measured(
-        panel, reasons, (upper, lower), observed,
-        "autoregression and first cosines (Burg 1975; Lazarus, Lewis, Stock and Watson 2018)",
-        "short memory" + (f", fixed cycles ({', '.join(taken)}) taken out" if taken else ""),
-    )  # fmt: skip
+    return measured(
+        panel,
+        reasons,
+        observed,
+        (upper, lower),
+        n_eff=observed,
+        method="autoregression and first cosines (Burg 1975; Lazarus, Lewis, Stock and Watson 2018)",
+        assumes="short memory" + taken_out(taken),
+    )

@@ -63,6 +63,7 @@ from sercheck.measures._past import (
     cell,
     combined,
     counts,
+    measured,
     past,
     without,
 )
@@ -240,16 +241,11 @@ def _white_by_model(panel: Panel, question: Question, fields: InnovationsFields)
     )
     law = learned_portmanteau(e, n_lags, seen.order, count / np.maximum(told.known, 1))
     reasons.add(np.isnan(cell(law.statistic)), "history or window does not vary, so nothing is left to look at")
-    n, n_missing = counts(panel)
-    return Measurement(
-        observed=cell(law.statistic),
-        n=n,
-        n_missing=n_missing,
-        n_eff=np.full(n.shape, np.nan),
-        upper=Sum(law, SHARE),
-        lower=None,
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
+    return measured(
+        panel,
+        reasons,
+        cell(law.statistic),
+        (Sum(law, SHARE), None),
         method="robust sum over lags of the innovations of history's autoregression, χ² (Taylor 1984; Dalla, Giraitis "
         "and Phillips 2022)",
         assumes="stationary history" + without(told),
@@ -323,18 +319,14 @@ def _ratio(panel: Panel, question: Question, *, scored: bool) -> Measurement:
         upper, lower = sides(question, lambda bound: pivot(_log(bound), np.full((len(now), 1), bound)))
     else:
         upper = lower = pivot(0.0, _exp(cell(centre)))
-    n, n_missing = counts(panel)
     with np.errstate(divide="ignore", invalid="ignore"):
         n_eff = cell(rows * (naive / scale) ** 2)
-    return Measurement(
-        observed=_exp(cell(now)),
-        n=n,
-        n_missing=n_missing,
+    return measured(
+        panel,
+        reasons,
+        _exp(cell(now)),
+        (upper, lower),
         n_eff=n_eff,
-        upper=upper,
-        lower=lower,
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
         method="log variance of the innovations against history's windows, Student's t",
         assumes="stationary history" + without(told),
     )

@@ -44,9 +44,11 @@ from sercheck.measures._past import (
     ask_variety,
     cell,
     counts,
+    measured,
     past,
     quartile_scale,
     score_spectrum,
+    taken_out,
     variance,
     window_scores,
     without,
@@ -183,11 +185,15 @@ def _like_history(panel: Panel, question: Question) -> Measurement:
             naive=cell(walk / np.sqrt(spectrum.variance)),
         )
         worth = spectrum.variance / omega**2
-    return _measured(
-        panel, reasons, (reference, reference), reference.excess, worth,
-        "cumulative sums of normal scores (van der Waerden 1952; Ploberger and Krämer 1992)",
-        "stationary history" + without(told),
-    )  # fmt: skip
+    return measured(
+        panel,
+        reasons,
+        reference.excess,
+        (reference, reference),
+        n_eff=counts(panel)[0] * cell(worth),
+        method="cumulative sums of normal scores (van der Waerden 1952; Ploberger and Krämer 1992)",
+        assumes="stationary history" + without(told),
+    )
 
 
 def _literal(panel: Panel, question: Question) -> Measurement:
@@ -223,35 +229,15 @@ def _literal(panel: Panel, question: Question) -> Measurement:
             )  # fmt: skip
         return Larger(modelled, free)
 
-    upper, lower = sides(question, against)
     with np.errstate(divide="ignore", invalid="ignore"):
         worth = variance(left) / run.variance
-    return _measured(
-        panel, reasons, (upper, lower), cell(found.change * scale), worth,
-        "self-normalized and modelled cumulative sums (Shao and Zhang 2010; Ploberger and Krämer 1992; Berk 1974)",
-        "short memory" + (f", fixed cycles ({', '.join(taken)}) taken out" if taken else ""),
-    )  # fmt: skip
-
-
-def _measured(
-    panel: Panel,
-    reasons: Reasons,
-    both: tuple[Reference | None, Reference | None],
-    observed: Floats,
-    worth: Floats,
-    method: str,
-    assumes: str,
-) -> Measurement:
-    n, n_missing = counts(panel)
-    return Measurement(
-        observed=observed,
-        n=n,
-        n_missing=n_missing,
-        n_eff=n * cell(worth),
-        upper=both[0],
-        lower=both[1],
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
-        method=method,
-        assumes=assumes,
+    return measured(
+        panel,
+        reasons,
+        cell(found.change * scale),
+        sides(question, against),
+        n_eff=counts(panel)[0] * cell(worth),
+        method="self-normalized and modelled cumulative sums (Shao and Zhang 2010; Ploberger and Krämer 1992; Berk "
+        "1974)",
+        assumes="short memory" + taken_out(taken),
     )

@@ -46,6 +46,7 @@ from sercheck.measures._past import (
     at_the_end,
     cell,
     counts,
+    measured,
     out_of_reach,
     past,
     scored,
@@ -145,7 +146,7 @@ class OrderStatistic:
 
 def _literal(panel: Panel, question: Question, q: float) -> Measurement:
     reasons = Reasons((len(panel.values), 1))
-    n, n_missing = counts(panel)
+    n = counts(panel)[0]
     rows = in_order(panel.window)
     everything, held = in_order(panel.values), cell((~np.isnan(panel.values)).sum(axis=1))
     observed = quantile(rows, cell(n[:, 0]), np.full((len(rows), 1), q))
@@ -167,15 +168,12 @@ def _literal(panel: Panel, question: Question, q: float) -> Measurement:
     stays = question.stays
     upper = None if stays.high is None else against(bound=stays.high, upper=True)
     lower = None if stays.low is None else against(bound=stays.low, upper=False)
-    return Measurement(
-        observed=observed,
-        n=n,
-        n_missing=n_missing,
+    return measured(
+        panel,
+        reasons,
+        observed,
+        (upper, lower),
         n_eff=n / np.max(tau, axis=0),
-        upper=upper,
-        lower=lower,
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
         method="binomial on effective sizes (Clopper and Pearson 1934; Korn and Graubard 1998; Geyer 1992)",
         assumes="clusters like those of history and window",
     )
@@ -221,18 +219,15 @@ def _like_history(panel: Panel, question: Question, q: float) -> Measurement:
     )
     reasons.add(~(step > 0), "history's stretches do not differ in this quantile: no sampling error to allow for")
     reasons.add(out_of_reach(rank, centre, scale, df, question.risk)[:, None], MUTE)
-    n, n_missing = counts(panel)
+    n = counts(panel)[0]
     with np.errstate(divide="ignore", invalid="ignore"):
         n_eff = n * (naive / step) ** 2
-    return Measurement(
-        observed=np.where(at_the_end(rank, at)[:, None], beyond, unit(cell(at))),
-        n=n,
-        n_missing=n_missing,
+    return measured(
+        panel,
+        reasons,
+        np.where(at_the_end(rank, at)[:, None], beyond, unit(cell(at))),
+        (pivot, pivot),
         n_eff=n_eff,
-        upper=pivot,
-        lower=pivot,
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
         method="quantile of normal scores, window-t (van der Waerden 1952)",
         assumes="stationary history" + taken,
     )

@@ -38,15 +38,15 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict
 
 from sercheck.grid import Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons, Reference
+from sercheck.measure import Measure, Measurement, Question, Reasons
 from sercheck.measures._past import (
     ask_history,
     ask_rows,
     ask_variety,
     cell,
     combined,
-    counts,
     mean,
+    measured,
     past,
     scored,
     variance,
@@ -70,6 +70,8 @@ HEAVY = 4.0
 degrees of freedom the false-alarm rate at .001 would be .009 (simulated)."""
 FLAT = 1e-30
 """What the variance of a window without any is taken for, so that its logarithm is finite and far out."""
+
+LOG_VARIANCE = "log variance of normal scores, window-t (van der Waerden 1952; Bartlett and Kendall 1946)"
 
 
 class SpreadFields(BaseModel):
@@ -145,7 +147,15 @@ def _like_history(panel: Panel, question: Question) -> Measurement:
     centre, scale, df = window_t(_logs(then), at)
     unit = _Deviation(base, centre)
     pivot = _pivot(at, centre, scale, df, unit, unit(cell(centre)), told.n)
-    return _measured(panel, reasons, pivot, pivot, unit(cell(at)), _size(told.n, scale), "stationary history")
+    return measured(
+        panel,
+        reasons,
+        unit(cell(at)),
+        (pivot, pivot),
+        n_eff=cell(_size(told.n, scale)),
+        method=LOG_VARIANCE,
+        assumes="stationary history" + without(told),
+    )
 
 
 def _literal(panel: Panel, question: Question) -> Measurement:
@@ -165,8 +175,15 @@ def _literal(panel: Panel, question: Question) -> Measurement:
         centre = 2 * _logs(np.asarray(bound / told.scale)) + bias
         return _pivot(at, centre, scale, df, unit, np.full((len(at), 1), bound), told.n)
 
-    upper, lower = sides(question, against)
-    return _measured(panel, reasons, upper, lower, unit(cell(at)), _size(told.n, scale), "stationary history")
+    return measured(
+        panel,
+        reasons,
+        unit(cell(at)),
+        sides(question, against),
+        n_eff=cell(_size(told.n, scale)),
+        method=LOG_VARIANCE,
+        assumes="stationary history" + without(told),
+    )
 
 
 def _then(history: Floats, steps: int) -> Floats:
@@ -208,31 +225,6 @@ def _pivot(
     )
 
 
-def _measured(
-    panel: Panel,
-    reasons: Reasons,
-    upper: Reference | None,
-    lower: Reference | None,
-    observed: Floats,
-    n_eff: Floats,
-    assumes: str,
-    method: str = "log variance of normal scores, window-t (van der Waerden 1952; Bartlett and Kendall 1946)",
-) -> Measurement:
-    n, n_missing = counts(panel)
-    return Measurement(
-        observed=observed,
-        n=n,
-        n_missing=n_missing,
-        n_eff=cell(n_eff),
-        upper=upper,
-        lower=lower,
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
-        method=method,
-        assumes=assumes + without(past(panel)),
-    )
-
-
 def _alone(panel: Panel, question: Question) -> Measurement:
     """χ² scatter on the effective size of a variance; light tails only."""
     told, reasons = past(panel), Reasons((len(past(panel).n), 1))
@@ -271,8 +263,12 @@ def _alone(panel: Panel, question: Question) -> Measurement:
             naive_scale=cell(root * np.sqrt(2 / (9.0 * (rows - 1)))),
         )
 
-    upper, lower = sides(question, against)
-    return _measured(
-        panel, reasons, upper, lower, unit(cell(at)), size, "short memory, light tails",
-        "variance on its effective size (Bayley and Hammersley 1946; Wilson and Hilferty 1931)",
-    )  # fmt: skip
+    return measured(
+        panel,
+        reasons,
+        unit(cell(at)),
+        sides(question, against),
+        n_eff=cell(size),
+        method="variance on its effective size (Bayley and Hammersley 1946; Wilson and Hilferty 1931)",
+        assumes="short memory, light tails" + without(told),
+    )

@@ -46,6 +46,7 @@ from sercheck.measures._past import (
     ask_variety,
     cell,
     counts,
+    measured,
     past,
     scored,
     window_scores,
@@ -100,16 +101,11 @@ def _like_history(panel: Panel, question: Question, *, trend: bool) -> Measureme
     with np.errstate(invalid="ignore"):
         reasons.add(~(cell(scale) > 0), "history does not vary, or has too many gaps: nothing to compare with")
     law = Pivot(cell(now), cell(centre), cell(scale), cell(df), cell(centre), cell(scale))
-    n, n_missing = counts(panel)
-    return Measurement(
-        observed=cell(now),
-        n=n,
-        n_missing=n_missing,
-        n_eff=np.full(n.shape, np.nan),
-        upper=law,
-        lower=None,
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
+    return measured(
+        panel,
+        reasons,
+        cell(now),
+        (law, None),
         method="Dickey-Fuller t-value of normal scores against history's stretches, Student's t",
         assumes="stationary history" + without(told),
     )

@@ -42,9 +42,11 @@ from sercheck.measures._past import (
     ask_variety,
     cell,
     counts,
+    measured,
     past,
     quartile_scale,
     score_spectrum,
+    taken_out,
     variance,
     window_scores,
     without,
@@ -112,11 +114,16 @@ def _like_history(panel: Panel, question: Question) -> Measurement:
         to_unit=unit,
         naive_scale=cell(naive),
     )
-    return _measured(
-        panel, reasons, (pivot, pivot), unit(cell(at)), worth,
-        "slope of normal scores, overlapping slopes of history (van der Waerden 1952; Meketon and Schmeiser 1984)",
-        "stationary history" + without(told),
-    )  # fmt: skip
+    return measured(
+        panel,
+        reasons,
+        unit(cell(at)),
+        (pivot, pivot),
+        n_eff=counts(panel)[0] * cell(worth),
+        method="slope of normal scores, overlapping slopes of history (van der Waerden 1952; Meketon and Schmeiser "
+        "1984)",
+        assumes="stationary history" + without(told),
+    )
 
 
 def _literal(panel: Panel, question: Question) -> Measurement:
@@ -150,11 +157,15 @@ def _literal(panel: Panel, question: Question) -> Measurement:
 
     with np.errstate(divide="ignore", invalid="ignore"):
         worth = variance(left) / np.maximum(first.variance, second.variance)
-    return _measured(
-        panel, reasons, sides(question, against), unit(cell(at)), worth,
-        "slope, two long-run variances (Sun 2011; Berk 1974)",
-        "short memory" + (f", fixed cycles ({', '.join(taken)}) taken out" if taken else ""),
-    )  # fmt: skip
+    return measured(
+        panel,
+        reasons,
+        unit(cell(at)),
+        sides(question, against),
+        n_eff=counts(panel)[0] * cell(worth),
+        method="slope, two long-run variances (Sun 2011; Berk 1974)",
+        assumes="short memory" + taken_out(taken),
+    )
 
 
 def _without_cycles(panel: Panel) -> tuple[Floats, tuple[str, ...]]:
@@ -173,27 +184,3 @@ def _residuals(values: Floats, slope: Floats) -> Floats:
     rest = values - slope[:, None] * np.arange(values.shape[1])
     count = np.maximum((~np.isnan(rest)).sum(axis=1, keepdims=True), 1)
     return np.asarray(rest - np.nansum(rest, axis=1, keepdims=True) / count, dtype=np.float64)
-
-
-def _measured(
-    panel: Panel,
-    reasons: Reasons,
-    both: tuple[Reference | None, Reference | None],
-    observed: Floats,
-    worth: Floats,
-    method: str,
-    assumes: str,
-) -> Measurement:
-    n, n_missing = counts(panel)
-    return Measurement(
-        observed=observed,
-        n=n,
-        n_missing=n_missing,
-        n_eff=n * cell(worth),
-        upper=both[0],
-        lower=both[1],
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
-        method=method,
-        assumes=assumes,
-    )
