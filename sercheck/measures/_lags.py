@@ -12,10 +12,10 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict, Field, model_validator
 
 from sercheck.grid import Panel
-from sercheck.measure import Question, Reasons, Reference, Side
+from sercheck.measure import Measurement, Question, Reasons, Reference, Side
 from sercheck.reference import Larger, Pivot, same
 from sercheck.serial.arrays import Bools, Floats, Ints
-from sercheck.serial.lag_law import Law, forward
+from sercheck.serial.lag_law import Lagged, Law, bound_law, forward
 from sercheck.serial.season import median
 from sercheck.serial.window_t import SMALL_RISK
 
@@ -100,6 +100,51 @@ def literal_bounds(question: Question) -> list[tuple[Side, float]]:
     """The sides that the rule looks at with the author's numbers."""
     sides: tuple[tuple[Side, float | None], ...] = (("upper", question.stays.high), ("lower", question.stays.low))
     return [(side, bound) for side, bound in sides if bound is not None]
+
+
+def held_to_bounds(
+    panel: Panel, question: Question, seen: Lagged, *,
+    flat: str, wanders: Bools, advice: str, method: str, assumes: str, season: str | None = None,
+) -> Measurement:  # fmt: skip
+    """Autocorrelations against the author's numbers.
+
+    ``flat`` says why there may be none; ``wanders``, shape (S,), where the series has no level, and ``advice`` what to
+    do about it.
+    """
+    lags = tuple(int(lag) for lag in seen.lags)
+    n, n_missing = window_counts(panel, lags)
+    bounds = literal_bounds(question)
+    reasons = Reasons(n.shape)
+    ask_variety(reasons, panel, seen.r, question.risk)
+    ask_rows(reasons, n, seen.rows, lags, fewest_for_bound([bound for _, bound in bounds], 48, 4))
+    reasons.add(np.isnan(seen.r), flat)
+    reasons.add(wanders[:, None], advice)
+    references: dict[Side, Reference] = {}
+    error = np.full(n.shape, np.nan)
+    with np.errstate(divide="ignore"):
+        naive, reach = 1 / np.sqrt(n), 1 - seen.lags / np.where(seen.rows > 0, seen.rows, np.nan)
+    for side, bound in bounds:
+        if abs(bound) >= 1:
+            reasons.add(where=True, text=f"an autocorrelation lies between -1 and 1: a bound of {bound:g} says nothing")
+            continue
+        law = bound_law(seen, bound)
+        references[side] = correlation_reference(seen.r, law, np.full(n.shape, bound), naive)
+        ask_reach(reasons, references[side], side, reach, question.risk / len(bounds))
+        error = np.fmax(error, law.error)
+    return Measurement(
+        observed=seen.r,
+        n=n,
+        n_missing=n_missing,
+        n_eff=np.where(np.isnan(seen.r), np.nan, 1 / error**2),
+        upper=references.get("upper"),
+        lower=references.get("lower"),
+        undecided=reasons.index,
+        reasons=tuple(reasons.texts),
+        method=method,
+        assumes=assumes,
+        lags=lags,
+        season=season,
+    )
 
 
 def correlation_reference(

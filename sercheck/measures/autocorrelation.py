@@ -40,17 +40,15 @@ import numpy as np
 
 from sercheck.baseline import residual
 from sercheck.grid import Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons, Reference, Side
+from sercheck.measure import Measure, Measurement, Question, Reasons, Reference
 from sercheck.measures._lags import (
     FEWEST_BY_WINDOWS,
     NO_HISTORY,
     LagFields,
-    ask_reach,
     ask_rows,
     ask_variety,
     correlation_reference,
-    fewest_for_bound,
-    literal_bounds,
+    held_to_bounds,
     no_level,
     seasons_left,
     window_counts,
@@ -60,7 +58,7 @@ from sercheck.recent import enough, recent_measurement, recent_past
 from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.autocovariances import autocorrelation as sample
 from sercheck.serial.autoregression import root_beyond
-from sercheck.serial.lag_law import ROOT, bound_law, history_law, lagged
+from sercheck.serial.lag_law import ROOT, history_law, lagged
 from sercheck.serial.window_t import fewest_windows
 
 
@@ -90,42 +88,17 @@ class Autocorrelation(Measure):
 
 def _against_bounds(panel: Panel, question: Question, lags: tuple[int, ...]) -> Measurement:
     steps: Ints = np.array(lags, dtype=np.int64)
-    n, n_missing = window_counts(panel, lags)
     seen = panel.remember(("lagged", lags), lambda: lagged(panel.window, steps))
-    bounds = literal_bounds(question)
-    reasons = Reasons(n.shape)
-    ask_variety(reasons, panel, seen.r, question.risk)
-    ask_rows(reasons, n, seen.rows, lags, fewest_for_bound([bound for _, bound in bounds], 48, 4))
-    reasons.add(np.isnan(seen.r), "the window varies by no more than the rounding of its numbers")
-    reasons.add(
-        root_beyond(seen.model, ROOT)[:, None],
-        no_level(panel),
-    )
-    references: dict[Side, Reference] = {}
-    error = np.full(n.shape, np.nan)
-    with np.errstate(divide="ignore"):
-        naive, reach = 1 / np.sqrt(n), 1 - steps / np.where(seen.rows > 0, seen.rows, np.nan)
-    for side, bound in bounds:
-        if abs(bound) >= 1:
-            reasons.add(where=True, text=f"an autocorrelation lies between -1 and 1: a bound of {bound:g} says nothing")
-            continue
-        law = bound_law(seen, bound)
-        references[side] = correlation_reference(seen.r, law, np.full(n.shape, bound), naive)
-        ask_reach(reasons, references[side], side, reach, question.risk / len(bounds))
-        error = np.fmax(error, law.error)
-    return Measurement(
-        observed=seen.r,
-        n=n,
-        n_missing=n_missing,
-        n_eff=np.where(np.isnan(seen.r), np.nan, 1 / error**2),
-        upper=references.get("upper"),
-        lower=references.get("lower"),
-        undecided=reasons.index,
-        reasons=tuple(reasons.texts),
+    return held_to_bounds(
+        panel,
+        question,
+        seen,
+        flat="the window varies by no more than the rounding of its numbers",
+        wanders=root_beyond(seen.model, ROOT),
+        advice=no_level(panel),
         method="atanh r, variance and bias of an autoregression with the bound imposed "
         "(Bartlett 1946; Kendall 1954; Taylor 1984)",
         assumes="a linear process that returns to its level" + seasons_left(panel),
-        lags=lags,
     )
 
 
