@@ -229,7 +229,8 @@ def test_what_a_killed_process_left_behind_is_cleared_away(tmp_path):
     """A draft of a process that is no more goes with the next file written there; that of a living one stays."""
     code = (
         "import os, signal; from sercheck.outputs import whole_file\n"
-        "with whole_file('out.csv') as file:\n    file.write(b'half'); file.flush(); os.kill(os.getpid(), signal.SIGKILL)\n"
+        "with whole_file('out.csv') as file:\n"
+        "    file.write(b'half'); file.flush(); os.kill(os.getpid(), signal.SIGKILL)\n"
     )
     subprocess.run([sys.executable, "-c", code], cwd=tmp_path, check=False)
     (left,) = tmp_path.glob(".sercheck-*.tmp")
