@@ -1,6 +1,6 @@
 """A window and its history with the fixed cycles taken out, and the reasons that the classical measures share.
 
-Depends on ``serial``, ``grid``, ``measure`` and ``baseline``. Everything here is computed once a panel.
+Depends on ``serial``, ``grid``, ``measure``, ``reference`` and ``baseline``. Everything here is computed once a panel.
 """
 
 from __future__ import annotations
@@ -13,6 +13,7 @@ import numpy as np
 from sercheck.baseline import residual
 from sercheck.grid import Panel
 from sercheck.measure import Measurement, Reasons, Reference, Side
+from sercheck.reference import Pivot
 from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.serial.long_run import CosineSpectrum, cosine_spectrum
 from sercheck.serial.risk import t_quantile
@@ -209,6 +210,27 @@ def without(told: Past) -> str:
 def taken_out(seasons: Collection[str]) -> str:
     """The same, given the names of the cycles."""
     return f", fixed cycles ({', '.join(seasons)}) taken out" if seasons else ""
+
+
+def pivot_through(
+    to_unit: Callable[[Floats], Floats], at: Floats, centre: Floats, scale: Floats, df: Floats, *,
+    bound: Floats | None = None, naive: Floats | None = None,
+) -> Pivot:  # fmt: skip
+    """Student's t on a scale that ``to_unit`` bends: its standard error in the unit is half of what two steps span.
+
+    Shape (S,) for what is on that scale; ``bound``, shape (S, 1), is what ``to_unit`` makes of the centre unless given.
+    """
+    place, step = cell(centre), cell(scale)
+    return Pivot(
+        statistic=cell(at),
+        centre=place,
+        scale=step,
+        df=cell(df),
+        bound=to_unit(place) if bound is None else bound,
+        standard_error=(to_unit(place + step) - to_unit(place - step)) / 2,
+        to_unit=to_unit,
+        naive_scale=None if naive is None else cell(naive),
+    )
 
 
 def measured(

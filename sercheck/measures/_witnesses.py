@@ -63,6 +63,31 @@ def sides(question: Question, against: Callable[[float], Reference]) -> tuple[Re
     return None if high is None else against(high), None if low is None else against(low)
 
 
+def two_witnesses(
+    panel: Panel, at: Floats, errors: tuple[Floats, Floats], runs: tuple[LongRun, LongRun], naive: Floats
+) -> Callable[[float], Reference]:
+    """Law of a statistic about a bound, given the standard errors that two long-run variances lead to.
+
+    Statistic and errors have shape (S,) and are in units of ``Past.scale``.
+    """
+    scale = past(panel).scale
+    unit = ToUnit(None, np.zeros(len(at)), scale)
+
+    def witness(bound: float, error: Floats, run: LongRun) -> Pivot:
+        return Pivot(
+            statistic=cell(at),
+            centre=cell(bound / scale),
+            scale=cell(error),
+            df=cell(run.df),
+            bound=np.full((len(at), 1), bound),
+            standard_error=unit(cell(error)),
+            to_unit=unit,
+            naive_scale=cell(naive),
+        )
+
+    return lambda bound: Larger(witness(bound, errors[0], runs[0]), witness(bound, errors[1], runs[1]))
+
+
 def mean_alone(panel: Panel, question: Question) -> Measurement:
     """The window's mean against the author's number, p = max(p_AR, p_EWC)."""
     told, reasons = past(panel), Reasons((len(past(panel).n), 1))
@@ -72,23 +97,8 @@ def mean_alone(panel: Panel, question: Question) -> Measurement:
     ask_alone(reasons, panel, question, first, "a level", FEWEST_STRONG)
     rows = np.maximum(told.n, 1)
     spread = variance(values)
-
-    def against(bound: float) -> Reference:
-        def witness(run: LongRun) -> Pivot:
-            scale = cell(np.sqrt(run.variance / rows))
-            return Pivot(
-                statistic=cell(level),
-                centre=cell(bound / told.scale),
-                scale=scale,
-                df=cell(run.df),
-                bound=np.full(scale.shape, bound),
-                standard_error=scale * cell(told.scale),
-                to_unit=ToUnit(None, np.zeros(len(rows)), told.scale),
-                naive_scale=cell(np.sqrt(spread / rows)),
-            )
-
-        return Larger(witness(first), witness(second))
-
+    errors = np.sqrt(first.variance / rows), np.sqrt(second.variance / rows)
+    against = two_witnesses(panel, level, errors, (first, second), np.sqrt(spread / rows))
     with np.errstate(divide="ignore", invalid="ignore"):
         n_eff = rows * spread / np.maximum(first.variance, second.variance)
     return measured(

@@ -49,6 +49,7 @@ from sercheck.measures._past import (
     mean,
     measured,
     past,
+    pivot_through,
     without,
 )
 from sercheck.measures._witnesses import mean_alone, sides
@@ -251,18 +252,6 @@ def _pivot(unit: _Root | _Lack, observed: Floats, then: Floats, bound: float | N
     centre, wide, df = window_t(before, at)
     df, heavier = _tails(before, df)
     if bound is None:
-        place, step = cell(centre), cell(wide / heavier)
-        shown = unit(place)
-    else:
-        place = cell(unit.at(np.full(len(at), bound)))
-        step = cell(np.maximum(wide / np.sqrt(1 + 1 / (df + 1)) / heavier, LEAST))
-        shown = np.full(place.shape, bound)
-    return Pivot(
-        statistic=cell(at),
-        centre=place,
-        scale=step,
-        df=cell(df),
-        bound=shown,
-        standard_error=(unit(place + step) - unit(place - step)) / 2,
-        to_unit=unit,
-    )
+        return pivot_through(unit, at, centre, wide / heavier, df)
+    step = np.maximum(wide / np.sqrt(1 + 1 / (df + 1)) / heavier, LEAST)
+    return pivot_through(unit, at, unit.at(np.full(len(at), bound)), step, df, bound=np.full((len(at), 1), bound))

@@ -42,12 +42,13 @@ from sercheck.measures._past import (
     cell,
     measured,
     past,
+    pivot_through,
     taken_out,
     variance,
     without,
 )
 from sercheck.measures._witnesses import own_cycles_out
-from sercheck.reference import Larger, Pivot
+from sercheck.reference import Larger
 from sercheck.serial.arrays import Floats
 from sercheck.serial.autoregression import burg
 from sercheck.serial.effective_sizes import low_frequency_share
@@ -98,17 +99,9 @@ def _like_history(panel: Panel, question: Question) -> Measurement:
     full = (~np.isnan(cut)).sum(axis=2) * 2 >= told.steps
     at = -_angle(share)
     centre, scale, df = window_t(np.where(full, -_angle(then).reshape(full.shape), np.nan), at)
-    unit, place, step = _Size(count), cell(centre), cell(scale)
+    unit = _Size(count)
     reasons.add(np.isnan(at)[:, None], "the window does not vary")
-    pivot = Pivot(
-        statistic=cell(at),
-        centre=place,
-        scale=step,
-        df=cell(df),
-        bound=unit(place),
-        standard_error=(unit(place + step) - unit(place - step)) / 2,
-        to_unit=unit,
-    )
+    pivot = pivot_through(unit, at, centre, scale, df)
     return measured(
         panel,
         reasons,

@@ -49,10 +49,10 @@ from sercheck.measures._past import (
     measured,
     out_of_reach,
     past,
+    pivot_through,
     scored,
     without,
 )
-from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats
 from sercheck.serial.quantiles import in_order, order_statistic, quantile
 from sercheck.serial.rates import AgainstShare, against_share
@@ -204,24 +204,16 @@ def _like_history(panel: Panel, question: Question, q: float) -> Measurement:
     then = _quantile_of(cut.reshape(-1, told.steps), q, fewest=told.steps / 2).reshape(cut.shape[:2])
     centre, scale, df = window_t(then, at)
     unit = ToUnit(rank.unit, offset, told.scale)
-    place, step = cell(centre), cell(scale)
     density = np.exp(-(special.ndtri(q) ** 2) / 2) / np.sqrt(2 * np.pi)
-    naive = cell(np.sqrt(q * (1 - q) / np.maximum(told.n, 1)) / density)
-    pivot = Pivot(
-        statistic=cell(at),
-        centre=place,
-        scale=step,
-        df=cell(df),
-        bound=unit(place),
-        standard_error=(unit(place + step) - unit(place - step)) / 2,
-        to_unit=unit,
-        naive_scale=naive,
+    naive = np.sqrt(q * (1 - q) / np.maximum(told.n, 1)) / density
+    pivot = pivot_through(unit, at, centre, scale, df, naive=naive)
+    reasons.add(
+        ~(cell(scale) > 0), "history's stretches do not differ in this quantile: no sampling error to allow for"
     )
-    reasons.add(~(step > 0), "history's stretches do not differ in this quantile: no sampling error to allow for")
     reasons.add(out_of_reach(rank, centre, scale, df, question.risk)[:, None], MUTE)
     n = counts(panel)[0]
     with np.errstate(divide="ignore", invalid="ignore"):
-        n_eff = n * (naive / step) ** 2
+        n_eff = n * cell(naive / scale) ** 2
     return measured(
         panel,
         reasons,

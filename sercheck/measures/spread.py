@@ -48,6 +48,7 @@ from sercheck.measures._past import (
     mean,
     measured,
     past,
+    pivot_through,
     scored,
     variance,
     varied,
@@ -58,7 +59,7 @@ from sercheck.measures._witnesses import STRONG, own_cycles_out, sides
 from sercheck.recent import enough as recent_enough
 from sercheck.recent import recent_measurement, recent_past
 from sercheck.reference import Pivot
-from sercheck.serial.arrays import Floats
+from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.autoregression import burg, model_autocorrelation
 from sercheck.serial.effective_sizes import effective_size_of
 from sercheck.serial.window_t import fewest_windows, window_t, windows
@@ -146,7 +147,7 @@ def _like_history(panel: Panel, question: Question) -> Measurement:
     at = _logs(np.maximum(now, FLAT))
     centre, scale, df = window_t(_logs(then), at)
     unit = _Deviation(base, centre)
-    pivot = _pivot(at, centre, scale, df, unit, unit(cell(centre)), told.n)
+    pivot = pivot_through(unit, at, centre, scale, df, naive=_naive(told.n))
     return measured(
         panel,
         reasons,
@@ -173,7 +174,8 @@ def _literal(panel: Panel, question: Question) -> Measurement:
 
     def against(bound: float) -> Pivot:
         centre = 2 * _logs(np.asarray(bound / told.scale)) + bias
-        return _pivot(at, centre, scale, df, unit, np.full((len(at), 1), bound), told.n)
+        number = np.full((len(at), 1), bound)
+        return pivot_through(unit, at, centre, scale, df, bound=number, naive=_naive(told.n))
 
     return measured(
         panel,
@@ -208,21 +210,9 @@ def _size(n: Floats | object, scale: Floats) -> Floats:
         return np.asarray(rows * 2 / (rows - 1) / scale**2, dtype=np.float64)
 
 
-def _pivot(
-    at: Floats, centre: Floats, scale: Floats, df: Floats, unit: _Deviation, bound: Floats, n: Floats | object
-) -> Pivot:
-    place, step = cell(centre), cell(scale)
-    rows = np.maximum(np.asarray(n, dtype=np.float64), 2)
-    return Pivot(
-        statistic=cell(at),
-        centre=place,
-        scale=step,
-        df=cell(df),
-        bound=bound,
-        standard_error=(unit(place + step) - unit(place - step)) / 2,
-        to_unit=unit,
-        naive_scale=cell(np.sqrt(2 / (rows - 1))),
-    )
+def _naive(n: Ints) -> Floats:
+    """Standard error of the log variance of n independent normal rows."""
+    return np.asarray(np.sqrt(2 / (np.maximum(n, 2) - 1.0)), dtype=np.float64)
 
 
 def _alone(panel: Panel, question: Question) -> Measurement:
@@ -251,17 +241,9 @@ def _alone(panel: Panel, question: Question) -> Measurement:
 
     def against(bound: float) -> Pivot:
         root = np.cbrt(bound / told.scale) ** 2
-        centre, scale = cell(root * (1 - 2 / (9 * df))), cell(root * np.sqrt(2 / (9 * df)))
-        return Pivot(
-            statistic=cell(at),
-            centre=centre,
-            scale=scale,
-            df=np.full(scale.shape, np.inf),
-            bound=np.full(scale.shape, bound),
-            standard_error=(unit(centre + scale) - unit(centre - scale)) / 2,
-            to_unit=unit,
-            naive_scale=cell(root * np.sqrt(2 / (9.0 * (rows - 1)))),
-        )
+        centre, scale = root * (1 - 2 / (9 * df)), root * np.sqrt(2 / (9 * df))
+        naive, number = root * np.sqrt(2 / (9.0 * (rows - 1))), np.full((len(at), 1), bound)
+        return pivot_through(unit, at, centre, scale, np.full(len(at), np.inf), bound=number, naive=naive)
 
     return measured(
         panel,

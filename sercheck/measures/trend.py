@@ -35,7 +35,7 @@ from pydantic import BaseModel, ConfigDict
 
 from sercheck.baseline import chosen_seasons
 from sercheck.grid import Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons, Reference
+from sercheck.measure import Measure, Measurement, Question, Reasons
 from sercheck.measures._past import (
     ToUnit,
     ask_history,
@@ -51,10 +51,10 @@ from sercheck.measures._past import (
     window_scores,
     without,
 )
-from sercheck.measures._witnesses import ask_alone, sides
-from sercheck.reference import Larger, Pivot
+from sercheck.measures._witnesses import ask_alone, sides, two_witnesses
+from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats
-from sercheck.serial.long_run import LongRun, autoregressive_long_run, contrast_variance, trend_cosine_long_run
+from sercheck.serial.long_run import autoregressive_long_run, contrast_variance, trend_cosine_long_run
 from sercheck.serial.season import phase_means
 
 FEWEST_STRONG = 168
@@ -138,23 +138,8 @@ def _literal(panel: Panel, question: Question) -> Measurement:
     squares = np.broadcast_to((contrast**2).sum(axis=1), at.shape)
     naive = np.sqrt(variance(left) * squares)
     unit = ToUnit(None, np.zeros(len(at)), told.scale)
-
-    def against(bound: float) -> Reference:
-        def witness(run: LongRun) -> Pivot:
-            scale = cell(np.sqrt(run.variance * squares))
-            return Pivot(
-                statistic=cell(at),
-                centre=cell(bound / told.scale),
-                scale=scale,
-                df=cell(run.df),
-                bound=np.full(scale.shape, bound),
-                standard_error=unit(scale),
-                to_unit=unit,
-                naive_scale=cell(naive),
-            )
-
-        return Larger(witness(first), witness(second))
-
+    errors = np.sqrt(first.variance * squares), np.sqrt(second.variance * squares)
+    against = two_witnesses(panel, at, errors, (first, second), naive)
     with np.errstate(divide="ignore", invalid="ignore"):
         worth = variance(left) / np.maximum(first.variance, second.variance)
     return measured(
