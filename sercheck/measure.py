@@ -200,3 +200,10 @@ class Reasons:
     def undecided(self) -> Bools:
         """Cells that have a reason."""
         return self.index >= 0
+
+
+def told_reasons(reasons: Reasons, unsure: Reasons | None) -> tuple[tuple[str, ...], Ints | None]:
+    """Both lists of sentences as one, and the second's places in it (``Measurement.unsure``)."""
+    if unsure is None:
+        return tuple(reasons.texts), None
+    return (*reasons.texts, *unsure.texts), np.where(unsure.undecided, unsure.index + len(reasons.texts), -1)

@@ -9,7 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from sercheck.measure import Measurement, Reasons, Reference, Side, Stays
+from sercheck.measure import Measurement, Reasons, Reference, Side, Stays, told_reasons
 from sercheck.reference import Exact
 from sercheck.serial.arrays import Floats, Ints
 
@@ -61,6 +61,7 @@ def exact(
         return Counted(column, np.full(column.shape, np.nan if number is None else number), touch=touch)
 
     upper, lower = sides(stays, bound(stays.high, span[0]), bound(stays.low, span[1]))
+    texts, unsure_at = told_reasons(reasons, unsure)
     return Measurement(
         observed=column,
         n=n[:, None],
@@ -69,10 +70,10 @@ def exact(
         upper=upper,
         lower=lower,
         undecided=reasons.index,
-        reasons=(*reasons.texts, *(unsure.texts if unsure else ())),
+        reasons=texts,
         method=method,
         assumes=assumes,
         exact=True,
         integer=integer,
-        unsure=np.where(unsure.undecided, unsure.index + len(reasons.texts), -1) if unsure else None,
+        unsure=unsure_at,
     )

@@ -141,9 +141,3 @@ def effective(n: Ints, naive: Floats, scale: Floats) -> Floats:
     told = scale > 2 * SMALLEST_ERROR
     ratio = np.divide(naive, scale, out=np.full(scale.shape, np.nan), where=told)
     return np.asarray(n * ratio[:, None] ** 2)
-
-
-def told_reasons(reasons: Reasons, unsure: Reasons) -> tuple[tuple[str, ...], Ints]:
-    """Both lists of sentences as one, and the second's places in it."""
-    texts = (*reasons.texts, *unsure.texts)
-    return texts, np.where(unsure.undecided, unsure.index + len(reasons.texts), -1)

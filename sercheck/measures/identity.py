@@ -36,7 +36,7 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict
 
 from sercheck.grid import Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons, Side
+from sercheck.measure import Measure, Measurement, Question, Reasons, Side, told_reasons
 from sercheck.measures._past import NO_HISTORY, cell, counts
 from sercheck.recent import has_profile, recent_past
 from sercheck.reference import Pivot, detectable_reach
@@ -141,7 +141,7 @@ def _in_one_unit(y: Floats, expected: Floats, scale: Floats) -> tuple[Floats, Fl
 
 def _told(panel: Panel, reasons: Reasons, observed: Floats, law: Above, unsure: Reasons | None) -> Measurement:
     n, n_missing = counts(panel)
-    texts = (*reasons.texts, *(unsure.texts if unsure else ()))
+    texts, unsure_at = told_reasons(reasons, unsure)
     return Measurement(
         observed=observed,
         n=n,
@@ -153,5 +153,5 @@ def _told(panel: Panel, reasons: Reasons, observed: Floats, law: Above, unsure: 
         reasons=texts,
         method="whitened sums of squares about the own and the nearest other profile, Student's t over history's",
         assumes=f"a swap among the {len(panel.values)} series that are judged together",
-        unsure=np.where(unsure.undecided, unsure.index + len(reasons.texts), -1) if unsure else None,
+        unsure=unsure_at,
     )

@@ -43,7 +43,7 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict, FiniteFloat, model_validator
 
 from sercheck.grid import Panel
-from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Reference, Side
+from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Reference, Side, told_reasons
 from sercheck.measures._exact import sides
 from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.serial.rates import AgainstPast, AgainstShare, ShareLaw, against_past, against_share, quotient
@@ -202,7 +202,7 @@ def _measurement(
     method: str,
     assumes: str,
 ) -> Measurement:
-    undecided, unsure = reasons
+    texts, unsure_at = told_reasons(*reasons)
     missing: Ints = np.count_nonzero(np.isnan(panel.window), axis=1)[:, None]
     return Measurement(
         observed=quotient(law.hits, law.rows),
@@ -211,9 +211,9 @@ def _measurement(
         n_eff=law.rows / law.tau,
         upper=upper,
         lower=lower,
-        undecided=undecided.index,
-        reasons=(*undecided.texts, *unsure.texts),
+        undecided=reasons[0].index,
+        reasons=texts,
         method=method,
         assumes=assumes,
-        unsure=np.where(unsure.undecided, unsure.index + len(undecided.texts), -1),
+        unsure=unsure_at,
     )

@@ -32,7 +32,7 @@ from pydantic import BaseModel, ConfigDict, Field
 
 from sercheck.errors import UsageError
 from sercheck.grid import Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons
+from sercheck.measure import Measure, Measurement, Question, Reasons, told_reasons
 from sercheck.measures._lags import window_counts
 from sercheck.measures._past import combined
 from sercheck.measures._season import (
@@ -42,7 +42,6 @@ from sercheck.measures._season import (
     effective,
     learned,
     named_season,
-    told_reasons,
 )
 from sercheck.measures._season_laws import Best
 from sercheck.recent import enough, has_profile, idle_phase, recent_measurement, recent_past

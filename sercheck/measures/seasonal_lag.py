@@ -43,10 +43,10 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict, Field
 
 from sercheck.grid import Panel
-from sercheck.measure import POWER, Measure, Measurement, Question, Reasons
+from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, told_reasons
 from sercheck.measures._lags import window_counts
 from sercheck.measures._past import combined
-from sercheck.measures._season import Named, ask_history, ask_window, effective, learned, named_season, told_reasons
+from sercheck.measures._season import Named, ask_history, ask_window, effective, learned, named_season
 from sercheck.measures._season_bound import bounded
 from sercheck.measures._season_laws import ChiSquare
 from sercheck.recent import enough, has_profile, idle_amplitude, recent_measurement, recent_past
