@@ -17,7 +17,7 @@ from sercheck.intake.layout import Layout
 from sercheck.intake.paths import told
 from sercheck.intake.rows import Fingerprint, Rows
 from sercheck.intake.since import compact
-from sercheck.intake.stream import MemorySource, Source
+from sercheck.intake.stream import MemorySource, ReadForFingerprint, Source
 from sercheck.intake.stretch import Extent, extent, span, within
 from sercheck.intake.zone import DAY, EARLIEST, LATEST
 from sercheck.serial.arrays import Bools, Ints
@@ -229,7 +229,7 @@ def _groups(place: int, part: Part, low: int, high: int) -> Iterator[_Group]:
         yield _Group(place, number, group.num_rows, least, most, first >= low and last < high, first, last)
 
 
-class ArchiveSource(Source):
+class ArchiveSource(ReadForFingerprint):
     """History in the archive, read by blocks of series across all its days."""
 
     def __init__(
@@ -238,20 +238,12 @@ class ArchiveSource(Source):
         self._parts, self._groups, self._between = parts, groups, between
         self.layout, self.paths = layout, ()
         self._bounds = _bounds(groups, block_rows)
-        self._fingerprint: str | None = None
         self._sample: Ints | None = None
 
     @property
     def streams(self) -> bool:
         """There are several blocks."""
         return len(self._bounds) > 1
-
-    @property
-    def fingerprint(self) -> str:
-        if self._fingerprint is None:
-            for _ in self.blocks():
-                pass
-        return str(self._fingerprint)
 
     def sample(self) -> Ints:
         if self._sample is None:

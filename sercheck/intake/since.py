@@ -9,7 +9,7 @@ import numpy as np
 
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.rows import Fingerprint, Rows
-from sercheck.intake.stream import MemorySource, Source
+from sercheck.intake.stream import MemorySource, ReadForFingerprint, Source
 from sercheck.intake.stretch import Extent
 from sercheck.intake.zone import EARLIEST, LATEST
 from sercheck.serial.arrays import Ints
@@ -40,20 +40,12 @@ def _between(rows: Rows, first: int, before: int) -> Rows:
     return rows if inside.all() else compact(rows.take(inside))
 
 
-class _Cut(Source):
+class _Cut(ReadForFingerprint):
     """A stream without its rows before one moment and from another on."""
 
     def __init__(self, whole: Source, first: int, before: int) -> None:
         self._whole, self._first, self._before = whole, first, before
         self.layout, self.paths = whole.layout, whole.paths
-        self._fingerprint: str | None = None
-
-    @property
-    def fingerprint(self) -> str:
-        if self._fingerprint is None:
-            for _ in self.blocks():
-                pass
-        return str(self._fingerprint)
 
     def sample(self) -> Ints:
         return self._whole.sample()

@@ -86,13 +86,10 @@ class MemorySource(Source):
         return self._rows
 
 
-class StreamSource(Source):
-    """Parquet sorted by key, read by row groups; no more than a block of series is held."""
+class ReadForFingerprint(Source):
+    """A source that knows its fingerprint once ``blocks`` came to its end, which sets it."""
 
-    def __init__(self, files: SortedParquet, layout: Layout, paths: tuple[str, ...]) -> None:
-        self._files, self.layout, self.paths = files, layout, paths
-        self._fingerprint: str | None = None
-        self._sample: Ints | None = None
+    _fingerprint: str | None = None
 
     @property
     def fingerprint(self) -> str:
@@ -100,6 +97,14 @@ class StreamSource(Source):
             for _ in self.blocks():
                 pass
         return str(self._fingerprint)
+
+
+class StreamSource(ReadForFingerprint):
+    """Parquet sorted by key, read by row groups; no more than a block of series is held."""
+
+    def __init__(self, files: SortedParquet, layout: Layout, paths: tuple[str, ...]) -> None:
+        self._files, self.layout, self.paths = files, layout, paths
+        self._sample: Ints | None = None
 
     def sample(self) -> Ints:
         if self._sample is None:
