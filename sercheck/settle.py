@@ -1,4 +1,4 @@
-"""A person overrules: a held batch is let in or discarded, or a new regime begins; depends on the store.
+"""A person overrules: a held batch is let in, a batch is discarded, a new regime begins; depends on the store.
 
 The ledger is told first, then the archive. A process that dies in between has said it all the same: the same call
 again, or the next ``gate`` of the batch, makes the archive agree.
@@ -56,13 +56,14 @@ def settle(
         batch_id: id of the batch or its beginning.
         by: who says so.
         because: why.
-        release_as: ``released`` (its rows become history) or ``discarded`` (they never do).
+        release_as: ``released`` (its rows become history) or ``discarded`` (they never do, and do no longer where
+            rules or a person had released the batch). Discarding what is discarded changes nothing.
         relearn_from: a date, in the feed's time zone, or a time: history before it no longer teaches the feed.
         store: folder of ledger and archive.
         ledger: SQLAlchemy URL of the ledger, where it is not in the store.
 
     Raises:
-        UsageError: no such batch, or it is what was asked for already.
+        UsageError: no such batch, or it is to be released and is released already.
         StoreError: ledger or archive cannot be used.
     """
     if release_as is None and relearn_from is None:
@@ -94,13 +95,14 @@ def _release(
     """Tell the ledger and make the archive agree."""
     place, before = f"batch {wish.batch_id}", batch.settled
     known = archive.log().states.get(wish.batch_id)
-    state = STATES[wish.what]
-    if before is None and batch.last.decision == "released":
-        raise UsageError(place, f"it was released by its rules at {batch.last.judged_at}", "a held batch")
-    if before is not None and before.what == wish.what:
-        if known is None or known.what == state:
-            raise UsageError(place, f"it is settled already: {before.sentence()}", "a batch that is not")
-    else:
+    again = before is not None and before.what == wish.what
+    if wish.what == "released":
+        wanted = "a batch that was held or discarded"
+        if before is None and batch.last.decision == "released":
+            raise UsageError(place, f"it was released by its rules at {batch.last.judged_at}", wanted)
+        if before is not None and again and (known is None or known.what == STATES["released"]):
+            raise UsageError(place, f"it is settled already: {before.sentence()}", wanted)
+    if not again:
         ledger.settle(wish)
         said.append(wish)
     if known is None:

@@ -253,15 +253,35 @@ def test_what_cannot_be_settled_is_said_in_one_sentence(feed, case):
     assert rows(feed) == BEFORE
 
 
-def test_what_was_released_cannot_be_settled_nor_twice_the_same(feed):
+def test_what_was_released_cannot_be_released(feed):
     """By its rules, or by a person before."""
     released, held = feed.gate(healthy(0)), feed.gate(flat(1))
-    for what in ("released", "discarded"):
-        with pytest.raises(UsageError, match="it was released by its rules"):
-            feed.settle(released, what)
+    with pytest.raises(UsageError, match="it was released by its rules"):
+        feed.settle(released, "released")
     feed.settle(held, "released")
     with pytest.raises(UsageError, match="settled already: released by Ana"):
         feed.settle(held, "released")
+
+
+def test_a_batch_that_its_rules_released_is_taken_back(feed):
+    """It teaches no longer, also when it is judged again; said twice it is kept once; it can be let in again."""
+    released = feed.gate(healthy(0))
+    assert rows(feed) == BEFORE + 48
+    for _ in range(2):
+        feed.settle(released, "discarded")
+        assert rows(feed) == BEFORE
+    again = feed.gate(healthy(0))
+    assert not again.released
+    assert rows(feed) == BEFORE
+    assert any("released by its rules; discarded by Ana" in note for note in again.notes)
+    with open_ledger(str(feed.store)) as ledger:
+        assert [each.what for each in ledger.batch(released.batch_id).settlements] == ["discarded"]
+    shown = process("ledger", "show", released.batch_id, "--store", str(feed.store)).stdout
+    assert "released, judged at" in shown
+    assert "discarded by Ana" in shown
+    assert "released, then discarded" in process("ledger", "batches", "--store", str(feed.store)).stdout
+    feed.settle(released, "released")
+    assert rows(feed) == BEFORE + 48
 
 
 def test_the_command_and_the_ledger_tell_it(feed, monkeypatch):

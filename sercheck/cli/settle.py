@@ -11,7 +11,7 @@ from sercheck.cli.say import folded, plain, say
 
 @click.command("settle")
 @click.argument("batch_id", metavar="BATCH-ID")
-@click.option("--as", "release_as", type=click.Choice(["released", "discarded"]), help="What becomes of a held batch.")
+@click.option("--as", "release_as", type=click.Choice(["released", "discarded"]), help="What becomes of the batch.")
 @click.option("--relearn-from", metavar="DATE", help="History before this day no longer teaches the feed.")
 @click.option("--by", required=True, metavar="NAME", help="Who says so.")
 @click.option("--because", required=True, metavar="TEXT", help="Why.")
@@ -28,6 +28,7 @@ def command(
 ) -> None:
     """Overrule what was decided about a batch: release or discard it, or declare a new regime of its feed.
 
+    A held batch can be released. A batch that was released by mistake can be discarded: it teaches no longer.
     Nothing is erased: who said what, when and why is added to the ledger. What was said last stands.
     """
     from sercheck.settle import settle
