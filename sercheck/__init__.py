@@ -33,3 +33,7 @@ def __getattr__(name: str) -> object:
     if name in _PLACES:
         return getattr(importlib.import_module(_PLACES[name]), name)
     raise AttributeError(f"module 'sercheck' has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    return sorted(__all__)

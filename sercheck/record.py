@@ -75,6 +75,10 @@ class Records:
     def __len__(self) -> int:
         return len(self.columns["record_id"])
 
+    def __repr__(self) -> str:
+        told = ", ".join(f"{number} {outcome}" for outcome, number in self.counts().items())
+        return f"Records({len(self)} rows: {told})"
+
     def __getitem__(self, name: str) -> np.ndarray:
         column: np.ndarray = self.columns[name]
         return column

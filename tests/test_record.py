@@ -263,3 +263,10 @@ def test_text_columns_are_all_that_are_not_numbers():
     """Every column is of exactly one kind."""
     assert set(TEXTS) | INTEGERS | NUMBERS == set(COLUMNS)
     assert not INTEGERS & NUMBERS
+
+
+def test_records_print_as_one_line():
+    """A verdict at the prompt does not fill the screen with arrays."""
+    found = Records.concat([records(3, outcome="pass"), records(2, outcome="fail")])
+    assert repr(found) == "Records(5 rows: 3 pass, 2 fail, 0 undecided)"
+    assert repr(Records.empty()) == "Records(0 rows: 0 pass, 0 fail, 0 undecided)"

@@ -1,5 +1,6 @@
 """What a small batch costs beside starting Python: only what is needed is imported. Figures are ratios in one run."""
 
+import importlib
 import resource
 import statistics
 import subprocess
@@ -65,3 +66,11 @@ def test_what_is_not_needed_is_not_imported(one):
     )
     done = subprocess.run([sys.executable, "-c", code], cwd=one, check=True, capture_output=True, text=True)
     assert done.stdout.strip() == "0 []"
+
+
+@pytest.mark.parametrize("name", ["sercheck", "sercheck.serial"])
+def test_the_public_names_are_listed_though_imported_late(name):
+    """`dir` and so the completion of a prompt show them, and each is there."""
+    module = importlib.import_module(name)
+    assert dir(module) == sorted(module.__all__)
+    assert all(getattr(module, public) is not None for public in dir(module))

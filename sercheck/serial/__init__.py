@@ -77,3 +77,7 @@ def __getattr__(name: str) -> object:
     if name in _PLACES:
         return getattr(importlib.import_module(f"sercheck.serial.{_PLACES[name]}"), name)
     raise AttributeError(f"module 'sercheck.serial' has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    return sorted(__all__)
