@@ -104,7 +104,7 @@ def test_show_tells_all_about_a_batch(store):
     """A batch is shown with its judgement and what did not pass, as text, JSON and CSV."""
     text = ask("show", "heat-0112", "--store", store).output
     assert "held, judged at 2026-01-13T06:00:00Z" in text
-    assert "3 passed, 3 failed, 1 undecided" in text
+    assert "3 pass, 3 fail, 1 undecided" in text
     assert [line.split()[0] for line in text.splitlines()[-4:]] == ["fail", "fail", "fail", "undecided"]
     facts = json.loads(ask("show", "heat-0112", "--store", store, "--format", "json").output)
     assert facts["records"] == list(records(7).rows())
@@ -172,3 +172,9 @@ def test_a_table_is_aligned_and_fits():
     assert len(lines[2]) == 100
     assert lines[2].endswith("…    –       –")
     assert lines[1].endswith("    1  0.1235")
+
+
+@pytest.mark.parametrize("words", [("batches",), ("records",), ("show",)])
+def test_the_help_says_what_json_is(words):
+    """One object a line: a program must not read it as one document."""
+    assert "JSON lines" in ask(*words, "--help").output

@@ -51,7 +51,9 @@ def _until(_: click.Context, __: click.Parameter, text: str | None) -> str | Non
 
 
 _STORE = click.option("--store", metavar="DIR|URL", help="The store's folder, or the ledger's URL.")
-_FORMAT = click.option("--format", "form", type=FORMATS, default="text", show_default=True)
+_FORMAT = click.option(
+    "--format", "form", type=FORMATS, default="text", show_default=True, help="json: JSON lines, one object a line."
+)
 _FILTERS = (
     click.option("--feed", metavar="NAME", help="Only this feed; * and ? stand for letters."),
     click.option("--since", metavar="TIME", callback=_since, help="Only batches whose newest row is then or later."),
