@@ -38,7 +38,7 @@ def sentences(rule: Rule, judged: Judged) -> list[str]:
     """One sentence for every cell, in the order of the flattened arrays."""
     seen = judged.seen.measurement
     lags = seen.lags or (None,) * seen.observed.shape[1]
-    whole = " over all series, in standard deviations," if judged.seen.keys[:1].tolist() == [None] else ""
+    whole = " over all series (in standard deviations)" if judged.seen.keys[:1].tolist() == [None] else ""
     names = [subject(rule, judged.seen.column, lag, seen.season) + whole for lag in lags] * seen.observed.shape[0]
     cells = zip(
         names,
@@ -74,10 +74,18 @@ def _sentence(
     if seen.certify:
         return f"{name}: {'is there' if outcome == PASS else 'no season can be certified'}"
     value = number(observed, integer=seen.integer)
-    side = "inside" if outcome == PASS else "at" if observed == limit else "above" if upper else "below"
+    side = _side(outcome, upper=upper, at=observed == limit)
     source = "history" if rule.stays.kind == "like_history" else "bound"
     if seen.exact:
         return f"{name} is {value}, {side} the bound {number(bound, integer=seen.integer)}"
-    sizes = f"{n} rows" if math.isnan(n_eff) else f"{n} rows, worth {number(n_eff)} independent ones"
+    rows = "1 row" if n == 1 else f"{n} rows"
+    sizes = rows if math.isnan(n_eff) else f"{rows}, worth {number(n_eff)} independent ones"
     edge = "a limit beyond all that could be seen" if math.isnan(limit) else f"the limit {number(limit)}"
     return f"{name} is {value}, {side} {edge} ({source} {number(bound)}; {sizes})"
+
+
+def _side(outcome: int, *, upper: bool, at: bool) -> str:
+    """Where the observation lies; a pass names the side that it is nearer to break."""
+    if outcome == PASS:
+        return "not above" if upper else "not below"
+    return "at" if at else "above" if upper else "below"

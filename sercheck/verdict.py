@@ -15,8 +15,9 @@ import numpy as np
 
 from sercheck import __version__
 from sercheck.collect import Common, records
+from sercheck.counted import Counted, Facts
 from sercheck.engine import Run, decide, measure_block
-from sercheck.errors import BatchError, BatchHeld, UsageError
+from sercheck.errors import BatchHeld, UsageError
 from sercheck.history import find_past, open_memory
 from sercheck.intake.layout import Layout
 from sercheck.intake.stream import feed_cadence, feed_grids, open_feed
@@ -29,7 +30,6 @@ from sercheck.rulebook.compiled import Rulebook
 if TYPE_CHECKING:
     import pandas as pd
 
-    from sercheck.grid import Grid
     from sercheck.store.ledger import Ledger
     from sercheck.store.rows import Settlement
 
@@ -37,23 +37,6 @@ if TYPE_CHECKING:
 
 EARLIEST, LATEST = 1678, 2261
 """Whole years that nanoseconds since 1970 reach in 64 bits."""
-
-
-@dataclass(frozen=True)
-class Facts:
-    """The batch in numbers.
-
-    Attributes:
-        first: first step of the batch, UTC, RFC 3339.
-        last: last step.
-        rows: rows delivered.
-        series: number of series.
-    """
-
-    first: str
-    last: str
-    rows: int
-    series: int
 
 
 @dataclass(frozen=True)
@@ -69,6 +52,7 @@ class Verdict:
         notes: what the reader should know that no rule asks about.
         paths: the files the batch came from (empty for a frame).
         abouts: what the rule file says about each rule, by name.
+        timezone: the feed's zone.
         expected: most false holds a healthy feed has on average, and in which period; None when the rule file does not
             say how often a batch comes.
     """
@@ -81,6 +65,7 @@ class Verdict:
     notes: tuple[str, ...] = ()
     paths: tuple[str, ...] = ()
     abouts: Mapping[str, str] = field(default_factory=dict)
+    timezone: str = "UTC"
     expected: tuple[float, str] | None = None
 
     @property
@@ -124,12 +109,44 @@ class Verdict:
         return {
             "decision": self.decision,
             "batch_id": self.batch_id,
+            "feed": self.feed,
+            "first": self.facts.first,
+            "last": self.facts.last,
+            "rows": self.facts.rows,
+            "series": self.facts.series,
             "counts": self.counts,
             "failed": list(self.table.rows_where("outcome", "fail")),
+            "undecided": self.undecided,
             "likely_causes": self.likely_causes,
             "false_holds_expected": expected,
             "notes": list(self.notes),
         }
+
+    @property
+    def undecided(self) -> list[dict[str, Any]]:
+        """Rules that could not say something, those that hold because of it first.
+
+        ``rule``, how many of its ``records`` of ``all``, which ``series``, the commonest ``reason`` of
+        ``reasons``, and whether it ``holds`` the batch.
+        """
+        names = self.table["rule"]
+        silent = self.table["outcome"] == "undecided"
+        told = []
+        for rule in dict.fromkeys(names[silent].tolist()):
+            reasons = Counter(self.table["reason"][silent & (names == rule)].tolist())
+            ((reason, _),) = reasons.most_common(1)
+            told.append(
+                {
+                    "rule": rule,
+                    "records": sum(reasons.values()),
+                    "all": int(np.count_nonzero(names == rule)),
+                    "series": [k for k in dict.fromkeys(self.table["series"][silent & (names == rule)]) if k],
+                    "reason": reason,
+                    "reasons": len(reasons),
+                    "holds": bool(np.any(self.table["action"][silent & (names == rule)] == "hold")),
+                }
+            )
+        return sorted(told, key=lambda each: not each["holds"])
 
     def raise_if_held(self) -> None:
         """Raise ``BatchHeld`` when the batch may not be loaded, for a step of a pipeline."""
@@ -180,7 +197,7 @@ def gate(
             memory.prepare()
     source = open_feed(batch, layout)
     past = find_past(book, layout, source, history, memory, str(utc_text(judged_at)[0]))
-    counted = _Counted()
+    counted = Counted()
     cadence = feed_cadence(source, past.source, layout)
     run = Run(book, cadence, judged_at, past.rests)
     seen: list[Seen] = []
@@ -212,6 +229,7 @@ def gate(
         notes=(*_unjudged(book, seen, table), *counted.notes(past.source is not None), *dict.fromkeys(notes)),
         paths=source.paths,
         abouts={rule.name: rule.about for rule in book.rules if rule.about},
+        timezone=book.timezone,
         expected=expected_false_holds(book),
     )
     if kept_in is None or not keep:
@@ -305,76 +323,3 @@ def _clock(as_of: str | None) -> int:
 def _slug(feed: str) -> str:
     """A feed's name as part of an id that can be typed and used as a file name."""
     return re.sub(r"[^A-Za-z0-9_.]+", "_", feed)[:60] or "feed"
-
-
-class _Counted:
-    """What the blocks of a batch were, added up."""
-
-    def __init__(self) -> None:
-        self._stretch: tuple[int, int] | None = None
-        self._rows = self._series = self._placed = self._past = 0
-        self._numbers: Counter[str] = Counter()
-        self._text: Counter[str] = Counter()
-        self._odd: Counter[str] = Counter()
-
-    def add(self, grid: Grid) -> None:
-        """Count a block."""
-        tally = grid.tally
-        self._stretch = (int(grid.axis.stamps[grid.start]), int(grid.axis.stamps[-1]))
-        self._rows += int(tally.rows.sum())
-        self._series += len(grid.keys)
-        self._placed += int(np.count_nonzero(grid.delivered[:, grid.start :]))
-        self._past += grid.start
-        for name, values in grid.values.items():
-            self._numbers[name] += int(np.count_nonzero(np.isfinite(values[:, grid.start :])))
-            self._text[name] += int(tally.unreadable[name].sum())
-        self._odd["could not be placed in time (off the cadence, unreadable or far away)"] += int(tally.off_grid.sum())
-        self._odd["stand in for an earlier row with the same stamp and other values"] += int(tally.differing.sum())
-        self._odd["repeat an earlier row"] += int(tally.doubles.sum())
-        for kind, columns in (("text in place of a number", tally.unreadable), ("an infinite value", tally.infinite)):
-            for name, counts in columns.items():
-                self._odd[f"hold {kind} in {name} (taken as missing)"] += int(counts.sum())
-
-    def facts(self) -> Facts:
-        """The batch in numbers."""
-        if self._stretch is None:
-            raise BatchError("the batch", "it has no series", "rows with stamps", "Look at the file.")
-        first, last = utc_text(np.array(self._stretch)).tolist()
-        return Facts(first, last, self._rows, self._series)
-
-    def notes(self, compared: bool) -> tuple[str, ...]:
-        """What is odd about the rows, whether or not a rule asks; ``compared`` tells that there is a history."""
-        told = [f"{number} of {self._rows} rows {what}" for what, number in self._odd.items() if number]
-        told += [f"no row has a value in {name}" for name, number in self._numbers.items() if not number]
-        if compared and not self._past:
-            told.append("no row of the history lies before the batch: nothing was compared with it")
-        return tuple(told)
-
-    def must_say_something(self, seen: Sequence[Seen]) -> None:
-        """Refuse to release a batch of which nothing could be read or judged.
-
-        Rules that cannot judge leave a batch undecided and do not hold it; a batch without one number would pass.
-
-        Raises:
-            BatchError: no rule looked at any series, no row has a place in time, or no cell that a rule looks at (or
-                no cell of a column that holds text) is a number.
-        """
-        if not seen:
-            raise BatchError(
-                "the batch", f"not one rule judged any of its {self._series} series", "series that a rule is for",
-                "Do the keys still match the `only` of the rules?",
-            )  # fmt: skip
-        if not self._placed:
-            raise BatchError(
-                "the batch", f"not one of its {self._rows} rows could be placed in time", "stamps on the cadence",
-                "Is `every` right, and is the clock of the source?",
-            )  # fmt: skip
-        columns = {part.column for part in seen if part.column}
-        empty = {name for name in columns if not self._numbers[name]}
-        garbled = {name for name in empty if self._text[name]}
-        refused = sorted(garbled or (empty if empty == columns else ()))
-        if refused:
-            came = f"not one of its {self._rows} rows holds a number in {', '.join(refused)}"
-            if garbled:
-                raise BatchError("the batch", came, "a point as the decimal mark, no mark of thousands, no units")
-            raise BatchError("the batch", came, "at least one value", "Look at the source of the feed.")

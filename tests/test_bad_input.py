@@ -14,6 +14,8 @@ import pyarrow.parquet as pq
 import pytest
 from gate_runs import DAY, HEAD, RULES, Place, healthy, one_sentence, place, water, with_values
 
+CLEAN = "0 of 16 records fail, 0 are undecided"
+
 
 @pytest.fixture
 def here(tmp_path: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch) -> Place:
@@ -98,13 +100,13 @@ VERDICTS: dict[str, tuple[str | bytes, str, int, str]] = {
     "all equal": (with_values(lambda cm: 200), ".csv", 1, "failed: never flat"),
     "an infinite value": (first_cell("inf"), ".csv", 0, "1 of 48 rows hold an infinite value in cm"),
     "text in numbers": (first_cell("broken"), ".csv", 0, "1 of 48 rows hold text in place of a number in cm"),
-    "a huge value": (first_cell(1e300), ".csv", 0, "16 passed"),
-    "a tiny value": (first_cell(1e-300), ".csv", 0, "16 passed"),
+    "a huge value": (first_cell(1e300), ".csv", 0, CLEAN),
+    "a tiny value": (first_cell(1e-300), ".csv", 0, CLEAN),
     "huge values": (with_values(lambda cm: cm * 1e300), ".csv", 1, "failed: level as usual"),
     "tiny values": (with_values(lambda cm: cm * 1e-300), ".csv", 1, "failed: level as usual"),
     "smallest values": (with_values(lambda cm: 5e-324 * (cm.index % 3)), ".csv", 1, "failed: level as usual"),
-    "mixed offsets": (healthy().replace("T05:00:00Z", "T07:00:00+02:00"), ".csv", 0, "16 passed"),
-    "stamps with and without zone": (healthy().replace("T05:00:00Z", " 05:00"), ".csv", 0, "16 passed"),
+    "mixed offsets": (healthy().replace("T05:00:00Z", "T07:00:00+02:00"), ".csv", 0, CLEAN),
+    "stamps with and without zone": (healthy().replace("T05:00:00Z", " 05:00"), ".csv", 0, CLEAN),
     "rows twice": (healthy() + healthy().removeprefix(HEAD), ".csv", 1, "48 of 96 rows repeat an earlier row"),
     "two values for an hour": (
         healthy() + "2026-03-10T05:00:00Z,east,1\n", ".csv", 1, "1 of 49 rows stand in for an earlier row",
@@ -125,9 +127,9 @@ VERDICTS: dict[str, tuple[str | bytes, str, int, str]] = {
     "NUL in a key": (healthy().encode().replace(b"east", b"e\0st"), ".csv", 1, r"e\x00st"),
     "SQL in a key": (healthy().replace("east", "x'); DROP TABLE records;--"), ".csv", 1, "failed: no gap"),
     "no key": (healthy().replace("east", ""), ".csv", 1, "failed: no gap"),
-    "line ends of Windows": (healthy().replace("\n", "\r\n"), ".csv", 0, "16 passed"),
-    "line ends of old": (healthy().replace("\n", "\r"), ".csv", 0, "16 passed"),
-    "byte order mark": (b"\xef\xbb\xbf" + healthy().encode(), ".csv", 0, "16 passed"),
+    "line ends of Windows": (healthy().replace("\n", "\r\n"), ".csv", 0, CLEAN),
+    "line ends of old": (healthy().replace("\n", "\r"), ".csv", 0, CLEAN),
+    "byte order mark": (b"\xef\xbb\xbf" + healthy().encode(), ".csv", 0, CLEAN),
     "a new series": (
         healthy() + "".join(f"2026-03-10T{h:02}:00:00Z,north,{h}\n" for h in range(24)), ".csv", 0, "undecided: level",
     ),
@@ -255,4 +257,4 @@ def test_two_million_rows_of_one_series(here: Place) -> None:
     ended = here.gate("in.parquet", "--no-keep", rules=rules, history=None)
     assert ended.status == 0, ended.err
     assert "2000000 rows" in ended.err
-    assert "5 passed" in ended.err
+    assert "0 of 5 records fail, 0 are undecided" in ended.err

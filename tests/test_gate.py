@@ -69,7 +69,7 @@ def test_the_healthy_batch_is_released(here: Place) -> None:
     status, out, err = demo(here, "healthy")
     assert (status, out) == (0, "")
     assert err.startswith(
-        "RELEASED  substation_heat, 2026-01-18T23:00:00Z to 2026-01-19T22:00:00Z, 12 series, 288 rows"
+        "RELEASED  substation_heat, 2026-01-19 00:00 to 2026-01-19 23:00 Europe/Oslo, 12 series, 288 rows"
     )
     (kept,) = here.sercheck("ledger", "batches", "--format", "json").out.splitlines()
     assert json.loads(kept)["decision"] == "released"

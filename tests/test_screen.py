@@ -20,7 +20,7 @@ def rules():
 
 @pytest.mark.parametrize("batch", sorted(path.stem for path in (ROOT / "demo_data" / "batches").iterdir()))
 def test_every_demo_batch_fits_one_screen(rules, batch):
-    """Decision first, then what failed and why, what was undecided, how many passed: no more than a screen."""
+    """Decision and counts first, then what failed and why, what was undecided: no more than a screen."""
     verdict = sercheck.gate(
         rules,
         ROOT / "demo_data" / "batches" / f"{batch}.csv",
@@ -31,6 +31,7 @@ def test_every_demo_batch_fits_one_screen(rules, batch):
     assert len(lines) <= LINES
     assert max(map(len, lines)) <= COLUMNS + 20  # terminal codes of bold words take no column
     assert ("RELEASED" if batch == "healthy" else "HELD") in lines[0]
-    assert any(f"{verdict.counts['pass']} passed, {verdict.counts['fail']} failed" in line for line in lines)
+    assert lines[1].startswith(f"  {verdict.counts['fail']} of {len(verdict.records)} records fail")
+    assert "2026-01-19 00:00 to 2026-01-19 23:00 Europe/Oslo" in lines[0]
     for rule in [row["rule"] for row in verdict.table.rows_where("outcome", "fail")][:1]:
         assert any(rule in line for line in lines)

@@ -89,7 +89,7 @@ def _judgement(judgement: Judgement) -> list[str]:
     return [
         "",
         _fact("decision", f"{judgement.decision}, judged at {judgement.judged_at}"),
-        _fact("records", f"{counts['pass']} passed, {counts['fail']} failed, {counts['undecided']} undecided"),
+        _fact("records", f"{counts['pass']} pass, {counts['fail']} fail, {counts['undecided']} undecided"),
         _fact("rules", judgement.rules_fingerprint),
         _fact("baseline", judgement.baseline_id or "none"),
         _fact("sercheck", judgement.sercheck_version),

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
-from collections import Counter
+from datetime import datetime
 from typing import TYPE_CHECKING, Any
+from zoneinfo import ZoneInfo
 
 import click
 
@@ -28,7 +29,6 @@ def answer(verdict: Verdict) -> str:
     lines += _causes(verdict)
     lines += _failed(verdict)
     lines += _undecided(verdict)
-    lines.append(_passed(verdict))
     lines += [folded(f"note: {plain(note)}", rest="      ") for note in verdict.notes[:MOST_UNDECIDED]]
     if len(verdict.notes) > MOST_UNDECIDED:
         lines.append(f"  and {len(verdict.notes) - MOST_UNDECIDED} more notes")
@@ -37,10 +37,17 @@ def answer(verdict: Verdict) -> str:
 
 
 def _head(verdict: Verdict) -> str:
+    """The decision, the stretch on the feed's own clock, and how many records and rules decided nothing."""
     word = strong(verdict.decision.upper(), good=verdict.released)
-    facts = verdict.facts
-    stretch = f"{facts.first} to {facts.last}" if facts.first else "no stretch"
-    return f"{word}  {plain(verdict.feed)}, {stretch}, {facts.series} series, {facts.rows} rows"
+    facts, zone = verdict.facts, ZoneInfo(verdict.timezone)
+    first, last = (datetime.fromisoformat(stamp).astimezone(zone) for stamp in (facts.first, facts.last))
+    stretch = f"{first:%Y-%m-%d %H:%M} to {last:%Y-%m-%d %H:%M} {verdict.timezone}"
+    head = f"{word}  {plain(verdict.feed)}, {stretch}, {facts.series} series, {facts.rows} rows"
+    counts = verdict.counts
+    tally = f"{counts['fail']} of {sum(counts.values())} records fail, {counts['undecided']} are undecided"
+    mute = sum(rule["records"] == rule["all"] for rule in verdict.undecided)
+    rules = len(set(verdict.table["rule"].tolist()))
+    return f"{head}\n  {tally}" + (f": {mute} of {rules} rules could decide nothing" if mute else "")
 
 
 def _rows(verdict: Verdict, outcome: str) -> dict[str, list[dict[str, Any]]]:
@@ -94,17 +101,16 @@ def _causes(verdict: Verdict) -> list[str]:
 
 def _undecided(verdict: Verdict) -> list[str]:
     lines = []
-    by_rule = _rows(verdict, "undecided")
-    for rule, rows in list(by_rule.items())[:MOST_UNDECIDED]:
-        (reason, times), *others = Counter(str(row["reason"]) for row in rows).most_common()
-        count = f"{times} series: " if times > 1 else _who(rows[0])
-        more = f" (and {len(others)} other reasons)" if others else ""
-        lines.append(folded(f"undecided: {plain(rule, 80)}: {count}{plain(reason, 300)}{more}", "  ", "    "))
-    if len(by_rule) > MOST_UNDECIDED:
-        lines.append(f"  and {len(by_rule) - MOST_UNDECIDED} more rules undecided")
+    silent = verdict.undecided
+    for told in silent[:MOST_UNDECIDED]:
+        others = told["reasons"] - 1
+        more = f" (and {others} other reason{'s' if others > 1 else ''})" if others else ""
+        many = f" ({told['records']} of {told['all']} records)"
+        holds = "undecided, which holds" if told["holds"] else "undecided"
+        named = ", ".join(plain(str(key), 60) for key in told["series"])
+        who = f"{named}: " if named and len(told["series"]) <= MOST_SERIES else ""
+        text = f"{holds}: {plain(told['rule'], 80)}{many}: {who}{plain(str(told['reason']), 300)}{more}"
+        lines.append(folded(text, "  ", "    "))
+    if len(silent) > MOST_UNDECIDED:
+        lines.append(f"  and {len(silent) - MOST_UNDECIDED} more rules undecided")
     return lines
-
-
-def _passed(verdict: Verdict) -> str:
-    counts = verdict.counts
-    return f"  {counts['pass']} passed, {counts['fail']} failed, {counts['undecided']} undecided"
