@@ -131,6 +131,9 @@ def test_a_pass_on_few_expected_rows_is_undecided_and_a_failure_stands():
     np.testing.assert_array_equal(outcome, [UNDECIDED, FAIL])
     assert "fewer than 3 effective rows" in why[0]
     assert "60 rows" in why[0]
+    assert "`below: 0` asks for none at all and is exact" in why[0]
+    assert "`n_eff`" in why[0]
+    assert "`repeats`" in why[0]
 
 
 def test_bounds_of_none_and_all_are_exact():

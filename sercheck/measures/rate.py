@@ -24,7 +24,12 @@ widened, since τ comes from little more than the window itself, and a failure o
 would be too rare needs ten runs of it. Known weak cell: a share of about a third with strong memory (a hidden
 autoregression at .9), no history and under 1,000 rows fails 2 to 7 times too often at a risk of .001.
 
-One long burst cannot be seen by a rate (p is not much below n/(n + N)): put a rule on the longest run beside it.
+One long burst cannot be seen by a rate (p is not much below n/(n + N)): put a rule on the longest run (`repeats`)
+beside it.
+
+None at all: `below: 0` asks for no such row. It is exact, takes any number of rows and holds at the first one: a range
+check, as in the second example. A small bound such as `below: 0.01` says instead that a few are healthy, and needs
+300 independent rows to tell.
 
 Example::
 
@@ -33,6 +38,10 @@ Example::
       of_rows: missing
       window: 7D
       stays: {below: 0.05}
+    - name: no reading outside what the meter can show
+      measure: rate
+      of_rows: {outside: [0, 500]}
+      stays: {below: 0}
 """
 
 from __future__ import annotations
@@ -140,8 +149,7 @@ def _literal(panel: Panel, question: Question, marks: Floats) -> Measurement:
         )
         unsure.add(
             told.too_few & (0 < share < 1),
-            f"fewer than 3 effective rows of the rarer kind are expected at a share of {share:g}, so that a pass says "
-            f"nothing: judge a longer window ({3 / max(min(share, 1 - share), 1e-9):.0f} rows if they did not cluster)",
+            _says_nothing(share, side),
         )
     upper, lower = sides(question.stays, laws.get("upper", law), laws.get("lower", law))
     return _measurement(
@@ -149,6 +157,18 @@ def _literal(panel: Panel, question: Question, marks: Floats) -> Measurement:
         "exact binomial on effective sizes (Clopper and Pearson 1934; Korn and Graubard 1998; Geyer 1992)",
         "clusters of such rows are no longer than history and batch show",
     )  # fmt: skip
+
+
+def _says_nothing(share: float, side: Side) -> str:
+    """Why a pass is undecided, and what to do; the share seen and what its rows count for are in the record."""
+    rows = 3 / max(min(share, 1 - share), 1e-9)
+    none = "`below: 0` asks for none at all" if side == "upper" else "`above: 1` asks for nothing else"
+    return (
+        f"such rows come in so few clusters that fewer than 3 effective rows of the rarer kind are expected at a share "
+        f"of {share:g}, so that a pass says nothing (`observed` is the share seen, `n_eff` the observations that it "
+        f"counts for): judge a longer window ({rows:.0f} rows if they did not cluster); {none} and is exact; `repeats` "
+        f"bounds the longest run"
+    )
 
 
 def _like_history(panel: Panel, question: Question, marks: Floats) -> Measurement:
