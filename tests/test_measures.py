@@ -21,6 +21,7 @@ from sercheck.measure import Measurement, Question, Stays
 from sercheck.measures import get, names, text_of
 from sercheck.rulebook import load_rules
 from sercheck.rulebook.compiled import Rule
+from sercheck.rulebook.model import RuleKeys
 
 N, M = 1344, 168
 """Steps of history and window: eight weeks, and one."""
@@ -255,6 +256,9 @@ def test_the_command_prints_a_measure(name):
     assert page.exit_code == 0
     assert text_of(get(name)).splitlines()[0] in page.output
     assert all((field.alias or key) in page.output for key, field in get(name).Fields.model_fields.items())
+    common = page.output.split("Keys of every rule:\n")[1].splitlines()
+    assert [line.split()[0] for line in common] == list(RuleKeys.model_fields)
+    assert all(len(line.split()) > 3 and len(line) <= 100 for line in common)
 
 
 def test_the_command_lists_every_measure():

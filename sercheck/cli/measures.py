@@ -9,6 +9,7 @@ import click
 
 from sercheck.measures import names
 from sercheck.rulebook.describe import describe, summary
+from sercheck.rulebook.model import RuleKeys
 
 
 @click.command("measures")
@@ -40,4 +41,14 @@ def _page(told: dict[str, Any]) -> str:
         "  " + "  ".join([*(f"{cell:{width}}" for cell, width in zip(row, wide, strict=False)), row[3]]).rstrip()
         for row in rows
     )
+    text.extend(["", "Keys of every rule:", *_common()])
     return "\n".join(text)
+
+
+def _common() -> list[str]:
+    """The keys that every rule may have, one a line."""
+    wide = max(map(len, RuleKeys.model_fields))
+    return [
+        f"  {name:{wide}}  {'required: ' if field.is_required() else ''}{field.description}"
+        for name, field in RuleKeys.model_fields.items()
+    ]

@@ -28,7 +28,7 @@ Example::
     name: hourly steps keep little memory
     measure: autocorrelation
     lag: 1
-    after: difference
+    after: [difference, {without_season: day}]
     stays: {below: 0.4}
 """
 
