@@ -6,6 +6,7 @@ from processes import SEASONAL, agrees, alarms, look, make, p_values, power_at_d
 
 from sercheck.measure import Stays
 from sercheck.measures.level import Level
+from sercheck.measures.spread import Spread
 
 CELLS = ["white", "ar0.6", "ar0.9", "ma", "t3", "lognormal", "counts", "seasonal"]
 
@@ -190,3 +191,16 @@ def test_calibrated_against_a_number(kind):
     honest, naive = alarms(Level(), kind, 336, 0, series=1000, blocks=20, stays=Stays("between", 0.0, 0.0))
     print(kind, honest, naive)
     assert (honest[1:] <= np.array([0.013, 0.002])).all()
+
+
+def test_a_window_beyond_all_of_history_is_told_as_it_is():
+    """A day in another unit: the level told is the window's own and fails, the spread is undecided with its own value."""
+    values = make("ar0.6", 21, 2, 24 * 80) + 100
+    values[:, -24:] *= 1000
+    level = look(Level(), values, 24 * 79)
+    np.testing.assert_allclose(level.observed[:, 0], values[:, -24:].mean(axis=1))
+    assert (level.upper.p_value("upper") < 1e-6).all()
+    spread = look(Spread(), values, 24 * 79)
+    np.testing.assert_allclose(spread.observed[:, 0], values[:, -24:].std(axis=1))
+    assert "beyond all of history" in spread.reasons[0]
+    assert (spread.undecided == 0).all()

@@ -310,9 +310,26 @@ def combined(pick: Bools, make_first: Callable[[], Measurement], make_second: Ca
             here, first.undecided, np.where(second.undecided < 0, -1, second.undecided + len(first.reasons))
         ),
         reasons=(*first.reasons, *second.reasons),
+        scores=second.scores if first.scores is None else first.scores,
         method=f"{first.method}; where history is too short: {second.method}",
         assumes=f"{first.assumes}; where history is too short: {second.assumes}",
     )
+
+
+def mostly_beyond(panel: Panel) -> Bools:
+    """Series of which more than half of the window's values lie beyond all of history's, shape (S,).
+
+    Scores end where history ends: such a window has lost what a score could tell.
+    """
+    told = past(panel)
+    if not told.history.shape[1]:
+        return np.zeros(len(told.n), dtype=bool)
+    known = ~np.isnan(told.history)
+    low = np.min(told.history, axis=1, where=known, initial=np.inf)
+    high = np.max(told.history, axis=1, where=known, initial=-np.inf)
+    with np.errstate(invalid="ignore"):
+        beyond = ((told.window > high[:, None]) | (told.window < low[:, None])).sum(axis=1)
+    return np.asarray((2 * beyond > told.n) & (told.known > 0))
 
 
 def varied(told: Measurement, panel: Panel, risk: float) -> Measurement:

@@ -40,7 +40,7 @@ from pydantic import BaseModel, ConfigDict
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Question
 from sercheck.measures._location import location_with_history
-from sercheck.measures._past import combined, past, varied
+from sercheck.measures._past import combined, mostly_beyond, past, varied
 from sercheck.measures._witnesses import mean_alone
 from sercheck.recent import enough as recent_enough
 from sercheck.recent import recent_measurement, recent_past
@@ -70,16 +70,23 @@ class Level(Measure):
         raw = fields.of_the == "mean"
         if question.stays.kind == "like_history" and not raw:
             return combined(
-                recent_enough(panel),
-                lambda: varied(
-                    recent_measurement(panel, recent_past(panel, logs=not question.together).level()),
-                    panel,
-                    question.risk,
-                ),
-                lambda: location_with_history(panel, question, raw=False),
+                mostly_beyond(panel),
+                lambda: location_with_history(panel, question, raw=True),
+                lambda: _like_history(panel, question),
             )
         return combined(
             enough,
             lambda: location_with_history(panel, question, raw=raw),
             lambda: mean_alone(panel, question),
         )
+
+
+def _like_history(panel: Panel, question: Question) -> Measurement:
+    """By the recent past where there is enough of it, else by history at large."""
+    return combined(
+        recent_enough(panel),
+        lambda: varied(
+            recent_measurement(panel, recent_past(panel, logs=not question.together).level()), panel, question.risk
+        ),
+        lambda: location_with_history(panel, question, raw=False),
+    )

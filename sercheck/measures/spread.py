@@ -31,7 +31,7 @@ Example::
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import ClassVar, Literal
 
 import numpy as np
@@ -47,6 +47,7 @@ from sercheck.measures._past import (
     combined,
     mean,
     measured,
+    mostly_beyond,
     past,
     pivot_through,
     scored,
@@ -92,16 +93,37 @@ class Spread(Measure):
     def run(self, panel: Panel, question: Question) -> Measurement:
         if not question.stays.literal:
             return combined(
-                recent_enough(panel),
-                lambda: varied(
-                    recent_measurement(panel, recent_past(panel, logs=not question.together).spread(question.rests)),
-                    panel,
-                    question.risk,
-                ),
-                lambda: _like_history(panel, question),
+                mostly_beyond(panel),
+                lambda: _beyond_history(panel, question),
+                lambda: _within_history(panel, question),
             )
         enough = past(panel).stretches >= fewest_windows(question.risk)
         return combined(enough, lambda: _literal(panel, question), lambda: _alone(panel, question))
+
+
+def _within_history(panel: Panel, question: Question) -> Measurement:
+    """By the recent past where there is enough of it, else by history at large."""
+    return combined(
+        recent_enough(panel),
+        lambda: varied(
+            recent_measurement(panel, recent_past(panel, logs=not question.together).spread(question.rests)),
+            panel,
+            question.risk,
+        ),
+        lambda: _like_history(panel, question),
+    )
+
+
+def _beyond_history(panel: Panel, question: Question) -> Measurement:
+    """What lies beyond all of history has a level to be asked about, and a spread that nothing can be compared with."""
+    told, own = _like_history(panel, question), past(panel)
+    return replace(
+        told,
+        observed=cell(np.sqrt(variance(own.window)) * own.scale),
+        n_eff=np.full(told.n.shape, np.nan),
+        undecided=np.zeros(told.n.shape, dtype=np.int64),
+        reasons=("most values lie beyond all of history's: its spread is no measure for theirs, see their level",),
+    )
 
 
 @dataclass(frozen=True)
