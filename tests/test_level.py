@@ -194,13 +194,13 @@ def test_calibrated_against_a_number(kind):
 
 
 def test_a_window_beyond_all_of_history_is_told_as_it_is():
-    """A day in another unit: the level told is the window's own and fails, the spread is undecided with its own value."""
+    """A day in another unit fails by its own level; its spread is told and undecided."""
     values = make("ar0.6", 21, 2, 24 * 80) + 100
     values[:, -24:] *= 1000
     level = look(Level(), values, 24 * 79)
     np.testing.assert_allclose(level.observed[:, 0], values[:, -24:].mean(axis=1))
     assert (level.upper.p_value("upper") < 1e-6).all()
     spread = look(Spread(), values, 24 * 79)
-    np.testing.assert_allclose(spread.observed[:, 0], values[:, -24:].std(axis=1))
+    np.testing.assert_allclose(spread.observed[:, 0], values[:, -24:].std(axis=1, ddof=1))
     assert "beyond all of history" in spread.reasons[0]
     assert (spread.undecided == 0).all()
