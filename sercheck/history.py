@@ -26,6 +26,7 @@ from sercheck.intake.zone import DAY, EARLIEST, LATEST, NOT_A_STAMP
 from sercheck.record import utc_text
 from sercheck.rulebook.compiled import Rulebook
 from sercheck.rulebook.lengths import mean_seconds, seconds
+from sercheck.serial.arrays import Ints
 from sercheck.store.archive import Archive, Entry, Log, What
 from sercheck.store.database import store_folder
 
@@ -168,7 +169,37 @@ def find_past(
         return past
     cadence = Cadence(layout.every, layout.timezone).anchored(batch.sample())
     extent = batch.extent(cadence)
-    return replace(past, rests=memory.held_by(extent.first, LOOK * _batch_length(book, cadence, extent)))
+    rests = memory.held_by(extent.first, LOOK * _batch_length(book, cadence, extent))
+    return replace(past, rests=rests, notes=(*past.notes, *_released_before(memory.log, batch, cadence, extent)))
+
+
+def _released_before(log: Log, batch: Source, cadence: Cadence, extent: Extent) -> tuple[str, ...]:
+    """What the reader should know of stamps that another batch brought before.
+
+    Told by the log alone, which knows where a batch lies and not which series have a row there.
+    """
+    first, last = _as_kept(np.array([extent.first, extent.last]), cadence)[[0, -1]]
+    near = [entry for entry in log.history if entry.first <= last and entry.last >= first]
+    others = [entry for entry in near if entry.fingerprint != batch.fingerprint] if near else []
+    if not others:
+        return ()
+    stamps = _as_kept(batch.sample(), cadence)
+    shared = np.zeros(len(stamps), dtype=bool)
+    for entry in others:
+        shared |= (stamps >= entry.first) & (stamps <= entry.last)
+    if not shared.any():
+        return ()
+    more = f" and {len(others) - 1} more" if len(others) > 1 else ""
+    before = f"{np.count_nonzero(shared)} of its stamps were released before by batch {others[-1].batch_id}{more}"
+    return (f"{before}; where both have a row the newest release wins",)
+
+
+def _as_kept(stamps: Ints, cadence: Cadence) -> Ints:
+    """Stamps as the archive has them, each once in order: from daily feeds on those of the steps."""
+    if cadence.daily_or_longer:
+        index, on_grid = cadence.index_of(stamps)
+        stamps = cadence.stamp_of(index[on_grid])
+    return np.unique(stamps)
 
 
 def _found(

@@ -390,6 +390,48 @@ def test_corrected_rows_win_and_stand_once(feed):
     assert kept["b", 7] == corrected[corrected["key"] == "b"]["x"].iloc[7]
 
 
+def versions(verdict: Verdict) -> list[str]:
+    """The notes on stamps that another batch brought before."""
+    return [note for note in verdict.notes if "newest release wins" in note]
+
+
+def test_another_version_of_the_same_hours_is_noted(feed):
+    """With the number of stamps and the batch that brought them; the same batch again is no other version."""
+    first = feed.gate(wave("2026-03-01", 1, seed=1))
+    assert versions(first) == versions(feed.gate(wave("2026-03-01", 1, seed=1))) == []
+    assert versions(feed.gate(wave("2026-03-02", 1, seed=2))) == []
+    half = wave("2026-03-01", 1, seed=9)
+    half = half[half["t"] >= half["t"].sort_values().unique()[18]]
+    (note,) = versions(feed.gate(half))
+    assert note.startswith(f"6 of its stamps were released before by batch {first.batch_id};")
+    (note,) = versions(feed.gate(wave("2026-03-01", 1, seed=8)))
+    assert note.startswith("24 of its stamps")
+    assert " and 1 more;" in note
+
+
+def test_hours_that_only_wait_are_no_other_version(feed):
+    """A held batch brought nothing into the history yet."""
+    put(feed.archive, "waits", [("a", hour, 1.0) for hour in range(24)], "held")
+    assert versions(feed.gate(wave("2026-03-01", 1, seed=1))) == []
+    feed.archive.mark(feed.archive.log().states["waits"], "settled")
+    (note,) = versions(feed.gate(wave("2026-03-01", 1, seed=2)))
+    assert "and 1 more" in note
+
+
+def test_another_version_of_a_day_is_noted_whatever_its_hour(tmp_path):
+    """Daily rows lie at their day, also when a correction carries another hour."""
+    feed = Feed(
+        tmp_path,
+        "feed: tide\ncolumns: {time: t, series: key, values: [x]}\nevery: 1D\nbatch_every: 1D\n"
+        "rules: [{name: all come, measure: completeness, stays: {above: 0.5}}]\n",
+    )
+    frame = pd.DataFrame({"t": ["2026-03-01T13:00:00Z"] * 2, "key": ["a", "b"], "x": [1.0, 2.0]})
+    feed.gate(frame)
+    later = frame.assign(t="2026-03-01T07:00:00Z", x=[1.5, 2.5])
+    (note,) = versions(feed.gate(later))
+    assert note.startswith("1 of its stamps")
+
+
 def test_rows_of_the_window_are_no_history(feed, monkeypatch):
     """Judging a day that the archive holds already looks only at what lies before it."""
     for day in (1, 2, 3):
