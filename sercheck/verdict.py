@@ -24,7 +24,7 @@ from sercheck.intake.stream import feed_cadence, feed_grids, open_feed
 from sercheck.judge import Seen
 from sercheck.record import Records, utc_text
 from sercheck.rulebook import load_rules
-from sercheck.rulebook.budget import expected_false_holds
+from sercheck.rulebook.budget import expected_false_holds, explain
 from sercheck.rulebook.compiled import Rulebook
 
 if TYPE_CHECKING:
@@ -55,6 +55,7 @@ class Verdict:
         timezone: the feed's zone.
         expected: most false holds a healthy feed has on average, and in which period; None when the rule file does not
             say how often a batch comes.
+        arithmetic: how the alarm budget becomes the risk of each rule, a sentence each.
     """
 
     decision: str
@@ -67,6 +68,7 @@ class Verdict:
     abouts: Mapping[str, str] = field(default_factory=dict)
     timezone: str = "UTC"
     expected: tuple[float, str] | None = None
+    arithmetic: tuple[str, ...] = ()
 
     @property
     def counts(self) -> dict[str, int]:
@@ -119,6 +121,7 @@ class Verdict:
             "undecided": self.undecided,
             "likely_causes": self.likely_causes,
             "false_holds_expected": expected,
+            "alarm_budget": list(self.arithmetic),
             "notes": list(self.notes),
         }
 
@@ -231,6 +234,7 @@ def gate(
         abouts={rule.name: rule.about for rule in book.rules if rule.about},
         timezone=book.timezone,
         expected=expected_false_holds(book),
+        arithmetic=tuple(explain(book)),
     )
     if kept_in is None or not keep:
         return verdict

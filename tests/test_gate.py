@@ -115,6 +115,7 @@ def test_json_for_programs(here: Place) -> None:
     assert set(told["counts"]) == {"pass", "fail", "undecided"}
     assert told["counts"]["fail"] == len(told["failed"]) > 0
     assert told["false_holds_expected"] == {"per": "90D", "count": pytest.approx(1.0)}
+    assert "1 × 1D / 90D = 0.0111" in told["alarm_budget"][0]
     assert all(tuple(record) == COLUMNS for record in told["failed"])
 
 
