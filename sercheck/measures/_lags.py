@@ -30,6 +30,18 @@ NO_HISTORY = "no history: pass --history or learn a baseline"
 Lag = Annotated[int, Field(ge=1, strict=True)]
 
 
+def must_be_one_of_both(lag: int | None, lags: tuple[int, ...] | None) -> None:
+    """Refuse both or none of ``lag`` and ``lags``, and a lag that is there twice.
+
+    Raises:
+        ValueError: says what is wanted; several wishes stand on lines of their own.
+    """
+    wanted = ["exactly one of 'lag' and 'lags'"] if (lag is None) == (lags is None) else []
+    wanted += ["each lag once in 'lags'"] if lags is not None and len(set(lags)) < len(lags) else []
+    if wanted:
+        raise ValueError("\n".join(wanted))
+
+
 class LagFields(BaseModel):
     """Fields ``lag`` (one) or ``lags`` (several), in steps, from 1."""
 
@@ -42,10 +54,7 @@ class LagFields(BaseModel):
 
     @model_validator(mode="after")
     def _one_of_both(self) -> LagFields:
-        if (self.lag is None) == (self.lags is None):
-            raise ValueError("give exactly one of lag and lags")
-        if self.lags is not None and len(set(self.lags)) < len(self.lags):
-            raise ValueError("the same lag twice")
+        must_be_one_of_both(self.lag, self.lags)
         return self
 
     @property

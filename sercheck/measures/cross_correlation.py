@@ -43,7 +43,7 @@ from pydantic import BaseModel, ConfigDict, Field, model_validator
 from sercheck.baseline import FEWEST_CYCLES, chosen_seasons
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Question, Reasons, Reference, Side
-from sercheck.measures._lags import literal_bounds
+from sercheck.measures._lags import literal_bounds, must_be_one_of_both
 from sercheck.measures._past import NO_HISTORY, ask_history, ask_variety, past, scored, window_scores
 from sercheck.measures._witnesses import own_cycles_out
 from sercheck.reference import Pivot
@@ -75,10 +75,7 @@ class CrossCorrelationFields(BaseModel):
 
     @model_validator(mode="after")
     def _one_of_both(self) -> CrossCorrelationFields:
-        if (self.lag is None) == (self.lags is None):
-            raise ValueError("give exactly one of lag and lags")
-        if self.lags is not None and len(set(self.lags)) < len(self.lags):
-            raise ValueError("the same lag twice")
+        must_be_one_of_both(self.lag, self.lags)
         return self
 
     @property

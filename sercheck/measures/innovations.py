@@ -104,7 +104,7 @@ class InnovationsFields(BaseModel):
     @model_validator(mode="after")
     def _some_left(self) -> InnovationsFields:
         if self.fitted >= self.lags:
-            raise ValueError("lags must be more than the fitted parameters")
+            raise ValueError("'fitted' below 'lags' (10 where it is not written)")
         return self
 
 

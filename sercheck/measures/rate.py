@@ -70,7 +70,7 @@ class Outside(BaseModel):
     @model_validator(mode="after")
     def _ordered(self) -> Outside:
         if self.outside[0] > self.outside[1]:
-            raise ValueError(f"the first number of outside must not be above the second, got {list(self.outside)}")
+            raise ValueError("the smaller number first in 'outside'")
         return self
 
 

@@ -10,7 +10,7 @@ from functools import cache
 from pathlib import Path as FilePath
 from typing import Any, cast
 
-from pydantic import BaseModel, ValidationError, create_model
+from pydantic import BaseModel, Field, ValidationError, create_model
 
 from sercheck.errors import RuleFileError
 from sercheck.measure import Measure
@@ -31,7 +31,9 @@ LONGEST_CALENDAR = 1_000_000
 def _lenient(model: type[BaseModel]) -> type[BaseModel]:
     """The same model with nothing required: what is left to check when some keys are wrong."""
     optional: dict[str, Any] = {
-        name: (field.rebuild_annotation(), None) for name, field in model.model_fields.items() if field.is_required()
+        name: (field.rebuild_annotation(), Field(default=None, alias=field.alias))
+        for name, field in model.model_fields.items()
+        if field.is_required()
     }
     return create_model(f"Lenient{model.__name__}", __base__=model, **optional)
 
@@ -311,8 +313,21 @@ class Compiler:
         try:
             return measure.Fields.model_validate_json(json.dumps(given), strict=True)
         except ValidationError as error:
-            self.mistakes.of_validation(error, path, measure.Fields, known, more=RuleKeys.model_fields)
+            bad = self.mistakes.of_validation(error, path, measure.Fields, known, more=RuleKeys.model_fields)
+            if bad:
+                self._keys_together({key: value for key, value in given.items() if key not in bad}, bad, path, measure)
             return None
+
+    def _keys_together(self, given: dict[str, Any], bad: set[str], path: Path, measure: type[Measure]) -> None:
+        """What the right keys of a measure say against each other, which is not looked at while others are wrong."""
+        try:
+            _lenient(measure.Fields).model_validate_json(json.dumps(given), strict=True)
+        except ValidationError as error:
+            for detail in error.errors(include_url=False):
+                if not detail["loc"]:
+                    self.mistakes.of_keys(detail, path, keys_of(measure.Fields), but=bad)
+        except (TypeError, AttributeError):
+            return  # a check that reads a key which is missing or wrong
 
     def _check_references(self, given: dict[str, Any], path: Path) -> None:
         """A season or a value column that a measure's field names must be there."""

@@ -127,7 +127,7 @@ class Mistakes:
         """
         bad: set[str] = set()
         branches: dict[Path, list[tuple[ErrorDetails, Path]]] = {}
-        for detail in error.errors(include_url=False):
+        for detail in self._of_the_nearest(base, error.errors(include_url=False)):
             path, whole = self._located(base, detail["loc"])
             if detail["loc"]:
                 bad.add(str(detail["loc"][0]))
@@ -139,6 +139,8 @@ class Mistakes:
             elif detail["type"] == "extra_forbidden" and whole:
                 own = keys_of(_nested(model, detail["loc"][:-1]))
                 self.unknown_key(path, own, {f"a key of '{path[-2]}'": own})
+            elif detail["type"] == "value_error" and isinstance(self.value(path), dict):
+                self.of_keys(detail, path, keys_of(model))
             elif whole:
                 self._one(detail, path)
             else:
@@ -146,6 +148,46 @@ class Mistakes:
         for path, details in branches.items():
             self._several([detail for detail, _ in details], path)
         return bad
+
+    def of_keys(self, detail: ErrorDetails, path: Path, keys: Iterable[str] = (), but: Iterable[str] = ()) -> None:
+        """Note what a mapping's keys say against each other; each line of the message is one wish, its keys quoted.
+
+        Args:
+            detail: what the model's own check said.
+            path: the mapping.
+            keys: the keys it could have.
+            but: keys that are wrong by themselves: what depends on them is not told.
+        """
+        value = self.value(path)
+        for wanted in _wanted(detail)[0].splitlines():
+            named = [word for word in re.findall(r"'([^']*)'", wanted) if word in value or word in keys]
+            there = [word for word in named if word in value]
+            if set(named) & set(but):
+                continue
+            if len(there) == 1:
+                self.add((*path, there[0]), shown(value[there[0]]), wanted)
+            elif named:
+                came = [f"{word}: {shown(value[word])}" for word in there] or [f"no '{word}'" for word in named]
+                self.add(path, " and ".join(came), wanted)
+            else:
+                self.add(path, shown(value), wanted)
+
+    def _of_the_nearest(self, base: Path, details: list[ErrorDetails]) -> list[ErrorDetails]:
+        """The details without those of alternatives that a mapping has nothing of, where it has the keys of another."""
+        ways = [self._way(base, detail) for detail in details]
+        far = {way for way, detail in zip(ways, details, strict=True) if way and detail["type"] != "value_error"}
+        near = {way[0] for way in ways if way and way not in far}
+        return [detail for way, detail in zip(ways, details, strict=True) if not (way in far and way[0] in near)]
+
+    def _way(self, base: Path, detail: ErrorDetails) -> tuple[Path, str] | None:
+        """The place and the name of the alternative that a detail is of, where a mapping stands there."""
+        path = base
+        for place, step in enumerate(detail["loc"]):
+            if (*path, step) not in self.document.values:
+                lacks = detail["type"] == "missing" and place == len(detail["loc"]) - 1
+                return None if lacks or not isinstance(self.value(path), dict) else (path, str(step))
+            path = (*path, step)
+        return None
 
     def _located(self, base: Path, loc: tuple[int | str, ...]) -> tuple[Path, bool]:
         """The path of an error in the document, and whether all of its location is there."""
