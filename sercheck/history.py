@@ -180,10 +180,10 @@ def _released_before(log: Log, batch: Source, cadence: Cadence, extent: Extent) 
     """
     first, last = _as_kept(np.array([extent.first, extent.last]), cadence)[[0, -1]]
     near = [entry for entry in log.history if entry.first <= last and entry.last >= first]
-    others = [entry for entry in near if entry.fingerprint != batch.fingerprint] if near else []
-    if not others:
+    if not near:
         return ()
-    stamps = _as_kept(batch.sample(), cadence)
+    stamps = np.unique(np.concatenate([_as_kept(rows.stamps, cadence) for rows in batch.blocks()]))
+    others = [entry for entry in near if entry.fingerprint != batch.fingerprint]  # known of a stream once it was read
     shared = np.zeros(len(stamps), dtype=bool)
     for entry in others:
         shared |= (stamps >= entry.first) & (stamps <= entry.last)

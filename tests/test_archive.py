@@ -409,6 +409,20 @@ def test_another_version_of_the_same_hours_is_noted(feed):
     assert " and 1 more;" in note
 
 
+def test_another_version_is_counted_whole_where_it_is_streamed(feed, tmp_path, monkeypatch):
+    """Of a sorted file read block by block every stamp counts, not those of a sample."""
+    monkeypatch.setattr("sercheck.intake.stream.open_feed.__defaults__", (40,))
+    first = feed.gate(wave("2026-03-01", 2, seed=1))
+    frame = wave("2026-03-02", 2, seed=9).sort_values(["key", "t"])
+    frame["t"] = pd.to_datetime(frame["t"])
+    frame.to_parquet(tmp_path / "later.parquet", row_group_size=16)
+    verdict = gate(feed.book, tmp_path / "later.parquet", store=feed.store, as_of="2026-12-01")
+    (note,) = versions(verdict)
+    assert note.startswith(f"24 of its stamps were released before by batch {first.batch_id};")
+    again = gate(feed.book, tmp_path / "later.parquet", store=feed.store, as_of="2026-12-01")
+    assert versions(again) == [note]
+
+
 def test_hours_that_only_wait_are_no_other_version(feed):
     """A held batch brought nothing into the history yet."""
     put(feed.archive, "waits", [("a", hour, 1.0) for hour in range(24)], "held")
