@@ -8,8 +8,10 @@ from pathlib import Path
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from pydantic import BaseModel, ConfigDict, model_validator
 
 from sercheck.errors import RuleFileError
+from sercheck.measures import get
 from sercheck.rulebook import load_rules
 
 BAD = sorted((Path(__file__).parent / "bad_rules").glob("*.yaml"))
@@ -116,3 +118,26 @@ def test_a_damaged_file_never_fails_otherwise(data):
         load_rules(damaged)
     except RuleFileError as error:
         assert all(re.match(r"rules:\d+:\d+$", mistake.place) for mistake in error.mistakes)  # noqa: PT017  both ends are right
+
+
+class Needs(BaseModel):
+    """Fields of a measure whose own check reads a key that a rule may have forgotten."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+    low: float
+    high: float
+
+    @model_validator(mode="after")
+    def _ordered(self) -> Needs:
+        if self.low > self.high:
+            raise ValueError("'low' below 'high'")
+        return self
+
+
+def test_a_check_that_reads_a_forgotten_key_is_left_out(monkeypatch):
+    """Only the key that is missing is told; with both there what they say against each other is."""
+    monkeypatch.setattr(type(get("level")), "Fields", Needs)
+    (lacks,) = mistakes(SMALL + "    low: 3\n")
+    assert "no 'high'" in lacks
+    (odd,) = mistakes(SMALL + "    low: 3\n    high: 2\n")
+    assert "low: 3 and high: 2; wanted 'low' below 'high'" in odd
