@@ -329,7 +329,8 @@ def mostly_beyond(panel: Panel) -> Bools:
     high = np.max(told.history, axis=1, where=known, initial=-np.inf)
     with np.errstate(invalid="ignore"):
         beyond = ((told.window > high[:, None]) | (told.window < low[:, None])).sum(axis=1)
-    return np.asarray((2 * beyond > told.n) & (told.known > 0))
+        varies = variance(told.history) > 0  # so far beyond that history vanishes beside it: scores must do
+    return np.asarray((2 * beyond > told.n) & (told.known > 0) & varies)
 
 
 def varied(told: Measurement, panel: Panel, risk: float) -> Measurement:
