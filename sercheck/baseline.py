@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -22,11 +23,13 @@ class Residual:
         values: shape (S, T); history's part is left-one-cycle-out, so that it scatters like new rows do.
         profile: what was taken out, shape (S, T); 0 where nothing was.
         seasons: names of the seasons taken out.
+        means: phase means of each of them, shape (S, length); NaN at a place that the axis does not have.
     """
 
     values: Floats
     profile: Floats
     seasons: tuple[str, ...]
+    means: Mapping[str, Floats] = field(default_factory=dict)
 
 
 def chosen_seasons(axis: Axis, steps: int) -> tuple[str, ...]:
@@ -56,10 +59,14 @@ def _residual(panel: Panel) -> Residual:
     names = chosen_seasons(panel.axis, panel.start)
     values = panel.values
     profile = np.zeros_like(values)
+    means = {}
     for name in names:
         values, own = leave_one_cycle_out(values, panel, name)
         profile += own
-    return Residual(values, profile, names)
+        phases, first = np.unique(panel.phase(name), return_index=True)
+        means[name] = np.full((len(values), panel.axis.lengths[name]), np.nan)
+        means[name][:, phases] = own[:, first]
+    return Residual(values, profile, names, means)
 
 
 def leave_one_cycle_out(values: Floats, panel: Panel, season: str) -> tuple[Floats, Floats]:

@@ -1,6 +1,7 @@
-"""What the history of each series is like: moments, seasons, model, repeats, gaps, and what spoils it, by blocks.
+"""What the history of each series is like, by blocks: moments, profile, model, repeats, gaps, and what spoils it.
 
-Depends on ``serial``, ``grid``, ``baseline``, ``transforms`` and the compiled rules.
+How much a window's mean and autocorrelations scatter by it is among the facts. Depends on ``serial``, ``grid``,
+``baseline``, ``transforms``, ``sampling`` and the compiled rules.
 """
 
 from __future__ import annotations
@@ -12,7 +13,8 @@ import numpy as np
 
 from sercheck.baseline import residual
 from sercheck.grid import Axis, Grid, Panel
-from sercheck.rulebook.compiled import Rule
+from sercheck.rulebook.compiled import Length, Rule, Transform
+from sercheck.sampling import after, autocorrelation_laws, lags_of, mean_laws
 from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.serial.autocovariances import autocorrelation
 from sercheck.serial.autoregression import burg
@@ -45,6 +47,7 @@ class Facts:
         column: the value column.
         seasons: names of the seasons whose profile was taken out.
         numbers: name of the fact to an array of shape (S,); NaN where there is none.
+        profiles: name of each of the seasons to its phase means, shape (S, length); NaN where there is none.
         places: name of a finding to the step it begins at, shape (S,); -1 where there is none.
         sizes: name of a finding to its size, shape (S,).
     """
@@ -53,15 +56,22 @@ class Facts:
     column: str
     seasons: tuple[str, ...]
     numbers: Mapping[str, Floats]
+    profiles: Mapping[str, Floats]
     places: Mapping[str, Ints]
     sizes: Mapping[str, Floats]
 
 
-def facts_of(grid: Grid, column: str, rules: Sequence[Rule]) -> Facts:
+def facts_of(grid: Grid, column: str, rules: Sequence[Rule], steps: Mapping[Length, int]) -> Facts:
     """The facts of one column of a block of history.
 
     A broken day (see ``robust_phase_means``) teaches nothing, and a change of level is taken out before days are called
     broken, so that neither bends moments, model and autocorrelations. Closed days teach nothing and miss nothing.
+
+    Args:
+        grid: history of a block of series.
+        column: the value column.
+        rules: say which lags, transforms and windows matter.
+        steps: steps of each window that rules name; of one that is not there no sampling law is told.
     """
     axis = grid.axis
     values = np.where(axis.closed, np.nan, grid.values[column])
@@ -76,6 +86,9 @@ def facts_of(grid: Grid, column: str, rules: Sequence[Rule]) -> Facts:
     rest = np.where(kept, told.values - level, np.nan)
     moments = _moments(clean)
     model = burg(rest)
+    with np.errstate(over="ignore"):
+        laws = mean_laws(rest, _window_lengths(column, rules, steps))
+        laws |= autocorrelation_laws(panel.changed(clean), rules, steps)
     gap, gap_at, gaps = _runs(~grid.delivered & _due(grid))
     stuck, stuck_at, _ = _runs(equal_to_earlier(values) == 1)
     broken, broken_at, _ = _runs(~kept & ~np.isnan(values))
@@ -88,6 +101,7 @@ def facts_of(grid: Grid, column: str, rules: Sequence[Rule]) -> Facts:
         "ar_order": model.order.astype(np.float64),
         "ar_variance": model.variance,
         **_autocorrelations(panel.changed(clean), rules),
+        **laws,
         "repeats_share": equal_share(values),
         "repeats_longest": stuck + 1.0,
         "gaps": gaps,
@@ -107,7 +121,7 @@ def facts_of(grid: Grid, column: str, rules: Sequence[Rule]) -> Facts:
         "stuck": np.where(long_stuck, stuck_at - 1, -1),
     }
     sizes = {"gap": gap, "level change": change, "broken stretch": broken, "stuck": stuck + 1}
-    return Facts(grid.keys, column, told.seasons, numbers, places, sizes)
+    return Facts(grid.keys, column, told.seasons, numbers, told.means, places, sizes)
 
 
 def _per_day(axis: Axis) -> int:
@@ -202,29 +216,21 @@ def _share(rest: Floats, deviation: Floats) -> Floats:
 
 def _autocorrelations(panel: Panel, rules: Sequence[Rule]) -> dict[str, Floats]:
     """Autocorrelations at the lags that rules ask for, after their transforms."""
-    asked: dict[tuple[object, ...], set[int]] = {}
-    chains = {}
+    asked: dict[tuple[Transform, ...], set[int]] = {}
     for rule in rules:
-        lags = _lags(rule, panel.axis)
+        lags = lags_of(rule, panel.axis)
         if lags and panel.column in rule.columns:
-            chains[tuple(map(str, rule.after))] = rule.after
-            asked.setdefault(tuple(map(str, rule.after)), set()).update(lags)
+            asked.setdefault(rule.after, set()).update(lags)
     found: dict[str, Floats] = {}
-    for name, lags in asked.items():
-        changed = apply(chains[name], panel)  # type: ignore[index]
-        after = f" after {', '.join(map(str, name))}" if name else ""
+    for chain, lags in asked.items():
+        changed = apply(chain, panel)
         able = sorted(lag for lag in lags if lag < changed.values.shape[1])
         if able and not changed.unable:
             r = autocorrelation(changed.values, np.array(able))
-            found |= {f"autocorrelation lag {lag}{after}": r[:, place] for place, lag in enumerate(able)}
+            found |= {f"autocorrelation lag {lag}{after(chain)}": r[:, place] for place, lag in enumerate(able)}
     return found
 
 
-def _lags(rule: Rule, axis: Axis) -> set[int]:
-    fields = rule.fields
-    lags = {*(getattr(fields, "lags", None) or ())} if not isinstance(getattr(fields, "lags", None), int) else set()
-    lag, season = getattr(fields, "lag", None), getattr(fields, "season", None)
-    lags |= {lag} if isinstance(lag, int) else set()
-    if season is not None:
-        lags |= {int(axis.lengths[season]) if isinstance(season, str) else int(season)}
-    return {int(each) for each in lags if int(each) > 0}
+def _window_lengths(column: str, rules: Sequence[Rule], steps: Mapping[Length, int]) -> list[int]:
+    """Steps of the windows in which rules look at the column."""
+    return sorted({steps[rule.window] for rule in rules if column in rule.columns and rule.window in steps})

@@ -21,7 +21,7 @@ from sercheck.intake.layout import Layout
 from sercheck.intake.stream import Source, feed_grids
 from sercheck.judge import UNDECIDED, Judged
 from sercheck.record import utc_text
-from sercheck.rulebook.compiled import Rulebook
+from sercheck.rulebook.compiled import Length, Rulebook
 from sercheck.store.rows import BaselineRow
 
 if TYPE_CHECKING:
@@ -83,7 +83,12 @@ class Lessons:
 
     Attributes:
         baseline: as the ledger keeps it.
-        facts: a table with a row for each series and column.
+        facts: a table with a row for each series and column. Beside the numbers of ``facts_of`` it holds as a list
+            the phase means of each season taken out ("profile day"); for each window that rules name the variance of
+            the mean, its degrees of freedom and n_eff ("mean variance over 24 steps", "mean df ...", "mean n_eff ...");
+            and for each lag that they name the standard error and the degrees of freedom of the autocorrelation in
+            such a window ("autocorrelation error lag 1 over 24 steps", "autocorrelation df ..."; infinite: the normal
+            law). Null where history is too short.
         seasons: names of the seasons whose profile was taken out.
         findings: what is odd, by kind, series and column.
     """
@@ -101,8 +106,9 @@ def learn(source: Source, book: Rulebook, layout: Layout, cadence: Cadence, lear
     axis: Axis | None = None
     for grid in feed_grids(source, None, layout):
         axis = grid.axis
+        steps = _window_steps(book, cadence, grid)
         for column in book.values:
-            facts = facts_of(grid, column, book.rules)
+            facts = facts_of(grid, column, book.rules, steps)
             parts.append(facts)
             findings += _findings(facts, axis)
     table = _table(parts)
@@ -145,6 +151,11 @@ def _table(parts: list[Facts]) -> pa.Table:
     for name in names:
         whole = np.concatenate([facts.numbers.get(name, np.full(len(facts.keys), np.nan)) for facts in parts])
         columns[name] = pa.array(whole.tolist(), pa.float64(), from_pandas=True)
+    for season in dict.fromkeys(name for facts in parts for name in facts.profiles):
+        means = np.concatenate([facts.profiles[season] for facts in parts])
+        edges = np.arange(len(means) + 1) * means.shape[1]
+        values = pa.array(means.ravel(), pa.float64(), from_pandas=True)
+        columns[f"profile {season}"] = pa.ListArray.from_arrays(pa.array(edges, pa.int32()), values)
     return pa.table(columns)
 
 
@@ -197,6 +208,16 @@ def _batch_steps(book: Rulebook, cadence: Cadence, grid: Grid | None) -> int:
         begin, end = cadence.period(book.batch_every, last, floor=True)
         return max(1, end - begin)
     return 1 if cadence.daily_or_longer or DAY % cadence.step else cadence.steps("1D")
+
+
+def _window_steps(book: Rulebook, cadence: Cadence, grid: Grid) -> dict[Length, int]:
+    """Steps of each window that the rules name; the batch of an irregular feed has no length."""
+    named = {rule.window for rule in book.rules}
+    if cadence.irregular:
+        return {window: window for window in named if isinstance(window, int)}
+    return {
+        window: _batch_steps(book, cadence, grid) if window == "batch" else cadence.steps(window) for window in named
+    }
 
 
 class _Trial:

@@ -72,9 +72,12 @@ def _log(_: Transform, panel: Panel) -> Panel:
 
 
 def _by_stretches(change: Callable[[Floats], Floats], panel: Panel) -> Panel:
-    """Change the window, and history in stretches of the window's length counted back from it."""
+    """Change the window, and history in stretches of the window's length counted back from it.
+
+    Without a window all of history is one stretch.
+    """
     values = np.empty_like(panel.values)
-    length = panel.values.shape[1] - panel.start
+    length = panel.values.shape[1] - panel.start or panel.values.shape[1]
     edge = panel.values.shape[1]
     while edge > 0:
         first = max(edge - length, 0)

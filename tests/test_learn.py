@@ -13,13 +13,19 @@ import pyarrow.parquet as pq
 import pytest
 from feed_memory import FIRST, HOUR, RULES, wave
 from gate_runs import process
+from scipy.stats import chi2
 
+from sercheck.baseline import residual
 from sercheck.errors import BatchError
+from sercheck.grid import Axis, Panel
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.rows import Rows
 from sercheck.intake.stream import MemorySource, open_feed
 from sercheck.learn import Lessons, lacking, learn
 from sercheck.rulebook import load_rules
+from sercheck.serial.lag_law import history_law
+from sercheck.serial.long_run import contrast_variance, cosine_spectrum, mean_contrast
+from sercheck.serial.season import phase_means
 from sercheck.store.archive import Archive
 from sercheck.store.ledger import open_ledger
 from sercheck.taught import teach
@@ -69,6 +75,98 @@ def test_the_facts_of_a_healthy_history(rules):
     step = np.diff(x) - np.diff(x).mean()
     assert row["autocorrelation lag 1 after difference"] == pytest.approx((step[1:] @ step[:-1]) / (step @ step))
     assert told.findings == ()
+
+
+LAW = "over 24 steps"
+STEP_LAW = f"lag 1 {LAW} after difference"
+
+
+def history_of(x: np.ndarray) -> Panel:
+    """Hours of one series that begin at midnight, all of them history."""
+    T = len(x)
+    step = np.arange(T)
+    axis = Axis(step * HOUR, step, {"day": 24}, {"day": step % 24}, np.zeros(T, dtype=bool), np.ones(T, dtype=bool))
+    return Panel(x[None], T, axis, np.ones((1, T), dtype=bool), "x")
+
+
+def test_the_baseline_holds_the_seasonal_profile(rules):
+    """A list of the mean of each hour of the day; without four days there is none."""
+    frame = wave("2025-11-01", 112, seed=1)
+    x = frame[frame["key"] == "b"]["x"].to_numpy()
+    means, _ = phase_means(x[None], np.arange(len(x)) % 24, 24)
+    assert facts(lessons(rules, frame), "b")["profile day"] == pytest.approx(means[0], rel=1e-12)
+    short = lessons(rules, wave("2025-11-01", 3, seed=1))
+    assert short.seasons == ()
+    assert "profile day" not in short.facts.column_names
+
+
+def test_the_baseline_holds_the_variance_of_a_window_s_mean(rules):
+    """V, its degrees of freedom and n_eff are those of the cosine powers at the length of each rule's window."""
+    frame = wave("2025-11-01", 112, seed=1)
+    told = facts(lessons(rules, frame))
+    rest = residual(history_of(frame[frame["key"] == "a"]["x"].to_numpy())).values
+    spectrum = cosine_spectrum(rest)
+    for n in (24, 120):
+        variance, df = contrast_variance(spectrum, mean_contrast(np.ones((1, n), dtype=bool)))
+        assert told[f"mean variance over {n} steps"] == pytest.approx(variance[0], rel=1e-9)
+        assert told[f"mean df over {n} steps"] == pytest.approx(df[0], rel=1e-9)
+        assert told[f"mean n_eff over {n} steps"] == pytest.approx(rest.var() / variance[0], rel=1e-9)
+        # of noise with the autocorrelation .7^k, within what so many degrees of freedom allow at a risk of .001
+        apart = np.abs(np.subtract.outer(np.arange(n), np.arange(n)))
+        ratio = told[f"mean variance over {n} steps"] / (16 / 0.51 * (0.7**apart).mean())
+        assert chi2.ppf(0.0005, df[0]) < ratio * df[0] < chi2.ppf(0.9995, df[0])
+
+
+def test_the_baseline_holds_the_law_of_the_autocorrelations(tmp_path):
+    """Standard error and degrees of freedom at the rules' lags: of a batch of a day by its windows, of a long window by
+    the model, whose law is normal.
+    """
+    path = tmp_path / "rules.yaml"
+    path.write_text(
+        RULES + "  - {name: days, measure: autocorrelation, lags: [1, 3], window: 10D, stays: {like: history}}\n"
+    )
+    frame = wave("2025-11-01", 112, seed=1)
+    told = facts(lessons(path, frame))
+    panel = history_of(frame[frame["key"] == "a"]["x"].to_numpy())
+    steps = panel.changed(np.diff(panel.values), start=panel.start - 1, axis=panel.axis.cut(1, panel.start))
+    rng = np.random.default_rng(1)
+    day = history_law(residual(steps).values, rng.normal(size=(1, 24)), np.array([1]))
+    assert day.by_windows.all()
+    assert told[f"autocorrelation error {STEP_LAW}"] == pytest.approx(day.law.error[0, 0], rel=1e-9)
+    assert told[f"autocorrelation df {STEP_LAW}"] == day.law.df[0, 0] == (112 * 24 - 1) // 24 - 1
+    long = history_law(residual(panel).values, rng.normal(size=(1, 240)), np.array([1, 3]))
+    assert not long.by_windows.any()
+    for place, lag in enumerate((1, 3)):
+        error = told[f"autocorrelation error lag {lag} over 240 steps"]
+        assert error == pytest.approx(long.law.error[0, place], rel=1e-9)
+        assert told[f"autocorrelation df lag {lag} over 240 steps"] == np.inf
+
+
+def test_too_short_a_history_has_no_laws(rules):
+    """Seven days hold fewer than eight windows of a day; eight hold enough for the mean, nine for the steps too."""
+
+    def empty(days: int) -> tuple[bool, bool]:
+        row = facts(lessons(rules, wave("2025-11-01", days, seed=1)))
+        mean = {row[f"mean {what} {LAW}"] is None for what in ("variance", "df", "n_eff")}
+        steps = {row[f"autocorrelation {what} {STEP_LAW}"] is None for what in ("error", "df")}
+        assert len(mean) == len(steps) == 1
+        return mean.pop(), steps.pop()
+
+    assert empty(7) == (True, True)
+    assert empty(8) == (False, True)
+    assert empty(9) == (False, False)
+
+
+def test_laws_after_what_is_fitted_to_stretches(tmp_path):
+    """Residuals of a line in each day have a law of their own; a lag beyond a quarter of the window has none."""
+    path = tmp_path / "rules.yaml"
+    path.write_text(
+        RULES + "  - {name: bent, measure: autocorrelation, lags: [1, 7], after: detrended, stays: {like: history}}\n"
+    )
+    told = facts(lessons(path, wave("2025-11-01", 112, seed=1)))
+    assert told[f"autocorrelation df lag 1 {LAW} after detrended"] == 111
+    assert 0.1 < told[f"autocorrelation error lag 1 {LAW} after detrended"] < 0.3
+    assert told[f"autocorrelation error lag 7 {LAW} after detrended"] is None
 
 
 def test_the_ledger_keeps_the_baseline(rules, tmp_path):
@@ -225,6 +323,10 @@ def test_the_command_tells_people_and_programs(rules, tmp_path, monkeypatch):
     assert told["findings"][0]["what"] == "gap"
     assert told["there_before"] == 40 * 48 - 40
     assert len(told["facts"]) == 2
+    for row in told["facts"]:
+        assert len(row["profile day"]) == 24
+        assert row[f"mean variance {LAW}"] > 0
+        assert row[f"autocorrelation error {STEP_LAW}"] > 0
     assert json.loads(process("gate", "rules.yaml", "past.csv", "--format", "json", "--no-keep").stdout)["batch_id"]
 
 
@@ -272,5 +374,3 @@ def test_a_thousand_series_of_sixteen_weeks_are_learned_within_a_minute(rules):
     begun = time.process_time()
     learned_from(rules, values)
     assert time.process_time() - begun < 60
-
-

@@ -19,6 +19,8 @@ def command(rules: str, history: tuple[str, ...], store: str, no_keep: bool, for
     """Learn the baseline of the rule file RULES from HISTORY (files or globs) and fill the archive with its rows.
 
     Tells what is odd in the history and which rules will be undecided for want of more of it.
+    With --format json the facts of each series too: moments, seasonal profile, autoregression, the variance and n_eff
+    of a window's mean, autocorrelations with their standard error and degrees of freedom (null: the normal law).
     """
     from sercheck.cli.lessons_text import facts, page
     from sercheck.taught import teach

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
+from math import isinf
 from typing import TYPE_CHECKING, Any
 
 import click
@@ -64,7 +65,10 @@ def _sentence(each: Finding) -> str:
 
 
 def facts(taught: Taught) -> dict[str, Any]:
-    """The same for a program."""
+    """The same for a program, with the facts of every series and column as the baseline keeps them.
+
+    A fact that is infinite (the degrees of freedom of a normal law) is null here: JSON has no such number.
+    """
     row = taught.lessons.baseline
     return {
         "feed": row.feed,
@@ -80,5 +84,9 @@ def facts(taught: Taught) -> dict[str, Any]:
         "findings": [vars(each) for each in taught.lessons.findings],
         "undecided": [vars(lack) for lack in taught.lacks],
         "notes": list(taught.notes),
-        "facts": taught.lessons.facts.to_pylist(),
+        "facts": [_finite(row) for row in taught.lessons.facts.to_pylist()],
     }
+
+
+def _finite(row: dict[str, Any]) -> dict[str, Any]:
+    return {name: None if isinstance(fact, float) and isinf(fact) else fact for name, fact in row.items()}

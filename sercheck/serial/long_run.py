@@ -50,7 +50,9 @@ class CosineSpectrum:
             weights: not negative, shape (S, T - 1) or (1, T - 1).
         """
         total = weights.sum(axis=1)
-        power: Floats = self.power @ weights[0] if len(weights) == 1 else np.einsum("ij,ij->i", self.power, weights)
+        # not by @, whose last digit depends on how many series are in the block
+        shared = len(weights) == 1
+        power = np.einsum("ij,j->i", self.power, weights[0]) if shared else np.einsum("ij,ij->i", self.power, weights)
         with np.errstate(divide="ignore", invalid="ignore"):
             power = power / total
             seen = self.n / self.steps
