@@ -4,8 +4,9 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from cells import PROCESSES
 from clusters import CLUSTERS, markov
-from processes import LIKE, agrees, look, p_values, panel
+from processes import LIKE, SEASONAL, agrees, look, make, p_values, panel
 from pydantic import ValidationError
 from scipy import stats
 
@@ -102,6 +103,44 @@ def test_a_real_rise_is_found():
     marks = np.hstack([rng.random((300, 2016)) < 0.05, rng.random((300, 168)) < 0.25]).astype(float)
     for stays in (LIKE, Stays("below", high=0.05)):
         assert np.mean(p_values(look(Rate(), zeros(marks), 2016, stays, of_rows="zero")) <= 0.01) >= 0.98
+
+
+def above_the_tenth(name, n, stays, lengths, shift=0.0):
+    """P-values of 2,000 series of a process whose window is shifted by so many standard deviations."""
+    process = PROCESSES[name]
+    x = make(process.kind, [6, n], 2000, 21 * n)
+    x[:, 20 * n :] += shift * process.deviation
+    return p_values(look(Rate(), x, 20 * n, stays, lengths=lengths, of_rows={"above": process.tenth}))
+
+
+@pytest.mark.parametrize("n", [168, 336])
+@pytest.mark.parametrize("stays", [LIKE, Stays("below", high=0.1), Stays("above", low=0.1)])
+def test_a_cycle_that_evolves_keeps_the_risk_when_declared(stays, n):
+    """Marks that follow yesterday's are clustered too: within 1.6 times the risk, which the steps alone break."""
+    p = above_the_tenth("seasonal AR, declared", n, stays, SEASONAL)
+    undeclared = above_the_tenth("seasonal AR, declared", n, stays, {})
+    for risk in (0.05, 0.01):
+        most = stats.binom.ppf(0.999, len(p), 1.6 * risk) / len(p)
+        assert np.mean(p <= risk) <= most
+        assert np.mean(undeclared <= risk) > most
+
+
+@pytest.mark.parametrize("name", ["white", "AR .6"])
+def test_a_declared_season_costs_little_power(name):
+    """Where the cycle has no memory, a rise is found nearly as often as without a season."""
+    for stays in (LIKE, Stays("below", high=0.1)):
+        found, bare = (above_the_tenth(name, 168, stays, lengths, 0.4) <= 0.01 for lengths in (SEASONAL, {}))
+        assert bare.mean() > 0.2
+        assert found.mean() > bare.mean() - 0.08
+
+
+@pytest.mark.parametrize("past", [960, 0])
+@pytest.mark.parametrize("stays", [LIKE, Stays("between", 0.05, 0.2)])
+def test_limit_and_p_value_agree_with_a_season(stays, past):
+    """With a season declared the limit and the p-value tell the same too, with rows missing."""
+    x = make("seasonal_ar", 8, 200, past + 240)
+    x[np.random.default_rng(9).random(x.shape) < 0.1] = NAN
+    agrees(look(Rate(), x, past, stays, lengths=SEASONAL, of_rows={"above": 1.7}))
 
 
 def test_one_burst_is_one_event():

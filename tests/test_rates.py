@@ -8,17 +8,16 @@ from clusters import CLUSTERS, markov
 from naive.rates import cluster_size as slow_cluster_size
 from scipy import stats
 
+from sercheck.serial.clusters import cluster_size, clusters, tally
 from sercheck.serial.rates import (
     AgainstPast,
     AgainstShare,
     against_past,
     against_share,
     binomial_tail,
-    cluster_size,
     conditional_tail,
     first_within,
     runs_of,
-    tally,
 )
 
 K, N = (grid.ravel().astype(float) for grid in np.meshgrid(np.arange(0, 31, 3), [1, 5, 24, 30]))
@@ -141,6 +140,49 @@ def test_a_gap_is_not_closed_up():
     closed = marks[:, ::2]
     assert np.median(cluster_size(closed)) > 5  # adjacent rows: clusters
     assert np.median(cluster_size(marks)) > 5  # two steps apart: the odd lags are empty, the even ones are not
+
+
+def with_yesterday(seed, series, cycles, stays=0.6):
+    """Marks of share .2 at each of 24 hours, each hour's a chain from day to day that does not see the others."""
+    chains = markov(np.random.default_rng(seed), series * 24, cycles, 0.2, 1 / (0.8 * (1 - stays)))
+    return chains.reshape(series, 24, cycles).transpose(0, 2, 1).reshape(series, -1)
+
+
+@pytest.mark.parametrize("lost", [0.0, 0.4])
+def test_clusters_of_days_have_their_known_size(lost):
+    """Chains from day to day with memory ρ have clusters of (1 + ρ)/(1 − ρ) rows, that the steps do not show."""
+    marks = with_yesterday(10, 60, 800)
+    marks[np.random.default_rng(11).random(marks.shape) < lost] = np.nan
+    known = 4.0 if not lost else 1 + 3.0 * (1 - lost)  # what is lost takes its share of the covariances
+    assert np.median(cluster_size(marks)) < 1.3
+    assert np.median(cluster_size(marks, season=24)) == pytest.approx(known, rel=0.1)
+
+
+def test_a_fixed_pattern_is_no_cluster_of_days():
+    """The same hours marked on every day, rows missing or not, add nothing to what the steps show."""
+    marks = np.tile(np.arange(24) < 3, (2, 30)).astype(float)
+    marks[1, np.random.default_rng(12).random(720) < 0.3] = np.nan
+    np.testing.assert_array_equal(cluster_size(marks, season=24), cluster_size(marks))
+
+
+def test_few_or_hardly_known_cycles_tell_nothing():
+    """Under eight cycles of which half is known the steps alone tell, however the batch begins."""
+    marks = with_yesterday(13, 20, 20)
+    short, thin = marks[:, : 24 * 8 - 1], marks.copy()
+    thin.reshape(20, 20, 24)[:, 7:, :13] = np.nan
+    for some in (short, thin):
+        for start in (0, 100):
+            found = clusters(some, season=24, start=start)
+            np.testing.assert_array_equal(found.size, cluster_size(some))
+            assert np.isinf(found.behind).all()
+
+
+def test_a_changed_batch_is_no_long_cluster():
+    """A rise in the batch does not hide itself: from its start on cycles have their own mean."""
+    rng = np.random.default_rng(14)
+    marks = np.hstack([rng.random((200, 24 * 140)) < 0.1, rng.random((200, 168)) < 0.3]).astype(float)
+    own, common = (np.median(cluster_size(marks, season=24, start=start)) for start in (24 * 140, 0))
+    assert own < 1.4 < 1.8 < common
 
 
 def test_tally_and_runs():

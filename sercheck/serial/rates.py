@@ -16,12 +16,11 @@ import numpy as np
 from scipy import special
 
 from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.clusters import clusters, tally
 from sercheck.serial.risk import t_tail
 
 Side = Literal["upper", "lower"]
-
-BLOCK = 1 << 19
-"""Values transformed at once (4 MB: about a second-level cache), so that memory stays flat."""
+SIDES: tuple[Side, ...] = ("upper", "lower")
 
 FEWEST_EXPECTED = 3.0
 """Marked effective rows expected at a literal share below which a pass says nothing (chosen by simulation)."""
@@ -31,82 +30,6 @@ LONG_HISTORY = 8
 
 FEWEST_RUNS = 10
 """Runs of the rarer kind that begin to tell how it clusters (simulated: fewer give up to 300 times the risk)."""
-
-
-def tally(marks: Floats) -> tuple[Ints, Ints]:
-    """Count the marked rows and the rows that can be marked, each of shape (S,)."""
-    return np.nansum(marks, axis=1).astype(np.int64), np.count_nonzero(~np.isnan(marks), axis=1).astype(np.int64)
-
-
-def cluster_size(marks: Floats, *, short: bool = False) -> Floats:
-    """Rows that weigh as one independent row, τ ≥ 1, by Geyer's (1992) initial monotone sequence.
-
-    τ = max(1, −1 + 2 Σ Γ_m) with Γ_m = r_{2m} + r_{2m+1}, summed while positive and made non-increasing, lags below
-    T/4. r_k is the autocorrelation of the marks with complete pairs only: [c_k / (pairs + k)] / [c_0 / observed].
-    A constant row has τ = 1.
-
-    Args:
-        marks: history and batch in one stretch, shape (S, T); NaN takes no part and is never closed up.
-        short: the stretch is hardly longer than what is judged. The sample mean takes about τ/T off every
-            autocorrelation (Kendall 1954), which is nothing in a long history but much of τ here: it is given back
-            once, r → r + (1 − r) τ/T.
-
-    Returns:
-        τ, shape (S,).
-    """
-    S, T = marks.shape
-    size = np.ones(S)
-    lags = (T - 1) // 4 + 1 if T else 0
-    lags -= lags % 2
-    if lags < 2:
-        return size
-    varied = np.flatnonzero(_varied(marks))
-    block = max(1, BLOCK // T)
-    for first in range(0, len(varied), block):
-        rows = varied[first : first + block]
-        r = _autocorrelation(marks[rows], lags)
-        size[rows] = _initial_monotone(r)
-        if short:
-            size[rows] = _initial_monotone(r + (1.0 - r) * (size[rows] / T)[:, None])
-    return size
-
-
-def _varied(marks: Floats) -> Bools:
-    hits, seen = tally(marks)
-    return (hits > 0) & (hits < seen)
-
-
-def _autocorrelation(marks: Floats, lags: int) -> Floats:
-    T = marks.shape[1]
-    seen = ~np.isnan(marks)
-    observed = seen.sum(axis=1, keepdims=True)
-    centred = np.where(seen, marks, 0.0)
-    centred = np.where(seen, centred - centred.sum(axis=1, keepdims=True) / observed, 0.0)
-    length = _good_length(T + lags)
-    products = _lagged(centred, lags, length)
-    k = np.arange(lags)
-    pairs = T - k if seen.all() else np.rint(_lagged(seen.astype(np.float64), lags, length))
-    r: Floats = (products / (pairs + k)) / (products[:, :1] / observed)
-    return r
-
-
-def _lagged(x: Floats, lags: int, length: int) -> Floats:
-    spectrum = np.fft.rfft(x, length, axis=1)
-    products: Floats = np.fft.irfft(np.abs(spectrum) ** 2, length, axis=1)[:, :lags]
-    return products
-
-
-def _good_length(least: int) -> int:
-    """The smallest 2^a times 1, 3, 5, 9 or 15 that is at least ``least`` (fast to transform)."""
-    return min(m << max(0, (-(-least // m) - 1).bit_length()) for m in (1, 3, 5, 9, 15))
-
-
-def _initial_monotone(r: Floats) -> Floats:
-    pairs = r[:, 0::2] + r[:, 1::2]
-    positive = np.logical_and.accumulate(pairs > 0, axis=1)
-    falling = np.minimum.accumulate(pairs, axis=1)
-    size: Floats = np.maximum(1.0, -1.0 + 2.0 * np.where(positive, falling, 0.0).sum(axis=1))
-    return size
 
 
 def first_within(tail: Callable[[Floats], Floats], most: Floats, risk: Floats) -> Floats:
@@ -175,7 +98,7 @@ class ShareLaw(ABC):
     Attributes:
         hits: marked rows in the batch.
         rows: rows of the batch that can be marked.
-        tau: rows that weigh as one independent row (``cluster_size`` of history and batch).
+        tau: rows that weigh as one independent row (``clusters`` of history and batch).
         power: probability of ``detectable``.
     """
 
@@ -229,7 +152,7 @@ class AgainstShare(ShareLaw):
 
     Attributes:
         share: the author's share.
-        df: for each side, degrees of freedom behind τ where it comes from little more than the batch itself (after
+        df: for each side, degrees of freedom behind τ where it comes from few rows or cycles (after
             Korn and Graubard 1998: the tail is read as that of Student's t in place of the normal law); a side that
             is not there, or inf, keeps the exact tail.
         blind: sides on which a failure would rest on clusters that nobody has seen: p is 1 there.
@@ -262,7 +185,7 @@ class AgainstShare(ShareLaw):
         """Clopper and Pearson's tail on hits/τ and rows/τ."""
         p = binomial_tail(hits / self.tau, self.rows / self.tau, self.bound, side)
         if side in self.df:
-            p = np.where(np.isfinite(self.df[side]), t_tail(-special.ndtri(p), self.df[side]), p)
+            p = _as_t(p, self.df[side])
         return np.where(self.blind[side], 1.0, p) if side in self.blind else p
 
 
@@ -276,6 +199,12 @@ class AgainstPast(ShareLaw):
 
     past_hits: Floats
     past_rows: Floats
+    df: Floats | None = None
+    """Degrees of freedom behind τ where whole cycles tell it, as in ``AgainstShare``."""
+
+    def naive_limit(self, side: Side, risk: Floats) -> Floats:
+        """The limit had the rows been independent (τ = 1, nothing estimated)."""
+        return replace(self, tau=np.ones(self.tau.shape), df=None).limit(side, risk)
 
     @property
     def bound(self) -> Floats:
@@ -295,7 +224,12 @@ class AgainstPast(ShareLaw):
         marked = conditional_tail(hits / self.tau, n, K, N, side)
         other: Side = "lower" if side == "upper" else "upper"
         unmarked = conditional_tail((self.rows - hits) / self.tau, n, N - K, N, other)
-        return np.where(2 * self.past_hits > self.past_rows, unmarked, marked)
+        p = np.where(2 * self.past_hits > self.past_rows, unmarked, marked)
+        return p if self.df is None else _as_t(p, self.df)
+
+
+def _as_t(p: Floats, df: Floats) -> Floats:
+    return np.where(np.isfinite(df), t_tail(-special.ndtri(p), df), p)
 
 
 def quotient(hits: Floats, rows: Floats) -> Floats:
@@ -304,7 +238,7 @@ def quotient(hits: Floats, rows: Floats) -> Floats:
         return np.where(rows > 0, hits / rows, np.nan)
 
 
-def against_share(marks: Floats, start: int, share: float, power: float) -> AgainstShare:
+def against_share(marks: Floats, start: int, share: float, power: float, *, season: int | None = None) -> AgainstShare:
     """The law of the share of marked rows from column ``start`` on against a literal share; arrays of shape (S, 1).
 
     Where history is shorter than ``LONG_HISTORY`` batches, τ comes from little more than the batch that it judges:
@@ -317,13 +251,15 @@ def against_share(marks: Floats, start: int, share: float, power: float) -> Agai
         start: first column of the batch.
         share: the author's share, 0 to 1.
         power: probability of ``detectable``.
+        season: steps of the shortest cycle of the feed, if it has one.
     """
     hits, rows = _batch(marks, start)
     if start >= LONG_HISTORY * (marks.shape[1] - start):
-        return AgainstShare(hits, rows, cluster_size(marks)[:, None], power, np.asarray(share))
-    tau = cluster_size(marks, short=True)[:, None]
+        tau, behind = (each[:, None] for each in clusters(marks, season=season, start=start))
+        return AgainstShare(hits, rows, tau, power, np.asarray(share), dict.fromkeys(SIDES, _freedom(behind)))
+    tau, behind = (each[:, None] for each in clusters(marks, short=True, season=season))
     observed = np.count_nonzero(~np.isnan(marks), axis=1)[:, None]
-    df = np.where(tau > 1.0, np.maximum(observed / tau - 1.0, 1.0), np.inf)
+    df = np.where(tau > 1.0, _freedom(np.minimum(observed / tau, behind)), np.inf)
     marked, unmarked = (runs[:, None] for runs in runs_of(marks))
     thin: Side = "lower" if share <= 0.5 else "upper"
     full: Side = "upper" if share <= 0.5 else "lower"
@@ -332,11 +268,16 @@ def against_share(marks: Floats, start: int, share: float, power: float) -> Agai
     return AgainstShare(hits, rows, tau, power, np.asarray(share), few, {thin: runs < FEWEST_RUNS})
 
 
-def against_past(marks: Floats, start: int, power: float) -> AgainstPast:
+def against_past(marks: Floats, start: int, power: float, *, season: int | None = None) -> AgainstPast:
     """The law of the share of marked rows from column ``start`` on against that before it; arrays of shape (S, 1)."""
     hits, rows = _batch(marks, start)
     past_hits, past_rows = _batch(marks[:, :start], 0)
-    return AgainstPast(hits, rows, cluster_size(marks)[:, None], power, past_hits, past_rows)
+    tau, behind = (each[:, None] for each in clusters(marks, season=season, start=start))
+    return AgainstPast(hits, rows, tau, power, past_hits, past_rows, _freedom(behind))
+
+
+def _freedom(independent: Floats) -> Floats:
+    return np.maximum(independent - 1.0, 1.0)
 
 
 def _batch(marks: Floats, start: int) -> tuple[Floats, Floats]:

@@ -14,7 +14,8 @@ import numpy as np
 from scipy import special
 
 from sercheck.serial.arrays import Floats, Ints
-from sercheck.serial.rates import BLOCK, Side, first_within, tally
+from sercheck.serial.clusters import BLOCK, tally
+from sercheck.serial.rates import Side, first_within
 from sercheck.serial.window_t import windows
 
 FEW_STRETCHES = 20

@@ -13,7 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from sercheck.serial.arrays import Bools, Floats, Ints, as_series
-from sercheck.serial.rates import BLOCK
+from sercheck.serial.clusters import BLOCK
 from sercheck.serial.risk import t_tail
 
 Hashes = NDArray[np.uint64]
