@@ -158,4 +158,4 @@ class Panel:
 
     def changed(self, values: Floats, **changes: object) -> Panel:
         """The same panel with other values; memo emptied."""
-        return replace(self, values=values, shared={}, **changes)  # type: ignore[arg-type]
+        return replace(self, values=values, shared={}, **changes)  # type: ignore[arg-type]  # fields of a panel

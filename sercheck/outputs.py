@@ -47,7 +47,7 @@ def whole_file(path: str | Path) -> Iterator[BinaryIO]:
                     os.fchmod(file.fileno(), mode)
                 os.fsync(file.fileno())
             draft.replace(target)
-        except BaseException:
+        except BaseException:  # an interrupt leaves no draft behind either
             with suppress(OSError):
                 draft.unlink()
             raise

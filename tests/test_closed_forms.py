@@ -66,7 +66,7 @@ def test_averages_and_noise(case):
     "row", closed("newey_west_population"), ids=lambda row: f"{row['phi']}-{row['bandwidth_lags']}"
 )
 def test_long_run_factor(row):
-    """Rows over effective size give the true long-run factor of an AR(1); weights cut at a bandwidth stop on the way."""
+    """Rows over effective size give the long-run factor of an AR(1); weights cut at a bandwidth stop on the way."""
     n, phi, lags = 10**6, row["phi"], row["bandwidth_lags"]
     rho = phi ** np.arange(2001.0)
     assert n / float(np.ravel(effective_size_of(n, rho))[0]) == pytest.approx(

@@ -130,7 +130,7 @@ class Archive:
         found = []
         for day in sorted(name for name in _names(self.folder) if first_day <= name <= last_day and name != "log"):
             here = [name for name in _names(self.folder / day) if name in numbers]
-            found += [Part(self.folder / day / name, day, numbers[name]) for name in sorted(here, key=numbers.get)]  # type: ignore[arg-type]
+            found += [Part(self.folder / day / name, day, numbers[name]) for name in sorted(here, key=numbers.__getitem__)]
         return found
 
     @contextmanager
