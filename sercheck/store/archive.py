@@ -129,8 +129,8 @@ class Archive:
         numbers = {f"{e.batch_id}.parquet": e.number for e in (log or self.log()).history}
         found = []
         for day in sorted(name for name in _names(self.folder) if first_day <= name <= last_day and name != "log"):
-            here = [name for name in _names(self.folder / day) if name in numbers]
-            found += [Part(self.folder / day / name, day, numbers[name]) for name in sorted(here, key=numbers.__getitem__)]
+            here = sorted((name for name in _names(self.folder / day) if name in numbers), key=numbers.__getitem__)
+            found += [Part(self.folder / day / name, day, numbers[name]) for name in here]
         return found
 
     @contextmanager
