@@ -8,6 +8,7 @@ that judge the same batch at once one decides.
 from __future__ import annotations
 
 import json
+from collections.abc import Sequence
 from dataclasses import fields, replace
 from datetime import UTC, datetime
 from itertools import count, islice
@@ -22,11 +23,20 @@ from sercheck.store.memory import (
     newest_baseline,
     put_baseline,
     put_settlement,
+    put_sketches,
     relearn_from,
     settlements_of,
+    sketches_of,
 )
 from sercheck.store.migrations import migrate
-from sercheck.store.queries import COUNT_OF, batches_where, begins_with, judgements_of, records_where
+from sercheck.store.queries import (
+    COUNT_OF,
+    batches_where,
+    begins_with,
+    failed_rules_of,
+    judgements_of,
+    records_where,
+)
 from sercheck.store.rows import (
     BaselineRow,
     BatchRow,
@@ -100,8 +110,8 @@ class Ledger:
         with self._database.reading() as connection:
             return _find(connection, judgement_id(batch_id, rules_fingerprint, baseline_id))
 
-    def add(self, batch: BatchRow, judgement: JudgementRow, records: Records) -> Judgement:
-        """Store a judgement with its batch and records, all or nothing, and give it as stored.
+    def add(self, batch: BatchRow, judgement: JudgementRow, records: Records, sketches: str = "") -> Judgement:
+        """Store a judgement with its batch, records and sketches, all or nothing, and give it as stored.
 
         The same judgement stored before, by this or another process, is left alone and returned: look at its decision.
 
@@ -114,23 +124,24 @@ class Ledger:
             raise ValueError(f"batch {batch.batch_id} got a judgement or records of {others - {batch.batch_id}}")
         self.prepare()
         try:
-            return self._add(batch, judgement, records)
+            return self._add(batch, judgement, records, sketches)
         except ConflictError:  # another process stored the same batch meanwhile: now its rows are seen
             try:
-                return self._add(batch, judgement, records)
+                return self._add(batch, judgement, records, sketches)
             except ConflictError as conflict:
                 raise StoreError(
                     self.place, f"two records of batch {batch.batch_id} have one id; nothing was stored",
                     "one id for one rule, column, series and lag", "Please report it.",
                 ) from conflict  # fmt: skip
 
-    def _add(self, batch: BatchRow, judgement: JudgementRow, records: Records) -> Judgement:
+    def _add(self, batch: BatchRow, judgement: JudgementRow, records: Records, sketches: str) -> Judgement:
         with self._database.writing() as connection:
             stored = _find(connection, judgement.judgement_id)
             if stored is None:
                 _put_batch(connection, batch, self.place)
                 stored = _put_judgement(connection, judgement, records)
                 _put_records(connection, records, judgement.judgement_id)
+                put_sketches(connection, judgement.judgement_id, sketches)
         return stored
 
     def records(self, wanted: str | Filters) -> Records:
@@ -212,6 +223,25 @@ class Ledger:
             return None
         with self._database.reading() as connection:
             return facts_of(connection, baseline_id)
+
+    def sketches(self, sought: str) -> str:
+        """What was sketched of a judgement when it was made, as JSON; empty where nothing was."""
+        if not self._there():
+            return ""
+        with self._database.reading() as connection:
+            return sketches_of(connection, sought)
+
+    def failed_rules(self, judgement_ids: Sequence[str]) -> dict[str, dict[str, int]]:
+        """For each judgement the rules that failed, and on how many records."""
+        if not self._there():
+            return {}
+        found: dict[str, dict[str, int]] = {}
+        with self._database.reading() as connection:
+            for first in range(0, len(judgement_ids), ASKED):
+                asked = list(judgement_ids[first : first + ASKED])
+                for judgement, rule, number in connection.execute(failed_rules_of(asked)):
+                    found.setdefault(judgement, {})[rule] = number
+        return found
 
     def _there(self) -> bool:
         """A ledger exists; it is brought up to date at the first look."""

@@ -1,4 +1,4 @@
-"""Baselines and settlements in the ledger: rows that are added, never changed; depends on ``rows``, ``tables``."""
+"""Baselines, settlements and sketches in the ledger: rows that are added, never changed; needs ``rows``, ``tables``."""
 
 from __future__ import annotations
 
@@ -97,6 +97,23 @@ def relearn_from(connection: Connection, feed: str) -> str | None:
         .limit(1)
     )
     return connection.execute(query).scalar()
+
+
+def put_sketches(connection: Connection, judgement_id: str, sketches: str) -> None:
+    """Keep what was sketched of a judgement, where anything was."""
+    from sqlalchemy import insert
+
+    if sketches:
+        connection.execute(insert(tables().sketches).values(judgement_id=judgement_id, sketches=storable(sketches)))
+
+
+def sketches_of(connection: Connection, judgement_id: str) -> str:
+    """What was sketched of a judgement; empty where nothing was."""
+    from sqlalchemy import select
+
+    sketches = tables().sketches
+    found = connection.execute(select(sketches.c.sketches).where(sketches.c.judgement_id == judgement_id)).scalar()
+    return "" if found is None else str(found)
 
 
 def _read(kind: type[Any], row: RowMapping) -> Any:

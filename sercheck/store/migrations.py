@@ -103,9 +103,24 @@ def _memory(connection: Connection) -> None:
         connection.execute(text("CREATE INDEX baselines_of_feed ON baselines (feed)"))
 
 
+def _sketches(connection: Connection) -> None:
+    from sqlalchemy import Column, ForeignKey, MetaData, String, Table, Text
+
+    meta = MetaData()
+    Table("judgements", meta, Column("judgement_id", String(64), primary_key=True))  # there already; named for the key
+    sketches = Table(
+        "sketches",
+        meta,
+        Column("judgement_id", String(64), ForeignKey("judgements.judgement_id"), primary_key=True),
+        Column("sketches", Text, nullable=False),
+    )
+    meta.create_all(connection, [sketches], checkfirst=False)
+
+
 MIGRATIONS: tuple[Migration, ...] = (
     Migration("001 batches, judgements and records", _first_tables),
     Migration("002 baselines and settlements", _memory),
+    Migration("003 sketches", _sketches),
 )
 
 

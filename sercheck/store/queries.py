@@ -65,6 +65,18 @@ def judgements_of(batch_ids: list[str]) -> Select[Any]:
     )
 
 
+def failed_rules_of(judgement_ids: list[str]) -> Select[Any]:
+    """Judgement, rule and number of records of every rule that failed."""
+    from sqlalchemy import func, select
+
+    records = tables().records
+    return (
+        select(records.c.judgement_id, records.c.rule, func.count())
+        .where(records.c.judgement_id.in_(judgement_ids), records.c.outcome == "fail")
+        .group_by(records.c.judgement_id, records.c.rule)
+    )
+
+
 def begins_with(column: ColumnElement[Any], start: str) -> ColumnElement[bool]:
     """The text starts so, letter by letter; the range lets an index help."""
     from sqlalchemy import and_, func

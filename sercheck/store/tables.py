@@ -25,6 +25,7 @@ BASELINE_COLUMNS = (
 SETTLEMENT_COLUMNS = (
     "settlement_id", "batch_id", "feed", "what", "settled_by", "because", "settled_at", "relearn_from",
 )  # fmt: skip
+SKETCH_COLUMNS = ("judgement_id", "sketches")
 RECORD_COLUMNS = (*COLUMNS, "judgement_id", "place")
 """``place`` is the position of a record in its judgement."""
 
@@ -37,6 +38,7 @@ class Tables(NamedTuple):
     records: TableClause
     baselines: TableClause
     settlements: TableClause
+    sketches: TableClause
 
 
 @cache
@@ -56,4 +58,5 @@ def tables() -> Tables:
         table("records", *(column(name, Text() if name in texts else kind(name)) for name in RECORD_COLUMNS)),
         table("baselines", *(column(name) for name in BASELINE_COLUMNS)),
         table("settlements", *(column(name) for name in SETTLEMENT_COLUMNS)),
+        table("sketches", *(column(name) for name in SKETCH_COLUMNS)),
     )
