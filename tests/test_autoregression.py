@@ -18,6 +18,7 @@ from sercheck.serial.autoregression import (
     root_beyond,
     step_up,
 )
+from sercheck.serial.burg_products import reflections_from_products
 
 
 def model_of(*coefficients):
@@ -76,6 +77,18 @@ def test_twin(missing):
         e = innovations(row, model.rows([int(np.flatnonzero(model.mean == mean)[0])]))[0]
         np.testing.assert_allclose(e, naive.innovations(row, mean, a[:order]), rtol=1e-9, atol=1e-12)
     assert (model.order == 4).all() or missing > 0.1
+
+
+def test_products_give_what_passes_over_the_series_give():
+    """The recursion on lagged products equals Burg's own passes, and leaves to them what it cannot compute well."""
+    walk = np.cumsum(autoregressive(5, 6, 400, 0.3), axis=1)
+    x = np.vstack([autoregressive(4, 6, 400, [1.4, -0.6]), walk, np.sin(0.3 * np.arange(400))])
+    x -= x.mean(axis=1, keepdims=True)
+    for width in (1, 8, 26):
+        k, exact = reflections_from_products(x, width)
+        np.testing.assert_allclose(k[exact], module._lattice(x, width)[exact], rtol=0, atol=1e-11)
+        assert exact[:12].all()
+        assert exact[12] == (width == 1)
 
 
 def test_blocks_do_not_matter(monkeypatch):

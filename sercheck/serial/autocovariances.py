@@ -165,6 +165,13 @@ def lagged_products(data: Centred, lags: Ints) -> tuple[Floats, Ints]:
     return sums, pairs
 
 
+def products(x: Floats, reach: int) -> Floats:
+    """Σ_t x_t x_{t+k} for k = 0 .. ``reach`` of complete series, shape (S, reach + 1)."""
+    if reach >= FEW_LAGS:
+        return _fourier_products(x, reach)
+    return np.stack([_product(x, lag) for lag in range(reach + 1)], axis=1)
+
+
 def _product(x: Floats, lag: int) -> Floats:
     product: Floats = np.einsum("ij,ij->i", x[:, : x.shape[1] - lag], x[:, lag:])
     return product

@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from sercheck.serial.arrays import Bools, Floats, Ints
+from sercheck.serial.burg_products import reflections_from_products
 from sercheck.serial.centre import Centred, centred
 
 STEEPEST = 0.98
@@ -83,9 +84,14 @@ def burg(x: object, max_order: int | None = None, min_order: int = 0) -> Autoreg
     weight = np.zeros((series, width))
     block = max(1, BLOCK // max(steps, 1))
     gaps = data.n < steps
-    for rows in _blocks(np.flatnonzero(~gaps), block):
+    whole = np.flatnonzero(~gaps)
+    weight[whole] = steps
+    if width:
+        rows_of = data.values if len(whole) == series else data.values[whole]
+        reflection[whole], exact = reflections_from_products(rows_of, width)
+        whole = whole[~exact]
+    for rows in _blocks(whole, block):
         reflection[rows] = _lattice(data.values[rows], width)
-        weight[rows] = steps
     for rows in _blocks(np.flatnonzero(gaps), block):
         reflection[rows], weight[rows] = _lattice_with_gaps(data.values[rows], data.seen[rows], width)
     return _chosen(data, reflection, weight, max_order, min_order)
