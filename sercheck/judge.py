@@ -72,6 +72,11 @@ class Judged:
     naive_limit: Floats
     detectable: Floats
 
+    @property
+    def failed(self) -> bool:
+        """One cell fails or more."""
+        return bool((self.outcome == FAIL).any())
+
 
 @dataclass(frozen=True)
 class _Evidence:
@@ -115,6 +120,19 @@ def breaks(seen: Measurement, risk: float) -> Bools:
     p = _evidence(seen).p
     beyond = broken(p, np.asarray(risk))
     return np.asarray((~beyond & ~np.isnan(p) if seen.certify else beyond).any(axis=1))
+
+
+def clearest(seen: Measurement) -> tuple[Floats, Floats]:
+    """How clearly each series breaks its bound, to sort by, smallest first: the smallest p-value of its lags (infinite
+    where it has none), then the distance from the bound in standard errors, negative; both of shape (S,).
+    """
+    told = _evidence(seen)
+    shown = _shown(seen, told.upper, np.full(told.p.shape, np.nan))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        scale = np.where(shown["standard_error"] > 0, shown["standard_error"], 1.0)
+        far = np.nan_to_num(np.abs(seen.observed - shown["bound"]) / scale, nan=0.0)
+    p = np.where(np.isnan(told.p), np.inf, 1 - told.p if seen.certify else told.p)
+    return p.min(axis=1), -far.max(axis=1)
 
 
 def _references(seen: Measurement) -> list[tuple[Side, Reference]]:

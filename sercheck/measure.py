@@ -18,6 +18,9 @@ from sercheck.grid import Grid, Panel
 from sercheck.serial.arrays import Bools, Floats, Ints
 
 Side = Literal["upper", "lower"]
+Picture = Literal["stretch", "correlogram", "partial", "innovations", "course"]
+"""The window's values over history's band; the correlogram of the window, of its partial autocorrelations or of its
+innovations over history's; the measure over the last batches."""
 POWER = 0.8
 """Probability with which the ``detectable`` change is found (common practice)."""
 
@@ -176,6 +179,10 @@ class Measure(ABC):
     def beside(self, fields: BaseModel) -> tuple[str, ...]:
         """Further value columns that the fields name: ``Panel.beside`` holds them when the measure runs."""
         return ()
+
+    def picture(self, fields: BaseModel, stays: Stays) -> Picture:
+        """What a person should look at where the rule fails."""
+        return "stretch" if self.of_values else "course"
 
     @abstractmethod
     def run(self, panel: Panel, question: Question) -> Measurement:

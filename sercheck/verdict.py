@@ -26,6 +26,8 @@ from sercheck.record import Records, utc_text
 from sercheck.rulebook import load_rules
 from sercheck.rulebook.budget import expected_false_holds, explain
 from sercheck.rulebook.compiled import Rulebook
+from sercheck.sketches import Sketch, to_text
+from sercheck.sketching import Sketcher
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -57,6 +59,8 @@ class Verdict:
             say how often a batch comes.
         arithmetic: how the alarm budget becomes the risk of each rule, a sentence each.
     """
+        sketches: pictures of the rules that failed, as numbers.
+        rules: text of the rule file.
 
     decision: str
     batch_id: str
@@ -70,6 +74,8 @@ class Verdict:
     expected: tuple[float, str] | None = None
     arithmetic: tuple[str, ...] = ()
 
+    sketches: tuple[Sketch, ...] = ()
+    rules: str = ""
     @property
     def counts(self) -> dict[str, int]:
         """Records by outcome."""
@@ -205,11 +211,13 @@ def gate(
     run = Run(book, cadence, judged_at, past.rests)
     seen: list[Seen] = []
     notes: list[str] = [*past.notes]
+    sketcher = Sketcher(book)
     for grid in feed_grids(source, past.source, layout):
         counted.add(grid)
         block, said = measure_block(past.marked(grid), run)
         seen += block
         notes += said
+        sketcher.watch(grid, block)
     facts = counted.facts()
     common = Common(
         feed=book.feed,
@@ -220,7 +228,8 @@ def gate(
         baseline_id=past.baseline_id,
         sercheck_version=__version__,
     )
-    table = records(book, decide(book, seen), common)
+    judged = decide(book, seen)
+    table = records(book, judged, common)
     if not np.any(table["action"] == "hold"):
         counted.must_say_something(seen)
     verdict = Verdict(
@@ -237,6 +246,8 @@ def gate(
         arithmetic=tuple(explain(book)),
     )
     if kept_in is None or not keep:
+        sketches=sketcher.sketches(judged),
+        rules=book.text,
         return verdict
     verdict = _kept(verdict, common, book, kept_in)
     settled = kept_in.batch(verdict.batch_id).settled
@@ -294,7 +305,7 @@ def _kept(verdict: Verdict, common: Common, book: Rulebook, ledger: Ledger) -> V
     )  # fmt: skip
     with ledger:
         known = ledger.find(judgement.batch_id, judgement.rules_fingerprint, judgement.baseline_id)
-        stored = known or ledger.add(batch, judgement, verdict.table)
+        stored = known or ledger.add(batch, judgement, verdict.table, to_text(verdict.sketches, verdict.notes))
         table = ledger.records(Filters(judgement_id=stored.judgement_id))
     if known is None and stored.decision == verdict.decision:
         return verdict

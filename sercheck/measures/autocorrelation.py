@@ -37,10 +37,11 @@ from __future__ import annotations
 from typing import ClassVar
 
 import numpy as np
+from pydantic import BaseModel
 
 from sercheck.baseline import residual
 from sercheck.grid import Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons, Reference
+from sercheck.measure import Measure, Measurement, Picture, Question, Reasons, Reference, Stays
 from sercheck.measures._lags import (
     FEWEST_BY_WINDOWS,
     NO_HISTORY,
@@ -69,6 +70,9 @@ class Autocorrelation(Measure):
     span: ClassVar[tuple[float, float]] = (-1.0, 1.0)
     Fields: ClassVar[type[LagFields]] = LagFields
 
+    def picture(self, fields: BaseModel, stays: Stays) -> Picture:
+        return "correlogram"
+
     def run(self, panel: Panel, question: Question) -> Measurement:
         fields = question.fields
         assert isinstance(fields, LagFields)  # the engine hands over what ``Fields`` validated
@@ -88,7 +92,7 @@ class Autocorrelation(Measure):
 
 def _against_bounds(panel: Panel, question: Question, lags: tuple[int, ...]) -> Measurement:
     steps: Ints = np.array(lags, dtype=np.int64)
-    seen = panel.remember(("lagged", lags), lambda: lagged(panel.window, steps))
+    seen = panel.remember(("lagged", lags), lambda: lagged(panel.window, steps, alone=True, cycle=panel.own_cycle))
     return held_to_bounds(
         panel,
         question,

@@ -42,7 +42,7 @@ from pydantic import BaseModel, ConfigDict, Field, model_validator
 
 from sercheck.baseline import FEWEST_CYCLES, chosen_seasons
 from sercheck.grid import Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons, Reference, Side
+from sercheck.measure import Measure, Measurement, Picture, Question, Reasons, Reference, Side, Stays
 from sercheck.measures._lags import literal_bounds, must_be_one_of_both
 from sercheck.measures._past import NO_HISTORY, ask_history, ask_variety, past, scored, window_scores
 from sercheck.measures._witnesses import own_cycles_out
@@ -94,6 +94,9 @@ class CrossCorrelation(Measure):
     def beside(self, fields: BaseModel) -> tuple[str, ...]:
         assert isinstance(fields, CrossCorrelationFields)
         return (fields.other,)
+
+    def picture(self, fields: BaseModel, stays: Stays) -> Picture:
+        return "course"
 
     def run(self, panel: Panel, question: Question) -> Measurement:
         fields = question.fields

@@ -34,7 +34,7 @@ from pydantic import BaseModel, ConfigDict
 from scipy import special
 
 from sercheck.grid import Panel
-from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Side
+from sercheck.measure import POWER, Measure, Measurement, Picture, Question, Reasons, Side, Stays
 from sercheck.measures._past import (
     ask_history,
     ask_rows,
@@ -72,6 +72,9 @@ class EffectiveSize(Measure):
     kinds: ClassVar[frozenset[str]] = frozenset({"below", "above", "between", "like_history"})
     span: ClassVar[tuple[float, float]] = (0.0, float("inf"))
     Fields: ClassVar[type[BaseModel]] = EffectiveSizeFields
+
+    def picture(self, fields: BaseModel, stays: Stays) -> Picture:
+        return "correlogram"
 
     def run(self, panel: Panel, question: Question) -> Measurement:
         return _literal(panel, question) if question.stays.literal else _like_history(panel, question)

@@ -53,7 +53,7 @@ from pydantic import BaseModel, ConfigDict, Field, model_validator
 from scipy import special
 
 from sercheck.grid import Panel
-from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Reference, Side
+from sercheck.measure import POWER, Measure, Measurement, Picture, Question, Reasons, Reference, Side, Stays
 from sercheck.measures._exact import exact
 from sercheck.measures._past import (
     NO_HISTORY,
@@ -114,6 +114,10 @@ class Innovations(Measure):
     kinds: ClassVar[frozenset[str]] = frozenset({"below", "above", "between", "like_history"})
     span: ClassVar[tuple[float, float]] = (0.0, float("inf"))
     Fields: ClassVar[type[BaseModel]] = InnovationsFields
+
+    def picture(self, fields: BaseModel, stays: Stays) -> Picture:
+        assert isinstance(fields, InnovationsFields)
+        return "innovations" if fields.look == "whiteness" else "stretch"
 
     def run(self, panel: Panel, question: Question) -> Measurement:
         fields = question.fields

@@ -38,10 +38,11 @@ from collections.abc import Callable
 from typing import ClassVar
 
 import numpy as np
+from pydantic import BaseModel
 
 from sercheck.baseline import residual
 from sercheck.grid import Panel
-from sercheck.measure import Measure, Measurement, Question, Reasons, Reference, Side
+from sercheck.measure import Measure, Measurement, Picture, Question, Reasons, Reference, Side, Stays
 from sercheck.measures._lags import (
     FEWEST_BY_WINDOWS,
     NO_HISTORY,
@@ -71,6 +72,9 @@ class PartialAutocorrelation(Measure):
     span: ClassVar[tuple[float, float]] = (-1.0, 1.0)
     Fields: ClassVar[type[LagFields]] = LagFields
 
+    def picture(self, fields: BaseModel, stays: Stays) -> Picture:
+        return "partial"
+
     def run(self, panel: Panel, question: Question) -> Measurement:
         fields = question.fields
         assert isinstance(fields, LagFields)  # the engine hands over what ``Fields`` validated
@@ -82,7 +86,7 @@ class PartialAutocorrelation(Measure):
 def _against_bounds(panel: Panel, question: Question, lags: tuple[int, ...]) -> Measurement:
     steps: Ints = np.array(lags, dtype=np.int64)
     n, n_missing = window_counts(panel, lags)
-    laws = panel.remember(("partial laws", lags), lambda: PartialLaws(panel.window, steps))
+    laws = panel.remember(("partial laws", lags), lambda: PartialLaws(panel.window, steps, panel.own_cycle))
     observed = sample(panel.window, steps)
     bounds = literal_bounds(question)
     reasons = Reasons(n.shape)

@@ -43,7 +43,7 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict, Field
 
 from sercheck.grid import Panel
-from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, told_reasons
+from sercheck.measure import POWER, Measure, Measurement, Picture, Question, Reasons, Stays, told_reasons
 from sercheck.measures._lags import window_counts
 from sercheck.measures._past import combined
 from sercheck.measures._season import Named, ask_history, ask_window, effective, learned, named_season
@@ -82,6 +82,9 @@ class SeasonalLag(Measure):
     kinds: ClassVar[frozenset[str]] = frozenset({"below", "above", "between", "like_history", "present"})
     span: ClassVar[tuple[float, float]] = (-1.0, 1.0)
     Fields: ClassVar[type[BaseModel]] = SeasonalLagFields
+
+    def picture(self, fields: BaseModel, stays: Stays) -> Picture:
+        return "stretch" if stays.kind == "like_history" else "correlogram"
 
     def run(self, panel: Panel, question: Question) -> Measurement:
         fields = question.fields

@@ -214,10 +214,15 @@ def together(scores: Floats) -> OneStep:
     Returns:
         Arrays of shape (1,).
     """
+    return one_step(mean_scores(scores)[None])
+
+
+def mean_scores(scores: Floats) -> Floats:
+    """Mean over the series of the scores of each batch, shape (B + 1,); NaN where less than half of them have one."""
     told = ~np.isnan(scores)
     count = told.sum(axis=0)
     mean = np.where(told, scores, 0.0).sum(axis=0) / np.maximum(count, 1)
-    return one_step(np.where(2 * count >= count.max(initial=1), mean, np.nan)[None])
+    return np.where(2 * count >= count.max(initial=1), mean, np.nan)
 
 
 def _mean_before(table: Floats) -> Floats:
