@@ -66,8 +66,20 @@ def measure_block(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
     Returns:
         What was seen, in the order of the rules, and notes for the reader.
     """
+    seen, notes = look_at_block(grid, run)
+    return name_causes(seen, grid, run), notes
+
+
+def look_at_block(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
+    """As ``measure_block``, but no cause is named yet: the rows of the grid need not be of one batch."""
     with np.errstate(all="ignore" if _extreme(grid) else None):
         return _measured(grid, run)
+
+
+def name_causes(seen: Sequence[Seen], grid: Grid, run: Run) -> list[Seen]:
+    """The same measurements with the likely causes of the series that may fail; the grid is that of the batch."""
+    with np.errstate(all="ignore" if _extreme(grid) else None):
+        return with_causes(run.book, seen, grid)
 
 
 def _extreme(grid: Grid) -> bool:
@@ -109,7 +121,7 @@ def _measured(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
             if others:
                 panel = replace(panel, beside={name: transformed(name, rule, chosen) for name in others})
             seen.append(_look(place, rule, measure, panel, grid, chosen, run))
-    return with_causes(run.book, seen, grid), notes
+    return seen, notes
 
 
 def decide(book: Rulebook, seen: Sequence[Seen]) -> list[Judged]:

@@ -77,6 +77,7 @@ class Identity(Measure):
     """Keys swapped."""
 
     kinds: ClassVar[frozenset[str]] = frozenset({"like_history"})
+    compares_series: ClassVar[bool] = True
     Fields: ClassVar[type[BaseModel]] = IdentityFields
 
     def run(self, panel: Panel, question: Question) -> Measurement:
