@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from naive.scores import normal_score
 
-from sercheck.serial.scores import normal_scores, ranking
+from sercheck.serial.scores import commonest_share, normal_scores, ranking
 
 SEEDED = np.random.default_rng(20240301)
 
@@ -101,3 +101,15 @@ def test_input_is_untouched():
     normal_scores(new, history)
     np.testing.assert_array_equal(history, before[0])
     np.testing.assert_array_equal(new, before[1])
+
+
+def test_the_commonest_share_without_places():
+    """The share of the commonest value is the one that the ordered history tells, gaps and empty series included."""
+    rng = np.random.default_rng(7)
+    x = rng.standard_normal((5, 40))
+    x[1] = rng.integers(0, 4, 40)
+    x[2, 5:30] = np.nan
+    x[3] = np.nan
+    x[4, ::2] = 0.0
+    np.testing.assert_array_equal(commonest_share(x), ranking(x).commonest)
+    assert commonest_share(np.empty((2, 0))).tolist() == pytest.approx([np.nan, np.nan], nan_ok=True)

@@ -17,7 +17,7 @@ from sercheck.reference import Pivot
 from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.serial.long_run import CosineSpectrum, cosine_spectrum
 from sercheck.serial.risk import t_quantile
-from sercheck.serial.scores import QuantileGrid, Ranking, ranking
+from sercheck.serial.scores import QuantileGrid, Ranking, commonest_share, ranking
 from sercheck.serial.window_t import SMALL_RISK, fewest_windows
 
 NO_HISTORY = "no history: pass --history or learn a baseline"
@@ -86,7 +86,7 @@ def _past(panel: Panel) -> Past:
         scale=np.ldexp(1.0, exponent),
         n=n,
         known=seen[:, : panel.start].sum(axis=1),
-        commonest=ranking(rows).commonest if without.seasons or not panel.start else scored(panel, history).commonest,
+        commonest=commonest_share(rows) if without.seasons or not panel.start else scored(panel, history).commonest,
         seasons=without.seasons,
     )
 
@@ -338,7 +338,7 @@ def varied(told: Measurement, panel: Panel, risk: float) -> Measurement:
     reasons = Reasons(told.observed.shape)
     reasons.index = np.where(told.undecided < 0, -1, told.undecided)
     reasons.texts = list(told.reasons)
-    ask_commonest(reasons, panel.remember("commonest", lambda: ranking(panel.history).commonest), risk)
+    ask_commonest(reasons, panel.remember("commonest", lambda: commonest_share(panel.history)), risk)
     return replace(told, undecided=reasons.index, reasons=tuple(reasons.texts))
 
 

@@ -16,6 +16,8 @@ MOVING, ROUNDS = 8, 8
 """Lower orders that move when an autocorrelation is imposed, and rounds of it (then it stands to 1e-6; measured)."""
 STEP, LONGEST = 1e-6, 0.3
 """Step of the numerical gradient (and change at which a series is done), and longest step of a round, in radians."""
+WIDTHS = (1, 2, 4, 8, 16)
+"""Orders up to which models share a recursion (each wider one costs about twice the last)."""
 BLOCK = 1 << 15
 """Values worked on at a time: two arrays of 256 kB stay in a second-level cache through all orders."""
 
@@ -182,23 +184,38 @@ def model_autocorrelation(model: Autoregression, lags: int) -> Floats:
 
 
 def _autocorrelation(reflection: Floats, lags: int) -> Floats:
+    """The same from reflection coefficients, padded with zeros beyond each model's order."""
     series, width = reflection.shape
-    while width and not reflection[:, width - 1].any():
-        width -= 1
-    rho = np.zeros((series, lags + 1))
-    rho[:, 0] = 1.0
-    a = np.zeros((series, width))
+    order = np.where(reflection != 0, np.arange(1, width + 1), 0).max(axis=1, initial=0)
+    rho = np.empty((series, lags + 1))
+    least = -1
+    # most models are short: the recursion runs once for each width, over the models that need it
+    for most in (*WIDTHS, width):
+        rows = np.flatnonzero((order > least) & (order <= most))
+        if len(rows):
+            whole = len(rows) == series
+            rho[rows] = _durbin_levinson(reflection[:, :most] if whole else reflection[rows, :most], lags)
+        least = most
+    return rho
+
+
+def _durbin_levinson(reflection: Floats, lags: int) -> Floats:
+    """ρ_0 .. ρ_lags, the lags in rows while they are computed: each step then works on whole rows of memory."""
+    series, width = reflection.shape
+    rho = np.zeros((lags + 1, series))
+    rho[0] = 1.0
+    a = np.zeros((width, series))
     left = np.ones(series)
     for m in range(min(width, lags)):
         k = reflection[:, m]
-        rho[:, m + 1] = np.einsum("ij,ij->i", a[:, :m], rho[:, m:0:-1]) + k * left
-        a[:, :m] -= k[:, None] * a[:, :m][:, ::-1]
-        a[:, m] = k
+        rho[m + 1] = np.sum(a[:m] * rho[m:0:-1], axis=0) + k * left
+        a[:m] -= k * a[:m][::-1]
+        a[m] = k
         left *= 1 - k**2
-    backward = np.ascontiguousarray(a[:, ::-1])
+    backward = np.ascontiguousarray(a[::-1])
     for j in range(width + 1, lags + 1 if width else 0):
-        rho[:, j] = np.einsum("ij,ij->i", backward, rho[:, j - width : j])
-    return rho
+        np.sum(backward * rho[j - width : j], axis=0, out=rho[j])
+    return np.ascontiguousarray(rho.T)
 
 
 def impose_autocorrelation(model: Autoregression, lag: int, b: Floats | float) -> Autoregression:
@@ -220,10 +237,10 @@ def impose_autocorrelation(model: Autoregression, lag: int, b: Floats | float) -
     below_one = np.nextafter(1.0, 0.0)  # a series that is foretold without error leaves no variance to divide by
     reflection[:, :width] = np.clip(model.reflection, -below_one, below_one)
     before_change = np.prod(1 - reflection**2, axis=1)
-    moving = min(lag - 1, int(model.order.max(initial=0)), MOVING)
-    if moving:
-        places = np.append(np.arange(moving), lag - 1)
-        reflection[:, places] = _nearest(reflection[:, :lag], places, model.order, np.broadcast_to(b, series))
+    moving = np.minimum(model.order, min(lag - 1, MOVING))
+    rows = np.flatnonzero(moving)
+    if len(rows):
+        reflection[rows, :lag] = _nearest(reflection[rows, :lag], moving[rows], np.broadcast_to(b, series)[rows])
     below, left = _lag_below(reflection[:, :lag])
     reflection[:, lag - 1] = np.clip((b - below) / left, -STEEPEST, STEEPEST)
     return replace(
@@ -242,18 +259,26 @@ def _lag_below(reflection: Floats) -> tuple[Floats, Floats]:
     return rho[:, -1], np.prod(1 - before**2, axis=1)
 
 
-def _nearest(reflection: Floats, places: Ints, order: Ints, b: Floats) -> Floats:
-    """Reflection coefficients at ``places``, the last of them the lag, with ρ_k = b and the least change of angle.
+def _nearest(reflection: Floats, moving: Ints, b: Floats) -> Floats:
+    """Reflection coefficients with ρ_k = b, k their number, and the least change of angle of those that move.
 
     Gauss-Newton: with g the gradient of ρ_k, θ = θ_0 + g (b - ρ_k + g·(θ - θ_0))/(g·g).
+
+    Args:
+        reflection: shape (S, k).
+        moving: how many of the first ones move beside the last, shape (S,).
+        b: shape (S,).
     """
+    last = reflection.shape[1] - 1
+    places = np.append(np.arange(moving.max()), last)
+    moves = (places < moving[:, None]) | (places == last)
     start = np.arcsin(np.clip(reflection[:, places], -STEEPEST, STEEPEST))
     result = start.copy()
     steepest = np.arcsin(STEEPEST)
     left_over = np.arange(len(reflection))
     for _ in range(ROUNDS):
         angle, first = result[left_over], start[left_over]
-        rho, slope = _gradient(reflection[left_over], places, order[left_over], angle)
+        rho, slope = _gradient(reflection[left_over], places, moves[left_over], angle)
         gap = b[left_over] - rho + np.einsum("ij,ij->i", slope, angle - first)
         norm = np.maximum(np.einsum("ij,ij->i", slope, slope), np.finfo(np.float64).tiny)
         # a long step leaves the region where the gradient holds
@@ -262,23 +287,26 @@ def _nearest(reflection: Floats, places: Ints, order: Ints, b: Floats) -> Floats
         left_over = left_over[np.abs(result[left_over] - angle).max(axis=1) > STEP]
         if not len(left_over):
             break
-    return np.sin(result)
+    nearest = reflection.copy()
+    nearest[:, places] = np.where(moves, np.sin(result), reflection[:, places])
+    return nearest
 
 
-def _gradient(reflection: Floats, places: Ints, order: Ints, angle: Floats) -> tuple[Floats, Floats]:
-    """ρ_k and its derivatives by the angles of ``places``; those of orders that a model has not are 0."""
+def _gradient(reflection: Floats, places: Ints, moves: Bools, angle: Floats) -> tuple[Floats, Floats]:
+    """ρ_k and its derivatives by the angles of ``places``; 0 for those that do not move."""
     trial = reflection.copy()
-    trial[:, places] = np.sin(angle)
-    below, left = _lag_below(trial)
-    rho = below + trial[:, -1] * left
-    slope = np.empty_like(angle)
-    slope[:, -1] = np.cos(angle[:, -1]) * left
-    for column, place in enumerate(places[:-1]):
-        moved = trial.copy()
-        moved[:, place] = np.sin(angle[:, column] + STEP)
-        ahead, rest = _lag_below(moved)
-        slope[:, column] = np.where(place < order, (ahead + moved[:, -1] * rest - rho) / STEP, 0.0)
-    return rho, slope
+    trial[:, places] = np.where(moves, np.sin(angle), reflection[:, places])
+    rows, columns = np.nonzero(moves[:, :-1])
+    # the model itself and one for every angle that moves a little, in one recursion
+    moved = trial[rows]
+    moved[np.arange(len(rows)), places[columns]] = np.sin(angle[rows, columns] + STEP)
+    below, left = _lag_below(np.concatenate([trial, moved]))
+    rho = below + np.concatenate([trial[:, -1], moved[:, -1]]) * left
+    series = len(trial)
+    slope = np.zeros_like(angle)
+    slope[:, -1] = np.cos(angle[:, -1]) * left[:series]
+    slope[rows, columns] = (rho[series:] - rho[rows]) / STEP
+    return rho[:series], slope
 
 
 def innovations(x: object, model: Autoregression) -> Floats:

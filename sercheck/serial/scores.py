@@ -117,6 +117,26 @@ def ranking(history: object) -> Ranking:
     return Ranking(values, scores, own, counts, np.where(counts > 0, commonest, np.nan))
 
 
+def commonest_share(history: object) -> Floats:
+    """Share of the commonest value among the observed ones, as ``ranking`` tells it, without ordering every place.
+
+    Args:
+        history: one series or shape (S, N); NaN is missing and takes no part.
+
+    Returns:
+        Shape (S,); NaN for an empty history.
+    """
+    values = np.sort(as_series(history), axis=1)
+    counts = (~np.isnan(values)).sum(axis=1)
+    most = np.minimum(counts, 1)
+    tied = np.flatnonzero((values[:, 1:] == values[:, :-1]).any(axis=1))
+    if len(tied):
+        first, last = _ties(values[tied])
+        most[tied] = np.where(np.isnan(values[tied]), 0, last - first + 1).max(axis=1)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return np.where(counts > 0, most / counts, np.nan)
+
+
 def normal_scores(x: object, history: object) -> Floats:
     """Normal scores of ``x`` in ``history``: see ``ranking`` and ``Ranking.of``; shapes (S, n) and (S, N)."""
     return ranking(history).of(as_series(x))
