@@ -162,6 +162,7 @@ class Measure(ABC):
         of_missing: has something to say about a series of which the batch holds no value.
         exact: no sampling error, so that no false alarm comes by chance: its rules take no share of the alarm budget.
         weight: what a rule of this measure weighs in the alarm budget unless it says so itself.
+        compares_series: what it says of a series depends on the other series of the panel.
         bounds_in: numbers, or lengths in time that the rule file compiles to seconds.
         span: smallest and largest value that the observation can take; a literal bound must lie between them.
         Fields: pydantic model of its own fields (forbids unknown ones).
@@ -172,6 +173,7 @@ class Measure(ABC):
     of_missing: ClassVar[bool] = False
     exact: ClassVar[bool] = False
     weight: ClassVar[float] = 1.0
+    compares_series: ClassVar[bool] = False
     bounds_in: ClassVar[Literal["numbers", "time"]] = "numbers"
     span: ClassVar[tuple[float, float]] = (float("-inf"), float("inf"))
     Fields: ClassVar[type[BaseModel]]
