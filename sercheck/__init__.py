@@ -11,10 +11,11 @@ from typing import TYPE_CHECKING
 if TYPE_CHECKING:
     from sercheck import serial
     from sercheck.errors import BatchHeld, SercheckError
+    from sercheck.intake.databases import rows
     from sercheck.rulebook import load_rules
     from sercheck.verdict import Verdict, gate
 
-__all__ = ["BatchHeld", "SercheckError", "Verdict", "__version__", "gate", "load_rules", "serial"]
+__all__ = ["BatchHeld", "SercheckError", "Verdict", "__version__", "gate", "load_rules", "rows", "serial"]
 
 __version__ = "0.1.0"
 
@@ -24,6 +25,7 @@ _PLACES = {
     "Verdict": "sercheck.verdict",
     "gate": "sercheck.verdict",
     "load_rules": "sercheck.rulebook",
+    "rows": "sercheck.intake.databases",
 }
 
 

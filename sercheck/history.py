@@ -19,8 +19,8 @@ from sercheck.errors import BatchError
 from sercheck.grid import Grid
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.layout import Layout
-from sercheck.intake.since import both, compact, cut
-from sercheck.intake.stream import Source, open_feed
+from sercheck.intake.since import both, compact, window
+from sercheck.intake.stream import Source
 from sercheck.intake.stretch import Extent
 from sercheck.intake.zone import DAY, EARLIEST, LATEST, NOT_A_STAMP
 from sercheck.record import utc_text
@@ -28,15 +28,16 @@ from sercheck.rulebook.compiled import Rulebook
 from sercheck.rulebook.lengths import mean_seconds, seconds
 from sercheck.serial.arrays import Ints
 from sercheck.store.archive import Archive, Entry, Log, What
-from sercheck.store.database import store_folder
+from sercheck.store.where import archive_place
 
 if TYPE_CHECKING:
     import pandas as pd
 
+    from sercheck.intake.databases import DatabaseRows
     from sercheck.store.ledger import Ledger
     from sercheck.store.rows import BaselineRow, Settlement
 
-    Given = str | Path | Sequence[str | Path] | pd.DataFrame
+    Given = str | Path | Sequence[str | Path] | pd.DataFrame | DatabaseRows
 
 USUAL_DAYS = USUAL_BATCHES = 112
 """Days or batches of history, whichever is longer: ninety batches to compare with, and three weeks before them that
@@ -95,9 +96,9 @@ class Past:
 class Memory:
     """What a store knows of one feed."""
 
-    def __init__(self, book: Rulebook, layout: Layout, ledger: Ledger, folder: Path, *, writes: bool = True) -> None:
+    def __init__(self, book: Rulebook, layout: Layout, ledger: Ledger, at: Path | str, *, writes: bool = True) -> None:
         self.book, self.layout, self.ledger, self.writes = book, layout, ledger, writes
-        self.archive = Archive(folder, book.feed)
+        self.archive = Archive(at, book.feed)
         self.log: Log = self.archive.log()
 
     def prepare(self) -> None:
@@ -152,12 +153,8 @@ class Memory:
 def open_memory(
     book: Rulebook, layout: Layout, ledger: Ledger, store: str | Path | None, *, writes: bool = True
 ) -> Memory:
-    """The memory of a feed in a store: its ledger, and its archive in the store's folder.
-
-    A store that is itself a URL has no folder; the archive is then in the usual place.
-    """
-    named = None if store is None or "://" in str(store) else str(store)
-    return Memory(book, layout, ledger, store_folder(named) / "archive", writes=writes)
+    """The memory of a feed in a store: its ledger, and its archive in the store's folder or at its URL."""
+    return Memory(book, layout, ledger, archive_place(store), writes=writes)
 
 
 def find_past(
@@ -215,10 +212,10 @@ def _found(
     since = regime(memory)
     if given is not None or memory is None:
         named = given if given is not None else list(book.history) or None
-        source = None if named is None else open_feed(named, layout)
         first = max(teaches_from(book, cadence, extent, default=given is None), since or EARLIEST)
         before = extent.first if given is None else LATEST
-        return Past(cut(source, cadence, first, before), held=_held(memory), notes=regime_note(since))
+        source = None if named is None else window(named, layout, cadence, first, before)
+        return Past(source, held=_held(memory), notes=regime_note(since))
     return _remembered(memory, cadence, extent, since, judged_at)
 
 
@@ -278,7 +275,7 @@ def _joined(memory: Memory, kept: Source | None, cadence: Cadence, between: tupl
     begins = None if kept is None else kept.extent(cadence).first
     if begins is not None and begins <= between[0] + DAY:
         return kept
-    older = cut(open_feed(list(book.history), layout), cadence, *between)
+    older = window(list(book.history), layout, cadence, *between)
     if older is None or kept is None or begins is None:
         return older or kept
     rows = older.rows()

@@ -25,7 +25,9 @@ from sercheck.verdict import layout_of
 if TYPE_CHECKING:
     import pandas as pd
 
-    Given = str | Path | Sequence[str | Path] | pd.DataFrame
+    from sercheck.intake.databases import DatabaseRows
+
+    Given = str | Path | Sequence[str | Path] | pd.DataFrame | DatabaseRows
 
 
 @dataclass(frozen=True)

@@ -32,10 +32,11 @@ from sercheck.sketching import Sketcher
 if TYPE_CHECKING:
     import pandas as pd
 
+    from sercheck.intake.databases import DatabaseRows
     from sercheck.store.ledger import Ledger
     from sercheck.store.rows import Settlement
 
-    Rows = str | Path | Sequence[str | Path] | pd.DataFrame
+    Rows = str | Path | Sequence[str | Path] | pd.DataFrame | DatabaseRows
 
 EARLIEST, LATEST = 1678, 2261
 """Whole years that nanoseconds since 1970 reach in 64 bits."""
@@ -58,9 +59,9 @@ class Verdict:
         expected: most false holds a healthy feed has on average, and in which period; None when the rule file does not
             say how often a batch comes.
         arithmetic: how the alarm budget becomes the risk of each rule, a sentence each.
-    """
         sketches: pictures of the rules that failed, as numbers.
         rules: text of the rule file.
+    """
 
     decision: str
     batch_id: str
@@ -73,9 +74,9 @@ class Verdict:
     timezone: str = "UTC"
     expected: tuple[float, str] | None = None
     arithmetic: tuple[str, ...] = ()
-
     sketches: tuple[Sketch, ...] = ()
     rules: str = ""
+
     @property
     def counts(self) -> dict[str, int]:
         """Records by outcome."""
@@ -182,7 +183,8 @@ def gate(
 
     Args:
         rules: a compiled rule file (``load_rules``) or its path.
-        batch: the newest rows: a DataFrame, a path, several, or a glob.
+        batch: the newest rows: a DataFrame, a path, several, a glob, ``db:NAME?table=...``, or ``rows`` of an open
+            connection.
         history: rows let in before, likewise; default what the store's archive holds, else what the rule file names.
         as_of: the clock to judge by, RFC 3339 or ISO 8601 (UTC when it has no offset); default now.
         store: folder of ledger and archive, which the judgement and the rows are kept in; default none are kept.
@@ -209,15 +211,15 @@ def gate(
     counted = Counted()
     cadence = feed_cadence(source, past.source, layout)
     run = Run(book, cadence, judged_at, past.rests)
+    sketcher = Sketcher(book)
     seen: list[Seen] = []
     notes: list[str] = [*past.notes]
-    sketcher = Sketcher(book)
     for grid in feed_grids(source, past.source, layout):
         counted.add(grid)
         block, said = measure_block(past.marked(grid), run)
+        sketcher.watch(grid, block)
         seen += block
         notes += said
-        sketcher.watch(grid, block)
     facts = counted.facts()
     common = Common(
         feed=book.feed,
@@ -244,10 +246,10 @@ def gate(
         timezone=book.timezone,
         expected=expected_false_holds(book),
         arithmetic=tuple(explain(book)),
-    )
-    if kept_in is None or not keep:
         sketches=sketcher.sketches(judged),
         rules=book.text,
+    )
+    if kept_in is None or not keep:
         return verdict
     verdict = _kept(verdict, common, book, kept_in)
     settled = kept_in.batch(verdict.batch_id).settled

@@ -1,13 +1,8 @@
 from __future__ import annotations
 
 import os
-import shutil
 import sqlite3
-import subprocess
-import tempfile
-import time
 from concurrent.futures import ThreadPoolExecutor
-from pathlib import Path
 
 import pytest
 from disks import make_read_only, small_disk, somebody_else
@@ -236,36 +231,6 @@ def _column(store, query: str) -> set[str]:
     found = {row[0] for row in other.execute(query)}
     other.close()
     return found
-
-
-@pytest.fixture(scope="module")
-def running_server():
-    """The address of a PostgreSQL server of our own, where its programs and the driver are installed."""
-    pytest.importorskip("psycopg", reason="the driver of PostgreSQL is not installed")
-    program = shutil.which("postgres")
-    if program is None or os.getuid() != 0:
-        pytest.skip("no PostgreSQL here, or no right to start it as another user")
-    programs = Path(program).resolve().parent
-    with tempfile.TemporaryDirectory() as data:
-        shutil.chown(data, "postgres")
-        user = {"user": "postgres", "cwd": "/", "env": {"LC_ALL": "C.UTF-8"}, "stdout": subprocess.DEVNULL}
-        subprocess.run([programs / "initdb", "-D", data, "-A", "trust", "-N", "-E", "UTF8"], check=True, **user)
-        options = f"-c listen_addresses= -c unix_socket_directories={data} -c fsync=off"
-        log = ["-l", f"{data}/log", "-o", options]
-        subprocess.run([programs / "pg_ctl", "-D", data, "-w", *log, "start"], check=True, **user)
-        yield data
-        subprocess.run([programs / "pg_ctl", "-D", data, "-m", "immediate", "stop"], check=True, **user)
-
-
-@pytest.fixture
-def server(running_server):
-    """The URL of an empty database."""
-    import psycopg
-
-    name = f"test_{time.monotonic_ns()}"
-    with psycopg.connect(host=running_server, user="postgres", autocommit=True) as connection:
-        connection.execute(f"CREATE DATABASE {name}")
-    return f"postgresql+psycopg://postgres@/{name}?host={running_server}"
 
 
 def test_a_server_keeps_the_ledger_too(server):

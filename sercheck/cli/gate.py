@@ -13,7 +13,7 @@ from sercheck.cli.say import say
 @click.command("gate")
 @click.argument("rules", type=click.Path())
 @click.argument("batch", type=click.Path(), nargs=-1, required=True)
-@click.option("--history", multiple=True, metavar="PATH", help="Rows let in before: files or a glob.")
+@click.option("--history", multiple=True, metavar="PATH", help="Rows let in before: files, a glob or a source.")
 @click.option(
     "--records", metavar="FILE", help="Write the records: .jsonl, .csv or .parquet; - is JSON lines on stdout."
 )
@@ -35,11 +35,12 @@ def command(
     no_keep: bool,
     form: str,
 ) -> None:
-    """Judge BATCH (files or globs) by the rule file RULES.
+    """Judge BATCH (files, globs or db:NAME?table=TABLE) by the rule file RULES.
 
     Ends with 0 when the batch is released, 1 when it is held, 2 in trouble.
     """
     from sercheck.cli.screen import answer
+    from sercheck.intake.databases import is_source
     from sercheck.outputs import check_place, move_batch
     from sercheck.record import check_suffix
     from sercheck.verdict import gate
@@ -51,6 +52,8 @@ def command(
         check_place(records)
     for folder in filter(None, (released_to, held_to)):
         check_place(folder, folder=True)
+    if (released_to or held_to) and any(map(is_source, batch)):
+        raise click.UsageError("the rows of a database have no file that --released-to or --held-to could move")
     verdict = gate(rules, list(batch), list(history) or None, as_of=as_of, store=store, keep=not no_keep)
     if records:
         verdict.table.write(records)

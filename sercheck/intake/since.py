@@ -4,15 +4,26 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 
 from sercheck.intake.calendar import Cadence
+from sercheck.intake.layout import Layout
 from sercheck.intake.rows import Fingerprint, Rows
-from sercheck.intake.stream import MemorySource, ReadForFingerprint, Source
+from sercheck.intake.stream import MemorySource, ReadForFingerprint, Source, open_feed
 from sercheck.intake.stretch import Extent
 from sercheck.intake.zone import EARLIEST, LATEST
 from sercheck.serial.arrays import Ints
+
+if TYPE_CHECKING:
+    from sercheck.intake.stream import Given
+
+
+def window(given: Given, layout: Layout, cadence: Cadence, first: int, before: int = LATEST) -> Source | None:
+    """The rows of a feed in a window (see ``cut``); a database is asked for no more than it."""
+    whole = first <= EARLIEST and before >= LATEST
+    return cut(open_feed(given, layout, between=None if whole else (first, before)), cadence, first, before)
 
 
 def cut(source: Source | None, cadence: Cadence, first: int, before: int = LATEST) -> Source | None:
@@ -29,7 +40,7 @@ def cut(source: Source | None, cadence: Cadence, first: int, before: int = LATES
     if isinstance(source, MemorySource):
         rows = _between(source.rows(), first, before)
         if len(rows) == len(source.rows()):
-            return source
+            return source if len(rows) else None
         return MemorySource(rows, source.layout, source.paths) if len(rows) else None
     whole = source.extent(cadence)
     return _Cut(source, first, before) if whole.last >= first and whole.first < before else None

@@ -11,8 +11,9 @@ import numpy as np
 
 from sercheck.grid import Grid
 from sercheck.intake.assemble import BLOCK_CELLS, grids, planned_grids
-from sercheck.intake.build import must_have_stamps, to_rows
+from sercheck.intake.build import Chunk, must_have_stamps, to_rows
 from sercheck.intake.calendar import Cadence
+from sercheck.intake.databases import DatabaseRows, is_source, named, read_rows
 from sercheck.intake.files import read_file
 from sercheck.intake.frames import frame_chunk
 from sercheck.intake.layout import Layout
@@ -27,7 +28,7 @@ from sercheck.serial.arrays import Ints
 if TYPE_CHECKING:
     import pandas as pd
 
-    Given = str | Path | Sequence[str | Path] | pd.DataFrame
+    Given = str | Path | Sequence[str | Path] | pd.DataFrame | DatabaseRows
 
 
 class Source(ABC):
@@ -136,20 +137,26 @@ class StreamSource(ReadForFingerprint):
         return to_rows(self._files.chunks(), self._files.cadence)
 
 
-def open_feed(given: Given, layout: Layout, block_rows: int = BLOCK_ROWS) -> Source:
+def open_feed(
+    given: Given, layout: Layout, block_rows: int = BLOCK_ROWS, between: tuple[int, int] | None = None
+) -> Source:
     """Open a feed.
 
     Args:
-        given: a file, several, a glob, or a DataFrame. Parquet of more than ``block_rows`` rows whose row groups are
+        given: a file, several, a glob, a DataFrame, or rows of a database (``db:NAME?table=...``,
+            ``sercheck.rows``). Parquet of more than ``block_rows`` rows whose row groups are
             sorted by key is streamed; everything else is read into compact columns (20 bytes a row and 8 for every
             further value column).
         layout: the feed's columns and clocks.
         block_rows: rows of a streamed block, about.
+        between: a window, nanoseconds UTC, that a database is asked for; what comes may be more, and files come whole.
 
     Raises:
         BatchError: the feed cannot be read or placed in time; the sentence says where and why.
     """
     cadence = Cadence(layout.every, layout.timezone)
+    if isinstance(given, DatabaseRows) or any(map(is_source, _each(given))):
+        return _with_databases(given, layout, cadence, between)
     if not isinstance(given, str | Path | Sequence):
         rows = to_rows([frame_chunk(given, layout, cadence)], cadence)
         must_have_stamps(rows, layout, "DataFrame")
@@ -163,6 +170,30 @@ def open_feed(given: Given, layout: Layout, block_rows: int = BLOCK_ROWS) -> Sou
     rows = to_rows([chunk for path in files for chunk in read_file(path, layout, cadence)], cadence)
     must_have_stamps(rows, layout, paths[0] if len(paths) == 1 else f"{paths[0]} and {len(paths) - 1} more")
     return MemorySource(rows, layout, paths)
+
+
+def _each(given: Given) -> list[str | Path]:
+    return [given] if isinstance(given, str | Path) else list(given) if isinstance(given, list | tuple) else []
+
+
+def _with_databases(given: Given, layout: Layout, cadence: Cadence, between: tuple[int, int] | None) -> Source:
+    """Rows of databases, and of files where both are named, in the order they are named."""
+    chunks: list[Chunk] = []
+    paths: list[str] = []
+    everything: list[str | Path | DatabaseRows] = [given] if isinstance(given, DatabaseRows) else [*_each(given)]
+    for one in everything:
+        if isinstance(one, DatabaseRows) or is_source(one):
+            asked = one if isinstance(one, DatabaseRows) else named(str(one))
+            chunks += read_rows(asked, layout, cadence, between)
+            paths.append(asked.place)
+        else:
+            files = expand([one])
+            chunks += [chunk for path in files for chunk in read_file(path, layout, cadence)]
+            paths += map(str, files)
+    rows = to_rows(chunks, cadence)
+    if between is None:
+        must_have_stamps(rows, layout, ", ".join(paths))
+    return MemorySource(rows, layout, tuple(paths))
 
 
 def feed_cadence(batch: Source, history: Source | None, layout: Layout) -> Cadence:
