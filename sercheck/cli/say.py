@@ -1,4 +1,4 @@
-"""Where text for people goes, and how it is set; depends on click only."""
+"""Where text for people goes, and how it is set; depends on click and ``plain``."""
 
 from __future__ import annotations
 
@@ -8,6 +8,9 @@ import textwrap
 
 import click
 
+from sercheck.plain import plain
+
+__all__ = ["WIDTH", "folded", "plain", "say", "strong"]
 WIDTH = 100
 """Columns of a line at most (common practice: two windows side by side on a wide screen)."""
 
@@ -27,9 +30,3 @@ def strong(text: str, *, good: bool) -> str:
 def folded(text: str, first: str = "", rest: str = "") -> str:
     """Text broken into lines of at most ``WIDTH`` columns."""
     return textwrap.fill(text, WIDTH, initial_indent=first, subsequent_indent=rest, break_on_hyphens=False)
-
-
-def plain(text: str, most: int = 200) -> str:
-    """Text from a feed or rule file made safe for a terminal: no control characters, not endless."""
-    shown = "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in text[: most + 1])
-    return shown if len(shown) <= most else shown[: most - 1] + "…"

@@ -33,10 +33,10 @@ from sercheck.store.queries import (
     COUNT_OF,
     batches_where,
     begins_with,
-    failed_rules_of,
     judgements_of,
     records_where,
 )
+    rules_with,
 from sercheck.store.rows import (
     BaselineRow,
     BatchRow,
@@ -231,15 +231,15 @@ class Ledger:
         with self._database.reading() as connection:
             return sketches_of(connection, sought)
 
-    def failed_rules(self, judgement_ids: Sequence[str]) -> dict[str, dict[str, int]]:
-        """For each judgement the rules that failed, and on how many records."""
+    def rules_with(self, judgement_ids: Sequence[str], outcome: str) -> dict[str, dict[str, int]]:
+        """For each judgement the rules that have records of this outcome, and how many."""
         if not self._there():
             return {}
         found: dict[str, dict[str, int]] = {}
         with self._database.reading() as connection:
             for first in range(0, len(judgement_ids), ASKED):
                 asked = list(judgement_ids[first : first + ASKED])
-                for judgement, rule, number in connection.execute(failed_rules_of(asked)):
+                for judgement, rule, number in connection.execute(rules_with(asked, outcome)):
                     found.setdefault(judgement, {})[rule] = number
         return found
 

@@ -65,14 +65,14 @@ def judgements_of(batch_ids: list[str]) -> Select[Any]:
     )
 
 
-def failed_rules_of(judgement_ids: list[str]) -> Select[Any]:
-    """Judgement, rule and number of records of every rule that failed."""
+def rules_with(judgement_ids: list[str], outcome: str) -> Select[Any]:
+    """Judgement, rule and number of its records of this outcome."""
     from sqlalchemy import func, select
 
     records = tables().records
     return (
         select(records.c.judgement_id, records.c.rule, func.count())
-        .where(records.c.judgement_id.in_(judgement_ids), records.c.outcome == "fail")
+        .where(records.c.judgement_id.in_(judgement_ids), records.c.outcome == outcome)
         .group_by(records.c.judgement_id, records.c.rule)
     )
 

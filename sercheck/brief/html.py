@@ -1,0 +1,35 @@
+"""A brief as one self-contained page; depends on the plots and the page's templates."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from sercheck.brief import plots
+from sercheck.brief.view import FIGURES, Brief, Failed
+from sercheck.brief.words import name, zone_of
+from sercheck.page import render
+
+MOST_PLOTS = 12
+"""Rules with a plot; each takes some 15 kB, and the page is to stay far below 500 kB."""
+
+
+def page(brief: Brief, way: Sequence[tuple[str, str]] = ()) -> str:
+    """The page.
+
+    Args:
+        brief: what it says.
+        way: texts and relative links that lead back, on a page of a folder of pages.
+    """
+    zone = zone_of(brief.zone)
+    shown: list[tuple[Failed, object, str]] = []
+    for place, rule in enumerate(brief.failed):
+        if rule.sketch is None or place >= MOST_PLOTS:
+            shown.append((rule, "", ""))
+        else:
+            shown.append((rule, *plots.plot(rule, f"plot{place}", zone)))
+    row, caption = plots.run_chart(brief.last, "row") if len(brief.last) > 1 else ("", "")
+    guides = [rule for rule in brief.failed if rule.runbook] or [r for r in brief.failed if r.holds and r.about]
+    return render(
+        "brief.html", brief=brief, shown=shown, row=row, row_caption=caption, heads=FIGURES, way=way,
+        guides=guides[:6], series_name=name,
+    )  # fmt: skip
