@@ -35,7 +35,8 @@ ALLOWED: dict[str, set[str]] = {
     "record": WRITING,
     "formats": WRITING,
     "outputs": WRITING,
-    "store": WRITING | {"store"},
+    "episodes": {"errors", "record"},
+    "store": WRITING | {"store", "episodes"},
 }
 """Rooms and what of ours they may import; a room that is not named here may import anything but ``cli``."""
 

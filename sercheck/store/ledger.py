@@ -8,16 +8,16 @@ that judge the same batch at once one decides.
 from __future__ import annotations
 
 import json
-from collections.abc import Sequence
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
 from dataclasses import fields, replace
-from datetime import UTC, datetime
-from itertools import count, islice
 from types import TracebackType
 from typing import TYPE_CHECKING, Any, Self
 
 from sercheck.errors import StoreError, UsageError
-from sercheck.record import COLUMNS, INTEGERS, NUMBERS, Records, storable
+from sercheck.record import COLUMNS, INTEGERS, NUMBERS, Records
 from sercheck.store.database import ConflictError, Database, ledger_url
+from sercheck.store.judgements import BLOCK, put_batch, put_judgement, put_records
 from sercheck.store.memory import (
     facts_of,
     newest_baseline,
@@ -29,6 +29,7 @@ from sercheck.store.memory import (
     sketches_of,
 )
 from sercheck.store.migrations import migrate
+from sercheck.store.outbox import put_messages
 from sercheck.store.queries import (
     COUNT_OF,
     batches_where,
@@ -47,13 +48,12 @@ from sercheck.store.rows import (
     Settlement,
     judgement_id,
 )
-from sercheck.store.tables import BATCH_COLUMNS, RECORD_COLUMNS, tables
+from sercheck.store.standings import catch_up, put_standings
+from sercheck.store.tables import BATCH_COLUMNS, tables
 
 if TYPE_CHECKING:
     from sqlalchemy import Connection, Result, RowMapping
 
-BLOCK = 5_000
-"""Records sent to or fetched from the database at a time (a few megabytes)."""
 ASKED = 500
 """Ids asked for in one query (databases allow 999 parameters and more)."""
 _REPEATING = frozenset(COLUMNS) - INTEGERS - NUMBERS - {"record_id"}
@@ -101,6 +101,7 @@ class Ledger:
         if not self._ready:
             self._database.create()
             migrate(self._database)
+            catch_up(self._database)
             self._ready = True
 
     def find(self, batch_id: str, rules_fingerprint: str, baseline_id: str | None) -> Judgement | None:
@@ -110,8 +111,18 @@ class Ledger:
         with self._database.reading() as connection:
             return _find(connection, judgement_id(batch_id, rules_fingerprint, baseline_id))
 
-    def add(self, batch: BatchRow, judgement: JudgementRow, records: Records, sketches: str = "") -> Judgement:
+    def add(
+        self,
+        batch: BatchRow,
+        judgement: JudgementRow,
+        records: Records,
+        sketches: str = "",
+        tell: Mapping[str, Sequence[str]] | None = None,
+    ) -> Judgement:
         """Store a judgement with its batch, records and sketches, all or nothing, and give it as stored.
+
+        In the same transaction the feed's episodes are brought up to date, and a message waits for each desk that
+        ``tell`` (desks by rule) names for a rule whose episode opened, got worse, spread or closed.
 
         The same judgement stored before, by this or another process, is left alone and returned: look at its decision.
 
@@ -124,24 +135,33 @@ class Ledger:
             raise ValueError(f"batch {batch.batch_id} got a judgement or records of {others - {batch.batch_id}}")
         self.prepare()
         try:
-            return self._add(batch, judgement, records, sketches)
+            return self._add(batch, judgement, records, sketches, tell or {})
         except ConflictError:  # another process stored the same batch meanwhile: now its rows are seen
             try:
-                return self._add(batch, judgement, records, sketches)
+                return self._add(batch, judgement, records, sketches, tell or {})
             except ConflictError as conflict:
                 raise StoreError(
                     self.place, f"two records of batch {batch.batch_id} have one id; nothing was stored",
                     "one id for one rule, column, series and lag", "Please report it.",
                 ) from conflict  # fmt: skip
 
-    def _add(self, batch: BatchRow, judgement: JudgementRow, records: Records, sketches: str) -> Judgement:
+    def _add(
+        self,
+        batch: BatchRow,
+        judgement: JudgementRow,
+        records: Records,
+        sketches: str,
+        tell: Mapping[str, Sequence[str]],
+    ) -> Judgement:
         with self._database.writing() as connection:
             stored = _find(connection, judgement.judgement_id)
             if stored is None:
-                _put_batch(connection, batch, self.place)
-                stored = _put_judgement(connection, judgement, records)
-                _put_records(connection, records, judgement.judgement_id)
+                put_batch(connection, batch, self.place)
+                stored = put_judgement(connection, judgement, records)
+                put_records(connection, records, judgement.judgement_id)
                 put_sketches(connection, judgement.judgement_id, sketches)
+                changes = put_standings(connection, batch, stored, records)
+                put_messages(connection, batch, stored, changes, tell)
         return stored
 
     def records(self, wanted: str | Filters) -> Records:
@@ -243,6 +263,22 @@ class Ledger:
                     found.setdefault(judgement, {})[rule] = number
         return found
 
+    @contextmanager
+    def looking(self) -> Iterator[Connection | None]:
+        """A transaction that only looks, for the queries of this folder's other files; None where no ledger is."""
+        if not self._there():
+            yield None
+            return
+        with self._database.reading() as connection:
+            yield connection
+
+    @contextmanager
+    def changing(self) -> Iterator[Connection]:
+        """A transaction that writes, for the statements of this folder's other files."""
+        self.prepare()
+        with self._database.writing() as connection:
+            yield connection
+
     def _there(self) -> bool:
         """A ledger exists; it is brought up to date at the first look."""
         if not self._database.exists:
@@ -272,52 +308,6 @@ def _find(connection: Connection, sought: str) -> Judgement | None:
     judgements = tables().judgements
     row = connection.execute(select(*judgements.c).where(judgements.c.judgement_id == sought)).mappings().first()
     return None if row is None else _judgement(row)
-
-
-def _put_batch(connection: Connection, batch: BatchRow, place: str) -> None:
-    """A new batch, or one more set of files that a known one was read from."""
-    from sqlalchemy import insert, select, update
-
-    batches = tables().batches
-    received = [storable(path) for path in batch.received]
-    row = connection.execute(select(*batches.c).where(batches.c.batch_id == batch.batch_id)).mappings().first()
-    if row is None:
-        values = {name: getattr(batch, name) for name in BATCH_COLUMNS}
-        values |= {"feed": storable(batch.feed), "received": json.dumps(received, ensure_ascii=False)}
-        connection.execute(insert(batches).values(values))
-        return
-    if row["fingerprint"] != batch.fingerprint:
-        raise StoreError(place, f"batch {batch.batch_id} is there with other content", "one id for one content")
-    known = json.loads(row["received"])
-    if not set(received) <= set(known):
-        merged = json.dumps(list(dict.fromkeys([*known, *received])), ensure_ascii=False)
-        connection.execute(update(batches).where(batches.c.batch_id == batch.batch_id).values(received=merged))
-
-
-def _put_judgement(connection: Connection, judgement: JudgementRow, records: Records) -> Judgement:
-    from sqlalchemy import insert
-
-    given = {each.name: getattr(judgement, each.name) for each in fields(JudgementRow)}
-    given["rules"] = storable(judgement.rules)
-    now = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%S.%fZ")
-    stored = Judgement(**given, stored_at=now, counts=records.counts())
-    counted = {COUNT_OF[outcome]: number for outcome, number in stored.counts.items()}
-    values = {"judgement_id": judgement.judgement_id, **given, "stored_at": now, **counted}
-    connection.execute(insert(tables().judgements).values(values))
-    return stored
-
-
-def _put_records(connection: Connection, records: Records, sought: str) -> None:
-    from sqlalchemy import insert
-
-    statement = insert(tables().records)
-    text = str(statement.compile(dialect=connection.dialect))
-    rows = ((*values, sought, place) for values, place in zip(records.tuples(), count(), strict=False))
-    while block := list(islice(rows, BLOCK)):
-        if connection.dialect.positional:  # the driver takes our tuples as they are: half the time
-            connection.exec_driver_sql(text, block)
-        else:
-            connection.execute(statement, [dict(zip(RECORD_COLUMNS, row, strict=True)) for row in block])
 
 
 def _gathered(result: Result[Any]) -> Records:

@@ -117,10 +117,64 @@ def _sketches(connection: Connection) -> None:
     meta.create_all(connection, [sketches], checkfirst=False)
 
 
+def _episodes(connection: Connection) -> None:
+    from sqlalchemy import BigInteger, Column, Double, ForeignKey, Index, MetaData, String, Table, Text, text
+
+    meta = MetaData()
+    Table("judgements", meta, Column("judgement_id", String(64), primary_key=True))  # there already; named for the key
+    standings = Table(
+        "standings",
+        meta,
+        Column("judgement_id", String(64), ForeignKey("judgements.judgement_id"), primary_key=True),
+        Column("place", BigInteger, primary_key=True, autoincrement=False),
+        Column("batch_id", String(255), nullable=False),
+        *(Column(name, Text, nullable=False) for name in ("feed", "rule", "at", "received_at", "stored_at", "state")),
+        *(Column(name, BigInteger, nullable=False) for name in ("passed", "failed", "undecided", "series")),
+        *(Column(name, Text) for name in ("action", "record_id")),
+        *(Column(name, Double) for name in ("p_value", "beyond")),
+        Column("episode_id", String(64)),
+        Index("standings_of_batch", "batch_id"),
+        Index("standings_of_episode", "episode_id"),
+    )
+    episodes = Table(
+        "episodes",
+        meta,
+        Column("episode_id", String(64), primary_key=True),
+        *(Column(name, Text, nullable=False) for name in ("feed", "rule", "state")),
+        Column("action", Text),
+        *(Column(name, Text, nullable=False) for name in ("started", "first_at", "last_at")),
+        *(Column(name, Text) for name in ("closed_at", "closed_as", "closed_by")),
+        *(Column(name, Text, nullable=False) for name in ("first_batch", "last_batch")),
+        *(Column(name, BigInteger, nullable=False) for name in ("batches", "series", "widest")),
+        Column("worst", Text),
+        *(Column(name, Double) for name in ("p_value", "beyond")),
+    )
+    messages = Table(
+        "messages",
+        meta,
+        Column("message_id", String(64), primary_key=True),
+        Column("judgement_id", String(64), ForeignKey("judgements.judgement_id"), nullable=False),
+        *(Column(name, Text, nullable=False) for name in ("batch_id", "feed", "desk", "changes", "made_at")),
+        Column("state", String(32), nullable=False),
+        Column("attempts", BigInteger, nullable=False),
+        *(Column(name, Text) for name in ("next_at", "claimed_by", "claimed_at", "trouble", "sent_at")),
+        Index("messages_by_state", "state"),
+    )
+    due = Table("standings_due", meta, Column("judgement_id", String(64), primary_key=True))
+    meta.create_all(connection, [standings, episodes, messages, due], checkfirst=False)
+    connection.execute(text("INSERT INTO standings_due SELECT judgement_id FROM judgements"))
+    if connection.dialect.name in ("sqlite", "postgresql"):  # others want a length, or know no partial index
+        connection.execute(text("CREATE INDEX standings_of_feed ON standings (feed, at)"))
+        connection.execute(text("CREATE INDEX episodes_of_feed ON episodes (feed)"))
+        failed = "CREATE INDEX records_that_failed ON records (judgement_id) WHERE outcome = 'fail'"
+        connection.execute(text(failed))
+
+
 MIGRATIONS: tuple[Migration, ...] = (
     Migration("001 batches, judgements and records", _first_tables),
     Migration("002 baselines and settlements", _memory),
     Migration("003 sketches", _sketches),
+    Migration("004 episodes and messages", _episodes),
 )
 
 

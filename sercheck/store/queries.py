@@ -129,7 +129,7 @@ def _has_record(wanted: Filters) -> ColumnElement[bool]:
     return select(records.c.record_id).where(mine, *_of_record(wanted)).correlate(judgements).exists()
 
 
-def _named(column: ColumnElement[Any], pattern: str) -> ColumnElement[bool]:
+def named(column: ColumnElement[Any], pattern: str) -> ColumnElement[bool]:
     """Equal to the text, or like the pattern where it holds ``*`` or ``?``."""
     if not set("*?") & set(pattern):
         return column == pattern

@@ -26,8 +26,23 @@ SETTLEMENT_COLUMNS = (
     "settlement_id", "batch_id", "feed", "what", "settled_by", "because", "settled_at", "relearn_from",
 )  # fmt: skip
 SKETCH_COLUMNS = ("judgement_id", "sketches")
+STANDING_COLUMNS = (
+    "judgement_id", "place", "batch_id", "feed", "rule", "at", "received_at", "stored_at", "state", "passed", "failed",
+    "undecided", "series", "action", "record_id", "p_value", "beyond", "episode_id",
+)  # fmt: skip
+EPISODE_COLUMNS = (
+    "episode_id", "feed", "rule", "state", "action", "started", "first_at", "last_at", "closed_at", "closed_as",
+    "closed_by", "first_batch", "last_batch", "batches", "series", "widest", "worst", "p_value", "beyond",
+)  # fmt: skip
+MESSAGE_COLUMNS = (
+    "message_id", "judgement_id", "batch_id", "feed", "desk", "changes", "made_at", "state", "attempts",
+    "next_at", "claimed_by", "claimed_at", "trouble", "sent_at",
+)  # fmt: skip
 RECORD_COLUMNS = (*COLUMNS, "judgement_id", "place")
 """``place`` is the position of a record in its judgement."""
+
+
+COUNTS = frozenset({"rows", "series", "place", "passed", "failed", "undecided", "batches", "widest", "attempts"})
 
 
 class Tables(NamedTuple):
@@ -39,6 +54,9 @@ class Tables(NamedTuple):
     baselines: TableClause
     settlements: TableClause
     sketches: TableClause
+    standings: TableClause
+    episodes: TableClause
+    messages: TableClause
 
 
 @cache
@@ -49,7 +67,7 @@ def tables() -> Tables:
     def kind(name: str) -> BigInteger | Double[float] | Text:
         if name in NUMBERS:
             return Double()
-        return BigInteger() if name in INTEGERS or name in {"rows", "series", "place"} else Text()
+        return BigInteger() if name in INTEGERS or name in COUNTS else Text()
 
     texts = {"series"}  # a number of series in batches, a key in records
     return Tables(
@@ -59,4 +77,7 @@ def tables() -> Tables:
         table("baselines", *(column(name) for name in BASELINE_COLUMNS)),
         table("settlements", *(column(name) for name in SETTLEMENT_COLUMNS)),
         table("sketches", *(column(name) for name in SKETCH_COLUMNS)),
+        table("standings", *(column(name, Double() if name == "beyond" else kind(name)) for name in STANDING_COLUMNS)),
+        table("episodes", *(column(name, Double() if name == "beyond" else kind(name)) for name in EPISODE_COLUMNS)),
+        table("messages", *(column(name, kind(name)) for name in MESSAGE_COLUMNS)),
     )
