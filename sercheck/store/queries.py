@@ -95,7 +95,7 @@ def _of_batch(wanted: Filters) -> list[ColumnElement[bool]]:
     batches, judgements = tables()[:2]
     conditions = []
     if wanted.feed:
-        conditions.append(_named(batches.c.feed, wanted.feed))
+        conditions.append(named(batches.c.feed, wanted.feed))
     if wanted.since:
         conditions.append(_time() >= wanted.since)
     if wanted.until:
@@ -115,9 +115,9 @@ def _of_record(wanted: Filters) -> list[ColumnElement[bool]]:
     if wanted.outcome:
         conditions.append(records.c.outcome == wanted.outcome)
     if wanted.rule:
-        conditions.append(_named(records.c.rule, wanted.rule))
+        conditions.append(named(records.c.rule, wanted.rule))
     if wanted.series:
-        conditions.append(_named(records.c.series, wanted.series))
+        conditions.append(named(records.c.series, wanted.series))
     return conditions
 
 
