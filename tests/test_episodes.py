@@ -13,6 +13,7 @@ from record_samples import batch, judgement, records
 
 from sercheck.episodes import Step, change_by, for_desks, runs_around, standings
 from sercheck.store import migrations
+from sercheck.store.digest import RuleNoise, digest
 from sercheck.store.episodes import (
     EpisodeFilters,
     batches_of,
@@ -305,3 +306,27 @@ def test_a_batch_without_rows_is_placed_by_its_judgement(ledger):
     ledger.add(come, judgement("heat-01"), records(2, "heat-01", feed="heat", outcome="fail", action="hold"))
     (found,) = episodes(ledger)
     assert found.started == found.first_at == "2026-01-13T06:00:00Z"
+
+
+def test_the_digest_counts_feeds_settlements_and_noisy_rules(ledger):
+    """All feeds of a stretch of days: what was held, what people said of it, which rule failed how often."""
+    for day, word in enumerate(("fail", "pass", "fail", "fail"), 1):
+        store(ledger, day, word, feed="heat")
+    store(ledger, 2, "pass", feed="water")
+    for day, what in ((1, "released"), (3, "released"), (2, "discarded")):
+        ledger.settle(Settlement(f"heat-{day:02d}", "heat", what, "Ana", "seen", "2026-02-01T00:00:00Z"))
+    told_all = digest(ledger)
+    heat, water = told_all.feeds
+    assert (heat.batches, heat.released, heat.held) == (4, 1, 3)
+    assert (heat.false_holds, heat.true_holds, heat.unsettled, heat.slipped) == (2, 0, 1, 1)
+    assert (heat.last_batch, heat.last_decision, heat.opened, heat.closed) == ("heat-04", "held", 2, 1)
+    assert (water.feed, water.held, water.episodes) == ("water", 0, ())
+    assert told_all.noisiest == (RuleNoise("heat", RULE, 3, 4, 2, 0, 2),)
+    assert told_all.untold == (("heat-desk", 3),)
+    few = digest(ledger, since="2026-01-03", feed="h*")
+    assert [(each.feed, each.batches, each.opened, each.closed) for each in few.feeds] == [("heat", 2, 1, 0)]
+
+
+def test_the_digest_of_no_ledger_is_empty(ledger):
+    """Looking where nothing was judged makes nothing and finds nothing."""
+    assert digest(ledger).feeds == ()
