@@ -112,7 +112,7 @@ def _measured(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
 
     for place, rule in enumerate(run.book.rules):
         measure = get(rule.measure)
-        chosen = _chosen(rule, grid.keys)
+        chosen = chosen_series(rule, grid.keys)
         if not chosen.any():
             continue
         for column in rule.columns if measure.of_values else ("",):
@@ -140,7 +140,8 @@ def decide(book: Rulebook, seen: Sequence[Seen]) -> list[Judged]:
     return told
 
 
-def _chosen(rule: Rule, keys: np.ndarray) -> Bools:
+def chosen_series(rule: Rule, keys: np.ndarray) -> Bools:
+    """The series that a rule is for, shape (S,)."""
     if not rule.only:
         return np.ones(len(keys), dtype=bool)
     return np.array([any(fnmatchcase(key, glob) for glob in rule.only) for key in keys.tolist()], dtype=bool)
