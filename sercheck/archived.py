@@ -6,7 +6,9 @@ Depends on ``intake`` and ``store.archive``.
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass, replace
+from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -22,6 +24,8 @@ from sercheck.intake.stretch import Extent, extent, span, within
 from sercheck.intake.zone import DAY, EARLIEST, LATEST
 from sercheck.serial.arrays import Bools, Ints
 from sercheck.store.archive import Archive, Log, Part, What
+from sercheck.store.objects import opened_object, trouble
+from sercheck.store.where import without_password
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -213,11 +217,26 @@ class _Group:
     last: int
 
 
+@contextmanager
+def _opened(part: Part) -> Iterator[Any]:
+    """A part for pyarrow to read; trouble with it is told in one sentence."""
+    if isinstance(part.path, Path):
+        with told(part.path):
+            yield part.path
+        return
+    with told(without_password(part.path)), trouble(part.path):
+        file = opened_object(part.path, part.content)
+        try:
+            yield file
+        finally:
+            file.close()
+
+
 def _groups(place: int, part: Part, low: int, high: int) -> Iterator[_Group]:
     import pyarrow.parquet as pq
 
-    with told(part.path):
-        metadata = pq.read_metadata(part.path)
+    with _opened(part) as file:
+        metadata = pq.read_metadata(file)
     for number in range(metadata.num_row_groups):
         group = metadata.row_group(number)
         keys, stamps = (group.column(column).statistics for column in (0, 1))
@@ -323,7 +342,8 @@ def _piece(
     import pyarrow as pa
     import pyarrow.parquet as pq
 
-    with told(part.path), pq.ParquetFile(part.path, read_dictionary=["series"], pre_buffer=False) as file:
+    far = isinstance(part.path, str)  # pieces that lie together are then asked for at once
+    with _opened(part) as opened, pq.ParquetFile(opened, read_dictionary=["series"], pre_buffer=far) as file:
         there = set(file.schema_arrow.names)
         columns = ["series", "stamp", *(value_column(name) for name in layout.values if value_column(name) in there)]
         table = file.read_row_groups([group.number for group in groups], columns=columns).unify_dictionaries()

@@ -13,9 +13,9 @@ from typing import TYPE_CHECKING
 
 from sercheck.errors import UsageError
 from sercheck.store.archive import Archive, What
-from sercheck.store.database import store_folder
 from sercheck.store.ledger import open_ledger
 from sercheck.store.rows import JudgedBatch, Settlement
+from sercheck.store.where import archive_place
 
 if TYPE_CHECKING:
     from sercheck.store.ledger import Ledger
@@ -74,8 +74,7 @@ def settle(
     with open_ledger(str(store), ledger) as kept_in:
         batch = kept_in.batch(batch_id)
         row = batch.batch
-        named = None if "://" in str(store) else str(store)
-        archive = Archive(store_folder(named) / "archive", row.feed)
+        archive = Archive(archive_place(store), row.feed)
         now = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%S.%fZ")
         moment = None if relearn_from is None else _moment(relearn_from, _zone_of(batch))
         said: list[Settlement] = []

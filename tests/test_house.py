@@ -51,7 +51,10 @@ OUTSIDE: dict[str, set[str]] = {
 }
 """Libraries that a room may import, anywhere in its files."""
 
-LATE = {"pandas", "pyarrow", "sqlalchemy", "statsmodels", "matplotlib", "scipy.stats", "scipy.signal", "jinja2", "dask"}
+LATE = {
+    "pandas", "pyarrow", "sqlalchemy", "statsmodels", "matplotlib", "scipy.stats", "scipy.signal", "jinja2", "dask",
+    "fsspec",
+}  # fmt: skip
 """Libraries that are slow to start, imported inside the functions that use them."""
 
 

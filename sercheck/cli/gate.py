@@ -17,7 +17,7 @@ from sercheck.cli.say import say
 @click.option(
     "--records", metavar="FILE", help="Write the records: .jsonl, .csv or .parquet; - is JSON lines on stdout."
 )
-@click.option("--store", envvar="SERCHECK_STORE", default=".sercheck", show_default=True, metavar="DIR")
+@click.option("--store", envvar="SERCHECK_STORE", default=".sercheck", show_default=True, metavar="DIR|URL")
 @click.option("--released-to", type=click.Path(), metavar="DIR", help="Move the batch files here when released.")
 @click.option("--held-to", type=click.Path(), metavar="DIR", help="Move the batch files here when held.")
 @click.option("--as-of", metavar="TIME", help="The clock to judge by (default: now).")

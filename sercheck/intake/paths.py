@@ -72,7 +72,7 @@ def kind_of(path: Path) -> tuple[str, bool]:
 
 
 @contextmanager
-def told(path: Path) -> Iterator[None]:
+def told(path: Path | str) -> Iterator[None]:
     """Turn what the system and the readers raise into one sentence about the file."""
     import pyarrow as pa
 

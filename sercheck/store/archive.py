@@ -1,28 +1,32 @@
-"""The archive: rows of batches as Parquet by feed and local day, and the log of what became of each; needs ``outputs``.
+"""The archive: rows of batches as Parquet by feed and local day, and the log of what became of each; needs ``places``.
 
 ``<archive>/<feed>/2026-01-12/<batch id>.parquet`` holds the rows of one batch on one local day, sorted by series and
 stamp, no stamp twice. ``<archive>/<feed>/log/<number>-<letters>.json`` says what became of a batch: released, held
 (its rows wait), settled (held, then let in by a person) or discarded. Rows are written first, the entry last, each
 under a hidden name, flushed and then named: a batch is there whole from its entry on and before it not at all, whenever
 the process dies. An entry's name is nobody else's, so that of several processes none undoes what another wrote.
+
+At a URL the same names are objects, but that the name of a day's rows also holds the hash of its bytes, and the entry
+says which objects belong to it: nothing is ever written over, and a day is found without listing.
 """
 
 from __future__ import annotations
 
 import json
-import os
 import secrets
 import time
 from collections.abc import Iterator, Mapping
-from contextlib import ExitStack, contextmanager, suppress
-from dataclasses import asdict, dataclass, replace
+from contextlib import ExitStack, contextmanager
+from dataclasses import asdict, dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal, Self
 from urllib.parse import quote
 
 from sercheck.errors import StoreError
-from sercheck.outputs import whole_file
+from sercheck.store.objects import SMALL, Objects
+from sercheck.store.places import Folder, Place
+from sercheck.store.where import without_password
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -49,6 +53,8 @@ class Entry:
         first: stamp of its first row, nanoseconds UTC.
         last: stamp of its last row.
         rows: rows kept, each stamp once.
+        parts: names and sizes in bytes of the objects that hold the rows, where their names do not follow from the
+            batch's.
     """
 
     number: int
@@ -58,15 +64,22 @@ class Entry:
     first: int
     last: int
     rows: int
+    parts: tuple[tuple[str, int], ...] = ()
 
 
 @dataclass(frozen=True)
 class Part:
-    """Rows of one batch on one local day: a Parquet file, and the number of the release that it came with."""
+    """Rows of one batch on one local day: a Parquet file, and the number of the release that it came with.
 
-    path: Path
+    Attributes:
+        path: the file, or the URL of the object.
+        content: all of a small object, fetched with others at once.
+    """
+
+    path: Path | str
     day: str
     number: int
+    content: bytes | None = field(default=None, repr=False, compare=False)
 
 
 @dataclass(frozen=True)
@@ -104,34 +117,47 @@ class Archive:
 
     def __init__(self, folder: str | Path, feed: str) -> None:
         self.feed = feed
-        self.folder = Path(folder) / feed_folder(feed)
+        name = feed_folder(feed)
+        self.place: Place = Objects(f"{folder}/{name}") if "://" in str(folder) else Folder(Path(folder) / name)
         self._read: dict[str, Entry] = {}
 
+    @property
+    def folder(self) -> Path:
+        """Where the feed's files lie, for an archive in a folder."""
+        return Path(self.place.path(""))
+
     def prepare(self) -> None:
-        """Make the folder and see that files can be made in it, to learn of trouble before long work.
+        """See that something can be written, to learn of trouble before long work.
 
         Raises:
-            StoreError: they cannot.
+            StoreError: it cannot.
         """
-        if not os.access(_made(self.folder), os.W_OK | os.X_OK):
-            came = "no permission to write to the archive"
-            raise StoreError(str(self.folder), came, "a folder this user may write to")
+        self.place.prepare()
 
     def log(self) -> Log:
         """What became of every batch; empty where there is no archive."""
-        entries = [self._entry(name) for name in self._names_of_entries()]
-        return Log(tuple(sorted(entries, key=lambda entry: (entry.number, entry.batch_id))))
+        names = self._names_of_entries()
+        fresh = [name for name in names if name not in self._read]
+        contents = self.place.read([f"log/{name}" for name in fresh])
+        for name, content in zip(fresh, contents, strict=True):
+            self._read[name] = self._entry(name, content)
+        return Log(tuple(sorted((self._read[name] for name in names), key=lambda each: (each.number, each.batch_id))))
 
     def parts(self, first_day: str, last_day: str, log: Log | None = None) -> list[Part]:
         """The files of history on the local days ``first_day`` to ``last_day`` (as 2026-01-12), in order of day, then
         of release.
         """
-        numbers = {f"{e.batch_id}.parquet": e.number for e in (log or self.log()).history}
-        found = []
-        for day in sorted(name for name in _names(self.folder) if first_day <= name <= last_day and name != "log"):
-            here = sorted((name for name in _names(self.folder / day) if name in numbers), key=numbers.__getitem__)
-            found += [Part(self.folder / day / name, day, numbers[name]) for name in here]
-        return found
+        history = (log or self.log()).history
+        named = [each for entry in history for each in _named(entry) if first_day <= each.day <= last_day]
+        small = [each for each in named if each.size <= SMALL]
+        contents = dict(zip(small, self.place.read([each.name for each in small]), strict=True))
+        found = [Part(self.place.path(each.name), each.day, each.number, contents.get(each)) for each in named]
+        numbers = {f"{entry.batch_id}.parquet": entry.number for entry in history if not entry.parts}
+        days = self.place.names() if numbers else []
+        for day in (name for name in days if first_day <= name <= last_day and name != "log"):
+            here = (name for name in self.place.names(day) if name in numbers)
+            found += [Part(self.place.path(f"{day}/{name}"), day, numbers[name]) for name in here]
+        return sorted(found, key=lambda part: (part.day, part.number))
 
     @contextmanager
     def adding(self, batch_id: str, fingerprint: str, what: What) -> Iterator[Adding]:
@@ -140,10 +166,11 @@ class Archive:
         Whoever calls has looked at the log: what was kept of the batch before is written over.
         """
         with ExitStack() as files:
-            adding = Adding(self.folder, batch_id, files)
+            adding = Adding(self.place, batch_id, files)
             yield adding
         if adding.rows:
-            self._enter(Entry(0, batch_id, what, fingerprint, adding.first, adding.last, adding.rows))
+            parts = tuple(sorted(adding.parts))
+            self._enter(Entry(0, batch_id, what, fingerprint, adding.first, adding.last, adding.rows, parts))
 
     def mark(self, known: Entry, what: What) -> None:
         """Say that something else became of a batch whose rows are there."""
@@ -153,34 +180,56 @@ class Archive:
     def _enter(self, entry: Entry) -> None:
         newest = max((int(name.partition("-")[0]) for name in self._names_of_entries()), default=0)
         entry = replace(entry, number=max(time.time_ns(), newest + 1))
-        folder = _made(self.folder / "log")
-        with whole_file(folder / f"{entry.number:020d}-{secrets.token_hex(4)}.json") as file:
-            file.write(json.dumps(asdict(entry), ensure_ascii=False).encode())
+        facts = {name: value for name, value in asdict(entry).items() if name != "parts" or value}
+        name = f"log/{entry.number:020d}-{secrets.token_hex(4)}.json"
+        self.place.write(name, json.dumps(facts, ensure_ascii=False).encode())
 
     def _names_of_entries(self) -> list[str]:
-        entries = [name for name in _names(self.folder / "log") if name.endswith(".json")]
+        entries = [name for name in self.place.names("log") if name.endswith(".json")]
         return [name for name in entries if name.partition("-")[0].isdigit()]
 
-    def _entry(self, name: str) -> Entry:
+    def _entry(self, name: str, content: bytes) -> Entry:
         """An entry, read once: it never changes."""
-        if name not in self._read:
-            path = self.folder / "log" / name
-            try:
-                self._read[name] = Entry(**json.loads(path.read_bytes()))
-            except (OSError, ValueError, TypeError) as error:
-                raise StoreError(
-                    str(path), "this entry of the archive's log cannot be read", "as it was written",
-                    "Put back a copy of the file.",
-                ) from error  # fmt: skip
-        return self._read[name]
+        for wait in self.place.waits:
+            if content.endswith(b"}"):
+                break
+            time.sleep(wait)
+            (content,) = self.place.read([f"log/{name}"])
+        try:
+            facts = json.loads(content)
+            parts = tuple((str(each), int(size)) for each, size in facts.pop("parts", ()))
+            return Entry(**facts, parts=parts)
+        except (ValueError, TypeError, AttributeError) as error:
+            raise StoreError(
+                without_password(str(self.place.path(f"log/{name}"))),
+                "this entry of the archive's log cannot be read", "as it was written", "Put back a copy of the file.",
+            ) from error  # fmt: skip
+
+
+@dataclass(frozen=True)
+class _Named:
+    """An object that an entry names."""
+
+    name: str
+    size: int
+    number: int
+
+    @property
+    def day(self) -> str:
+        return self.name.partition("/")[0]
+
+
+def _named(entry: Entry) -> list[_Named]:
+    return [_Named(name, size, entry.number) for name, size in entry.parts]
 
 
 class Adding:
     """Rows of one batch on their way into the archive; blocks of series in order of key, each day apart."""
 
-    def __init__(self, folder: Path, batch_id: str, files: ExitStack) -> None:
-        self._folder, self._name, self._files = folder, f"{batch_id}.parquet", files
+    def __init__(self, place: Place, batch_id: str, files: ExitStack) -> None:
+        self._place, self._batch_id, self._files = place, batch_id, files
         self._writers: dict[str, Any] = {}
+        self.parts: list[tuple[str, int]] = []
         self.rows, self.first, self.last = 0, 2**63 - 1, -(2**63)
 
     def add(self, day: str, table: pa.Table, first: int, last: int) -> Self:
@@ -191,13 +240,16 @@ class Adding:
 
         writer = self._writers.get(day)
         if writer is None:
-            file = self._files.enter_context(whole_file(_made(self._folder / day) / self._name))
+            file = self._files.enter_context(self._place.part(day, self._batch_id, self._told))
             writer = pq.ParquetWriter(file, table.schema, compression="zstd", use_dictionary=["series"])
             self._writers[day] = self._files.enter_context(writer)
         writer.write_table(table, row_group_size=GROUP_ROWS)
         self.rows += table.num_rows
         self.first, self.last = min(self.first, first), max(self.last, last)
         return self
+
+    def _told(self, name: str, size: int) -> None:
+        self.parts.append((name, size))
 
 
 def feed_folder(feed: str) -> str:
@@ -209,34 +261,3 @@ def feed_folder(feed: str) -> str:
     if len(name) > LONGEST_NAME:
         name = f"{name[: LONGEST_NAME - 17]}-{blake2b(feed.encode(), digest_size=8).hexdigest()}"
     return name
-
-
-def _names(folder: Path) -> list[str]:
-    try:
-        return sorted(path.name for path in folder.iterdir())
-    except (FileNotFoundError, NotADirectoryError):
-        return []
-    except OSError as error:
-        why = (error.strerror or str(error)).lower()
-        raise StoreError(str(folder), f"the archive cannot be read: {why}") from error
-
-
-def _made(folder: Path) -> Path:
-    """The folder, made if need be, with its name on the disk (a rename inside it only flushes the folder itself)."""
-    if folder.is_dir():
-        return folder
-    above = _made(folder.parent) if not folder.parent.is_dir() else folder.parent
-    try:
-        folder.mkdir(mode=0o700, exist_ok=True)
-        handle = os.open(above, os.O_RDONLY)
-        try:
-            with suppress(OSError):  # some network filesystems cannot and need not
-                os.fsync(handle)
-        finally:
-            os.close(handle)
-    except OSError as error:
-        raise StoreError(
-            str(folder), f"the archive cannot be written: {(error.strerror or str(error)).lower()}",
-            "a folder this user may write to", "Name another store with --store or SERCHECK_STORE.",
-        ) from error  # fmt: skip
-    return folder

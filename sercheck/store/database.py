@@ -23,7 +23,6 @@ WAIT = 300.0
 """Seconds to wait for other writers: thirty large judgements (400,000 records, under 10 s each)."""
 CACHE = 64 * 1024
 """KiB of pages SQLite holds before it spills a transaction to the file (a judgement of some 80,000 records)."""
-DEFAULT_STORE = ".sercheck"
 FILE = "ledger.sqlite"
 _SENTENCES = (  # what SQLite's message holds, what it means, what to do
     ("file is not a database", "the file is no ledger: it is no SQLite database", "Name another store."),
@@ -38,22 +37,6 @@ _SENTENCES = (  # what SQLite's message holds, what it means, what to do
 
 class ConflictError(StoreError):
     """Another process has stored a row of the same id."""
-
-
-def store_folder(store: str | None) -> Path:
-    """The folder named, else that of ``SERCHECK_STORE``, else ``.sercheck``."""
-    return Path(store or os.environ.get("SERCHECK_STORE") or DEFAULT_STORE)
-
-
-def ledger_url(store: str | None, url: str | None) -> tuple[str | None, Path | None]:
-    """Where the ledger lies: a URL, or the file of the SQLite ledger.
-
-    The first that is given: ``url``, a ``store`` that is itself a URL, ``SERCHECK_LEDGER``, the store's folder.
-    """
-    if store and "://" in store:
-        url, store = url or store, None
-    url = url or os.environ.get("SERCHECK_LEDGER")
-    return (url, None) if url else (None, store_folder(store) / FILE)
 
 
 class Database:

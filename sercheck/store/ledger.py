@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, Any, Self
 
 from sercheck.errors import StoreError, UsageError
 from sercheck.record import COLUMNS, INTEGERS, NUMBERS, Records
-from sercheck.store.database import ConflictError, Database, ledger_url
+from sercheck.store.database import FILE, ConflictError, Database
 from sercheck.store.judgements import BLOCK, put_batch, put_judgement, put_records
 from sercheck.store.memory import (
     facts_of,
@@ -36,8 +36,8 @@ from sercheck.store.queries import (
     begins_with,
     judgements_of,
     records_where,
-)
     rules_with,
+)
 from sercheck.store.rows import (
     BaselineRow,
     BatchRow,
@@ -50,6 +50,7 @@ from sercheck.store.rows import (
 )
 from sercheck.store.standings import catch_up, put_standings
 from sercheck.store.tables import BATCH_COLUMNS, tables
+from sercheck.store.where import ledger_place
 
 if TYPE_CHECKING:
     from sqlalchemy import Connection, Result, RowMapping
@@ -297,9 +298,9 @@ def open_ledger(store: str | None = None, url: str | None = None) -> Ledger:
     What is not given comes from ``SERCHECK_LEDGER`` (a URL) and ``SERCHECK_STORE`` (a folder, default ``.sercheck``).
 
     Raises:
-        StoreError: the URL cannot be read.
+        StoreError: the URL cannot be read; the store is a place for objects and no URL of a ledger is given.
     """
-    return Ledger(Database(*ledger_url(store, url)))
+    return Ledger(Database(*ledger_place(store, url, FILE)))
 
 
 def _find(connection: Connection, sought: str) -> Judgement | None:
