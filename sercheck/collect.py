@@ -32,12 +32,17 @@ def records(book: Rulebook, judged: Sequence[Judged], common: Common) -> Records
     return Records.concat([_part(book.rules[each.seen.rule], each, common) for each in judged])
 
 
+def actions(rule: Rule) -> dict[int, str | None]:
+    """What an outcome does to the batch; a pass does nothing."""
+    return {FAIL: rule.otherwise, UNDECIDED: "hold" if rule.when_undecided == "hold" else None}
+
+
 def _part(rule: Rule, judged: Judged, common: Common) -> Records:
     part, seen = judged.seen, judged.seen.measurement
     series, lags = seen.observed.shape
     if not series:
         return Records.empty()
-    acts = {FAIL: rule.otherwise, UNDECIDED: "hold" if rule.when_undecided == "hold" else None}
+    acts = actions(rule)
     outcomes = judged.outcome.ravel().tolist()
 
     def flat(values: np.ndarray) -> np.ndarray:

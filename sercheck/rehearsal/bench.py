@@ -14,7 +14,7 @@ from hashlib import blake2b
 import numpy as np
 
 from sercheck import __version__
-from sercheck.collect import Common, records
+from sercheck.collect import Common, actions, records
 from sercheck.counted import Facts
 from sercheck.engine import Run, chosen_series, decide, look_at_block, name_causes
 from sercheck.grid import Grid, Tally
@@ -23,7 +23,7 @@ from sercheck.measures import get
 from sercheck.record import Records, utc_text
 from sercheck.rehearsal.damage import Broken, Case, broken, hit
 from sercheck.rehearsal.feed import Feed
-from sercheck.rehearsal.mixed import Source, mixed
+from sercheck.rehearsal.mixed import Source, known, mixed, unsaid
 from sercheck.rulebook.compiled import Rulebook
 from sercheck.serial.arrays import Ints
 from sercheck.verdict import Verdict
@@ -202,13 +202,15 @@ class Bench:
             trial.days[batch] = broken(trial.case, grid, at[trial.series], batch - start, seed, self.feed.cadence)
         for group in _groups(trials):
             stacked = self._stacked(group, grid, at, batch)
-            seen, _ = look_at_block(stacked, self._run(batch, marks, self._alone))
+            seen = [known(one) for one in look_at_block(stacked, self._run(batch, marks, self._alone))[0]]
             edge = 0
             for trial in group:
                 rows = np.arange(edge, edge + len(trial.series))
                 edge += len(trial.series)
                 whole = _with_rows(grid, at[trial.series], stacked, rows)
                 parts = self._whole(whole, at[trial.series], stacked, rows, seen, batch, marks)
+                if self.keep is None and not self._held(parts):
+                    continue
                 run = self._run(batch, marks)
                 tags = _tags(trial.case, len(trial.series), start)
                 trial.judged = self._judged(batch, name_causes(parts, whole, run), tags)
@@ -269,8 +271,19 @@ class Bench:
             while len(self._known) >= self._most_known:
                 self._known.pop(next(iter(self._known)))
             seen, _ = look_at_block(self._grid(batch, marks), self._run(batch, marks, self._alone))
-            self._known[key] = seen
+            self._known[key] = [known(one) for one in seen]
         return self._known[key]
+
+    def _held(self, seen: Sequence[Seen]) -> bool:
+        """Whether the batch is held; limits are not worked out for it."""
+        rules = self.feed.book.rules
+        quick = [one if rules[one.rule].matters is not None else unsaid(one) for one in seen]
+        return any(
+            (judged.outcome == outcome).any()
+            for judged in decide(self.feed.book, quick)
+            for outcome, action in actions(rules[judged.seen.rule]).items()
+            if action == "hold"
+        )
 
     def _outcome(self, trial: _Trial, start: int, looked: int) -> Outcome:
         case, judged = trial.case, trial.judged

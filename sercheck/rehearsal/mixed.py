@@ -6,13 +6,86 @@ Depends on ``judge``, ``measure`` and ``serial``. Only for measures that look at
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
 from sercheck.judge import Seen
 from sercheck.measure import Measurement, Reference, Side
 from sercheck.serial.arrays import Floats, Ints
+
+
+@dataclass(frozen=True)
+class Known:
+    """A reference that gives its p-values once: many batches pick rows of the same one."""
+
+    reference: Reference
+    memo: dict[Side, Floats] = field(default_factory=dict, compare=False, repr=False)
+
+    @property
+    def bound(self) -> Floats:
+        return self.reference.bound
+
+    @property
+    def standard_error(self) -> Floats:
+        return self.reference.standard_error
+
+    def p_value(self, side: Side) -> Floats:
+        if side not in self.memo:
+            self.memo[side] = self.reference.p_value(side)
+        return self.memo[side]
+
+    def limit(self, side: Side, risk: Floats) -> Floats:
+        return self.reference.limit(side, risk)
+
+    def naive_limit(self, side: Side, risk: Floats) -> Floats:
+        return self.reference.naive_limit(side, risk)
+
+    def detectable(self, side: Side, risk: Floats) -> Floats:
+        return self.reference.detectable(side, risk)
+
+
+@dataclass(frozen=True)
+class Unsaid:
+    """A reference of which only p-values (and what could be found) are asked: whether the batch is held."""
+
+    reference: Reference
+
+    @property
+    def bound(self) -> Floats:
+        return np.full((1, 1), np.nan)
+
+    @property
+    def standard_error(self) -> Floats:
+        return np.full((1, 1), np.nan)
+
+    def p_value(self, side: Side) -> Floats:
+        return self.reference.p_value(side)
+
+    def limit(self, side: Side, risk: Floats) -> Floats:
+        return np.full((1, 1), np.nan)
+
+    def naive_limit(self, side: Side, risk: Floats) -> Floats:
+        return np.full((1, 1), np.nan)
+
+    def detectable(self, side: Side, risk: Floats) -> Floats:
+        return np.full((1, 1), np.nan)
+
+
+def known(seen: Seen) -> Seen:
+    """The same with p-values that are computed once."""
+    return _wrapped(seen, Known)
+
+
+def unsaid(seen: Seen) -> Seen:
+    """The same without limits, for a first decision."""
+    return _wrapped(seen, Unsaid)
+
+
+def _wrapped(seen: Seen, wrap: Callable[[Reference], Reference]) -> Seen:
+    one = seen.measurement
+    upper, lower = (None if side is None else wrap(side) for side in (one.upper, one.lower))
+    return replace(seen, measurement=replace(one, upper=upper, lower=lower))
 
 
 @dataclass(frozen=True)
