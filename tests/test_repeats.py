@@ -1,5 +1,7 @@
 """Values that stick: exact evidence, and the laws of a batch's share and longest run."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from clusters import markov
@@ -10,14 +12,7 @@ from scipy import stats
 
 from sercheck.measure import Question, Stays
 from sercheck.measures.repeats import Repeats
-from sercheck.serial.recurrence import (
-    beta_binomial_share,
-    chain_runs,
-    longest_run,
-    past_runs,
-    run_lengths,
-    spread_of_counts,
-)
+from sercheck.serial.recurrence import beta_binomial_share, spread_of_counts
 from sercheck.serial.repeats import (
     equal_share,
     equal_to_earlier,
@@ -30,6 +25,7 @@ from sercheck.serial.repeats import (
     rounding,
     runs_test,
 )
+from sercheck.serial.runs import chain_runs, longest_run, past_runs, run_lengths
 
 NAN = np.nan
 STUCK = np.array([4.0, 4.0, 4.0, 1.0, 2.0, NAN, 2.0, 2.0, 0.0])
@@ -160,12 +156,53 @@ def test_chain_law_against_simulated_chains():
     """The chance told of a run in a healthy day is that of simulated chains to 2 times it (runs meet the day's end)."""
     rng = np.random.default_rng(8)
     past, days = markov(rng, 1, 200_000, 0.1, 2), markov(rng, 40_000, 24, 0.1, 2)
-    law = chain_runs(past, days[:1])
+    learned = chain_runs(past, days[:1])
+    enters, stays = (np.full((1, 24), np.mean(chances)) for chances in (learned.enters, learned.stays))
+    law = replace(learned, enters=enters, stays=stays, first=enters[:, 0])
     seen = longest_run(days)
     for marks in (3, 5, 7):
         told_p = law.tail(np.array([[float(marks)]]))[0, 0]
-        actual = np.mean(seen >= marks)
-        assert 0.9 * actual < told_p < 2 * actual
+        assert told_p == pytest.approx(1 - np.exp(-24 * enters[0, 0] * stays[0, 0] ** (marks - 1)), rel=1e-9)
+        assert 0.9 * np.mean(seen >= marks) < told_p < 2 * np.mean(seen >= marks)
+
+
+def still_at_night(rng, series_, days):
+    """Marks of chains whose rows repeat often in the first eight hours of a day and seldom in the others."""
+    enters, stays = (np.where(np.arange(24) < 8, at_night, by_day) for at_night, by_day in ((0.4, 0.05), (0.7, 0.1)))
+    marks = np.zeros((series_, 24 * days))
+    for t in range(1, 24 * days):
+        marks[:, t] = rng.random(series_) < np.where(marks[:, t - 1] == 1, stays[t % 24], enters[t % 24])
+    return marks
+
+
+def test_runs_are_judged_by_the_hour_at_their_risk():
+    """Where nights stand still and days do not, a run by day is the odder one, and healthy days keep the risk."""
+    marks = still_at_night(np.random.default_rng(5), 4000, 91)
+    past, day = marks[:, :-24], marks[:, -24:]
+    p = chain_runs(past, day).p_value("upper")[:, 0]
+    assert np.mean(p <= 0.05) <= 0.06
+    assert np.mean(p <= 0.01) <= 0.013
+    assert np.mean(p <= 0.001) <= 0.002
+    chance = {}
+    for first in (0, 14):
+        stuck = np.zeros((200, 24))
+        stuck[:, first : first + 7] = 1
+        law = chain_runs(past[:200], stuck)
+        chance[first] = law.p_value("upper")[:, 0]
+        np.testing.assert_array_equal(law.longest, 7.0)
+    assert (chance[14] < chance[0]).all()
+    assert np.median(chance[14]) < np.median(chance[0]) / 4
+
+
+def test_a_run_that_goes_on_from_yesterday_is_no_new_one():
+    """The first mark of a batch whose last row before was marked counts as one that stays, not as one that enters."""
+    past = still_at_night(np.random.default_rng(6), 50, 90)
+    day = np.zeros((50, 24))
+    day[:, :3] = 1
+    after, alone = past.copy(), past.copy()
+    after[:, -1], alone[:, -1] = 1, 0
+    p_after, p_alone = (chain_runs(history, day).p_value("upper") for history in (after, alone))
+    assert (p_after > p_alone).all()
 
 
 def test_law_of_runs_in_a_stationary_history():

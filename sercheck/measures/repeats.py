@@ -9,14 +9,17 @@ Formula: a literal bound is held against the observation itself, which has no sa
 
 - at least 56 stretches of the window's length in history (26 for windows of up to 7 rows). Share: π = (K + ½)/(N + 1),
   τ the variance of the stretches' counts over the binomial variance (at least 1; 4 with 20 stretches or fewer),
-  M = (n − τ)/(τ − 1) between ½ and N + 1, p = P(BetaBin(n, πM, (1 − π)M) ≥ k). Run: p = 1 − exp(−n p01 p11^{r−1}),
-  p11 the chance that a repeat follows a repeat, or three of them where that is larger.
+  M = (n − τ)/(τ − 1) between ½ and N + 1, p = P(BetaBin(n, πM, (1 − π)M) ≥ k). Run: that a row repeats after one that
+  did not has the chance e_s at place s of the window (the hour of a day), after one that did (or after three, where
+  that is larger) q_s, drawn to the chance over all places unless places differ; a run of r from s on weighs
+  w(s, r) = e_s q_{s+1} … q_{s+r−1}, and that of least weight w is judged: p = 1 − exp(−Σ_s w(s, r_s)), r_s the
+  shortest from s on that weighs no more. What stands still at noon is odder than what stands still at night.
 - 8 stretches or more (assumes a stationary history). Share: the larger p of Student's t on asin √share of
   the stretches and of the beta-binomial law above, which is right where repeats are rare. Run: a geometric tail beyond
   the longest length that ten of history's runs reach.
 
-Source: runs of a two-state chain by Poisson clumping (Aldous 1989); beta-binomial law (Skellam 1948);
-variance-stabilised shares (Anscombe 1948).
+Source: runs of a two-state chain by Poisson clumping (Aldous 1989); empirical Bayes (Morris 1983); beta-binomial law
+(Skellam 1948); variance-stabilised shares (Anscombe 1948).
 
 Unit: `look: run` (default) counts equal values, 1 when nothing repeats; `look: share` is a share of rows, 0 to 1. The
 row before the window counts as the start of its first run.
@@ -49,8 +52,9 @@ from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Ref
 from sercheck.measures._exact import exact
 from sercheck.reference import Larger, Pivot
 from sercheck.serial.arrays import Floats, Ints
-from sercheck.serial.recurrence import RunLaw, beta_binomial_share, chain_runs, past_runs
+from sercheck.serial.recurrence import beta_binomial_share
 from sercheck.serial.repeats import equal_to_earlier, longest_equal_run, resting_value, share_of
+from sercheck.serial.runs import RunLaw, chain_runs, past_runs
 from sercheck.serial.window_t import FEWEST_WINDOWS, window_t, windows
 
 RECENT_STRETCHES = 56
@@ -143,7 +147,7 @@ def _like_history(panel: Panel, question: Question, look: str) -> Measurement:
 def _run(past: Floats, batch: Floats, *, recent: bool) -> tuple[Floats, Reference, Floats, str]:
     law: RunLaw = chain_runs(past, batch) if recent else past_runs(past, batch)
     method = (
-        "longest run of a two-state chain (Poisson clumping, Aldous 1989)"
+        "most telling run of a two-state chain, by its place (Poisson clumping, Aldous 1989)"
         if recent
         else "longest run against history's runs with a geometric tail (Poisson clumping, Aldous 1989)"
     )

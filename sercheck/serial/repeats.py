@@ -10,7 +10,7 @@ import numpy as np
 from scipy import special
 
 from sercheck.serial.arrays import Floats, as_series
-from sercheck.serial.recurrence import longest_run as _longest_marks
+from sercheck.serial.runs import longest_run as _longest_marks
 
 COMMON_END = 0.05
 """Share from which a commonest value at an end of the range is a resting state, such as zero at night (real feeds)."""
