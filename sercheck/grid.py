@@ -120,6 +120,8 @@ class Panel:
         after: what ``after`` did, as the record tells it.
         unable: why a transform of ``after`` could not be carried out (every answer is then undecided), or empty.
         notes: what a transform had to leave out, for the reader.
+        own_cycle: steps of the cycle whose means of the window itself were taken out, so that each cycle costs the
+            window a share of what it can tell; 1 where none was.
         beside: panels of the further value columns that the rule names, cut and transformed alike.
         shared: memo for what several measures need from the same arrays (autocovariances, models).
     """
@@ -133,6 +135,7 @@ class Panel:
     after: str = ""
     unable: str = ""
     notes: tuple[str, ...] = ()
+    own_cycle: int = 1
     beside: Mapping[str, Panel] = field(default_factory=dict, compare=False, repr=False)
     shared: dict[object, object] = field(default_factory=dict, compare=False, repr=False)
 

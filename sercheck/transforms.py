@@ -124,7 +124,7 @@ def _without_season(transform: Transform, panel: Panel) -> Panel:
         return panel.changed(values)
     if steps - panel.start >= FEWEST_CYCLES * length:
         means, _ = phase_means(panel.window, panel.phase(name)[panel.start :], length)
-        return panel.changed(panel.values - means[:, panel.phase(name)])
+        return panel.changed(panel.values - means[:, panel.phase(name)], own_cycle=max(length, panel.own_cycle))
     return panel.changed(
         np.full_like(panel.values, np.nan),
         unable=f"taking out the season '{name}' needs {FEWEST_CYCLES} cycles ({FEWEST_CYCLES * length} steps) of "
@@ -152,6 +152,7 @@ def _every(transform: Transform, panel: Panel) -> Panel:
         start=start,
         axis=_grouped(panel.axis, firsts, group, usual),
         delivered=np.logical_or.reduceat(panel.delivered, firsts, axis=1),
+        own_cycle=max(panel.own_cycle // usual, 1),
     )
 
 

@@ -106,7 +106,7 @@ def test_lag_one_is_the_autocorrelation():
     model = burg(autoregressive(66, 3, 300, [0.5, 0.2]), max_order=2, min_order=2)
     b = model.reflection[0, 0]
     one = model.rows([0])
-    weights, beyond = partial_expansion(one, 1, b)
+    weights, beyond, *_ = partial_expansion(one, 1, b)
     rho = np.zeros(201)
     rho[:2] = 1, b
     for j in range(2, 201):
@@ -132,7 +132,7 @@ def test_expansion_twin(lag):
         slope = (up - down) / (2 * step)
         weights[: 200 + i] += slope * bartlett_weights(rho, i)
         beyond += slope * (autocorrelation_bias(rho, i) - autocorrelation_bias(short[0], i))
-    fast, bias = partial_expansion(model, lag, b)
+    fast, bias, *_ = partial_expansion(model, lag, b)
     np.testing.assert_allclose(fast[0], weights, atol=1e-7)
     np.testing.assert_allclose(bias[0], beyond, rtol=1e-6)
 
@@ -142,7 +142,7 @@ def test_variance_at_the_order(lag):
     """For a process whose order is the lag, n times the variance is 1 - b² (Quenouille 1949; Box and Jenkins)."""
     model = burg(autoregressive(67, 5, 300, [0.5, 0.2]), max_order=lag, min_order=lag)
     for b in (0.0, 0.4):
-        weights, beyond = partial_expansion(model, lag, b)
+        weights, beyond, *_ = partial_expansion(model, lag, b)
         np.testing.assert_allclose((weights**2).sum(axis=1), 1 - b * b, rtol=1e-8)
         np.testing.assert_allclose(beyond, 0.0, atol=1e-9)
 

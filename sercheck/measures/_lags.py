@@ -25,6 +25,8 @@ TIED, TIED_SMALL_RISK = 0.8, 0.5
 """Share of the commonest value above which moments say nothing, and the same at a risk of .001 or less (simulated)."""
 FEWEST_BY_WINDOWS = 24
 """Rows of a batch below which nothing is compared with history's windows (found by simulation)."""
+LINEAR = "a linear process that returns to its level, without a cycle longer than a third of the window"
+"""What is taken for granted where a window is judged by itself."""
 NO_HISTORY = "no history: pass --history or learn a baseline"
 
 Lag = Annotated[int, Field(ge=1, strict=True)]

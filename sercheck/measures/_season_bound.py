@@ -12,7 +12,8 @@ from sercheck.measures._season import Named
 from sercheck.serial.arrays import Bools, Floats
 from sercheck.serial.autoregression import burg, root_beyond
 from sercheck.serial.centre import centred
-from sercheck.serial.lag_law import ROOT, lagged
+from sercheck.serial.far_lag import ROOT
+from sercheck.serial.lag_law import lagged_alone
 from sercheck.serial.matched_filter import HIGHEST_ORDER
 from sercheck.serial.season import detrended, without_trend_and_season
 
@@ -28,7 +29,7 @@ def bounded(panel: Panel, question: Question, season: Named, multiple: int) -> M
     return held_to_bounds(
         panel,
         question,
-        lagged(detrended(window), np.array([lag], dtype=np.int64)),
+        lagged_alone(detrended(window), np.array([lag], dtype=np.int64), panel.own_cycle),
         flat="the window is a straight line, but for the rounding of its numbers",
         wanders=_wanders(window, season, panel.start, lag // multiple),
         advice="the series wanders without a level to return to: difference first (after: difference)",

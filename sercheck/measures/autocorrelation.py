@@ -4,7 +4,8 @@ Null hypothesis: the autocorrelation at the lag equals the bound; with ``like: h
 
 r_k = Σ (x_t - m)(x_{t+k} - m) / Σ (x_t - m)², m the mean of the window (divisor n at every lag).
 
-Literal bound b: an autoregression (Burg 1975; order by AICc) is fitted to the window and bent so that its own
+Literal bound b: an autoregression (Burg 1975; order by AICc, at most 16), times one echo at a lag up to a third of the
+window where its innovations show one (a cycle that evolves), is fitted to the window and bent so that its own
 autocorrelation at the lag is b. It gives the variance V of r_k (Bartlett 1946) and the bias β (Kendall 1954; Marriott
 and Pope 1954); the innovations give the robust variance V_h (after Taylor 1984). With s² = max(V, V_h) and g = 1 - b²,
 Z = [atanh r_k - atanh b - β/g - b s²/g²] g/s is standard normal.
@@ -21,7 +22,8 @@ Minimum: max(48, 4k) rows for a bound within ±.6, max(168, 7k) above; against h
 of history (20 at a risk of .001 or less) where the windows decide. Undecided too when the limit lies beyond ±(1 - k/n),
 when the largest root of a literal test exceeds .98 (difference first), and when one value makes up more than 80 % of
 the rows (50 % at a risk of .001 or less).
-A season left in makes the literal test worthless: take it out by ``after``.
+A season left in makes the literal test worthless: take it out by ``after``. Where the window's own means are taken out
+for want of history, variance and bias allow for them (n less the steps of the cycle is what is left to tell).
 
 Example::
 
@@ -44,6 +46,7 @@ from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Picture, Question, Reasons, Reference, Stays
 from sercheck.measures._lags import (
     FEWEST_BY_WINDOWS,
+    LINEAR,
     NO_HISTORY,
     LagFields,
     ask_rows,
@@ -58,8 +61,7 @@ from sercheck.measures._past import combined
 from sercheck.recent import enough, recent_measurement, recent_past
 from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.autocovariances import autocorrelation as sample
-from sercheck.serial.autoregression import root_beyond
-from sercheck.serial.lag_law import ROOT, history_law, lagged
+from sercheck.serial.lag_law import history_law, lagged_alone
 from sercheck.serial.window_t import fewest_windows
 
 
@@ -92,17 +94,17 @@ class Autocorrelation(Measure):
 
 def _against_bounds(panel: Panel, question: Question, lags: tuple[int, ...]) -> Measurement:
     steps: Ints = np.array(lags, dtype=np.int64)
-    seen = panel.remember(("lagged", lags), lambda: lagged(panel.window, steps, alone=True, cycle=panel.own_cycle))
+    seen = panel.remember(("lagged", lags), lambda: lagged_alone(panel.window, steps, panel.own_cycle))
     return held_to_bounds(
         panel,
         question,
         seen,
         flat="the window varies by no more than the rounding of its numbers",
-        wanders=root_beyond(seen.model, ROOT),
+        wanders=seen.wanders,
         advice=no_level(panel),
         method="atanh r, variance and bias of an autoregression with the bound imposed "
         "(Bartlett 1946; Kendall 1954; Taylor 1984)",
-        assumes="a linear process that returns to its level" + seasons_left(panel),
+        assumes=LINEAR + seasons_left(panel),
     )
 
 

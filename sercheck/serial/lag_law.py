@@ -19,12 +19,11 @@ from sercheck.serial.autoregression import (
     root_beyond,
 )
 from sercheck.serial.centre import centred
+from sercheck.serial.far_lag import ROOT, alone
 from sercheck.serial.gap_variance import gapped_variance, row_counts
-from sercheck.serial.sampling_error import Residuals, autocorrelation_bias, bartlett_weights, model_lags
+from sercheck.serial.sampling_error import Residuals, autocorrelation_bias, bartlett_weights, mean_bias, model_lags
 from sercheck.serial.window_t import WindowT, count_windows, window_t, windows
 
-ROOT = 0.98
-"""Largest root of a model beyond which a series counts as not stationary (found by simulation)."""
 SLOW_ROOT = 0.85
 """Largest root from which a feed counts as persistent ('φ about .9') and a batch needs ``FEWEST_SLOW`` rows."""
 FEWEST, FEWEST_SLOW = 48, 96
@@ -48,6 +47,8 @@ class Lagged:
         model: autoregression of each series.
         residuals: its innovations, prepared.
         lags: the lags, shape (L,).
+        wanders: there is no level that the series returns to, shape (S,).
+        cycle: steps of the cycle whose means, of these very rows, were taken out; 1 for the mean alone.
     """
 
     r: Floats
@@ -56,6 +57,8 @@ class Lagged:
     model: Autoregression
     residuals: Residuals
     lags: Ints
+    wanders: Bools
+    cycle: int = 1
 
 
 @dataclass(frozen=True)
@@ -91,7 +94,19 @@ def lagged(x: Floats, lags: Ints) -> Lagged:
     longest = int(lags.max(initial=1))
     model = burg(x, max_order=None if longest == 1 else largest_order(x.shape[1], longest))
     residuals = Residuals(innovations(x, model), model.order)
-    return Lagged(autocorrelation_of(data, lags), row_counts(data.seen, lags), data.seen, model, residuals, lags)
+    r, rows = autocorrelation_of(data, lags), row_counts(data.seen, lags)
+    return Lagged(r, rows, data.seen, model, residuals, lags, root_beyond(model, ROOT))
+
+
+def lagged_alone(x: Floats, lags: Ints, cycle: int = 1) -> Lagged:
+    """The same of a window that is judged without a history: its model may hold an echo beyond its order.
+
+    ``cycle``: steps of the cycle whose means, of these very rows, were taken out; 1 for the mean alone.
+    """
+    data = centred(x)
+    own = alone(x, int(lags.max(initial=1)))
+    r, rows = autocorrelation_of(data, lags), row_counts(data.seen, lags)
+    return Lagged(r, rows, data.seen, own.model, own.residuals, lags, own.wanders, cycle)
 
 
 @dataclass(frozen=True)
@@ -130,10 +145,11 @@ def bound_law(seen: Lagged, b: float) -> Law:
     and Bartlett weights come from that model, the robust variance V_h from them and the innovations of the fitted
     model (those of the changed one are correlated where the bound is not met, and cost power). With s² = max(V, V_h)
     and g = 1 - b² the statistic [atanh r_k - atanh b - β/g - b s²/g²] g/s is standard normal (Bartlett 1946; Kendall
-    1954; Taylor 1984).
+    1954; Taylor 1984). Where the rows' own means at the s places of a cycle were taken out, n - s of the n rows are
+    left to tell, and the means' part of β is that of a cycle (``mean_bias``).
 
     Args:
-        seen: what ``lagged`` gave.
+        seen: what ``lagged_alone`` gave.
         b: inside (-1, 1).
     """
     g = 1 - b * b
@@ -142,8 +158,9 @@ def bound_law(seen: Lagged, b: float) -> Law:
         rows = np.maximum(seen.rows[:, column], 1)
         rho = model_autocorrelation(impose_autocorrelation(seen.model, lag, b), model_lags(lag))
         told = _moments(seen, rho, column)
-        s2[:, column] = told.kappa * told.variance / rows
-        bias[:, column] = told.bias / rows
+        free = np.maximum(rows - seen.cycle, 1) if seen.cycle > 1 else rows
+        s2[:, column] = told.kappa * told.variance / free
+        bias[:, column] = (told.bias - mean_bias(rho, lag)) / free + mean_bias(rho, lag, seen.cycle) / rows
     s = np.sqrt(s2)
     centre = np.arctanh(b) + bias / g + b * s2 / g**2
     gaps = ~seen.seen.all(axis=1, keepdims=True)
@@ -198,9 +215,8 @@ def history_law(history: Floats, batch: Floats, lags: Ints) -> Past:
     told, count = window_t(old, forward(r)), count_windows(old)
     fewest_rows = np.where(root_beyond(past.model, SLOW_ROOT), FEWEST_SLOW, FEWEST)[:, None]
     short = (rows < fewest_rows) | (past.rows < 3 * rows)
-    far = root_beyond(past.model, ROOT)[:, None]
     foretold = _as_foretold(told, count, model_law, past.rows, rows)
-    by_windows = short | far | ~(kappa <= KAPPA) | ~foretold
+    by_windows = short | past.wanders[:, None] | ~(kappa <= KAPPA) | ~foretold
     own = np.tanh(told.centre)
     law = Law(
         np.where(by_windows, told.centre, model_law.centre),

@@ -10,14 +10,12 @@ from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.autocovariances import good_length
 from sercheck.serial.autoregression import (
     Autoregression,
-    burg,
-    innovations,
-    largest_order,
     model_autocorrelation,
     step_up,
 )
 from sercheck.serial.centre import centred
-from sercheck.serial.sampling_error import Residuals, model_lags
+from sercheck.serial.far_lag import alone
+from sercheck.serial.sampling_error import mean_bias, model_lags
 
 BLOCK = 1 << 15
 """Values worked on at a time: the arrays of the recursion stay in a second-level cache."""
@@ -81,14 +79,14 @@ class PartialLaws:
     Args:
         x: the series, shape (S, T), NaN is missing.
         lags: from 1, shape (L,).
+        cycle: steps of the cycle whose means, of these very rows, were taken out; 1 for the mean alone.
     """
 
-    def __init__(self, x: Floats, lags: Ints) -> None:
-        self.lags = lags
+    def __init__(self, x: Floats, lags: Ints, cycle: int = 1) -> None:
+        self.lags, self.cycle = lags, cycle
         self.estimate = reflections(x, lags)
-        longest = int(lags.max(initial=1))
-        self.model = burg(x, max_order=None if longest == 1 else largest_order(x.shape[1], longest))
-        self.residuals = Residuals(innovations(x, self.model), self.model.order)
+        own = alone(x, int(lags.max(initial=1)))
+        self.model, self.residuals, self.wanders = own.model, own.residuals, own.wanders
 
     def under(self, b: float) -> PartialLaw:
         """The law of each coefficient when the true partial autocorrelation is exactly ``b``, inside (-1, 1).
@@ -99,29 +97,35 @@ class PartialLaws:
         true order is higher), and the robust V_h (after Taylor 1984). The bias β is -(a + (k + 2) b)/n, a = 1 at odd
         and 2 at even lags k, for a process whose order is the lag (Shaman and Stine 1988), plus Σ_i (∂k/∂ρ_i) times the
         difference that the orders beyond make to the bias of r_i (Kendall 1954; Marriott and Pope 1954). With
-        s² = max(V, V_h) and g = 1 - b², [atanh k - atanh b - β/g - b s²/g²] g/s is standard normal.
+        s² = max(V, V_h) and g = 1 - b², [atanh k - atanh b - β/g - b s²/g²] g/s is standard normal. Where a cycle's own
+        means were taken out, rows and β change as in ``lag_law.bound_law``.
         """
         g = 1 - b * b
         s2, bias = np.empty(self.estimate.k.shape), np.empty(self.estimate.k.shape)
         for column, lag in enumerate(self.lags.tolist()):
             rows = np.maximum(self.estimate.rows[:, column], 1)
-            weights, beyond = partial_expansion(self.model, lag, b)
+            weights, beyond, slope, rho = partial_expansion(self.model, lag, b)
             linear = np.einsum("ij,ij->i", weights, weights) / rows
             s2[:, column] = np.fmax(linear, self.residuals.robust_variance(weights, rows, lag))
             bias[:, column] = (beyond - (1 if lag % 2 else 2) - (lag + 2) * b) / rows
+            if self.cycle > 1:
+                share = rows / np.maximum(rows - self.cycle, 1)
+                mean, cycle = (_means(rho, slope, each) / rows for each in (1, self.cycle))
+                s2[:, column] *= share
+                bias[:, column] = (bias[:, column] - mean) * share + cycle
         s = np.sqrt(s2)
         return PartialLaw(np.arctanh(b) + bias / g + b * s2 / g**2, s / g, s)
 
 
-def partial_expansion(model: Autoregression, lag: int, b: float) -> tuple[Floats, Floats]:
+def partial_expansion(model: Autoregression, lag: int, b: float) -> tuple[Floats, Floats, Floats, Floats]:
     """First-order expansion of the partial autocorrelation at ``lag`` where its true value is ``b``.
 
     The derivatives are those of the last component of R⁻¹ρ: with φ the coefficients of order k and
     ψ = R⁻¹ e_k = (-a_{k-1}, .., -a_1, 1)/v of order k - 1, ∂k/∂ρ_i = ψ_i - Σ_l φ_l (ψ_{l+i} + ψ_{l-i}).
 
     Returns:
-        Weights of the innovations' autocorrelations, shape (S, J), and n times the bias that the model's orders beyond
-        the lag add, shape (S,).
+        Weights of the innovations' autocorrelations, shape (S, J), n times the bias that the model's orders beyond
+        the lag add, shape (S,), the derivatives ∂k/∂ρ_i, shape (S, lag), and the autocorrelations, shape (S, L + 1).
     """
     series, width = model.reflection.shape
     reflection = np.zeros((series, max(width, lag)))
@@ -140,7 +144,14 @@ def partial_expansion(model: Autoregression, lag: int, b: float) -> tuple[Floats
     for i in range(1, lag + 1):
         slope[:, i - 1] = psi[:, i - 1] - np.einsum("ij,ij->i", phi[:, : lag - i], psi[:, i:])
         slope[:, i - 1] -= np.einsum("ij,ij->i", phi[:, i:], psi[:, : lag - i])
-    return _combined_weights(rho, slope), np.einsum("ij,ij->i", slope, _biases(rho, lag) - _biases(rho_short, lag))
+    beyond = np.einsum("ij,ij->i", slope, _biases(rho, lag) - _biases(rho_short, lag))
+    return _combined_weights(rho, slope), beyond, slope, rho
+
+
+def _means(rho: Floats, slope: Floats, cycle: int) -> Floats:
+    """The means' part of n times the bias, shape (S,)."""
+    parts = [slope[:, i] * mean_bias(rho, i + 1, cycle) for i in range(slope.shape[1])]
+    return np.asarray(np.sum(parts, axis=0))
 
 
 def _combined_weights(rho: Floats, slope: Floats) -> Floats:

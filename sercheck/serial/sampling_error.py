@@ -79,17 +79,36 @@ def autocorrelation_bias(rho: Floats, lag: int) -> Floats:
     """First-order bias of r_k times n, divisor n and mean estimated (Kendall 1954; Marriott and Pope 1954).
 
     -[k ρ_k + (1 - ρ_k) Σ ρ_j + 2 Σ (ρ_j ρ_{j+k} - ρ_k ρ_j²)], sums over all j, which is -(1 + 4φ) for AR(1) at lag 1;
-    shape (...).
+    shape (...). The middle term is ``mean_bias``.
     """
     wide = np.concatenate([rho, np.zeros((*rho.shape[:-1], lag))], axis=-1)
     at = wide[..., lag]
-    total = 2 * rho.sum(axis=-1) - 1
     squares = 2 * np.einsum("...j,...j->...", rho, rho) - 1
     shifted = 2 * np.einsum("...j,...j->...", rho, wide[..., lag : lag + rho.shape[-1]])
     between = wide[..., 1:lag]
     shifted = shifted + np.einsum("...j,...j->...", between, between[..., ::-1])
-    bias: Floats = -(lag * at + (1 - at) * total + 2 * (shifted - at * squares))
+    bias: Floats = mean_bias(rho, lag) - (lag * at + 2 * (shifted - at * squares))
     return bias
+
+
+def mean_bias(rho: Floats, lag: int, cycle: int = 1) -> Floats:
+    """The part of n times the bias of r_k that estimated means make: -s Σ_j (ρ_{k+js} - ρ_k ρ_{js}) over all j.
+
+    With s = 1 the mean of all rows is taken out, and it is -(1 - ρ_k) Σ ρ_j (Kendall 1954); with s the steps of a
+    cycle, the mean at each place of it: the expected periodogram at the cycle's frequencies, folded (Poisson's sum).
+
+    Args:
+        rho: autocorrelations, shape (..., L + 1).
+        lag: k, at most L.
+        cycle: s.
+    """
+    if cycle == 1:
+        return np.asarray(-(1 - rho[..., lag]) * (2 * rho.sum(axis=-1) - 1))
+    longest = rho.shape[-1] - 1
+    around = np.arange(-((longest + lag) // cycle), (longest + lag) // cycle + 1) * cycle
+    wide = np.concatenate([rho, np.zeros((*rho.shape[:-1], 2 * lag + cycle + 1))], axis=-1)
+    ahead, here = wide[..., np.abs(lag + around)].sum(axis=-1), wide[..., np.abs(around)].sum(axis=-1)
+    return np.asarray(-cycle * (ahead - rho[..., lag] * here))
 
 
 class Residuals:
@@ -97,10 +116,11 @@ class Residuals:
 
     Args:
         e: innovations, shape (S, T), NaN where there are none.
-        order: parameters of the model that they come from, shape (S,).
+        order: of the model that they come from, shape (S,): the rows at the start that have none.
+        parameters: of that model, where some of its coefficients are not its own.
     """
 
-    def __init__(self, e: Floats, order: Ints) -> None:
+    def __init__(self, e: Floats, order: Ints, parameters: Ints | None = None) -> None:
         self.seen = ~np.isnan(e)
         self.e = np.where(self.seen, e, 0.0)
         # the variances do not depend on the unit; a power of two keeps squares within reach of doubles
@@ -108,6 +128,7 @@ class Residuals:
         self.e *= np.ldexp(1.0, -np.clip(np.frexp(peak)[1], -1021, 1022))[:, None]
         self.count = self.seen.sum(axis=1)
         self.order = order
+        self.parameters = order if parameters is None else parameters
         self.power = np.einsum("ij,ij->i", self.e, self.e)
 
     def robust_variance(self, weights: Floats, n: Floats | Ints, lag: int = 1) -> Floats:
@@ -141,7 +162,7 @@ class Residuals:
         rows_that_count = np.asarray(n, dtype=np.float64)
         whole = np.maximum(rows_that_count - self.order, 1)
         full = squares @ np.ones(reach) * whole - squares @ np.arange(1, reach + 1)
-        freedom = rows_that_count - self.order - 1
+        freedom = rows_that_count - self.parameters - 1
         with np.errstate(divide="ignore", invalid="ignore"):
             share = total / self.power**2 * count**2 / terms
             variance = np.where(freedom > 0, rows_that_count / freedom, np.nan) * share * full / whole**2
