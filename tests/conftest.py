@@ -3,7 +3,7 @@
 import os
 
 import pytest
-from servers import running_server, server  # noqa: F401  fixtures for all tests
+from servers import ledger_store, running_server, server  # noqa: F401  fixtures for all tests
 
 
 @pytest.fixture(autouse=True)

@@ -16,7 +16,7 @@ def records(size: int = 6, batch_id: str = "heat-0112-abcd", rules: str = "rules
     series = [f"s{number}" for number in range(size)]
     outcome = ["fail" if n % 3 == 0 else "undecided" if n % 5 == 0 else "pass" for n in range(size)]
     rule, column = "keeps little memory", "kwh"
-    columns: dict[str, object] = {name: rng.standard_normal(size) for name in NUMBERS}
+    columns: dict[str, object] = {name: rng.standard_normal(size) for name in sorted(NUMBERS)}
     columns |= dict.fromkeys(TEXTS)
     columns |= {
         "record_id": record_ids(batch_id, rules, [rule] * size, [column] * size, series, [1] * size, None),

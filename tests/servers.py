@@ -31,6 +31,12 @@ def running_server():
         subprocess.run([programs / "pg_ctl", "-D", data, "-m", "immediate", "stop"], check=True, **user)
 
 
+@pytest.fixture(params=["sqlite", "postgresql"])
+def ledger_store(request, tmp_path):
+    """Where a ledger may lie: a folder, or the URL of an empty database on a server."""
+    return str(tmp_path) if request.param == "sqlite" else request.getfixturevalue("server")
+
+
 @pytest.fixture
 def server(running_server):
     """The URL of an empty database."""
@@ -38,5 +44,6 @@ def server(running_server):
 
     name = f"test_{time.monotonic_ns()}"
     with psycopg.connect(host=running_server, user="postgres", autocommit=True) as connection:
-        connection.execute(f"CREATE DATABASE {name}")
+        collated = "TEMPLATE template0 LOCALE_PROVIDER icu ICU_LOCALE 'en-US'"  # as people have it, not by bytes
+        connection.execute(f"CREATE DATABASE {name} {collated}")
     return f"postgresql+psycopg://postgres@/{name}?host={running_server}"

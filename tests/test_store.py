@@ -3,10 +3,13 @@ from __future__ import annotations
 import os
 import sqlite3
 from concurrent.futures import ThreadPoolExecutor
+from pathlib import Path
 
 import pytest
 from disks import make_read_only, small_disk, somebody_else
 from record_samples import alike, batch, judgement, records
+from sqlalchemy import NullPool, create_engine, text
+from sqlalchemy.exc import SQLAlchemyError
 
 from sercheck.errors import StoreError
 from sercheck.store import database, migrations
@@ -32,6 +35,17 @@ def sentence(store: object) -> str:
         add(store)
     assert "\n" not in str(caught.value)
     return str(caught.value)
+
+
+def look(store: object) -> None:
+    """Ask for the batches there."""
+    with open_ledger(str(store)) as ledger:
+        ledger.batches()
+
+
+def near(value: object) -> object:
+    """A number as a dump has it, in fifteen digits."""
+    return pytest.approx(value, rel=1e-13) if isinstance(value, float) else value
 
 
 def test_the_store_is_private(tmp_path):
@@ -177,60 +191,100 @@ def test_a_ledger_that_stays_busy_is_told(tmp_path, monkeypatch):
     other.close()
 
 
-def test_a_newer_ledger_is_refused(tmp_path):
+def test_a_newer_ledger_is_refused(ledger_store):
     """A ledger with a step that is not known here is neither read nor written."""
-    add(tmp_path)
-    with sqlite3.connect(tmp_path / "ledger.sqlite") as other:
-        other.execute("INSERT INTO migrations VALUES ('777 from the future', '2030-01-01T00:00:00Z')")
-    other.close()
-    assert "newer sercheck" in sentence(tmp_path)
+    add(ledger_store)
+    asked(ledger_store, "INSERT INTO migrations VALUES ('777 from the future', '2030-01-01T00:00:00Z')")
+    assert "newer sercheck" in sentence(ledger_store)
     with pytest.raises(StoreError, match="'777 from the future' is not known here"):
-        open_ledger(str(tmp_path)).batches()
+        look(ledger_store)
+    assert asked(ledger_store, "SELECT count(*) FROM judgements") == {1}
 
 
-def test_an_older_ledger_is_brought_up_to_date(tmp_path, monkeypatch):
+@pytest.mark.parametrize("old", sorted((Path(__file__).parent / "reference" / "ledgers").glob("*.sql")))
+def test_a_ledger_of_an_earlier_version_is_brought_up_to_date(tmp_path, old):
+    """What earlier programs stored is found, and goes on, once the missing steps are taken."""
+    other = sqlite3.connect(tmp_path / "ledger.sqlite")
+    other.executescript(old.read_text(encoding="utf-8"))
+    other.close()
+    assert max(steps(tmp_path))[:3] == old.stem
+    with open_ledger(str(tmp_path)) as ledger:
+        found = {each.batch.batch_id: each.last.decision for each in ledger.batches()}
+        assert found == {"heat-0112-abcd": "held", "heat-0113-abcd": "released"}
+        for row, wanted in zip(ledger.records("heat-0112-abcd").rows(), records().rows(), strict=True):
+            assert row == {name: near(value) for name, value in wanted.items()}
+        assert bool(ledger.batch("heat-0112-abcd").settlements) == (old.stem > "001")
+        assert ledger.add(batch(), judgement(), records()).decision == "held"
+        ledger.add(batch("heat-0114-abcd"), judgement("heat-0114-abcd"), records(6, "heat-0114-abcd"))
+        assert len(ledger.batches()) == 3
+    assert steps(tmp_path) == [step.name for step in migrations.MIGRATIONS]
+
+
+def test_every_version_of_the_ledger_has_an_example():
+    """A new step comes with a ledger as the program before it left it."""
+    kept = sorted(path.stem for path in (Path(__file__).parent / "reference" / "ledgers").glob("*.sql"))
+    assert kept == [step.name[:3] for step in migrations.MIGRATIONS[: len(kept)]]
+    assert len(kept) >= len(migrations.MIGRATIONS) - 1
+
+
+def test_an_older_ledger_is_brought_up_to_date(ledger_store, monkeypatch):
     """A new step is taken once, recorded, and what was stored before is still there."""
-    add(tmp_path)
-    steps = [*migrations.MIGRATIONS, migrations.Migration("900 notes", _add_notes)]
-    monkeypatch.setattr(migrations, "MIGRATIONS", tuple(steps))
+    add(ledger_store)
+    known = [*migrations.MIGRATIONS, migrations.Migration("900 notes", _add_notes)]
+    monkeypatch.setattr(migrations, "MIGRATIONS", tuple(known))
     for _ in range(2):
-        assert len(open_ledger(str(tmp_path)).records("heat-0112-abcd")) == 6
-    assert _tables(tmp_path) >= {"batches", "judgements", "records", "migrations", "notes"}
-    assert _steps(tmp_path)[-1] == "900 notes"
+        with open_ledger(ledger_store) as ledger:
+            assert len(ledger.records("heat-0112-abcd")) == 6
+    assert asked(ledger_store, "SELECT count(*) FROM notes") == {0}
+    assert steps(ledger_store)[-1] == "900 notes"
 
 
-def test_a_step_that_fails_leaves_nothing(tmp_path, monkeypatch):
+def test_a_step_that_fails_leaves_nothing(ledger_store, monkeypatch):
     """A step is one transaction with its record."""
-    add(tmp_path)
+    add(ledger_store)
 
     def half(connection: object) -> None:
         _add_notes(connection)
         connection.exec_driver_sql("this is no SQL")
 
     monkeypatch.setattr(migrations, "MIGRATIONS", (*migrations.MIGRATIONS, migrations.Migration("900 notes", half)))
-    with pytest.raises(StoreError, match="syntax error"):
-        open_ledger(str(tmp_path)).batches()
-    assert "notes" not in _tables(tmp_path)
-    assert "900 notes" not in _steps(tmp_path)
+    with pytest.raises(StoreError, match="syntax error"), open_ledger(ledger_store) as ledger:
+        ledger.batches()
+    with pytest.raises(SQLAlchemyError):
+        asked(ledger_store, "SELECT count(*) FROM notes")
+    assert "900 notes" not in steps(ledger_store)
+
+
+def test_programs_that_meet_an_old_ledger_at_once_agree(ledger_store, monkeypatch):
+    """Of eight that take the same step at once one takes it, and none ends in trouble."""
+    add(ledger_store)
+    known = [*migrations.MIGRATIONS, migrations.Migration("900 notes", _add_notes)]
+    monkeypatch.setattr(migrations, "MIGRATIONS", tuple(known))
+
+    def look(_: int) -> int:
+        with open_ledger(ledger_store) as ledger:
+            return len(ledger.records("heat-0112-abcd"))
+
+    with ThreadPoolExecutor(8) as pool:
+        assert list(pool.map(look, range(8))) == [6] * 8
+    assert steps(ledger_store).count("900 notes") == 1
 
 
 def _add_notes(connection) -> None:
     connection.exec_driver_sql("CREATE TABLE notes (note TEXT)")
 
 
-def _tables(store) -> set[str]:
-    return _column(store, "SELECT name FROM sqlite_master WHERE type = 'table'")
+def steps(store: object) -> list[str]:
+    """The steps that a ledger has recorded."""
+    return sorted(map(str, asked(store, "SELECT name FROM migrations")))
 
 
-def _steps(store) -> list[str]:
-    return sorted(_column(store, "SELECT name FROM migrations"))
-
-
-def _column(store, query: str) -> set[str]:
-    other = sqlite3.connect(store / "ledger.sqlite")
-    found = {row[0] for row in other.execute(query)}
-    other.close()
-    return found
+def asked(store: object, statement: str) -> set[object]:
+    """The first column of what a ledger's database answers."""
+    url = str(store) if "://" in str(store) else f"sqlite:///{store}/ledger.sqlite"
+    with create_engine(url, poolclass=NullPool).begin() as connection:
+        answer = connection.execute(text(statement))
+        return set(answer.scalars()) if answer.returns_rows else set()
 
 
 def test_a_server_keeps_the_ledger_too(server):
