@@ -1,4 +1,4 @@
-"""The brief of a batch that is stored, or of one that was judged just now; depends on ``brief``, the store, verdicts."""
+"""The brief of a batch that is stored, or that was judged just now; depends on ``brief`` and the store."""
 
 from __future__ import annotations
 

@@ -54,6 +54,22 @@ def whole_file(path: str | Path) -> Iterator[BinaryIO]:
         _settle(target.parent)
 
 
+def write_text(path: str | Path, text: str) -> None:
+    """Write a whole text file, UTF-8, as ``whole_file`` does."""
+    with whole_file(path) as file:
+        file.write(text.encode("utf-8", "replace"))
+
+
+def make_folder(path: str | Path) -> None:
+    """Make a folder where there is none; its parent must be there.
+
+    Raises:
+        OutputError: it cannot be made, or a file has its name.
+    """
+    with _as_output_error(path):
+        Path(path).mkdir(exist_ok=True)
+
+
 def check_place(path: str | Path, *, folder: bool = False) -> None:
     """Refuse, before any work is done, the name of a file (or of a folder for files) that cannot be written.
 

@@ -1,4 +1,4 @@
-"""Text from a feed, a rule file or a person made safe to show: one line, no control characters, no secrets, not endless.
+"""Text from outside made safe to show: one line, no control characters, no secrets, not endless.
 
 Imports nothing of ours.
 """
@@ -10,7 +10,8 @@ import re
 from functools import lru_cache
 
 HIDDEN = "\N{REPLACEMENT CHARACTER}"
-SECRET = "•••"
+BLANK = "•••"
+"""Stands for a secret."""
 _CREDENTIALS = re.compile(r"(?<=://)[^/\s@]*@")
 _SIGNED = re.compile(r"(?i)(?<=[?&;])((?:[\w-]*(?:token|signature|secret|password|passwd|key|sig|pwd))=)[^&\s;#]+")
 PLACES = ("SERCHECK_DESK_", "SERCHECK_SOURCE_", "SERCHECK_LEDGER")
@@ -28,10 +29,10 @@ def without_secrets(text: str) -> str:
     keeps for desks, sources and the ledger.
     """
     for secret in _secrets(tuple(value for name, value in os.environ.items() if name.startswith(PLACES))):
-        text = text.replace(secret, SECRET)
+        text = text.replace(secret, BLANK)
     if "://" not in text:
         return text
-    return _SIGNED.sub(rf"\g<1>{SECRET}", _CREDENTIALS.sub(f"{SECRET}@", text))
+    return _SIGNED.sub(rf"\g<1>{BLANK}", _CREDENTIALS.sub(f"{BLANK}@", text))
 
 
 @lru_cache(maxsize=8)

@@ -64,5 +64,9 @@ def from_text(text: str) -> tuple[tuple[Sketch, ...], tuple[str, ...]]:
     sketches = []
     for each in read["sketches"]:
         given: dict[str, Any] = {name: value for name, value in each.items() if name in known}
-        sketches.append(Sketch(**{n: tuple(value) if isinstance(value, list) else value for n, value in given.items()}))
+        sketches.append(Sketch(**{name: _frozen(value) for name, value in given.items()}))
     return tuple(sketches), tuple(read["notes"])
+
+
+def _frozen(value: Any) -> Any:
+    return tuple(value) if isinstance(value, list) else value

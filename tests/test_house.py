@@ -36,6 +36,10 @@ ALLOWED: dict[str, set[str]] = {
     "formats": WRITING,
     "outputs": WRITING,
     "episodes": {"errors", "record"},
+    "sketches": set(),
+    "plain": set(),
+    "page": set(),
+    "brief": WRITING | {"store", "sketches", "plain", "page", "causes"},
     "store": WRITING | {"store", "episodes"},
 }
 """Rooms and what of ours they may import; a room that is not named here may import anything but ``cli``."""

@@ -13,10 +13,10 @@ from zoneinfo import ZoneInfo
 import numpy as np
 
 from sercheck import causes
-from sercheck.brief.case import Case, Earlier
+from sercheck.brief.case import Case
 from sercheck.brief.rulefile import RuleFile, Said, read_rule_file
 from sercheck.brief.view import Brief, Cause, Failed, Mark, Undecided
-from sercheck.brief.words import day, listed, many, moment, name, number, prose, sentence, stretch, zone_of
+from sercheck.brief.words import day, listed, local_date, many, moment, name, number, prose, sentence, stretch, zone_of
 from sercheck.record import Records
 from sercheck.sketches import Sketch
 from sercheck.store.rows import JudgedBatch, Settlement
@@ -36,7 +36,6 @@ def digest(case: Case) -> Brief:
     order = _clearest_first(failed)
     found, more_causes = _causes(failed, order)
     rules = _failed(case, failed, order, said, zone)
-    holding = [rule for rule in rules if rule.holds]
     silent = _undecided(case)
     settled = _last_word(case.settlements)
     decision = case.judgement.decision
@@ -55,14 +54,14 @@ def digest(case: Case) -> Brief:
         counts=tuple(case.judgement.counts.items()),
         causes=found,
         more_causes=more_causes,
-        since=_since_all(case, holding or rules, zone),
+        since=_since_all(case, failed, zone),
         before=_before_all(case),
         failed=tuple(rules[:MOST_RULES]),
         more_failed=max(len(rules) - MOST_RULES, 0),
         undecided=tuple(silent[:MOST_UNDECIDED]),
         more_undecided=max(len(silent) - MOST_UNDECIDED, 0),
         notes=tuple(sentence(note) for note in case.notes[:MOST_NOTES]),
-        commands=_commands(case, settled),
+        commands=_commands(case, settled, zone),
         last=_last(case, zone),
         judged_at=moment(case.judgement.judged_at, zone),
         received=tuple(sentence(path) for path in case.batch.received[:MOST_NOTES]),
@@ -151,7 +150,7 @@ def _rule(rule: str, case: Case, rows: Records, said: RuleFile, zone: ZoneInfo) 
         who=name(worst["series"]) if worst["series"] else "",
         reason=sentence(worst["reason"]),
         since=_since(case, (rule,), zone),
-        before=_before(case, rule),
+        before=_before(case, rule, zone),
         sketch=sketch,
         lags=_lags(rows, sketch),
         figures=tuple(_figures(row) for row in rows.take(slice(0, ROWS)).rows()),
@@ -166,7 +165,7 @@ def _sketch(case: Case, rule: str, worst: Mapping[str, object]) -> Sketch | None
     """The rule's sketch of the column and kind of verdict that the clearest record is of."""
     mine = [each for each in case.sketches if each.rule == rule and each.column == worst["column"]]
     alike = [each for each in mine if (each.series is None) == (worst["series"] is None)]
-    return (alike or mine or [None])[0]
+    return next(iter(alike or mine), None)
 
 
 def _lags(rows: Records, sketch: Sketch | None) -> tuple[int, ...]:
@@ -195,7 +194,8 @@ def _why(case: Case, failed: Records, rules: Sequence[Failed], silent: Sequence[
         names = [f"“{rule.rule}”" for rule in holding]
         keys = set(failed["series"][failed["action"] == "hold"].tolist()) - {None}
         where = f", in {len(keys):,} of {case.batch.series:,} series" if keys and case.batch.series > 1 else ""
-        return f"{many(len(holding), 'rule')} that hold{'s' if len(holding) == 1 else ''} a batch failed{where}: {listed(names, 2)}."
+        which = "1 rule that holds" if len(holding) == 1 else f"{len(holding)} rules that hold"
+        return f"{which} a batch failed{where}: {listed(names, 2)}."
     if mute:
         return f"“{mute[0].rule}” could say nothing, and holds the batch then: {mute[0].reason}."
     counts = case.judgement.counts
@@ -208,37 +208,43 @@ def _why(case: Case, failed: Records, rules: Sequence[Failed], silent: Sequence[
 
 
 def _since(case: Case, rules: Sequence[str], zone: ZoneInfo) -> str:
-    """Back through the batches in which one of the rules failed without a break."""
-    run = []
-    for each in case.earlier:
-        if not any(rule in each.failed for rule in rules):
-            break
-        run.append(each)
-    if not run:
+    """Since when the first of the rules has been failing, from its open episode."""
+    found = [case.histories[rule].now for rule in rules if rule in case.histories]
+    running = [each for each in found if each is not None]
+    if not running:
+        return ""
+    first = min(running, key=lambda each: each.started)
+    if first.batches == 1:
         return "new in this batch" if case.earlier else "the first batch of this feed in the ledger"
-    far = "at least " if len(run) == len(case.earlier) and len(run) >= len(case.earlier) > 1 else ""
-    return f"{far}since {moment(run[-1].judged.batch.first_stamp, zone)}, {many(len(run) + 1, 'batch', 'batches')} in a row"
+    return f"since {moment(first.started, zone)}, {many(first.batches, 'batch', 'batches')}"
 
 
-def _since_all(case: Case, rules: Sequence[Failed], zone: ZoneInfo) -> str:
-    if not rules:
+def _since_all(case: Case, failed: Records, zone: ZoneInfo) -> str:
+    holding = failed["rule"][failed["action"] == "hold"]
+    return _since(case, list(dict.fromkeys((holding if len(holding) else failed["rule"]).tolist())), zone)
+
+
+def _before(case: Case, rule: str, zone: ZoneInfo) -> str:
+    """The rule's closed episodes."""
+    told = case.histories.get(rule)
+    if told is None or not case.earlier:
         return ""
-    told = {name(rule): rule for rule in dict.fromkeys(case.records["rule"].tolist())}
-    return _since(case, [told[rule.rule] for rule in rules if rule.rule in told], zone)
-
-
-def _before(case: Case, rule: str) -> str:
-    if not case.earlier:
-        return ""
-    times = sum(rule in each.failed for each in case.earlier)
-    return f"failed in {times} of the {many(len(case.earlier), 'batch', 'batches')} before"
+    if not told.before:
+        return f"never before in {many(told.asked, 'batch', 'batches')}"
+    batches, right = sum(each.batches for each in told.before), sum(each.false_holds for each in told.before)
+    last = day(told.before[0].last_at, zone)
+    settled = f"; {right} of these were right, as settled" if right else ""
+    return (
+        f"before in {many(len(told.before), 'episode')} ({many(batches, 'batch', 'batches')} of {told.asked:,}), "
+        f"the last until {last}{settled}"
+    )
 
 
 def _before_all(case: Case) -> str:
     if not case.earlier:
         return ""
-    held = [each for each in case.earlier if each.judged.last.decision == "held"]
-    wrongly = sum(_state_of(each.judged) == "settled" for each in held)
+    held = [each for each in case.earlier if each.last.decision == "held"]
+    wrongly = sum(state_of(each) == "settled" for each in held)
     released = f", {wrongly} of them let in by a person later" if wrongly else ""
     return f"{len(held)} of the {many(len(case.earlier), 'batch', 'batches')} before were held{released}"
 
@@ -258,7 +264,7 @@ def _undecided(case: Case) -> list[Undecided]:
     return sorted(told, key=lambda each: not each.holds)
 
 
-def _commands(case: Case, settled: Settlement | None) -> tuple[tuple[str, str], ...]:
+def _commands(case: Case, settled: Settlement | None, zone: ZoneInfo) -> tuple[tuple[str, str], ...]:
     """What can be typed now; names and reasons are for the reader to fill in."""
     batch = case.batch.batch_id
     store = f" --store {shlex.quote(case.store)}" if case.store else ""
@@ -270,7 +276,7 @@ def _commands(case: Case, settled: Settlement | None) -> tuple[tuple[str, str], 
     if state != "discarded":
         told.append(("The batch is wrong: it teaches nothing", f"sercheck settle {batch} --as discarded {who}"))
     if state == "held":
-        first = (case.batch.first_stamp or case.judgement.judged_at)[:10]
+        first = local_date(case.batch.first_stamp or case.judgement.judged_at, zone)
         told.append((
             "The feed has changed for good: learn anew from a day on",
             f"sercheck settle {batch} --as released --relearn-from {first} {who}",
@@ -289,13 +295,14 @@ def _last(case: Case, zone: ZoneInfo) -> tuple[Mark, ...]:
     return (*marks, own)
 
 
-def mark_of(each: Earlier, zone: ZoneInfo) -> Mark:
+def mark_of(each: JudgedBatch, zone: ZoneInfo) -> Mark:
     """A batch in the row of the last ones."""
-    batch = each.judged.batch
-    return Mark(batch.batch_id, day(batch.first_stamp, zone), _state_of(each.judged), sum(each.failed.values()))
+    failed = each.last.counts.get("fail", 0)
+    return Mark(each.batch.batch_id, day(each.batch.first_stamp, zone), state_of(each), failed)
 
 
-def _state_of(batch: JudgedBatch) -> str:
+def state_of(batch: JudgedBatch) -> str:
+    """Released, held, settled (held, then let in by a person) or discarded."""
     return _state(batch.last.decision, batch.settled)
 
 

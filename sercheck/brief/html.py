@@ -28,7 +28,7 @@ def page(brief: Brief, way: Sequence[tuple[str, str]] = ()) -> str:
         else:
             shown.append((rule, *plots.plot(rule, f"plot{place}", zone)))
     row, caption = plots.run_chart(brief.last, "row") if len(brief.last) > 1 else ("", "")
-    guides = [rule for rule in brief.failed if rule.runbook] or [r for r in brief.failed if r.holds and r.about]
+    guides = [rule for rule in brief.failed if rule.runbook]
     return render(
         "brief.html", brief=brief, shown=shown, row=row, row_caption=caption, heads=FIGURES, way=way,
         guides=guides[:6], series_name=name,

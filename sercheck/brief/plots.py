@@ -32,11 +32,12 @@ STATES = {
 def plot(rule: Failed, name: str, zone: ZoneInfo) -> tuple[Drawing, str]:
     """The plot of a failed rule and its caption."""
     assert rule.sketch is not None
-    draw = {"stretch": _stretch, "correlogram": _correlogram, "course": _course}[rule.sketch.kind]
-    return draw(rule, rule.sketch, name, zone)
+    if rule.sketch.kind == "stretch":
+        return _stretch(rule.sketch, name, zone)
+    return (_correlogram if rule.sketch.kind == "correlogram" else _course)(rule, rule.sketch, name)
 
 
-def _stretch(rule: Failed, sketch: Sketch, name: str, zone: ZoneInfo) -> tuple[Drawing, str]:
+def _stretch(sketch: Sketch, name: str, zone: ZoneInfo) -> tuple[Drawing, str]:
     x, y = _floats(sketch.x), _floats(sketch.y)
     mine = x >= sketch.begins
     with drawing() as (figure, axes):
@@ -58,7 +59,8 @@ def _stretch(rule: Failed, sketch: Sketch, name: str, zone: ZoneInfo) -> tuple[D
         axes.set_ylabel(plain(sketch.of, 40))
         outside = int(np.count_nonzero(((y < low) | (y > high)) & mine)) if sketch.band else 0
         shown = int(np.count_nonzero(mine & ~np.isnan(y)))
-        alt = f"{plain(sketch.of, 80)} of the judged stretch: {many(shown, 'point')} from {number(_least(y[mine]))} to {number(_most(y[mine]))}"
+        ends = f"{number(_least(y[mine]))} to {number(_most(y[mine]))}"
+        alt = f"{plain(sketch.of, 80)} of the judged stretch: {many(shown, 'point')} from {ends}"
         alt += f", {outside} of them outside history's band" if sketch.band else ""
         drawn = inline(figure, name, alt + ".")
     told = ["Thick: the judged stretch."]
@@ -68,7 +70,7 @@ def _stretch(rule: Failed, sketch: Sketch, name: str, zone: ZoneInfo) -> tuple[D
     return drawn, " ".join(told)
 
 
-def _correlogram(rule: Failed, sketch: Sketch, name: str, zone: ZoneInfo) -> tuple[Drawing, str]:
+def _correlogram(rule: Failed, sketch: Sketch, name: str) -> tuple[Drawing, str]:
     x, y = _floats(sketch.x), _floats(sketch.y)
     low, middle, high = (_floats(line) for line in (sketch.low, sketch.middle, sketch.high))
     failed = np.isin(x, rule.lags)
@@ -97,7 +99,7 @@ def _correlogram(rule: Failed, sketch: Sketch, name: str, zone: ZoneInfo) -> tup
     return drawn, f"{of[:1].upper()}{of[1:]}. Stems: the judged stretch. Band: {sketch.band}; dashed: the usual.{mark}"
 
 
-def _course(rule: Failed, sketch: Sketch, name: str, zone: ZoneInfo) -> tuple[Drawing, str]:
+def _course(rule: Failed, sketch: Sketch, name: str) -> tuple[Drawing, str]:
     x, y = _floats(sketch.x), _floats(sketch.y)
     limit = rule.limit if sketch.limit is None else sketch.limit
     with drawing() as (figure, axes):
@@ -131,12 +133,13 @@ def run_chart(marks: tuple[Mark, ...], name: str) -> tuple[Drawing, str]:
         judged = np.array([mark.judged for mark in marks])
         axes.plot(x[judged], up[judged].astype(float), "o", markersize=13, fillstyle="none", color=INKS["ink"])
         axes.set_ylim(-0.7, 1.7)
-        axes.set_xlim(min(x[0], -9) - 0.7, 0.7)
+        axes.set_xlim(min(int(x[0]), -14) - 0.7, 0.7)
         axes.set_yticks([0, 1], ["released", "held"])
-        ends = sorted({int(x[0]), 0})
-        axes.set_xticks(ends, [marks[end - 1].when for end in ends], ha="center")
-        for label, align in zip(axes.get_xticklabels(), ["left", "right"][-len(ends) :], strict=True):
-            label.set_ha(align)
+        ends = [int(x[0]), 0] if len(marks) >= 10 else [0]  # fewer leave no room for two dates
+        axes.set_xticks(ends, [marks[end - 1].when for end in ends])
+        axes.get_xticklabels()[-1].set_horizontalalignment("right")
+        if len(ends) > 1:
+            axes.get_xticklabels()[0].set_horizontalalignment("left")
         for side in ("left", "bottom"):
             axes.spines[side].set_visible(False)
         axes.tick_params(length=0)
@@ -152,9 +155,15 @@ def run_chart(marks: tuple[Mark, ...], name: str) -> tuple[Drawing, str]:
 def _time_axis(axes: Axes, zone: ZoneInfo) -> None:
     from matplotlib.dates import AutoDateLocator, ConciseDateFormatter
 
-    locator = AutoDateLocator(tz=zone, minticks=2, maxticks=5)
+    locator = AutoDateLocator(tz=zone, minticks=2, maxticks=5)  # type: ignore[no-untyped-call]
     axes.xaxis.set_major_locator(locator)
-    axes.xaxis.set_major_formatter(ConciseDateFormatter(locator, tz=zone, show_offset=False))
+    formats = ["%Y", "%b %Y", "%-d %b", "%H:%M", "%H:%M", "%H:%M:%S"]
+    axes.xaxis.set_major_formatter(
+        ConciseDateFormatter(  # type: ignore[no-untyped-call]
+            locator, tz=zone, show_offset=False, formats=formats,
+            zero_formats=["%Y", "%b %Y", "%-d %b", "%-d %b", "%H:%M", "%H:%M"],
+        )
+    )  # fmt: skip
 
 
 def _floats(values: Numbers) -> np.ndarray:

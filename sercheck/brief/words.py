@@ -75,6 +75,11 @@ def day(stamp: str | None, zone: ZoneInfo) -> str:
     return f"{local:%a} {local.day} {local:%b}"
 
 
+def local_date(stamp: str, zone: ZoneInfo) -> str:
+    """``2026-01-19``."""
+    return f"{datetime.fromisoformat(stamp).astimezone(zone):%Y-%m-%d}"
+
+
 def stretch(first: str | None, last: str | None, zone: ZoneInfo) -> str:
     """From the first to the last row; the day is said once where it is one."""
     if first is None or last is None:

@@ -23,6 +23,7 @@ COMMANDS = {
     "learn": "learn the baseline, fill the archive",
     "gate": "judge a batch",
     "settle": "a person overrules: release or discard a held batch, or declare a new regime",
+    "brief": "the page for the person on call",
     "ledger": "look up what was judged",
     "measures": "the measures, their fields, formulas and sources",
     "schema": "JSON Schema of rule files and records",

@@ -4,10 +4,14 @@ from __future__ import annotations
 
 import json
 import sys
+from typing import TYPE_CHECKING
 
 import click
 
-from sercheck.cli.say import say
+from sercheck.cli.say import plain, say
+
+if TYPE_CHECKING:
+    from sercheck.verdict import Verdict
 
 
 @click.command("gate")
@@ -18,6 +22,7 @@ from sercheck.cli.say import say
     "--records", metavar="FILE", help="Write the records: .jsonl, .csv or .parquet; - is JSON lines on stdout."
 )
 @click.option("--store", envvar="SERCHECK_STORE", default=".sercheck", show_default=True, metavar="DIR|URL")
+@click.option("--brief", metavar="FILE.html", help="Write the page for the person on call.")
 @click.option("--released-to", type=click.Path(), metavar="DIR", help="Move the batch files here when released.")
 @click.option("--held-to", type=click.Path(), metavar="DIR", help="Move the batch files here when held.")
 @click.option("--as-of", metavar="TIME", help="The clock to judge by (default: now).")
@@ -29,6 +34,7 @@ def command(
     history: tuple[str, ...],
     records: str | None,
     store: str,
+    brief: str | None,
     released_to: str | None,
     held_to: str | None,
     as_of: str | None,
@@ -50,6 +56,8 @@ def command(
     if records and records != "-":
         check_suffix(records)
         check_place(records)
+    if brief:
+        check_place(brief)
     for folder in filter(None, (released_to, held_to)):
         check_place(folder, folder=True)
     if (released_to or held_to) and any(map(is_source, batch)):
@@ -61,7 +69,22 @@ def command(
         click.echo(json.dumps(verdict.summary(), allow_nan=False, ensure_ascii=False))
     else:
         say(answer(verdict))
+    if brief:
+        _write_brief(brief, verdict, None if store == ".sercheck" else store)
+    for sentence in verdict.untold:
+        click.echo(plain(sentence, 1000), err=True)
     into = released_to if verdict.released else held_to
     if into:
         move_batch(verdict.paths, into)
     sys.exit(0 if verdict.released else 1)
+
+
+def _write_brief(file: str, verdict: Verdict, store: str | None) -> None:
+    """Write the page once the decision is stored and told; where that fails the decision stands, and a repeat with the
+    same batch changes nothing but writes the page.
+    """
+    from sercheck.brief.surfaces import shown
+    from sercheck.briefing import brief_of_verdict
+    from sercheck.outputs import write_text
+
+    write_text(file, shown(brief_of_verdict(verdict, store), "html"))

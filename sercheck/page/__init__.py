@@ -18,6 +18,16 @@ def render(template: str, **values: object) -> str:
 
 
 @cache
+def fingerprint() -> str:
+    """A hash of the templates and the style sheet: other pages come of others."""
+    from hashlib import blake2b
+    from importlib.resources import files
+
+    parts = sorted((each.name, each.read_bytes()) for each in files("sercheck.page").iterdir() if each.is_file())
+    return blake2b(b"".join(content for _, content in parts), digest_size=8).hexdigest()
+
+
+@cache
 def _environment() -> Environment:
     from jinja2 import Environment, PackageLoader, StrictUndefined
 

@@ -10,7 +10,7 @@ import io
 import re
 from collections.abc import Iterator
 from contextlib import contextmanager
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -19,9 +19,11 @@ if TYPE_CHECKING:
 WIDTH, HEIGHT = 360, 210
 """Size in points; a telephone shows about as many pixels, so that letters keep their size."""
 LETTERS = 10
-INKS = {"ink": "#010203", "muted": "#010204", "band": "#010205", "batch": "#010206", "fail": "#010207", "rule": "#010208"}
+INKS = {
+    "ink": "#010203", "muted": "#010204", "band": "#010205", "batch": "#010206", "fail": "#010207", "rule": "#010208",
+}  # fmt: skip
 """Stand-ins for the style sheet's variables ``--ink``, ``--muted`` and so on."""
-_SETTINGS = {
+_SETTINGS: dict[Any, Any] = {
     "svg.fonttype": "none", "svg.hashsalt": "sercheck", "font.size": LETTERS, "axes.linewidth": 0.6,
     "axes.edgecolor": INKS["muted"], "axes.labelcolor": INKS["ink"], "text.color": INKS["ink"],
     "xtick.color": INKS["muted"], "ytick.color": INKS["muted"], "xtick.labelcolor": INKS["ink"],
@@ -65,7 +67,8 @@ def inline(figure: Figure, name: str, alt: str) -> Drawing:
     from markupsafe import escape
 
     file = io.StringIO()
-    figure.savefig(file, format="svg", transparent=True, metadata={"Date": None, "Creator": None, "Format": None, "Type": None})
+    unsaid: dict[str, Any] = dict.fromkeys(("Date", "Creator", "Format", "Type"))
+    figure.savefig(file, format="svg", transparent=True, metadata=unsaid)
     text = file.getvalue()
     text = text[text.index("<svg") :]
     text = re.sub(r"(?s)<metadata>.*?</metadata>|<!--.*?-->|<style.*?</style>", "", text)
