@@ -3,12 +3,16 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from sercheck.errors import BatchError
 from sercheck.intake.build import Chunk, to_chunk
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.layout import Layout
 from sercheck.intake.paths import CSV_BLOCK, check_columns, opened
+
+if TYPE_CHECKING:
+    import pyarrow as pa
 
 HEADER_BYTES = 1 << 20
 """Bytes in which a header must end (ours)."""
@@ -75,3 +79,34 @@ def _header(path: Path, zipped: bool, delimiter: str) -> list[str]:
         return next((row for row in csv.reader(text.splitlines(keepends=True), delimiter=delimiter) if row), [])
     except csv.Error as error:
         raise BatchError(str(path), f"the header cannot be read ({error})", "a line with the columns' names") from error
+
+
+def some_csv(path: Path, zipped: bool, delimiter: str, rows: int) -> dict[str, pa.Array]:
+    """The first rows, about, of every column as text, missing words null.
+
+    Raises:
+        BatchError: the header or the rows cannot be read.
+    """
+    import pyarrow as pa
+    from pyarrow import csv
+
+    from sercheck.intake.cells import MISSING_WORDS
+
+    names = _header(path, zipped, delimiter)
+    if len(names) == 1 and (other := next((sign for sign in ";\t|" if sign in names[0]), "")):
+        came, wanted = f"one column, {names[0][:80]!r}", f"cells separated by {delimiter!r}"
+        raise BatchError(str(path), came, wanted, f"The cells seem to be separated by {other!r}.")
+    convert = csv.ConvertOptions(
+        column_types=dict.fromkeys(names, pa.string()), null_values=list(MISSING_WORDS), strings_can_be_null=True
+    )
+    read = csv.ReadOptions(block_size=CSV_BLOCK)
+    parse = csv.ParseOptions(delimiter=delimiter, newlines_in_values=True)
+    batches, count = [], 0
+    with opened(path, zipped) as stream:
+        for batch in csv.open_csv(stream, read, parse, convert):
+            batches.append(batch)
+            count += batch.num_rows
+            if count >= rows:
+                break
+    table = pa.Table.from_batches(batches).slice(0, rows) if batches else pa.table({})
+    return {name: table.column(place).combine_chunks() for place, name in enumerate(table.column_names)}

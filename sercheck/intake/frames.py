@@ -55,3 +55,18 @@ def _frame_column(values: Any, *, always_text: bool) -> pa.Array:
         texts = [str(cell).encode("utf-8", "backslashreplace").decode() if here else None for cell, here in cells]
         column = pa.array(texts, pa.string())
     return column.combine_chunks() if isinstance(column, pa.ChunkedArray) else column
+
+
+def some_frame(frame: pd.DataFrame, rows: int) -> dict[str, pa.Array]:
+    """The first rows of every column and of every named level of the index."""
+    import pandas as pd
+
+    if not isinstance(frame, pd.DataFrame):
+        raise BatchError("input", f"a {type(frame).__name__}", "a path, several, a glob, or one DataFrame")
+    part = frame.iloc[:rows]
+    columns = {str(name): _frame_column(part.iloc[:, place], always_text=True) for place, name in enumerate(part)}
+    levels = [str(name) for name in part.index.names if name is not None and name not in part.columns]
+    return {
+        **{name: _frame_column(part.index.get_level_values(name), always_text=True) for name in levels},
+        **columns,
+    }

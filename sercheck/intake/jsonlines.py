@@ -94,6 +94,18 @@ def _slow(path: Path, zipped: bool, layout: Layout, cadence: Cadence) -> list[Ch
     return chunks
 
 
+def some_json(path: Path, zipped: bool, rows: int) -> dict[str, pa.Array]:
+    """The first rows of every field they have; a missing field is null.
+
+    Raises:
+        BatchError: a line is no JSON object.
+    """
+    with _text(path, zipped) as lines:
+        block = list(islice(_objects(lines, path), rows))
+    names = dict.fromkeys(name for row in block for name in row)
+    return {name: _column([row.get(name) for row in block]) for name in names}
+
+
 def _objects(lines: TextIO, path: Path) -> Any:
     for number, line in enumerate(lines, 1):
         if not line.strip():

@@ -52,3 +52,19 @@ def read_parquet(path: Path, layout: Layout, cadence: Cadence) -> list[Chunk]:
     with file:
         groups = (group_chunk(file, group, layout, cadence, str(path)) for group in range(file.num_row_groups))
         return [chunk for chunk in groups if len(chunk)]
+
+
+def some_parquet(path: Path, rows: int) -> dict[str, pa.Array]:
+    """The first rows of every column."""
+    import pyarrow as pa
+    import pyarrow.parquet as pq
+
+    with pq.ParquetFile(path) as file:
+        batches, count = [], 0
+        for batch in file.iter_batches(batch_size=min(rows, 1 << 16)):
+            batches.append(batch)
+            count += batch.num_rows
+            if count >= rows:
+                break
+        table = pa.Table.from_batches(batches, schema=file.schema_arrow).slice(0, rows)
+    return {name: table.column(place).combine_chunks() for place, name in enumerate(table.column_names)}
