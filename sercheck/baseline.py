@@ -69,6 +69,16 @@ def _residual(panel: Panel) -> Residual:
     return Residual(values, profile, names, means)
 
 
+def remembered(panel: Panel, history: Floats) -> Floats:
+    """History without the steps of batches that were held and then let in by a person, shape (S, N).
+
+    Such a batch teaches level and profile, for the person said that it was in order; what it says about memory, cycle
+    and phase is what was held, and the law of those leaves it out.
+    """
+    held = panel.axis.held[: history.shape[1]]
+    return np.where(held, np.nan, history) if held.any() else history
+
+
 def leave_one_cycle_out(values: Floats, panel: Panel, season: str) -> tuple[Floats, Floats]:
     """Values less the phase means of one season that ``panel``'s history teaches, and those means at every step.
 

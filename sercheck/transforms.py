@@ -57,9 +57,15 @@ def _difference(transform: Transform, panel: Panel) -> Panel:
     return panel.changed(
         panel.values[:, lag:] - panel.values[:, :-lag],
         start=max(panel.start - lag, 0),
-        axis=panel.axis.cut(lag, steps),
+        axis=_reaching(panel.axis, lag),
         delivered=panel.delivered[:, lag:],
     )
+
+
+def _reaching(axis: Axis, lag: int) -> Axis:
+    """The axis from step ``lag`` on; a step whose difference reaches into a held batch is one of it."""
+    cut = axis.cut(lag, len(axis))
+    return replace(cut, held=cut.held | axis.held[: len(cut)]) if len(axis.held) else cut
 
 
 def _log(_: Transform, panel: Panel) -> Panel:
@@ -166,6 +172,7 @@ def _grouped(axis: Axis, firsts: Ints, group: Ints, size: int) -> Axis:
         {name: axis.phases[name][firsts] // size for name in kept},
         np.logical_and.reduceat(axis.closed, firsts),
         np.logical_or.reduceat(axis.expected, firsts),
+        held=np.logical_or.reduceat(axis.held, firsts) if len(axis.held) else axis.held,
     )
 
 

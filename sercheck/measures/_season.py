@@ -10,7 +10,7 @@ from difflib import get_close_matches
 
 import numpy as np
 
-from sercheck.baseline import FEWEST_CYCLES, chosen_seasons
+from sercheck.baseline import FEWEST_CYCLES, chosen_seasons, remembered
 from sercheck.errors import UsageError
 from sercheck.grid import Panel
 from sercheck.measure import Reasons
@@ -73,7 +73,7 @@ class Learned:
     Attributes:
         model: profile, noise and whether the season evolves.
         window: shape (S, n), in a unit of its own, other seasons taken out, closed days missing.
-        history: shape (S, N), the same.
+        history: shape (S, N), the same, without the steps of batches that were held and then let in.
     """
 
     model: SeasonModel
@@ -101,9 +101,9 @@ def _learned(panel: Panel, cycle: Cycle) -> Learned:
             # a season that neither contains the one asked for nor lies inside it
             profile = robust_phase_means(values[:, :start], other.phase[:start], other.length)
             values = values - profile.means[:, other.phase]
-    return Learned(
-        learn_season(values[:, :start], cycles, values.shape[1] - start), values[:, start:], values[:, :start]
-    )
+    history, held = values[:, :start], axis.held[:start] if len(axis.held) else None
+    model = learn_season(history, cycles, values.shape[1] - start, held)
+    return Learned(model, values[:, start:], remembered(panel, history))
 
 
 def ask_history(reasons: Reasons, panel: Panel, season: Named) -> Bools:

@@ -41,7 +41,7 @@ from typing import ClassVar
 import numpy as np
 from pydantic import BaseModel
 
-from sercheck.baseline import residual
+from sercheck.baseline import remembered, residual
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Picture, Question, Reasons, Reference, Stays
 from sercheck.measures._lags import (
@@ -118,8 +118,9 @@ def _against_history(panel: Panel, question: Question, lags: tuple[int, ...]) ->
         quiet = np.full(n.shape, np.nan)
         return _told(r, quiet, n, n_missing, None, reasons, lags, "")
     without = residual(panel)
-    past = history_law(without.values[:, : panel.start], without.values[:, panel.start :], steps)
-    reasons.add(np.count_nonzero(~np.isnan(without.values[:, : panel.start]), axis=1, keepdims=True) == 0, NO_HISTORY)
+    history = remembered(panel, without.values[:, : panel.start])
+    past = history_law(history, without.values[:, panel.start :], steps)
+    reasons.add(np.count_nonzero(~np.isnan(history), axis=1, keepdims=True) == 0, NO_HISTORY)
     ask_variety(reasons, panel, past.batch, question.risk)
     ask_rows(reasons, n, past.rows, lags, lambda lag: max(FEWEST_BY_WINDOWS, 4 * lag))
     reasons.add(np.isnan(past.batch), "the window varies by no more than the rounding of its numbers")

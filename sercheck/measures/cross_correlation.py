@@ -40,7 +40,7 @@ from typing import Annotated, ClassVar
 import numpy as np
 from pydantic import BaseModel, ConfigDict, Field, model_validator
 
-from sercheck.baseline import FEWEST_CYCLES, chosen_seasons
+from sercheck.baseline import FEWEST_CYCLES, chosen_seasons, remembered
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Picture, Question, Reasons, Reference, Side, Stays
 from sercheck.measures._lags import literal_bounds, must_be_one_of_both
@@ -195,8 +195,9 @@ def _against_stretches(
         ask_history(reasons, past(column), question.risk, "a correlation")
     pair.ask(reasons, question, FEWEST_PAST)
     r, count = cross_correlation(*window, pair.lags)
-    whole, known = cross_correlation(*history, pair.lags)
-    then = _in_stretches(*history, past(pair.panel).steps, pair.lags)
+    one, two = (remembered(pair.panel, x) for x in history)
+    whole, known = cross_correlation(one, two, pair.lags)
+    then = _in_stretches(one, two, past(pair.panel).steps, pair.lags)
     with np.errstate(divide="ignore"):
         naive = np.sqrt(1 / np.maximum(count, 1) + 1 / np.maximum(known, 1))
     laws: dict[Side, Reference] = {}

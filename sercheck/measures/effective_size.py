@@ -33,6 +33,7 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict
 from scipy import special
 
+from sercheck.baseline import remembered
 from sercheck.grid import Panel
 from sercheck.measure import POWER, Measure, Measurement, Picture, Question, Reasons, Side, Stays
 from sercheck.measures._past import (
@@ -97,7 +98,7 @@ def _like_history(panel: Panel, question: Question) -> Measurement:
     ask_history(reasons, told, question.risk, "an effective size")
     ask_variety(reasons, told, question.risk)
     share, count = low_frequency_share(told.window)
-    cut = windows(told.history, told.steps)
+    cut = windows(remembered(panel, told.history), told.steps)
     then, _ = low_frequency_share(cut.reshape(-1, told.steps))
     full = (~np.isnan(cut)).sum(axis=2) * 2 >= told.steps
     at = -_angle(share)

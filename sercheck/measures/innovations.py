@@ -52,6 +52,7 @@ import numpy as np
 from pydantic import BaseModel, ConfigDict, Field, model_validator
 from scipy import special
 
+from sercheck.baseline import remembered
 from sercheck.grid import Panel
 from sercheck.measure import POWER, Measure, Measurement, Picture, Question, Reasons, Reference, Side, Stays
 from sercheck.measures._exact import exact
@@ -167,7 +168,7 @@ def _innovation(panel: Panel) -> Innovation:
 
 def _learned(panel: Panel) -> Innovation:
     told = past(panel)
-    model = burg(told.history)
+    model = burg(remembered(panel, told.history))
     e = unforeseen(np.concatenate([told.history, told.window], axis=1), model)
     known = np.maximum(told.known, 1)
     share = np.minimum(model.order / known, 0.5)

@@ -43,7 +43,7 @@ from typing import ClassVar
 import numpy as np
 from pydantic import BaseModel
 
-from sercheck.baseline import residual
+from sercheck.baseline import remembered, residual
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Picture, Question, Reasons, Reference, Side, Stays
 from sercheck.measures._lags import (
@@ -166,7 +166,7 @@ def _against_history(panel: Panel, question: Question, lags: tuple[int, ...]) ->
     n, n_missing = window_counts(panel, lags)
     shape = n.shape
     without = residual(panel)
-    batch, history = without.values[:, panel.start :], without.values[:, : panel.start]
+    batch, history = without.values[:, panel.start :], remembered(panel, without.values[:, : panel.start])
     observed = sample(batch, steps)
     now = reflections(batch, steps)
     stretches = windows(history, max(batch.shape[1], 1))

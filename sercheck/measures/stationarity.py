@@ -36,6 +36,7 @@ from typing import ClassVar, Literal
 import numpy as np
 from pydantic import BaseModel, ConfigDict, Field
 
+from sercheck.baseline import remembered
 from sercheck.grid import Panel
 from sercheck.measure import Measure, Measurement, Question, Reasons
 from sercheck.measures._exact import exact
@@ -91,7 +92,8 @@ def _like_history(panel: Panel, question: Question, *, trend: bool) -> Measureme
     told, reasons = past(panel), Reasons((len(past(panel).n), 1))
     ask_history(reasons, told, question.risk, "a return to the level")
     ask_variety(reasons, told, question.risk)
-    stretches = windows(scored(panel).own, told.steps) if told.steps else np.empty((len(told.n), 0, 0))
+    history = remembered(panel, scored(panel).own)
+    stretches = windows(history, told.steps) if told.steps else np.empty((len(told.n), 0, 0))
     series, m, steps = stretches.shape
     few = (~np.isnan(stretches)).sum(axis=2) * 2 < steps
     then = augmented_dickey_fuller(stretches.reshape(series * m, steps), trend=trend, lags=LAGS).statistic
@@ -155,4 +157,4 @@ def _slow(panel: Panel) -> Bools:
     known = told.known >= FEWEST_STRONG
     if not known.any():
         return ~known
-    return np.asarray(~known | root_beyond(burg(told.history), SLOW_ROOT))
+    return np.asarray(~known | root_beyond(burg(remembered(panel, told.history)), SLOW_ROOT))

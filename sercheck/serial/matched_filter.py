@@ -95,7 +95,9 @@ def _profile(cycles: tuple[Cycle, ...], means: Sequence[Floats], choice: Ints, p
     return shape
 
 
-def learn_season(history: Floats, cycles: Sequence[Cycle], window: int) -> SeasonModel:
+def learn_season(
+    history: Floats, cycles: Sequence[Cycle], window: int, left_out: Bools | None = None
+) -> SeasonModel:
     """Learn a season's profile, the noise around it, and whether the season stays the same.
 
     The profile is the mean of the cycles that are not broken. Where longer seasons contain the one asked for (a week
@@ -110,13 +112,15 @@ def learn_season(history: Floats, cycles: Sequence[Cycle], window: int) -> Seaso
         history: shape (S, N), NaN is missing (rows that should not teach are given as missing).
         cycles: the season asked for, then longer ones of which it is a divisor; their phases cover history and batch.
         window: steps of the batch.
+        left_out: steps of history that teach the profile and not how noise and amplitude scatter, shape (N,).
 
     Returns:
         The model; NaN variance where history is too short to fit anything.
     """
     block = max(1, BLOCK // max(history.shape[1], 1))
     firsts = range(0, max(len(history), 1), block)
-    return _joined([_learn(history[first : first + block], tuple(cycles), window) for first in firsts])
+    aside = np.zeros(history.shape[1], dtype=bool) if left_out is None else left_out
+    return _joined([_learn(history[first : first + block], tuple(cycles), window, aside) for first in firsts])
 
 
 def _joined(models: list[SeasonModel]) -> SeasonModel:
@@ -135,7 +139,7 @@ def _joined(models: list[SeasonModel]) -> SeasonModel:
     return SeasonModel(cycles=first.cycles, means=means, noise=noise, **rest)
 
 
-def _learn(history: Floats, cycles: tuple[Cycle, ...], window: int) -> SeasonModel:
+def _learn(history: Floats, cycles: tuple[Cycle, ...], window: int, left_out: Bools) -> SeasonModel:
     steps = history.shape[1]
     day = cycle_numbers(cycles[0].phase[:steps])
     fits = [robust_phase_means(history, c.phase[:steps], c.length, day) for c in cycles]
@@ -147,7 +151,8 @@ def _learn(history: Floats, cycles: tuple[Cycle, ...], window: int) -> SeasonMod
     kept = np.stack([fit.kept for fit in fits])[pick] if len(cycles) > 1 else fits[0].kept
     count = np.stack([_seen_cycles(fit) for fit in fits])[pick]
     length = np.array([c.length for c in cycles])[choice]
-    rest = np.where(kept, history - shape, np.nan)
+    used = kept & ~left_out
+    rest = np.where(used, history - shape, np.nan)
     noise = burg(rest, max_order=HIGHEST_ORDER)
     noise = replace(noise, variance=np.nan_to_num(noise.variance))
     e = innovations(rest, noise)
@@ -159,7 +164,7 @@ def _learn(history: Floats, cycles: tuple[Cycle, ...], window: int) -> SeasonMod
     correlated = _correlates(e, cycles[0].length, np.where(choice == 0, count, np.inf))
     for place, cycle in enumerate(cycles[1:], start=1):
         correlated |= (choice == place) & _correlates(e, cycle.length, count)
-    scatter, df = _scatter(model, np.where(kept, history, np.nan), window)
+    scatter, df = _scatter(model, np.where(used, history, np.nan), window)
     wild = special.chdtrc(df, scatter * df) < SCATTERS
     return replace(model, evolving=correlated | wild, scatter=np.maximum(scatter, 1.0), windows=df)
 
