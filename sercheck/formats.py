@@ -10,9 +10,12 @@ from __future__ import annotations
 import json
 import re
 from collections.abc import Callable, Collection, Iterator, Mapping
-from typing import Any, BinaryIO
+from typing import TYPE_CHECKING, Any, BinaryIO
 
 import numpy as np
+
+if TYPE_CHECKING:
+    import pyarrow as pa
 
 Columns = Mapping[str, np.ndarray]
 BLOCK = 8192
@@ -52,10 +55,16 @@ def csv_text(text: str) -> str:
 
 def write_parquet(columns: Columns, whole: Collection[str], file: BinaryIO) -> None:
     """One Parquet table: int64, double and string columns, all nullable."""
-    import pyarrow as pa
     import pyarrow.parquet as pq
 
-    pq.write_table(pa.table({name: _arrow(column, name in whole) for name, column in columns.items()}), file)
+    pq.write_table(arrow_table(columns, whole), file)
+
+
+def arrow_table(columns: Columns, whole: Collection[str]) -> pa.Table:
+    """The same as a table in memory."""
+    import pyarrow as pa
+
+    return pa.table({name: _arrow(column, name in whole) for name, column in columns.items()})
 
 
 def _arrow(column: np.ndarray, whole: bool) -> Any:

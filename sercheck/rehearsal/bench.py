@@ -6,7 +6,7 @@ of other faults in one block. Depends on ``engine``, ``collect`` and the files b
 
 from __future__ import annotations
 
-from collections.abc import Callable, Collection, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from functools import cached_property
 from hashlib import blake2b
@@ -34,6 +34,8 @@ KEPT_BYTES = 400_000_000
 """Memory for measurements of healthy batches that are kept for the next faults (ours)."""
 COPIES = 12
 """Arrays as large as a batch with its history that its measurements hold on to, about (counted on the demo)."""
+TAGS = ("fault", "size", "try", "series_hit", "began")
+"""What stands beside the records of a rehearsal, after ``batch``; null where a batch is healthy."""
 
 
 @dataclass(frozen=True)
@@ -143,11 +145,11 @@ class Bench:
 
     # -- healthy batches ---------------------------------------------------------------------------------------------
 
-    def judge(self, batch: int, marks: Marks) -> Judgement:
-        """Judge a batch as it was delivered."""
+    def judge(self, batch: int, marks: Marks, *, kept: bool = False) -> Judgement:
+        """Judge a batch as it was delivered; ``kept``: what it was judged with stands, and its records are kept."""
         grid, run = self._grid(batch, marks), self._run(batch, marks)
         seen, _ = look_at_block(grid, run)
-        return self._judged(batch, name_causes(seen, grid, run), {})
+        return self._judged(batch, name_causes(seen, grid, run), dict.fromkeys(TAGS), kept=kept)
 
     def _grid(self, batch: int, marks: Marks) -> Grid:
         return self.feed.grid(batch, marks.before(batch))
@@ -158,9 +160,11 @@ class Bench:
             book = replace(book, rules=tuple(book.rules[place] for place in rules))
         return Run(book, self.feed.cadence, self.feed.due(batch), marks.rests(batch, self.look))
 
-    def _judged(self, batch: int, seen: Sequence[Seen], tags: Mapping[str, object]) -> Judgement:
+    def _judged(
+        self, batch: int, seen: Sequence[Seen], tags: Mapping[str, object], *, kept: bool = True
+    ) -> Judgement:
         table = records(self.feed.book, decide(self.feed.book, seen), self._common(batch, tags))
-        if self.keep is not None:
+        if self.keep is not None and kept:
             self.keep(table, {"batch": self.feed.began(batch), **tags})
         return told(batch, table, self.feed.book)
 
@@ -209,10 +213,12 @@ class Bench:
                 edge += len(trial.series)
                 whole = _with_rows(grid, at[trial.series], stacked, rows)
                 parts = self._whole(whole, at[trial.series], stacked, rows, seen, batch, marks)
-                if self.keep is None and not self._held(parts):
-                    continue
+                if self.keep is None:  # limits are for records only
+                    parts = [self._quick(one) for one in parts]
+                    if not self._held(parts):
+                        continue
                 run = self._run(batch, marks)
-                tags = _tags(trial.case, len(trial.series), start)
+                tags = _tags(trial.case, len(trial.series), self.feed.began(start))
                 trial.judged = self._judged(batch, name_causes(parts, whole, run), tags)
 
     def _stacked(self, trials: Sequence[_Trial], grid: Grid, at: Ints, batch: int) -> Grid:
@@ -274,13 +280,14 @@ class Bench:
             self._known[key] = [known(one) for one in seen]
         return self._known[key]
 
+    def _quick(self, seen: Seen) -> Seen:
+        return seen if self.feed.book.rules[seen.rule].matters is not None else unsaid(seen)
+
     def _held(self, seen: Sequence[Seen]) -> bool:
-        """Whether the batch is held; limits are not worked out for it."""
         rules = self.feed.book.rules
-        quick = [one if rules[one.rule].matters is not None else unsaid(one) for one in seen]
         return any(
             (judged.outcome == outcome).any()
-            for judged in decide(self.feed.book, quick)
+            for judged in decide(self.feed.book, seen)
             for outcome, action in actions(rules[judged.seen.rule]).items()
             if action == "hold"
         )
@@ -322,8 +329,9 @@ def told(batch: int, table: Records, book: Rulebook) -> Judgement:
     )
 
 
-def _tags(case: Case, series: int, start: int) -> dict[str, object]:
-    return {"fault": case.fault.name, "size": case.size, "try": case.number, "series_hit": series, "began": start}
+def _tags(case: Case, series: int, began: str) -> dict[str, object]:
+    values = (case.fault.name, float(case.size), float(case.number), float(series), began)
+    return dict(zip(TAGS, values, strict=True))
 
 
 def _groups(trials: Sequence[_Trial]) -> Iterator[list[_Trial]]:
@@ -366,15 +374,14 @@ def _put(tally: Tally, places: Ints, other: Tally, rows: Ints) -> Tally:
     )  # fmt: skip
 
 
-def _joined(tallies: Collection[Tally]) -> Tally:
-    def joined(read: Callable[[Tally], Ints]) -> Ints:
-        return np.concatenate([read(tally) for tally in tallies])
+def _joined(tallies: Sequence[Tally]) -> Tally:
+    def joined(name: str) -> Ints:
+        return np.concatenate([getattr(tally, name) for tally in tallies])
 
-    columns = next(iter(tallies)).unreadable
+    columns = tallies[0].unreadable
     return Tally(
-        joined(lambda one: one.rows), joined(lambda one: one.doubles), joined(lambda one: one.differing),
-        joined(lambda one: one.disorder), joined(lambda one: one.off_grid),
-        {name: joined(lambda one, name=name: one.unreadable[name]) for name in columns},
-        {name: joined(lambda one, name=name: one.infinite[name]) for name in columns},
-        joined(lambda one: one.newest),
+        joined("rows"), joined("doubles"), joined("differing"), joined("disorder"), joined("off_grid"),
+        {name: np.concatenate([tally.unreadable[name] for tally in tallies]) for name in columns},
+        {name: np.concatenate([tally.infinite[name] for tally in tallies]) for name in columns},
+        joined("newest"),
     )  # fmt: skip

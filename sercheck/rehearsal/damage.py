@@ -38,7 +38,7 @@ class Case:
 
     def generator(self, seed: int, day: int) -> np.random.Generator:
         """Its own chance; a fault that draws series draws the same ones every day."""
-        same = isinstance(self.fault, Fault) and self.fault.fewest_series > 1
+        same = _fewest(self.fault) > 1
         name = zlib.crc32(self.fault.name.encode())
         return np.random.default_rng(
             [seed, name, round(abs(self.size) * 1e6), int(self.every), self.number, 0 if same else day]
@@ -62,7 +62,7 @@ def hit(case: Case, grid: Grid, seed: int) -> Ints:
     if case.every:
         chosen = able
     else:
-        wanted = fault.fewest_series * max(1, int(case.size)) if _many(fault) else 1
+        wanted = _fewest(fault) * (max(1, int(case.size)) if _fewest(fault) > 1 else 1)
         draw = np.random.default_rng([seed, case.number]).permutation(len(able))  # the same for all faults
         chosen = np.sort(able[draw[:wanted]]) if wanted <= len(able) else able[:0]
     if isinstance(fault, Fault) and len(chosen):
@@ -75,12 +75,12 @@ def hit(case: Case, grid: Grid, seed: int) -> Ints:
 def possible(fault: Fault | Delivery, *, every: bool, series: int) -> bool:
     """Whether a fault can be put into one series, or into all of so many."""
     if every:
-        return series > 1 and not _many(fault) and not (isinstance(fault, Delivery) and fault.whole)
-    return series >= (fault.fewest_series if isinstance(fault, Fault) else 1)
+        return series > 1 and _fewest(fault) == 1 and not (isinstance(fault, Delivery) and fault.whole)
+    return series >= _fewest(fault)
 
 
-def _many(fault: Fault | Delivery) -> bool:
-    return isinstance(fault, Fault) and fault.fewest_series > 1
+def _fewest(fault: Fault | Delivery) -> int:
+    return fault.fewest_series if isinstance(fault, Fault) else 1
 
 
 def broken(case: Case, grid: Grid, rows: Ints, day: int, seed: int, cadence: Cadence) -> Broken:

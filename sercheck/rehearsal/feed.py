@@ -192,8 +192,8 @@ def read_feed(book: Rulebook, history: GivenRows, begins: str | None = None) -> 
         grid = replace(grid, axis=longer, values=values, delivered=np.pad(grid.delivered, wider))
     edges = edges - first
     edges[:, 0] = np.maximum(edges[:, 0], 0)
-    counts, some = _counted(rows, grid, edges, cadence)
-    edges, counts = edges[some], _of_batches(counts, some)
+    tallies, some = _counted(rows, grid, edges, cadence)
+    edges, counts = edges[some], _of_batches(tallies, some)
     feed = Feed(
         book, layout, cadence, grid.keys, grid.axis, grid.values, grid.delivered, edges, counts, 0,
         int(np.count_nonzero(rows.stamps == NOT_A_STAMP)),
@@ -221,7 +221,7 @@ def _cut(whole: Extent, cadence: Cadence, layout: Layout) -> tuple[Ints, int]:
     right before.
     """
     end = int(cadence.index_of(np.array([whole.last]))[0][0])
-    edges = []
+    edges: list[tuple[int, int]] = []
     stamp, before = whole.first, None
     while True:
         here = replace(whole, first=stamp, last=stamp)
