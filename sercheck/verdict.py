@@ -61,6 +61,8 @@ class Verdict:
         arithmetic: how the alarm budget becomes the risk of each rule, a sentence each.
         sketches: pictures of the rules that failed, as numbers.
         rules: text of the rule file.
+        untold: a sentence for each desk that could not be told; the message waits in the ledger.
+        seconds: how long reading and judging took.
     """
 
     decision: str
@@ -76,6 +78,8 @@ class Verdict:
     arithmetic: tuple[str, ...] = ()
     sketches: tuple[Sketch, ...] = ()
     rules: str = ""
+    untold: tuple[str, ...] = ()
+    seconds: float = 0.0
 
     @property
     def counts(self) -> dict[str, int]:
@@ -130,6 +134,7 @@ class Verdict:
             "false_holds_expected": expected,
             "alarm_budget": list(self.arithmetic),
             "notes": list(self.notes),
+            "untold": list(self.untold),
         }
 
     @property
@@ -198,7 +203,7 @@ def gate(
         SercheckError: rule file, batch, history or store cannot be used. Nothing is released then.
     """
     book = rules if isinstance(rules, Rulebook) else load_rules(rules)
-    judged_at = _clock(as_of)
+    judged_at, began = _clock(as_of), time.perf_counter()
     kept_in = _open_ledger(store, ledger) if store is not None or ledger is not None else None
     layout = layout_of(book)
     memory = open_memory(book, layout, kept_in, store, writes=keep) if kept_in and store is not None else None
@@ -248,6 +253,7 @@ def gate(
         arithmetic=tuple(explain(book)),
         sketches=sketcher.sketches(judged),
         rules=book.text,
+        seconds=time.perf_counter() - began,
     )
     if kept_in is None or not keep:
         return verdict
@@ -255,6 +261,7 @@ def gate(
     settled = kept_in.batch(verdict.batch_id).settled
     if memory:
         memory.keep(verdict.batch_id, source, cadence, verdict.decision, settled)
+    verdict = replace(verdict, untold=_tell(kept_in, verdict.batch_id, store))
     return _overruled(verdict, settled) if settled else verdict
 
 
@@ -307,12 +314,22 @@ def _kept(verdict: Verdict, common: Common, book: Rulebook, ledger: Ledger) -> V
     )  # fmt: skip
     with ledger:
         known = ledger.find(judgement.batch_id, judgement.rules_fingerprint, judgement.baseline_id)
-        stored = known or ledger.add(batch, judgement, verdict.table, to_text(verdict.sketches, verdict.notes))
+        desks = {rule.name: rule.tell for rule in book.rules}
+        sketched = to_text(verdict.sketches, verdict.notes)
+        stored = known or ledger.add(batch, judgement, verdict.table, sketched, desks)
         table = ledger.records(Filters(judgement_id=stored.judgement_id))
     if known is None and stored.decision == verdict.decision:
         return verdict
     note = f"this batch was judged by these rules before, at {stored.judged_at}; that judgement stands"
     return replace(verdict, decision=stored.decision, table=table, notes=(*verdict.notes, note))
+
+
+def _tell(ledger: Ledger, batch_id: str, store: str | Path | None) -> tuple[str, ...]:
+    """Tell the desks what waits in the ledger; a sentence for each that could not be told."""
+    from sercheck.desks import tell
+    from sercheck.store.where import DEFAULT_STORE
+
+    return tell(ledger, batch_id, "" if store is None or str(store) == DEFAULT_STORE else str(store))
 
 
 def _overruled(verdict: Verdict, settled: Settlement) -> Verdict:

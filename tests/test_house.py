@@ -57,6 +57,7 @@ OUTSIDE: dict[str, set[str]] = {
 
 LATE = {
     "pandas", "pyarrow", "sqlalchemy", "statsmodels", "matplotlib", "scipy.stats", "scipy.signal", "jinja2", "dask",
+    "apprise",
     "fsspec",
 }  # fmt: skip
 """Libraries that are slow to start, imported inside the functions that use them."""

@@ -26,6 +26,9 @@ if TYPE_CHECKING:
 
     from sercheck.store.ledger import Ledger
 
+UNSENT = ("waiting", "sending", "undelivered")
+LATE = "its server gave no answer"
+"""How the trouble of an attempt begins of which nobody knows whether it reached the desk."""
 FIRST_PAUSE = timedelta(minutes=1)
 LONGEST_PAUSE = timedelta(hours=6)
 """A message that could not be sent rests for a minute, then twice as long each time, six hours at most (ours: a desk
@@ -61,8 +64,8 @@ class Message:
 
     @property
     def uncertain(self) -> bool:
-        """It was claimed before and the claim never ended."""
-        return self.state == "sending"
+        """It was claimed before and the claim never ended, or it ended without the server's answer."""
+        return self.state == "sending" or (self.trouble or "").startswith(LATE)
 
 
 def put_messages(
@@ -92,15 +95,15 @@ def put_messages(
         connection.execute(insert(tables().messages).values(values))
 
 
-def due(ledger: Ledger, now: datetime, desks: Collection[str], judgement_id: str | None = None) -> list[Message]:
-    """Messages to be sent now to these desks, and those of one judgement to any; the oldest first."""
+def due(ledger: Ledger, now: datetime, desks: Collection[str], batch_id: str | None = None) -> list[Message]:
+    """Messages to be sent now to these desks, and those of one batch to any; the oldest first."""
     from sqlalchemy import or_, select
 
     kept = tables().messages
     mine: ColumnElement[bool] = kept.c.desk.in_(sorted(desks))
-    if judgement_id is not None:
-        mine = or_(mine, kept.c.judgement_id == judgement_id)
-    query = select(*kept.c).where(kept.c.state != "sent", mine).order_by(kept.c.made_at, kept.c.message_id)
+    if batch_id is not None:
+        mine = or_(mine, kept.c.batch_id == batch_id)
+    query = select(*kept.c).where(kept.c.state.in_(UNSENT), mine).order_by(kept.c.made_at, kept.c.message_id)
     with ledger.looking() as connection:
         rows = [] if connection is None else connection.execute(query).mappings().all()
     return [_message(row) for row in rows if _is_due(row, now)]
@@ -114,7 +117,7 @@ def waiting_desks(ledger: Ledger) -> set[str]:
     with ledger.looking() as connection:
         if connection is None:
             return set()
-        return set(connection.execute(select(kept.c.desk).where(kept.c.state != "sent").distinct()).scalars())
+        return set(connection.execute(select(kept.c.desk).where(kept.c.state.in_(UNSENT)).distinct()).scalars())
 
 
 def messages_of(ledger: Ledger, batch_id: str | None = None, state: str | None = None) -> list[Message]:
