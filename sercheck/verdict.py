@@ -24,7 +24,7 @@ from sercheck.intake.stream import feed_cadence, feed_grids, open_feed
 from sercheck.judge import Seen
 from sercheck.record import Records, utc_text
 from sercheck.rulebook import load_rules
-from sercheck.rulebook.budget import expected_false_holds, explain
+from sercheck.rulebook.budget import expected_false_holds, explain, in_short
 from sercheck.rulebook.compiled import Rulebook
 from sercheck.sketches import Sketch, to_text
 from sercheck.sketching import Sketcher
@@ -59,6 +59,7 @@ class Verdict:
         expected: most false holds a healthy feed has on average, and in which period; None when the rule file does not
             say how often a batch comes.
         arithmetic: how the alarm budget becomes the risk of each rule, a sentence each.
+        budget: the same in a line; empty where no rule can hold by chance.
         sketches: pictures of the rules that failed, as numbers.
         rules: text of the rule file.
         untold: a sentence for each desk that could not be told; the message waits in the ledger.
@@ -76,6 +77,7 @@ class Verdict:
     timezone: str = "UTC"
     expected: tuple[float, str] | None = None
     arithmetic: tuple[str, ...] = ()
+    budget: str = ""
     sketches: tuple[Sketch, ...] = ()
     rules: str = ""
     untold: tuple[str, ...] = ()
@@ -251,6 +253,7 @@ def gate(
         timezone=book.timezone,
         expected=expected_false_holds(book),
         arithmetic=tuple(explain(book)),
+        budget=in_short(book),
         sketches=sketcher.sketches(judged),
         rules=book.text,
         seconds=time.perf_counter() - began,

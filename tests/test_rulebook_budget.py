@@ -2,10 +2,14 @@
 
 from __future__ import annotations
 
-import pytest
+import json
 
+import pytest
+from click.testing import CliRunner
+
+from sercheck.cli.measures import command
 from sercheck.rulebook import load_rules
-from sercheck.rulebook.budget import expected_false_holds, explain
+from sercheck.rulebook.budget import expected_false_holds, explain, in_short
 
 HEAD = """feed: heat
 columns: {time: at, values: [kwh]}
@@ -95,3 +99,32 @@ def test_the_arithmetic_is_told_in_sentences():
         assert words in told
     hourly = " ".join(explain(book("batch_every: 1h\nfalse_alarm: 0.001\n", SPREAD + "a}")))
     assert "8.77 a year" in hourly
+
+
+def test_the_budget_in_a_line():
+    """Expected false holds, who shares the risk and how much it is; nothing where nothing holds by chance."""
+    told = in_short(book(BUDGET, SPREAD + "a}", LEVEL + "b}", FRESH + "c}", LEVEL + "d, otherwise: note}"))
+    assert told == "at most 1 false hold per 90D: 2 rules share a risk of 0.0111 a batch"
+    hourly = in_short(book("batch_every: 1h\nfalse_alarm: 0.001\n", SPREAD + "a}"))
+    assert hourly == "at most 2.16 false holds per 90D: 1 rule has a risk of 0.001 a batch"
+    assert in_short(book("", SPREAD + "a}")) == "1 rule has a risk of 0.001 that a healthy batch is held"
+    assert in_short(book(BUDGET, FRESH + "c}")) == ""
+
+
+def test_the_command_explains_the_budget_of_a_rule_file(tmp_path):
+    """Sentences and each rule's risk; the same as JSON; not together with the name of a measure."""
+    path = tmp_path / "rules.yaml"
+    rules = book(BUDGET, SPREAD + "wide as ever, weight: 3}", LEVEL + "b, otherwise: note}", FRESH + "c}")
+    path.write_text(rules.text)
+    text = CliRunner().invoke(command, ["--rules", str(path)]).output
+    assert "so the risk of one batch is 1 × 1D / 90D = 0.0111." in " ".join(text.split())
+    lines = {line.split("  ")[0]: line.split() for line in text.splitlines()}
+    assert lines["wide as ever"][3:] == ["spread", "hold", "3", "0.0111", "false_holds"]
+    assert lines["c"][1:] == ["freshness", "hold", "–", "0", "–"]
+    told = json.loads(CliRunner().invoke(command, ["--rules", str(path), "--format", "json"]).output)
+    assert told["alarm_budget"] == explain(rules)
+    assert told["false_holds_expected"] == {"per": "90D", "count": pytest.approx(1.0)}
+    assert [(each["rule"], each["false_alarm"]) for each in told["rules"]] == [
+        (rule.name, rule.false_alarm) for rule in rules.rules
+    ]
+    assert CliRunner().invoke(command, ["level", "--rules", str(path)]).exit_code == 2

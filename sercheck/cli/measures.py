@@ -7,17 +7,25 @@ from typing import Any
 
 import click
 
+from sercheck.cli.budget_text import facts, page
 from sercheck.measures import names
+from sercheck.rulebook import load_rules
 from sercheck.rulebook.describe import describe, summary
 from sercheck.rulebook.model import RuleKeys
 
 
 @click.command("measures")
 @click.argument("name", required=False)
+@click.option("--rules", type=click.Path(), metavar="FILE", help="Explain the alarm budget of this rule file.")
 @click.option("--format", "form", type=click.Choice(["text", "json"]), default="text", help="How to print it.")
-def command(name: str | None, form: str) -> None:
-    """List the measures, or tell all about one."""
-    if name is None:
+def command(name: str | None, rules: str | None, form: str) -> None:
+    """List the measures, tell all about one, or explain the alarm budget of a rule file."""
+    if rules is not None:
+        if name is not None:
+            raise click.UsageError("a measure or --rules, not both")
+        book = load_rules(rules)
+        click.echo(json.dumps(facts(book), indent=2, ensure_ascii=False) if form == "json" else page(book))
+    elif name is None:
         lines = [summary(found) for found in names()]
         click.echo(json.dumps(lines, indent=2, ensure_ascii=False) if form == "json" else _list(lines))
     else:

@@ -32,6 +32,8 @@ def answer(verdict: Verdict) -> str:
     lines += [folded(f"note: {plain(note)}", rest="      ") for note in verdict.notes[:MOST_UNDECIDED]]
     if len(verdict.notes) > MOST_UNDECIDED:
         lines.append(f"  and {len(verdict.notes) - MOST_UNDECIDED} more notes")
+    if verdict.budget:
+        lines.append(f"{verdict.budget} (sercheck measures --rules FILE)")
     lines.append(f"batch {verdict.batch_id}")
     return "\n".join(lines)
 

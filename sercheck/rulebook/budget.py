@@ -106,6 +106,19 @@ def _held_risk(book: Rulebook) -> float:
     return sum(rule.false_alarm for rule in book.rules if rule.otherwise == "hold")
 
 
+def in_short(book: Rulebook) -> str:
+    """The budget in a line, such as "at most 1 false hold per 90D: 8 rules share 0.0111 a batch"; empty for no risk."""
+    held, sharing = _held_risk(book), [rule for rule in book.rules if rule.otherwise == "hold" and rule.false_alarm > 0]
+    if not sharing:
+        return ""
+    who = f"{len(sharing)} rules share" if len(sharing) > 1 else "1 rule has"
+    expected = expected_false_holds(book)
+    if expected is None:
+        return f"{who} a risk of {held:.3g} that a healthy batch is held"
+    count, per = expected
+    return f"at most {count:.3g} false hold{'' if count == 1 else 's'} per {per}: {who} a risk of {held:.3g} a batch"
+
+
 def explain(book: Rulebook) -> list[str]:
     """The arithmetic of the budget, a sentence each."""
     said: list[str] = []
@@ -126,7 +139,7 @@ def explain(book: Rulebook) -> list[str]:
         apart = mean_seconds(book.batch_every or "")
         yearly = held * YEAR / apart if apart else 0.0
         said.append(
-            f"A healthy feed then has at most {count:.3g} false holds per {per} on average ({yearly:.3g} a year): "
+            f"A healthy feed then has at most {count:.3g} false hold{'' if count == 1 else 's'} per {per} on average ({yearly:.3g} a year): "
             "a risk kept exactly still gives false holds when batches are many."
         )
     if any(isinstance(rule.window, int) or rule.window != "batch" for rule in book.rules):
