@@ -73,8 +73,6 @@ def command(
         _write_brief(brief, verdict, None if store == ".sercheck" else store)
     for sentence in verdict.untold:
         click.echo(plain(sentence, 1000), err=True)
-    for sentence in verdict.untold:
-        click.echo(plain(sentence, 1000), err=True)
     into = released_to if verdict.released else held_to
     if into:
         move_batch(verdict.paths, into)
