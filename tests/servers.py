@@ -7,19 +7,17 @@ import shutil
 import subprocess
 import tempfile
 import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 
 import pytest
 
 
-@pytest.fixture(scope="session")
-def running_server():
-    """The address of a PostgreSQL server of our own, where its programs and the driver are installed."""
-    pytest.importorskip("psycopg", reason="the driver of PostgreSQL is not installed")
-    program = shutil.which("postgres")
-    if program is None or os.getuid() != 0:
-        pytest.skip("no PostgreSQL here, or no right to start it as another user")
-    programs = Path(program).resolve().parent
+@contextmanager
+def postgres() -> Iterator[str]:
+    """A running server: the folder of its socket."""
+    programs = Path(str(shutil.which("postgres"))).resolve().parent
     with tempfile.TemporaryDirectory() as data:
         shutil.chown(data, "postgres")
         user = {"user": "postgres", "cwd": "/", "env": {"LC_ALL": "C.UTF-8"}, "stdout": subprocess.DEVNULL}
@@ -27,8 +25,38 @@ def running_server():
         options = f"-c listen_addresses= -c unix_socket_directories={data} -c fsync=off"
         log = ["-l", f"{data}/log", "-o", options]
         subprocess.run([programs / "pg_ctl", "-D", data, "-w", *log, "start"], check=True, **user)
-        yield data
-        subprocess.run([programs / "pg_ctl", "-D", data, "-m", "immediate", "stop"], check=True, **user)
+        try:
+            yield data
+        finally:
+            subprocess.run([programs / "pg_ctl", "-D", data, "-m", "immediate", "stop"], check=True, **user)
+
+
+def new_database(at: str) -> str:
+    """The URL of an empty database on the server whose socket is there."""
+    import psycopg
+
+    name = f"test_{time.monotonic_ns()}"
+    with psycopg.connect(host=at, user="postgres", autocommit=True) as connection:
+        collated = "TEMPLATE template0 LOCALE_PROVIDER icu ICU_LOCALE 'en-US'"  # as people have it, not by bytes
+        connection.execute(f"CREATE DATABASE {name} {collated}")
+    return f"postgresql+psycopg://postgres@/{name}?host={at}"
+
+
+@contextmanager
+def databases() -> Iterator[Callable[[], str]]:
+    """A server, and what makes an empty database on it."""
+    with postgres() as at:
+        yield lambda: new_database(at)
+
+
+@pytest.fixture(scope="session")
+def running_server():
+    """A PostgreSQL server of our own, where its programs and the driver are installed: the folder of its socket."""
+    pytest.importorskip("psycopg", reason="the driver of PostgreSQL is not installed")
+    if shutil.which("postgres") is None or os.getuid() != 0:
+        pytest.skip("no PostgreSQL here, or no right to start it as another user")
+    with postgres() as at:
+        yield at
 
 
 @pytest.fixture(params=["sqlite", "postgresql"])
@@ -40,10 +68,4 @@ def ledger_store(request, tmp_path):
 @pytest.fixture
 def server(running_server):
     """The URL of an empty database."""
-    import psycopg
-
-    name = f"test_{time.monotonic_ns()}"
-    with psycopg.connect(host=running_server, user="postgres", autocommit=True) as connection:
-        collated = "TEMPLATE template0 LOCALE_PROVIDER icu ICU_LOCALE 'en-US'"  # as people have it, not by bytes
-        connection.execute(f"CREATE DATABASE {name} {collated}")
-    return f"postgresql+psycopg://postgres@/{name}?host={running_server}"
+    return new_database(running_server)

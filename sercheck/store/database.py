@@ -101,7 +101,7 @@ class Database:
 
         if self.file is None:
             try:
-                return create_engine(self._url or "", pool_pre_ping=True)
+                return create_engine(self._url or "", poolclass=NullPool)  # nothing stays open between transactions
             except (ArgumentError, ImportError) as error:
                 came = f"this kind of database cannot be opened ({error})"
                 raise StoreError(self.place, came, "a driver", "Install it beside sercheck.") from error
