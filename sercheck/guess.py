@@ -57,10 +57,12 @@ class Guess:
     Attributes:
         layout: its columns, cadence and zone; no seasons.
         told: a sentence for each thing that was found rather than given.
+        counted: the time column only counts the rows: it has no stamps.
     """
 
     layout: Layout
     told: tuple[str, ...]
+    counted: bool = False
 
 
 def guess(
@@ -119,7 +121,7 @@ def guess(
     if timezone is None:
         timezone = zone_of(columns[time], stamps, every)
         told.append(f"timezone: {timezone}")
-    return Guess(Layout(time, tuple(series), tuple(values), every, timezone), tuple(told))
+    return Guess(Layout(time, tuple(series), tuple(values), every, timezone), tuple(told), counted)
 
 
 class _Clock:
@@ -163,7 +165,8 @@ class _Clock:
         """Stamps of the time column, and whether they only count the rows."""
         column = self.columns[name]
         if self.every is not None:
-            return read_stamps(column, Cadence(self.every), name).stamps, parse_length(self.every).kind == "irregular"
+            counts = parse_length(self.every).kind == "irregular" and _stamps(column, "1h") is None
+            return read_stamps(column, Cadence(self.every), name).stamps, counts
         numbers = _numbers(column)
         if numbers is not None and self.years(name) is not None:
             return read_stamps(column, Cadence("YS"), name).stamps, False

@@ -199,7 +199,8 @@ def _best(x: Floats, wide: Ints, log_p: Floats, log_all: Floats, usual: Bools) -
     first = rank.argmin(axis=1)
     with np.errstate(divide="ignore", invalid="ignore"):
         apart = np.abs(1 / wide - 1 / wide[every, first][:, None]) * steps
-        beside = usual & able & (apart < NEAR) & (rank <= NEARLY * rank[every, first][:, None])
+        as_clear = (rank <= NEARLY * rank[every, first][:, None]) | (log_p <= NEARLY * log_p[every, first][:, None])
+        beside = usual & able & (apart < NEAR) & as_clear
     better = np.where(beside, rank, np.inf).argmin(axis=1)
     chosen = np.where(beside.any(axis=1), better, first)
     told = able[every, chosen]

@@ -1,0 +1,1 @@
+"""What a history looks like, in numbers and sentences; depends on ``intake``, ``serial`` and ``facts``."""
