@@ -8,6 +8,7 @@ from __future__ import annotations
 import re
 import shlex
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -151,7 +152,7 @@ def _rule(rule: str, case: Case, rows: Records, said: RuleFile, zone: ZoneInfo) 
         reason=sentence(worst["reason"]),
         since=_since(case, (rule,), zone),
         before=_before(case, rule, zone),
-        sketch=sketch,
+        sketch=None if sketch is None else _shown(sketch),
         lags=_lags(rows, sketch),
         figures=tuple(_figures(row) for row in rows.take(slice(0, ROWS)).rows()),
         more=max(len(rows) - ROWS, 0),
@@ -166,6 +167,14 @@ def _sketch(case: Case, rule: str, worst: Mapping[str, object]) -> Sketch | None
     mine = [each for each in case.sketches if each.rule == rule and each.column == worst["column"]]
     alike = [each for each in mine if (each.series is None) == (worst["series"] is None)]
     return next(iter(alike or mine), None)
+
+
+def _shown(sketch: Sketch) -> Sketch:
+    """The sketch with names that can be shown."""
+    series, column = sketch.series and name(sketch.series), sketch.column and name(sketch.column)
+    return replace(
+        sketch, rule=name(sketch.rule), series=series, column=column, of=sentence(sketch.of), band=sentence(sketch.band)
+    )
 
 
 def _lags(rows: Records, sketch: Sketch | None) -> tuple[int, ...]:

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 
 from sercheck.brief import plots
 from sercheck.brief.view import FIGURES, Brief, Failed
-from sercheck.brief.words import name, zone_of
+from sercheck.brief.words import zone_of
 from sercheck.page import render
 
 MOST_PLOTS = 12
@@ -31,5 +31,5 @@ def page(brief: Brief, way: Sequence[tuple[str, str]] = ()) -> str:
     guides = [rule for rule in brief.failed if rule.runbook]
     return render(
         "brief.html", brief=brief, shown=shown, row=row, row_caption=caption, heads=FIGURES, way=way,
-        guides=guides[:6], series_name=name,
+        guides=guides[:6],
     )  # fmt: skip
