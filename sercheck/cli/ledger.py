@@ -1,16 +1,18 @@
-"""``sercheck ledger``: look up batches and records; parse, call, print."""
+"""``sercheck ledger``: look up batches, records and episodes; parse, call, print."""
 
 from __future__ import annotations
 
 import csv
 import json
 import sys
-from collections.abc import Callable
-from datetime import UTC, datetime
-from typing import TYPE_CHECKING, Any, TypeVar
+from typing import TYPE_CHECKING, Any
 
 import click
 
+from sercheck.cli.ledger_episodes import command as episodes
+from sercheck.cli.ledger_episodes import episode_page
+from sercheck.cli.ledger_episodes import write as write_episodes
+from sercheck.cli.ledger_options import BATCHES, FORMAT, STORE, say_more, say_none, so_asked, taking
 from sercheck.cli.ledger_text import TEXT_LIMIT, batch_page, batch_table, record_page, record_table
 
 if TYPE_CHECKING:
@@ -18,66 +20,16 @@ if TYPE_CHECKING:
     from sercheck.store.ledger import Ledger
     from sercheck.store.rows import Filters, JudgedBatch
 
-F = TypeVar("F", bound=Callable[..., None])
-FORMATS = click.Choice(["text", "json", "csv"])
-
-
 @click.group("ledger")
 def command() -> None:
     """Look up what was judged."""
 
 
-def _moment(text: str | None, *, end: bool) -> str | None:
-    """A date or time as text that compares with the ledger's; a date means its first or last second."""
-    if text is None:
-        return None
-    try:
-        stamp = datetime.fromisoformat(text)
-        if end and len(text) <= len("2026-01-12"):
-            stamp = stamp.replace(hour=23, minute=59, second=59)
-        utc = (stamp if stamp.tzinfo else stamp.replace(tzinfo=UTC)).astimezone(UTC)
-    except (ValueError, OverflowError):
-        raise click.BadParameter(f"{text!r} is no date or time; wanted 2026-01-12 or 2026-01-12T06:00:00Z") from None
-    # Without the Z a start sorts before all fractions of its second; with it an end sorts behind them.
-    return f"{utc:%Y-%m-%dT%H:%M:%S}" + ("Z" if end else "")
-
-
-def _since(_: click.Context, __: click.Parameter, text: str | None) -> str | None:
-    return _moment(text, end=False)
-
-
-def _until(_: click.Context, __: click.Parameter, text: str | None) -> str | None:
-    return _moment(text, end=True)
-
-
-_STORE = click.option("--store", metavar="DIR|URL", help="The store's folder, or the ledger's URL.")
-_FORMAT = click.option(
-    "--format", "form", type=FORMATS, default="text", show_default=True, help="json: JSON lines, one object a line."
-)
-_FILTERS = (
-    click.option("--feed", metavar="NAME", help="Only this feed; * and ? stand for letters."),
-    click.option("--since", metavar="TIME", callback=_since, help="Only batches whose newest row is then or later."),
-    click.option("--until", metavar="TIME", callback=_until, help="Only batches whose newest row is then or earlier."),
-    click.option("--outcome", type=click.Choice(["pass", "fail", "undecided"]), help="Only records of this outcome."),
-    click.option("--decision", type=click.Choice(["released", "held"]), help="Only batches so decided."),
-    click.option("--rule", metavar="NAME", help="Only this rule; * and ? stand for letters."),
-    click.option("--series", metavar="KEY", help="Only this series; * and ? stand for letters."),
-    click.option(
-        "--limit", type=click.IntRange(min=1), metavar="N", help=f"At most so many (text: {TEXT_LIMIT}; else all)."
-    ),
-    _FORMAT,
-    _STORE,
-)
-
-
-def _filtered(function: F) -> F:
-    for option in reversed(_FILTERS):
-        function = option(function)
-    return function
+command.add_command(episodes)
 
 
 @command.command("batches")
-@_filtered
+@taking(BATCHES)
 def batches(form: str, store: str | None, **asked: Any) -> None:
     """List batches and what became of them, the newest first."""
     from sercheck.store.ledger import open_ledger
@@ -93,14 +45,14 @@ def batches(form: str, store: str | None, **asked: Any) -> None:
             click.echo(json.dumps(_batch_facts(each), ensure_ascii=False, allow_nan=False))
     elif found:
         click.echo(batch_table(found[:shown]))
-        _say_more(len(found), shown, "batches")
+        say_more(len(found), shown, "batches")
     if not found:
-        _say_none(form, f"No batches in {place}{_so_asked(asked)}.")
+        say_none(form, f"No batches in {place}{so_asked(asked)}.")
 
 
 @command.command("records")
 @click.option("--batch", "batch_id", metavar="ID", help="Only this batch: its id or the beginning of it.")
-@_filtered
+@taking(BATCHES)
 def records(form: str, store: str | None, **asked: Any) -> None:
     """List records, those of the newest batch first."""
     from sercheck.store.ledger import open_ledger
@@ -115,32 +67,30 @@ def records(form: str, store: str | None, **asked: Any) -> None:
         _write(found, form)
     elif len(found):
         click.echo(record_table(found.take(slice(0, shown))))
-        _say_more(len(found), shown, "records")
+        say_more(len(found), shown, "records")
     if not len(found):
-        _say_none(form, f"No records in {place}{_so_asked(asked)}.")
+        say_none(form, f"No records in {place}{so_asked(asked)}.")
 
 
 @command.command("show")
 @click.argument("name", metavar="ID")
-@_FORMAT
-@_STORE
+@FORMAT
+@STORE
 def show(name: str, form: str, store: str | None) -> None:
-    """Show one batch or one record by its ID or the beginning of it."""
+    """Show one batch, record or episode by its ID or the beginning of it."""
     from sercheck.errors import UsageError
     from sercheck.store.ledger import UnknownIdError, open_ledger
 
     with open_ledger(store) as ledger:
-        try:
-            batch = ledger.batch(name)
-        except UnknownIdError:
+        for kind in (_show_batch, _show_record, _show_episode):
             try:
-                _show_record(ledger.record(name), form)
-            except UnknownIdError as neither:
-                todo = "`sercheck ledger batches` and `sercheck ledger records` list them."
-                wanted = "the id of a batch or record, or its beginning"
-                raise UsageError(f"id {name!r}", f"not in {ledger.place}", wanted, todo) from neither
-        else:
-            _show_batch(batch, _told(ledger, batch, form), form)
+                kind(ledger, name, form)
+            except UnknownIdError:
+                continue
+            return
+        todo = "`sercheck ledger batches`, `records` and `episodes` list them."
+        wanted = "the id of a batch, record or episode, or its beginning"
+        raise UsageError(f"id {name!r}", f"not in {ledger.place}", wanted, todo)
 
 
 def _told(ledger: Ledger, batch: JudgedBatch, form: str) -> Records:
@@ -157,21 +107,44 @@ def _told(ledger: Ledger, batch: JudgedBatch, form: str) -> Records:
     return Records.concat([failed, undecided])
 
 
-def _show_record(record: Records, form: str) -> None:
+def _show_record(ledger: Ledger, name: str, form: str) -> None:
+    record = ledger.record(name)
     if form == "text":
         click.echo(record_page(next(record.rows())))
     else:
         _write(record, form)
 
 
-def _show_batch(batch: JudgedBatch, found: Records, form: str) -> None:
+def _show_episode(ledger: Ledger, name: str, form: str) -> None:
+    from sercheck.store.episodes import batches_of, episode
+
+    found = episode(ledger, name)
+    if form == "text":
+        click.echo(episode_page(found, batches_of(ledger, found.episode_id)))
+    else:
+        write_episodes([found], form)
+
+
+def _show_batch(ledger: Ledger, name: str, form: str) -> None:
+    from sercheck.store.episodes import episodes_of
+    from sercheck.store.outbox import messages_of
+
+    batch = ledger.batch(name)
+    batch_id = batch.batch.batch_id
+    found = _told(ledger, batch, form)
     if form == "csv":
         _write(found, form)
-    elif form == "json":
-        facts = {**_batch_facts(batch), "records": list(found.rows())}
+        return
+    runs, messages = episodes_of(ledger, batch_id), messages_of(ledger, batch_id)
+    if form == "json":
+        facts = _batch_facts(batch) | {
+            "episodes": [vars(run) for run in runs],
+            "messages": [message.facts() for message in messages],
+            "records": list(found.rows()),
+        }
         click.echo(json.dumps(facts, ensure_ascii=False, allow_nan=False))
     else:
-        click.echo(batch_page(batch, found))
+        click.echo(batch_page(batch, found, runs, messages))
 
 
 def _filters(form: str, asked: dict[str, Any]) -> tuple[Filters, int]:
@@ -226,18 +199,3 @@ def _print_csv(found: tuple[JudgedBatch, ...]) -> None:
 
 def _write(found: Records, form: str) -> None:
     found.write("-", "csv" if form == "csv" else "json")
-
-
-def _so_asked(asked: dict[str, Any]) -> str:
-    given = {name.removesuffix("_id"): value for name, value in asked.items() if value is not None and name != "limit"}
-    words = [f"--{name} {value}" for name, value in given.items()]
-    return f" with {' '.join(words)}" if words else ""
-
-
-def _say_more(found: int, shown: int, what: str) -> None:
-    if found > shown:
-        click.echo(f"There are more than these {shown} {what}: --limit shows more.", err=True)
-
-
-def _say_none(form: str, sentence: str) -> None:
-    click.echo(sentence, err=form != "text")

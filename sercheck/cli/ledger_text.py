@@ -10,6 +10,8 @@ from sercheck.cli.table import Head, number, table
 
 if TYPE_CHECKING:
     from sercheck.record import Records
+    from sercheck.store.episodes import Episode
+    from sercheck.store.outbox import Message
     from sercheck.store.rows import JudgedBatch, Judgement
 
 TEXT_LIMIT = 50
@@ -35,9 +37,14 @@ def batch_table(found: Iterable[JudgedBatch]) -> str:
 def _batch_line(each: JudgedBatch) -> list[object]:
     batch, last = each.batch, each.last
     counts = [last.counts[outcome] for outcome in ("pass", "fail", "undecided")]
-    newest = batch.last_stamp and batch.last_stamp[: len("2026-01-12T23:00")].replace("T", " ")
     decision = last.decision if each.settled is None else f"{last.decision}, then {each.settled.what}"
-    return [batch.fingerprint[:SHORT_BATCH], batch.feed, newest, decision, *counts, batch.rows, batch.series]
+    names = [batch.fingerprint[:SHORT_BATCH], batch.feed, minute(batch.last_stamp)]
+    return [*names, decision, *counts, batch.rows, batch.series]
+
+
+def minute(stamp: str | None) -> str | None:
+    """A stamp to the minute."""
+    return stamp and stamp[: len("2026-01-12T23:00")].replace("T", " ")
 
 
 def record_table(found: Records) -> str:
@@ -61,20 +68,22 @@ def _record_line(row: dict[str, Any]) -> list[object]:
     return [*names, *numbers, str(row["record_id"])[:SHORT_RECORD]]
 
 
-def batch_page(each: JudgedBatch, found: Records) -> str:
+def batch_page(each: JudgedBatch, found: Records, episodes: Iterable[Episode], messages: Iterable[Message]) -> str:
     """Everything about one batch; ``found`` are the records that failed or were undecided, as many as there is room."""
     batch = each.batch
     stretch = f", {batch.first_stamp} to {batch.last_stamp}" if batch.first_stamp else ""
     lines = [
-        _fact("batch", batch.batch_id),
-        _fact("feed", batch.feed),
-        _fact("rows", f"{batch.rows} of {batch.series} series{stretch}"),
-        _fact("fingerprint", batch.fingerprint),
-        *(_fact("received", path) for path in batch.received),
+        fact("batch", batch.batch_id),
+        fact("feed", batch.feed),
+        fact("rows", f"{batch.rows} of {batch.series} series{stretch}"),
+        fact("fingerprint", batch.fingerprint),
+        *(fact("received", path) for path in batch.received),
         *(line for judgement in each.judgements for line in _judgement(judgement)),
         *([""] if each.settlements else []),
-        *(_fact("settled", settlement.sentence()) for settlement in each.settlements),
+        *(fact("settled", settlement.sentence()) for settlement in each.settlements),
     ]
+    lines += [fact("episode", _episode(episode)) for episode in episodes]
+    lines += [fact("desk", _told(message)) for message in messages]
     if len(found):
         lines += ["", record_table(found)]
     counts = [each_judged.counts for each_judged in each.judgements]
@@ -88,18 +97,32 @@ def _judgement(judgement: Judgement) -> list[str]:
     counts = judgement.counts
     return [
         "",
-        _fact("decision", f"{judgement.decision}, judged at {judgement.judged_at}"),
-        _fact("records", f"{counts['pass']} pass, {counts['fail']} fail, {counts['undecided']} undecided"),
-        _fact("rules", judgement.rules_fingerprint),
-        _fact("baseline", judgement.baseline_id or "none"),
-        _fact("sercheck", judgement.sercheck_version),
+        fact("decision", f"{judgement.decision}, judged at {judgement.judged_at}"),
+        fact("records", f"{counts['pass']} pass, {counts['fail']} fail, {counts['undecided']} undecided"),
+        fact("rules", judgement.rules_fingerprint),
+        fact("baseline", judgement.baseline_id or "none"),
+        fact("sercheck", judgement.sercheck_version),
     ]
+
+
+def _episode(episode: Episode) -> str:
+    rule = plain(episode.rule, 80)
+    many = f"{episode.batches} batch" + ("es" if episode.batches > 1 else "")
+    return f"{episode.state}: {rule}, since {episode.started}, {many} ({episode.episode_id[:SHORT_BATCH]})"
+
+
+def _told(message: Message) -> str:
+    if message.state == "sent":
+        return f"{message.desk} told at {message.sent_at}"
+    trouble = f": {message.trouble}" if message.trouble else ""
+    return f"{message.desk} not told yet ({message.state}, {message.attempts} attempts){trouble}"
 
 
 def record_page(row: dict[str, Any]) -> str:
     """All that a record says; what is null is left out."""
-    return "\n".join(_fact(name, str(value)) for name, value in row.items() if value is not None)
+    return "\n".join(fact(name, str(value)) for name, value in row.items() if value is not None)
 
 
-def _fact(name: str, value: str) -> str:
+def fact(name: str, value: str) -> str:
+    """One fact of a page under its name, folded beside it."""
     return folded(plain(value, REASON), f"{name:<{LABEL}}  ", " " * (LABEL + 2))

@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
+from sercheck.store.ids import the_one, unknown
 from sercheck.store.queries import named
 from sercheck.store.tables import EPISODE_COLUMNS, tables
 
@@ -127,15 +128,19 @@ def episodes_of(ledger: Ledger, batch_id: str) -> tuple[Episode, ...]:
     return tuple({each.episode_id: each for each in found}.values())
 
 
-def episode(ledger: Ledger, start: str) -> tuple[Episode, ...]:
-    """The episodes whose id begins so; more than one asks for more letters."""
-    from sercheck.store.queries import begins_with
+def episode(ledger: Ledger, start: str) -> Episode:
+    """The episode whose id is, or alone begins with, ``start``.
 
+    Raises:
+        UnknownIdError: there is none.
+        UsageError: there are several, or too few letters were given.
+    """
     known = tables().episodes
     with ledger.looking() as connection:
         if connection is None:
-            return ()
-        return _read(connection, _ordered().where(begins_with(known.c.episode_id, start)).limit(6))
+            raise unknown("episode", start)
+        whole = the_one(connection, "episode", start)
+        return _read(connection, _ordered().where(known.c.episode_id == whole))[0]
 
 
 def batches_of(ledger: Ledger, episode_id: str) -> tuple[str, ...]:

@@ -14,9 +14,10 @@ from dataclasses import fields, replace
 from types import TracebackType
 from typing import TYPE_CHECKING, Any, Self
 
-from sercheck.errors import StoreError, UsageError
+from sercheck.errors import StoreError
 from sercheck.record import COLUMNS, INTEGERS, NUMBERS, Records
 from sercheck.store.database import FILE, ConflictError, Database
+from sercheck.store.ids import UnknownIdError, the_one, unknown
 from sercheck.store.judgements import BLOCK, put_batch, put_judgement, put_records
 from sercheck.store.memory import (
     facts_of,
@@ -33,7 +34,6 @@ from sercheck.store.outbox import put_messages
 from sercheck.store.queries import (
     COUNT_OF,
     batches_where,
-    begins_with,
     judgements_of,
     records_where,
     rules_with,
@@ -55,15 +55,11 @@ from sercheck.store.where import ledger_place
 if TYPE_CHECKING:
     from sqlalchemy import Connection, Result, RowMapping
 
+__all__ = ["Ledger", "UnknownIdError", "open_ledger"]
+
 ASKED = 500
 """Ids asked for in one query (databases allow 999 parameters and more)."""
 _REPEATING = frozenset(COLUMNS) - INTEGERS - NUMBERS - {"record_id"}
-SHORTEST_PREFIX = 4
-"""Letters of an id that a person must type at least."""
-
-
-class UnknownIdError(UsageError):
-    """No batch or record is called so."""
 
 
 class Ledger:
@@ -194,7 +190,7 @@ class Ledger:
         """
         self._must_be_there(batch_id, "batch")
         with self._database.reading() as connection:
-            whole = _the_one(connection, "batch", batch_id)
+            whole = the_one(connection, "batch", batch_id)
             return _judged(connection, [whole])[whole]
 
     def record(self, record_id: str) -> Records:
@@ -208,7 +204,7 @@ class Ledger:
 
         self._must_be_there(record_id, "record")
         with self._database.reading() as connection:
-            whole = _the_one(connection, "record", record_id)
+            whole = the_one(connection, "record", record_id)
             columns = [tables().records.c[name] for name in COLUMNS]
             return _gathered(connection.execute(select(*columns).where(columns[0] == whole)))
 
@@ -289,7 +285,7 @@ class Ledger:
 
     def _must_be_there(self, name: str, kind: str) -> None:
         if not self._there():
-            raise _unknown(name, kind)
+            raise unknown(kind, name)
 
 
 def open_ledger(store: str | None = None, url: str | None = None) -> Ledger:
@@ -333,31 +329,6 @@ def _judged(connection: Connection, ids: list[str]) -> dict[str, JudgedBatch]:
         for batch_id, settlements in settlements_of(connection, ids[first : first + ASKED]).items():
             found[batch_id] = replace(found[batch_id], settlements=settlements)
     return found
-
-
-def _the_one(connection: Connection, kind: str, start: str) -> str:
-    from sqlalchemy import or_, select
-
-    table = tables().batches if kind == "batch" else tables().records
-    column = table.c[f"{kind}_id"]
-    names = [column, table.c.fingerprint] if kind == "batch" else [column]
-    if connection.execute(select(column).where(column == start)).first():
-        return start
-    if len(start) < SHORTEST_PREFIX:
-        raise UsageError(f"{kind} {start!r}", "too short to look for", f"{SHORTEST_PREFIX} letters of the id or more")
-    so_called = or_(*(begins_with(name, start) for name in names))
-    ids = list(connection.execute(select(column).where(so_called).order_by(column).limit(6)).scalars())
-    if not ids:
-        raise _unknown(start, kind)
-    if len(ids) > 1:
-        some = ", ".join(ids[:5]) + (" and more" if len(ids) > 5 else "")
-        raise UsageError(f"{kind} {start!r}", f"several ids begin so: {some}", "more letters of one of them")
-    return str(ids[0])
-
-
-def _unknown(name: str, kind: str) -> UnknownIdError:
-    todo = "`sercheck ledger batches` lists them." if kind == "batch" else "`sercheck ledger records` lists them."
-    return UnknownIdError(f"{kind} {name!r}", "not in the ledger", f"the id of a {kind} or its beginning", todo)
 
 
 def _batch(row: RowMapping) -> BatchRow:

@@ -67,6 +67,12 @@ class Message:
         """It was claimed before and the claim never ended, or it ended without the server's answer."""
         return self.state == "sending" or (self.trouble or "").startswith(LATE)
 
+    def facts(self) -> dict[str, object]:
+        """What became of it, as plain data."""
+        changes = [vars(change) for change in self.changes]
+        hidden = {"claimed_by", "judgement_id"}
+        return {name: value for name, value in vars(self).items() if name not in hidden} | {"changes": changes}
+
 
 def put_messages(
     connection: Connection,
