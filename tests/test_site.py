@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+import shutil
 
 import brief_cases as cases
 import pytest
@@ -20,9 +21,10 @@ def days_of(frame):
     return sorted(frame.t.dt.normalize().unique())
 
 
-@pytest.fixture
-def store(tmp_path):
+@pytest.fixture(scope="module")
+def judged(tmp_path_factory):
     """Three days of one feed, the last one held, and a day of another."""
+    tmp_path = tmp_path_factory.mktemp("judged")
     frame = cases.readings(60)
     for place, day in enumerate(days_of(frame)[-3:]):
         batch = frame[frame.t.dt.normalize() == day]
@@ -32,6 +34,12 @@ def store(tmp_path):
         )  # fmt: skip
     gate(cases.rules("gas"), batch, frame[frame.t < day], store=tmp_path / "store", as_of="2026-12-01")
     return tmp_path / "store"
+
+
+@pytest.fixture
+def store(judged, tmp_path):
+    """The same in a store of the test's own."""
+    return shutil.copytree(judged, tmp_path / "store")
 
 
 def hrefs(file):
