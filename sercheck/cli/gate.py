@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 )
 @click.option("--store", envvar="SERCHECK_STORE", default=".sercheck", show_default=True, metavar="DIR|URL")
 @click.option("--brief", metavar="FILE.html", help="Write the page for the person on call.")
+@click.option("--metrics", metavar="FILE", help="Write numbers for other systems in the OpenMetrics text format.")
 @click.option("--released-to", type=click.Path(), metavar="DIR", help="Move the batch files here when released.")
 @click.option("--held-to", type=click.Path(), metavar="DIR", help="Move the batch files here when held.")
 @click.option("--as-of", metavar="TIME", help="The clock to judge by (default: now).")
@@ -35,6 +36,7 @@ def command(
     records: str | None,
     store: str,
     brief: str | None,
+    metrics: str | None,
     released_to: str | None,
     held_to: str | None,
     as_of: str | None,
@@ -56,8 +58,8 @@ def command(
     if records and records != "-":
         check_suffix(records)
         check_place(records)
-    if brief:
-        check_place(brief)
+    for file in filter(None, (brief, metrics)):
+        check_place(file)
     for folder in filter(None, (released_to, held_to)):
         check_place(folder, folder=True)
     if (released_to or held_to) and any(map(is_source, batch)):
@@ -71,12 +73,26 @@ def command(
         say(answer(verdict))
     if brief:
         _write_brief(brief, verdict, None if store == ".sercheck" else store)
+    if metrics:
+        _write_metrics(metrics, verdict, None if no_keep else store)
     for sentence in verdict.untold:
         click.echo(plain(sentence, 1000), err=True)
     into = released_to if verdict.released else held_to
     if into:
         move_batch(verdict.paths, into)
     sys.exit(0 if verdict.released else 1)
+
+
+def _write_metrics(file: str, verdict: Verdict, store: str | None) -> None:
+    """Write the numbers, counted by the ledger where it has the batch."""
+    from contextlib import nullcontext
+
+    from sercheck.metrics import metrics
+    from sercheck.outputs import write_text
+    from sercheck.store.ledger import open_ledger
+
+    with nullcontext() if store is None else open_ledger(store) as ledger:
+        write_text(file, metrics(verdict, ledger))
 
 
 def _write_brief(file: str, verdict: Verdict, store: str | None) -> None:
