@@ -188,9 +188,11 @@ def test_without_the_library_it_is_said_how_to_get_it(ledger, monkeypatch):
     assert states(ledger) == ["undelivered"]
 
 
-def test_many_at_once_tell_once(ledger, store, monkeypatch):
+def test_many_at_once_tell_once(ledger_store, monkeypatch):
     """Of eight runs that find the same message one sends it."""
     sent = []
+    with open_ledger(ledger_store) as made:
+        held(made, 1)
 
     def send(*asked):
         time.sleep(0.05)
@@ -198,7 +200,7 @@ def test_many_at_once_tell_once(ledger, store, monkeypatch):
         return "sent"
 
     def run(_):
-        with open_ledger(store) as own:
+        with open_ledger(ledger_store) as own:
             return tell(own, "heat-01", send=send)
 
     monkeypatch.setenv("SERCHECK_DESK_HEAT_DESK", NOTHING)

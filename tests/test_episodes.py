@@ -5,6 +5,7 @@ from __future__ import annotations
 import itertools
 import random
 import sqlite3
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 
 import numpy as np
@@ -34,6 +35,13 @@ DESKS = {RULE: ("heat-desk",)}
 def ledger(tmp_path):
     """A ledger of its own."""
     with open_ledger(str(tmp_path / "kept")) as made:
+        yield made
+
+
+@pytest.fixture
+def either(ledger_store):
+    """A ledger in a file and on a server."""
+    with open_ledger(ledger_store) as made:
         yield made
 
 
@@ -131,17 +139,17 @@ def test_any_order_of_arrival_gives_the_same_episodes(tmp_path):
     assert [first[0], second[0], third[0]] == ["closed", "closed", "open"]
 
 
-def test_a_late_batch_inside_or_beside_an_episode_is_told_no_more(ledger):
+def test_a_late_batch_inside_or_beside_an_episode_is_told_no_more(either):
     """Yesterday's batch arriving after today's joins what was told; a late pass in the middle closes nothing."""
-    store(ledger, 5, "fail")
-    store(ledger, 4, "fail")
-    store(ledger, 2, "fail")
-    assert told(ledger) == ["05 opened"]
-    store(ledger, 3, "pass")
-    assert told(ledger) == ["05 opened"]
-    assert [e.state for e in episodes(ledger)] == ["open", "closed"]
-    store(ledger, 1, "pass")
-    assert told(ledger) == ["05 opened"]
+    store(either, 5, "fail")
+    store(either, 4, "fail")
+    store(either, 2, "fail")
+    assert told(either) == ["05 opened"]
+    store(either, 3, "pass")
+    assert told(either) == ["05 opened"]
+    assert [e.state for e in episodes(either)] == ["open", "closed"]
+    store(either, 1, "pass")
+    assert told(either) == ["05 opened"]
 
 
 def test_a_late_batch_that_fails_alone_is_told_although_newer_ones_passed(ledger):
@@ -187,34 +195,34 @@ def test_a_rule_that_is_no_longer_asked_closes_after_three_batches(ledger):
     assert told(ledger)[-1] == "06 opened"
 
 
-def test_settled_batches_count_as_false_and_true_holds(ledger):
+def test_settled_batches_count_as_false_and_true_holds(either):
     """What a person said last of each batch is counted with its episode; all its batches stay in it."""
     for day in (1, 2, 3):
-        store(ledger, day, "fail")
+        store(either, day, "fail")
     for day, what, when in ((1, "released", "1"), (2, "discarded", "1"), (3, "released", "1"), (3, "discarded", "2")):
-        ledger.settle(Settlement(f"heat-{day:02d}", "heat", what, "Ana", "seen", f"2026-01-1{when}T00:00:00Z"))
-    (found,) = episodes(ledger)
+        either.settle(Settlement(f"heat-{day:02d}", "heat", what, "Ana", "seen", f"2026-01-1{when}T00:00:00Z"))
+    (found,) = episodes(either)
     assert (found.batches, found.false_holds, found.true_holds) == (3, 1, 2)
 
 
-def test_the_history_of_a_rule_tells_since_when_and_how_often_before(ledger):
+def test_the_history_of_a_rule_tells_since_when_and_how_often_before(either):
     """As it stands now, and as it stood at an earlier batch."""
     for day, word in enumerate(("fail", "pass", "fail", "pass", "fail", "fail"), 1):
-        store(ledger, day, word)
-    now = history_of(ledger, "heat", RULE)
+        store(either, day, word)
+    now = history_of(either, "heat", RULE)
     assert (now.now.first_batch, len(now.before), now.asked) == ("heat-05", 2, 6)
-    then = history_of(ledger, "heat", RULE, before="2026-01-03T23:00:00Z")
+    then = history_of(either, "heat", RULE, before="2026-01-03T23:00:00Z")
     assert (then.now.first_batch, len(then.before), then.asked) == ("heat-03", 1, 3)
-    assert history_of(ledger, "heat", "no such rule") == history_of(ledger, "other", RULE)
-    assert [e.first_batch for e in episodes_of(ledger, "heat-06")] == ["heat-05"]
-    assert episodes_of(ledger, "heat-02") == ()
+    assert history_of(either, "heat", "no such rule") == history_of(either, "other", RULE)
+    assert [e.first_batch for e in episodes_of(either, "heat-06")] == ["heat-05"]
+    assert episodes_of(either, "heat-02") == ()
 
 
-def test_episodes_are_found_by_feed_time_state_rule_and_series(ledger):
+def test_episodes_are_found_by_feed_time_state_rule_and_series(either):
     """Each filter lets through what it says."""
     for feed in ("heat", "water"):
         for day, word in enumerate(("fail", "pass", "fail"), 1):
-            store(ledger, day, word, feed=feed, series=day)
+            store(either, day, word, feed=feed, series=day)
     cases = {
         EpisodeFilters(): 4,
         EpisodeFilters(feed="h*"): 2,
@@ -227,7 +235,7 @@ def test_episodes_are_found_by_feed_time_state_rule_and_series(ledger):
         EpisodeFilters(series="s?", feed="water"): 2,
         EpisodeFilters(limit=3): 3,
     }
-    assert {filters: len(episodes(ledger, filters)) for filters in cases} == cases
+    assert {filters: len(episodes(either, filters)) for filters in cases} == cases
 
 
 def test_a_ledger_from_before_there_were_episodes_gets_them(tmp_path, monkeypatch):
@@ -308,14 +316,14 @@ def test_a_batch_without_rows_is_placed_by_its_judgement(ledger):
     assert found.started == found.first_at == "2026-01-13T06:00:00Z"
 
 
-def test_the_digest_counts_feeds_settlements_and_noisy_rules(ledger):
+def test_the_digest_counts_feeds_settlements_and_noisy_rules(either):
     """All feeds of a stretch of days: what was held, what people said of it, which rule failed how often."""
     for day, word in enumerate(("fail", "pass", "fail", "fail"), 1):
-        store(ledger, day, word, feed="heat")
-    store(ledger, 2, "pass", feed="water")
+        store(either, day, word, feed="heat")
+    store(either, 2, "pass", feed="water")
     for day, what in ((1, "released"), (3, "released"), (2, "discarded")):
-        ledger.settle(Settlement(f"heat-{day:02d}", "heat", what, "Ana", "seen", "2026-02-01T00:00:00Z"))
-    told_all = digest(ledger)
+        either.settle(Settlement(f"heat-{day:02d}", "heat", what, "Ana", "seen", "2026-02-01T00:00:00Z"))
+    told_all = digest(either)
     heat, water = told_all.feeds
     assert (heat.batches, heat.released, heat.held) == (4, 1, 3)
     assert (heat.false_holds, heat.true_holds, heat.unsettled, heat.slipped) == (2, 0, 1, 1)
@@ -323,10 +331,24 @@ def test_the_digest_counts_feeds_settlements_and_noisy_rules(ledger):
     assert (water.feed, water.held, water.episodes) == ("water", 0, ())
     assert told_all.noisiest == (RuleNoise("heat", RULE, 3, 4, 2, 0, 2),)
     assert told_all.untold == (("heat-desk", 3),)
-    few = digest(ledger, since="2026-01-03", feed="h*")
+    few = digest(either, since="2026-01-03", feed="h*")
     assert [(each.feed, each.batches, each.opened, each.closed) for each in few.feeds] == [("heat", 2, 1, 0)]
 
 
 def test_the_digest_of_no_ledger_is_empty(ledger):
     """Looking where nothing was judged makes nothing and finds nothing."""
     assert digest(ledger).feeds == ()
+
+
+def test_batches_of_a_feed_judged_at_once_open_one_episode(ledger_store):
+    """Eight failing batches stored at the same moment: one episode of eight, told once as opened."""
+    def one(day: int) -> None:
+        with open_ledger(ledger_store) as own:
+            store(own, day, "fail")
+
+    with ThreadPoolExecutor(8) as pool:
+        list(pool.map(one, range(1, 9)))
+    with open_ledger(ledger_store) as kept:
+        (found,) = episodes(kept)
+        assert found.batches == 8
+        assert [each.split()[1] for each in told(kept)] == ["opened"]
