@@ -63,7 +63,7 @@ def _stretches(grid: Grid, column: str, x: Floats, steps: Ints, wanders: Bools) 
         part = _part(grid, column, detrended(x[rows]), rows, cycle)
         facts = facts_of(part, column, (), {})
         for place, row in enumerate(rows.tolist()):
-            for what in ("stuck", "broken stretch", "level change"):
+            for what in ("stuck", "broken stretch", "level change") if x.shape[1] >= FEWEST else ("stuck",):
                 at, size = int(facts.places[what][place]), float(facts.sizes[what][place])
                 if at < 0 or (what == "level change" and (wanders[row] or size == 0)):
                     continue

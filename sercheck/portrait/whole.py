@@ -13,7 +13,7 @@ from sercheck.grid import Grid
 from sercheck.guess import guess
 from sercheck.guess_clock import calendar_seasons
 from sercheck.intake.layout import Layout
-from sercheck.intake.stream import feed_grids, open_feed
+from sercheck.intake.stream import MemorySource, feed_grids, open_feed
 from sercheck.intake.zone import NOT_A_STAMP
 from sercheck.portrait.findings import stamp_text
 from sercheck.portrait.series import Portrait, portraits
@@ -26,6 +26,10 @@ if TYPE_CHECKING:
 
 KEPT = 6
 """Portraits that keep their series for plots, those with the most findings (ours)."""
+
+
+BLOCK_CELLS = 1 << 20
+"""Cells looked at together (ours: a second or two of work, so that progress is told and little memory is held)."""
 
 
 @dataclass(frozen=True)
@@ -124,7 +128,7 @@ def study(
     values: Sequence[str] | None = None,
     every: str | None = None,
     timezone: str | None = None,
-    progress: Callable[[int, int], None] | None = None,
+    progress: Callable[[float, str], None] | None = None,
 ) -> Study:
     """Look at a history: clock, seasons, trend, differencing, what its means are worth, and what is odd about it.
 
@@ -137,7 +141,8 @@ def study(
         values: the value columns.
         every: the cadence.
         timezone: the zone of stamps without an offset.
-        progress: called after each block with the series looked at and their number (0 while it is not known).
+        progress: called after each block with the share of the rows looked at (0 where a stream does not tell how many
+            there are) and what is being done.
 
     Raises:
         SercheckError: the history cannot be read, or has no time or value column.
@@ -146,11 +151,12 @@ def study(
     found = guess(history, time=time, series=series, values=values, every=every, timezone=timezone)
     natural = {name: steps for name, (steps, _) in calendar_seasons(found.layout.every).items()}
     source = open_feed(history, found.layout)
+    total = len(source.rows()) if isinstance(source, MemorySource) else 0
     told: list[Portrait] = []
     rows = count = 0
     stamps = np.zeros(0, dtype=np.int64)
     bounds = ("", "")
-    for block in feed_grids(source, None, found.layout):
+    for block in feed_grids(source, None, found.layout, block_cells=BLOCK_CELLS):
         grid = _unstamped(block) if found.counted else block
         for column in found.layout.values:
             told += portraits(grid, column, natural)
@@ -160,7 +166,7 @@ def study(
         stamps = grid.axis.stamps
         bounds = (stamp_text(grid.axis, 0), stamp_text(grid.axis, len(stamps) - 1)) if len(stamps) else bounds
         if progress is not None:
-            progress(count, 0)
+            progress(rows / total if total else 0.0, f"looking at series, {count:,} done")
     told.sort(key=_weight)
     return Study(
         feed=_name(history), layout=found.layout, told=found.told, natural=natural, first=bounds[0], last=bounds[1],

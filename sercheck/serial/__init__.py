@@ -12,6 +12,7 @@ if TYPE_CHECKING:
     from sercheck.serial.autocovariances import autocorrelation, autocovariance, differences, partial_autocorrelation
     from sercheck.serial.autoregression import burg, innovations, model_autocorrelation
     from sercheck.serial.effective_sizes import effective_size
+    from sercheck.serial.periods import find_seasons
     from sercheck.serial.portmanteau import box_pierce, ljung_box
     from sercheck.serial.repeats import equal_share, longest_equal_run, runs_test
     from sercheck.serial.risk import benjamini_yekutieli, holm
@@ -33,6 +34,7 @@ _PLACES = {
     "innovations": "autoregression",
     "model_autocorrelation": "autoregression",
     "effective_size": "effective_sizes",
+    "find_seasons": "periods",
     "box_pierce": "portmanteau",
     "ljung_box": "portmanteau",
     "equal_share": "repeats",
@@ -59,6 +61,7 @@ __all__ = [
     "differences",
     "effective_size",
     "equal_share",
+    "find_seasons",
     "holm",
     "innovations",
     "ljung_box",
