@@ -20,9 +20,11 @@ from sercheck.cli.say import plain
 from sercheck.errors import OutputError, RuleFileError, SercheckError
 
 COMMANDS = {
+    "study": "what the feed's serial correlation looks like",
     "learn": "learn the baseline, fill the archive",
     "gate": "judge a batch",
     "settle": "a person overrules: release or discard a held batch, or declare a new regime",
+    "rehearse": "false holds and fault detection before going live",
     "brief": "the page for the person on call",
     "ledger": "look up what was judged",
     "measures": "the measures, their fields, formulas and sources",
