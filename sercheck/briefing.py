@@ -8,7 +8,9 @@ from typing import TYPE_CHECKING
 
 from sercheck.brief.case import Case, case_of, newest
 from sercheck.brief.digest import digest
+from sercheck.brief.review import MOST_FEEDS, Review, review
 from sercheck.brief.view import Brief
+from sercheck.brief.words import moment, zone_of
 from sercheck.errors import UsageError
 from sercheck.store.ledger import UnknownIdError, open_ledger
 from sercheck.store.rows import BatchRow, JudgedBatch, Judgement
@@ -46,6 +48,21 @@ def brief_of_verdict(verdict: Verdict, store: str | Path | None = None) -> Brief
             return digest(_unkept(verdict))
         case = case_of(kept_in, _this_judgement(batch, verdict), _named(store))
         return digest(replace(case, notes=verdict.notes, sketches=case.sketches or verdict.sketches))
+
+
+def review_of(since: str, store: str | Path | None = None) -> Review:
+    """The digest of all feeds since a time.
+
+    Args:
+        since: UTC, RFC 3339; batches whose newest row is then or later count.
+        store: the store's folder, or the ledger's URL.
+    """
+    from sercheck.store.digest import digest as numbers
+
+    with open_ledger(None if store is None else str(store)) as kept_in:
+        told = numbers(kept_in, since)
+        rules = {each.feed: kept_in.batch(each.last_batch).last.rules for each in told.feeds[:MOST_FEEDS]}
+    return review(told, rules, f"{moment(since, zone_of('UTC'))} UTC")
 
 
 def _this_judgement(batch: JudgedBatch, verdict: Verdict) -> JudgedBatch:

@@ -12,6 +12,8 @@ from browser import DESK, PHONE, browser  # noqa: F401  a fixture
 from sercheck.brief.case import case_of
 from sercheck.brief.digest import digest
 from sercheck.brief.html import page
+from sercheck.brief.surfaces import shown
+from sercheck.briefing import review_of
 from sercheck.site import write_site
 from sercheck.store.ledger import open_ledger
 from sercheck.verdict import gate
@@ -34,6 +36,7 @@ def pages(tmp_path_factory):
         told = ledger.batches()
         (folder / "held.html").write_text(page(digest(case_of(ledger, told[0], "a store"))))
         (folder / "released.html").write_text(page(digest(case_of(ledger, told[-1]))))
+    (folder / "review.html").write_text(shown(review_of("2026-01-01T00:00:00", folder / "store"), "html"))
     book = cases.rules("heat", cases.HOSTILE, cases.HOSTILE, cases.HOSTILE + "x" * 5_000)
     history, batch = cases.split(cases.readings(cases.DAYS, meters=(cases.HOSTILE, "m" * 10_000)))
     verdict = gate(book, cases.broken(batch), history, store=folder / "hostile", as_of="2026-12-01")
@@ -45,7 +48,7 @@ def pages(tmp_path_factory):
     return folder
 
 
-FILES = ("held.html", "hostile.html", "released.html", "site/index.html", "site/feeds/heat.html")
+FILES = ("held.html", "hostile.html", "released.html", "site/index.html", "site/feeds/heat.html", "review.html")
 
 
 @pytest.mark.parametrize("scheme", ["light", "dark"])

@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import json
 import re
 import shutil
 
 import brief_cases as cases
 import pytest
+from click.testing import CliRunner
 
-from sercheck.briefing import brief_of
+from sercheck.brief.surfaces import shown
+from sercheck.briefing import brief_of, review_of
+from sercheck.cli.brief import command
 from sercheck.errors import OutputError, UsageError
 from sercheck.outputs import write_text
 from sercheck.settle import settle
@@ -129,3 +133,37 @@ def test_an_empty_ledger_has_a_front_page(tmp_path):
     assert "No batch was judged yet" in (tmp_path / "site" / "index.html").read_text()
     with pytest.raises(UsageError):
         brief_of(None, tmp_path / "none")
+
+
+def test_the_digest_counts_what_people_said(store):
+    """All feeds since a time: held, false and true holds as settled, what keeps failing, the noisiest rules."""
+    told = review_of("2026-01-01T00:00:00", store)
+    counted = [(feed.feed, feed.batches, feed.held, feed.unsettled) for feed in told.feeds]
+    assert counted == [("heat", 3, 1, 1), ("gas", 1, 0, 0)]
+    assert [rule for rule, _, _ in told.feeds[0].failing]
+    assert told.noisiest[0].feed == "heat"
+    settle(told.feeds[0].batch_id, by="Ana", because="pump test", release_as="released", store=store)
+    after = review_of("2026-01-01T00:00:00", store)
+    assert (after.feeds[0].false_holds, after.feeds[0].unsettled) == (1, 0)
+    assert max(rule.false_holds for rule in after.noisiest) == 1
+    assert "4 batches of 2 feeds since Thu 1 Jan 2026, 00:00 UTC, 1 held: 1 false holds, 0 true holds" in after.sentence
+    for form in ("text", "markdown", "html"):
+        assert after.noisiest[0].rule in shown(after, form)
+    assert json.loads(shown(after, "json"))["feeds"][0]["false_holds"] == 1
+    assert review_of("2027-01-01T00:00:00", store).feeds == ()
+
+
+def test_the_command_line_writes_each_of_them(store, tmp_path):
+    """brief, its page, the digest and the folder; contradictions are refused."""
+
+    def run(*more):
+        return CliRunner().invoke(command, [*more, "--store", str(store)])
+
+    assert run().output.startswith("HELD  heat")
+    assert run("-o", str(tmp_path / "brief.html")).exit_code == 0
+    assert (tmp_path / "brief.html").read_text().startswith("<!doctype html>")
+    assert "of 2 feeds" in run("--since", "2026-01-01").output
+    assert run("--site", str(tmp_path / "site")).exit_code == 0
+    assert json.loads(run("--format", "json").output)["state"] == "held"
+    assert run("--since", "2026-01-01", "heat-2026").exit_code == 2
+    assert run("--site", str(tmp_path / "site"), "--format", "json").exit_code == 2

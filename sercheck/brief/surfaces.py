@@ -1,30 +1,35 @@
-"""A brief in one of its formats; depends on the formats' own files."""
+"""A brief, or the digest of all feeds, in one of its formats; depends on the formats' own files."""
 
 from __future__ import annotations
 
 import json
 import re
 
-from sercheck.brief.text import markdown, plain_data, text
+from sercheck.brief import review, text
+from sercheck.brief.review import Review
 from sercheck.brief.view import Brief
 
 _HIDDEN = re.compile("[\x7f-\x9f\u061c\u200b-\u200f\u2028-\u202e\u2060-\u2069\ufeff]")
 """What a terminal would obey or hide when a program's output is looked at."""
 
 
-def shown(brief: Brief, form: str) -> str:
-    """The brief as ``text``, ``markdown``, ``json`` (one object on one line) or ``html``."""
-    match form:
-        case "markdown":
-            return markdown(brief)
-        case "json":
-            return json_line(plain_data(brief))
-        case "html":
-            from sercheck.brief.html import page
+def shown(told: Brief | Review, form: str) -> str:
+    """As ``text``, ``markdown``, ``json`` (one object on one line) or ``html``."""
+    if form == "html":
+        return _page(told)
+    if isinstance(told, Review):
+        surfaces = {"markdown": review.markdown, "text": review.text}
+        return json_line(review.plain_data(told)) if form == "json" else surfaces[form](told)
+    forms = {"markdown": text.markdown, "text": text.text}
+    return json_line(text.plain_data(told)) if form == "json" else forms[form](told)
 
-            return page(brief)
-        case _:
-            return text(brief)
+
+def _page(told: Brief | Review) -> str:
+    if isinstance(told, Review):
+        return review.page(told)
+    from sercheck.brief.html import page
+
+    return page(told)
 
 
 def json_line(told: object) -> str:
