@@ -31,22 +31,23 @@ def postgres() -> Iterator[str]:
             subprocess.run([programs / "pg_ctl", "-D", data, "-m", "immediate", "stop"], check=True, **user)
 
 
-def new_database(at: str) -> str:
-    """The URL of an empty database on the server whose socket is there."""
+def new_database(at: str, like: str | None = None) -> str:
+    """The URL of an empty database on the server whose socket is there, or of a copy of the one at the URL ``like``."""
     import psycopg
 
     name = f"test_{time.monotonic_ns()}"
     with psycopg.connect(host=at, user="postgres", autocommit=True) as connection:
         collated = "TEMPLATE template0 LOCALE_PROVIDER icu ICU_LOCALE 'en-US'"  # as people have it, not by bytes
-        connection.execute(f"CREATE DATABASE {name} {collated}")
+        copied = f"TEMPLATE {like.split('/')[3].split('?')[0]}" if like else collated
+        connection.execute(f"CREATE DATABASE {name} {copied}")
     return f"postgresql+psycopg://postgres@/{name}?host={at}"
 
 
 @contextmanager
-def databases() -> Iterator[Callable[[], str]]:
-    """A server, and what makes an empty database on it."""
+def databases() -> Iterator[Callable[..., str]]:
+    """A server, and what makes an empty database on it or a copy of one."""
     with postgres() as at:
-        yield lambda: new_database(at)
+        yield lambda like=None: new_database(at, like)
 
 
 @pytest.fixture(scope="session")

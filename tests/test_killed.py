@@ -1,0 +1,35 @@
+from __future__ import annotations
+
+import pytest
+
+from tests.killed import SCENES, Scene, harness
+from tests.servers import new_database
+
+
+@pytest.fixture(params=["sqlite", "postgresql"])
+def new_url(request):
+    """What makes an empty database, or a copy of one; None for ledgers in a file."""
+    if request.param == "sqlite":
+        return None
+    server = request.getfixturevalue("running_server")
+    return lambda like=None: new_database(server, like)
+
+
+def scenes(*names: str) -> list[Scene]:
+    """Scenes by name."""
+    return [scene for scene in SCENES if scene.name in names]
+
+
+def test_killed_where_it_writes_and_repeated(tmp_path, new_url):
+    """Killed before some of its writes and at some moments, the same command ends as if never killed."""
+    figures = harness(tmp_path, 6, 20260310, new_url, scenes("released", "settled"))
+    assert figures.runs == 6
+    assert figures.killed >= 4
+
+
+@pytest.mark.scale
+def test_killed_two_hundred_times(tmp_path, new_url):
+    """The same for every scene: learning, a new store, released, held with a page and a desk, settled."""
+    figures = harness(tmp_path, 200, 1, new_url)
+    assert figures.killed >= 150
+    assert len({name.partition(":")[0] for name in figures.boundaries}) == len(SCENES)
