@@ -46,7 +46,8 @@ CLOCKS = {
 WARM = (
     "pandas", "pyarrow.parquet", "pyarrow.csv", "pyarrow.compute", "sqlalchemy", "sqlalchemy.dialects.sqlite",
     "sqlalchemy.dialects.postgresql", "psycopg", "scipy.stats", "statsmodels.api", "matplotlib.figure", "jinja2",
-    "sercheck.verdict", "sercheck.taught", "sercheck.settle", "sercheck.briefing", "sercheck.cli.gate", "sercheck.desks",
+    "sercheck.verdict", "sercheck.taught", "sercheck.settle", "sercheck.briefing", "sercheck.cli.gate",
+    "sercheck.desks",
 )  # fmt: skip
 """Libraries that a command imports."""
 WAIT = 120.0
