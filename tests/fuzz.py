@@ -25,7 +25,9 @@ HERE = Path(__file__).parent
 CASES = HERE / "fuzz_cases"
 LONGEST = 4_000
 """Bytes of an input: what goes wrong goes wrong in a short one too."""
-LAYOUT = Layout("at", ("key", "part"), ("x", "y"), "1h", timezone="Europe/Oslo", batch_every="1D", seasons={"day": "1D"})
+LAYOUT = Layout(
+    "at", ("key", "part"), ("x", "y"), "1h", timezone="Europe/Oslo", batch_every="1D", seasons={"day": "1D"}
+)
 
 
 def rules(data: bytes) -> None:
@@ -48,7 +50,7 @@ def csv(data: bytes) -> None:
     """A CSV file of these bytes: rows that make a grid, or refused."""
     from sercheck.intake.stream import feed_cadence, feed_grids, open_feed
 
-    folder = Path("/dev/shm") if Path("/dev/shm").is_dir() else Path(tempfile.gettempdir())  # noqa: S108
+    folder = Path("/dev/shm") if Path("/dev/shm").is_dir() else Path(tempfile.gettempdir())
     file = folder / f"fuzz-{os.getpid()}.csv"
     file.write_bytes(data)
     try:
@@ -90,7 +92,8 @@ def seeds(what: str) -> list[bytes]:
         b"2026/01/12 5:00,,,,\n1960Q1,x,y,1,2\n20260112T0500,x,y,1,2\r\n",
         b"9999-12-31T23:59:59Z,a,b,1e309,1\n0001-01-01,a,b,1,1\n",
     ]
-    return found + [head + line for line in lines] + [b"", head, b"\xff\xfea\x00t\x00", b"\xef\xbb\xbf" + head + lines[0]]
+    odd = [b"", head, b"\xff\xfea\x00t\x00", b"\xef\xbb\xbf" + head + lines[0]]
+    return found + [head + line for line in lines] + odd
 
 
 def main() -> None:
