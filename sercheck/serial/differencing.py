@@ -107,6 +107,10 @@ def differencing(x: object, steps: Ints, share: Floats) -> Differencing:
         share: share of the variance of each, shape (S, Q).
     """
     x = as_series(x)
+    if x.shape[1] < FEWEST:
+        none, nothing = np.zeros(len(x), dtype=bool), np.full(len(x), np.nan)
+        r = autocorrelation(x, [1])[:, 0] if x.shape[1] > 1 else nothing
+        return Differencing(np.zeros(len(x), dtype=np.int64), none, none, nothing, nothing, nothing, r, nothing)
     strongest = _strongest(steps, share)
     strength = np.full(len(x), np.nan)
     left = without_seasons(x, steps)
@@ -172,6 +176,9 @@ def worth(x: object, steps: Ints) -> Worth:
     """
     rest = without_seasons(x, steps)
     n = (~np.isnan(rest)).sum(axis=1)
+    nothing = np.full(len(rest), np.nan)
+    if rest.shape[1] < 2:
+        return Worth(nothing, nothing, n, np.where(n > 0, 0.0, np.nan), nothing)
     slope, p = _slope(rest)
     return Worth(slope, np.where(n >= FEWEST, p, np.nan), n, np.sqrt(_variance(rest)), effective_size(rest))
 
@@ -189,6 +196,8 @@ def _slope(x: Floats) -> tuple[Floats, Floats]:
     moment = np.maximum((clock**2).sum(axis=1), 1e-300)
     slope = (clock * np.where(seen, unit, 0.0)).sum(axis=1) / moment
     rest = detrended(unit)
+    if unit.shape[1] < FEWEST:
+        return slope * top[:, 0] / width, np.full(len(x), np.nan)
     runs = autoregressive_long_run(rest, trend=True), trend_cosine_long_run(rest)
     with np.errstate(divide="ignore", invalid="ignore"):
         p = [2 * t_tail(np.abs(slope) / np.sqrt(run.variance / moment), run.df) for run in runs]

@@ -56,6 +56,9 @@ def find_seasons(x: object, natural: Sequence[int] = (), risk: float = RISK) -> 
         No season for a series that is constant, or has fewer than four cycles of anything.
     """
     x = as_series(x)[:, -LONGEST:]
+    if x.shape[1] < 2 * FEWEST_CYCLES:
+        empty = np.zeros((len(x), 0))
+        return Seasons(empty.astype(np.int64), empty, empty, empty, tuple({} for _ in x))
     block = max(1, BLOCK_VALUES // max(x.shape[1], 1))
     parts = [_find(x[first : first + block], tuple(natural), risk) for first in range(0, len(x), block)]
     return _joined(parts)
