@@ -31,6 +31,7 @@ from pydantic import BaseModel, ConfigDict
 
 from sercheck.grid import Panel
 from sercheck.measure import POWER, Measure, Measurement, Question, Reasons
+from sercheck.measures._cycle import clusters_assumed, shortest_cycle
 from sercheck.measures._exact import exact
 from sercheck.serial.rates import against_past, quotient
 
@@ -63,7 +64,7 @@ class Completeness(Measure):
             return exact(
                 question.stays, share, n, n - came, reasons, span=self.span, method="delivered over due stamps"
             )
-        law = against_past(np.where(due, panel.delivered, np.nan), panel.start, POWER)
+        law = against_past(np.where(due, panel.delivered, np.nan), panel.start, POWER, season=shortest_cycle(panel))
         reasons.add(panel.start == 0, "no history: pass --history or learn a baseline")
         reasons.add(law.past_rows == 0, "no row was due in history: pass a longer --history")
         reasons.add(
@@ -80,5 +81,5 @@ class Completeness(Measure):
             undecided=reasons.index,
             reasons=tuple(reasons.texts),
             method="mid-p of the conditional binomial on effective sizes (Przyborowski and Wilenski 1940; Geyer 1992)",
-            assumes="stationary history; gaps are no longer than history and window show",
+            assumes="stationary history; " + clusters_assumed(panel, "gaps", "history and window"),
         )

@@ -4,9 +4,9 @@ Null hypothesis: the q-quantile is the bound, and values beyond it come in clust
 
 A literal bound b asks how many rows lie beyond it: the quantile stays below b when no more than a share 1 - q of the
 rows lies above, which is judged exactly by the binomial law on effective sizes k/τ and n/τ (Clopper and Pearson 1934;
-Korn and Graubard 1998), τ the size of the clusters in history and window together (Geyer 1992). The limit is the bound
-moved by the distance from the observed quantile to its own confidence limit, the order statistic that the binomial law
-gives: the observation is beyond the limit exactly when the rule fails.
+Korn and Graubard 1998), τ the size of the clusters in history and window together (as in ``rate``). The limit is
+the bound moved by the distance from the observed quantile to its own confidence limit, the order statistic that the
+binomial law gives: the observation is beyond the limit exactly when the rule fails.
 Against history (``like: history``) the quantile of the window, as a normal score in the series' own history (van der
 Waerden 1952), is compared with those of m non-overlapping stretches by window-t: T = (z - mean)/(sd √(1 + 1/m)).
 
@@ -37,6 +37,7 @@ from scipy import special
 
 from sercheck.grid import Panel
 from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Side
+from sercheck.measures._cycle import clusters_assumed, shortest_cycle
 from sercheck.measures._past import (
     MUTE,
     Past,
@@ -156,7 +157,7 @@ def _literal(panel: Panel, question: Question, q: float) -> Measurement:
     def against(*, bound: float, upper: bool) -> OrderStatistic:
         beyond = panel.values > bound if upper else panel.values < bound
         marks = np.where(np.isnan(panel.values), np.nan, beyond)
-        law = against_share(marks, panel.start, 1 - q if upper else q, POWER)
+        law = against_share(marks, panel.start, 1 - q if upper else q, POWER, season=shortest_cycle(panel))
         tau.append(law.tau)
         with np.errstate(invalid="ignore"):
             mute = law.too_few | law.blind.get("upper", False)
@@ -175,7 +176,7 @@ def _literal(panel: Panel, question: Question, q: float) -> Measurement:
         (upper, lower),
         n_eff=n / np.max(tau, axis=0),
         method="binomial on effective sizes (Clopper and Pearson 1934; Korn and Graubard 1998; Geyer 1992)",
-        assumes="clusters like those of history and window",
+        assumes=clusters_assumed(panel, "clusters of rows beyond", "history and window"),
     )
 
 

@@ -6,13 +6,13 @@ Null hypothesis: the share is the bound (or history's), and such rows come in cl
 show.
 
 Formula: with k of n rows marked and τ the rows that weigh as one independent row, from history and batch together
-(Geyer's initial monotone sequence, lags below a quarter; where a season is declared, the larger of this and what the
-sums over cycles of the shortest one show, from 8 cycles on), k_e = k/τ and n_e = n/τ. Against a share p0:
-p = I_{p0}(k_e, n_e − k_e + 1), the exact binomial tail. Against history with K of N: mid-p of the conditional
-binomial, ½ [I_w(k_e, K_e + 1) + I_w(k_e + 1, K_e)] with w = n/(n + N). `missing` and `outside` look only for more of
-them when they stay like history; the others look both ways.
+(Geyer's initial monotone sequence, lags below a quarter; or what the sums over cycles show, from 8 cycles on, where
+that is larger; the cycle is the shortest declared season, or a day where none is declared), k_e = k/τ and n_e = n/τ.
+Against a share p0: p = I_{p0}(k_e, n_e − k_e + 1), the exact binomial tail. Against history with K of N: mid-p of the
+conditional binomial, ½ [I_w(k_e, K_e + 1) + I_w(k_e + 1, K_e)] with w = n/(n + N). `missing` and `outside` look only
+for more of them when they stay like history; the others look both ways.
 
-Source: Clopper and Pearson 1934; Korn and Graubard 1998; Geyer 1992; Przyborowski and Wilenski 1940.
+Source: Clopper and Pearson 1934; Korn and Graubard 1998; Geyer 1992; Burg 1975; Przyborowski and Wilenski 1940.
 
 Unit: share of rows, 0 to 1.
 
@@ -21,11 +21,10 @@ Missing values: `missing` is the share of the delivered rows that have no usable
 
 Minimum size: none for a failure. A pass against a literal share is undecided when fewer than 3 effective rows of the
 rarer kind are expected at it (a bound of 0 or 1 is exact). With less history than 8 times the window the law is
-widened, since τ comes from little more than the window itself, and a failure on the side where a rare kind of row
-would be too rare needs ten runs of it. Known weak cell: a share of about a third with strong memory (a hidden
-autoregression at .9), no history and under 1,000 rows fails 2 to 7 times too often at a risk of .001. So does a cycle
-that evolves when it is not declared (`seasons`), or when window and history hold fewer than 8 of them: .11 to .19 fail
-at a risk of .05. Where they hold 8 to 100 of them, .002 to .006 fail at a risk of .001.
+widened, since τ comes from little more than the window itself: an autoregression of the marks is a second witness, the
+correlation of neighbouring cycles is taken one standard error stronger than it looks, and a failure on the side where a
+rare kind of row would be too rare needs ten runs of it. Taken for granted: no cycle but the shortest declared one (a
+day where none is) ties such rows together; .05 to .18 fail at a risk of .05 where a much longer one does.
 
 One long burst cannot be seen by a rate (p is not much below n/(n + N)): put a rule on the longest run (`repeats`)
 beside it.
@@ -56,6 +55,7 @@ from pydantic import BaseModel, ConfigDict, FiniteFloat, model_validator
 
 from sercheck.grid import Panel
 from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Reference, Side, told_reasons
+from sercheck.measures._cycle import clusters_assumed, shortest_cycle
 from sercheck.measures._exact import sides
 from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.serial.rates import AgainstPast, AgainstShare, ShareLaw, against_past, against_share, quotient
@@ -137,7 +137,7 @@ def _of_kind(values: Floats, kind: str | Outside | Above | Below) -> Bools:
 
 def _literal(panel: Panel, question: Question, marks: Floats) -> Measurement:
     low, high = question.stays.low, question.stays.high
-    season = _shortest(panel)
+    season = shortest_cycle(panel)
     laws: dict[Side, AgainstShare] = {}
     if high is not None:
         laws["upper"] = against_share(marks, panel.start, high, POWER, season=season)
@@ -159,7 +159,7 @@ def _literal(panel: Panel, question: Question, marks: Floats) -> Measurement:
     return _measurement(
         panel, law, (reasons, unsure), upper, lower,
         "exact binomial on effective sizes (Clopper and Pearson 1934; Korn and Graubard 1998; Geyer 1992)",
-        "clusters of such rows are no longer than history and batch show",
+        clusters_assumed(panel, "clusters of such rows", "history and batch"),
     )  # fmt: skip
 
 
@@ -176,7 +176,7 @@ def _says_nothing(share: float, side: Side) -> str:
 
 
 def _like_history(panel: Panel, question: Question, marks: Floats) -> Measurement:
-    law = against_past(marks, panel.start, POWER, season=_shortest(panel))
+    law = against_past(marks, panel.start, POWER, season=shortest_cycle(panel))
     reasons = _no_rows(law, question)
     reasons.add(panel.start == 0, "no history: pass --history or learn a baseline")
     reasons.add(law.past_rows == 0, "history has no row to compare with: pass a longer --history")
@@ -188,12 +188,8 @@ def _like_history(panel: Panel, question: Question, marks: Floats) -> Measuremen
     return _measurement(
         panel, law, (reasons, Reasons(law.rows.shape)), law, law if both else None,
         "mid-p of the conditional binomial on effective sizes (Przyborowski and Wilenski 1940; Geyer 1992)",
-        "stationary history; clusters of such rows are no longer than history and batch show",
+        "stationary history; " + clusters_assumed(panel, "clusters of such rows", "history and batch"),
     )  # fmt: skip
-
-
-def _shortest(panel: Panel) -> int | None:
-    return min(panel.axis.lengths.values(), default=None)
 
 
 def _looks_both_ways(question: Question) -> bool:

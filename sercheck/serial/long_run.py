@@ -187,7 +187,11 @@ def autoregressive_long_run(x: object, trend: bool = False) -> LongRun:
         NaN for a series that is constant or has no two successive values.
     """
     steps = np.atleast_2d(np.asarray(x)).shape[-1]
-    model = burg(x, max_order=min(largest_order(steps), steps // 6))
+    return corrected_long_run(burg(x, max_order=min(largest_order(steps), steps // 6)), trend)
+
+
+def corrected_long_run(model: Autoregression, trend: bool = False) -> LongRun:
+    """``autoregressive_long_run`` of fitted models."""
     n = model.n.astype(np.float64)
     left = np.cumprod(1 - model.reflection, axis=1)
     shrink = np.cumprod(1 - model.reflection**2, axis=1)

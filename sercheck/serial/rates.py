@@ -16,7 +16,8 @@ import numpy as np
 from scipy import special
 
 from sercheck.serial.arrays import Bools, Floats, Ints
-from sercheck.serial.clusters import clusters, tally
+from sercheck.serial.cluster_model import modelled_clusters
+from sercheck.serial.clusters import cluster_size, clusters, tally
 from sercheck.serial.risk import t_tail
 
 Side = Literal["upper", "lower"]
@@ -27,6 +28,9 @@ FEWEST_EXPECTED = 3.0
 
 LONG_HISTORY = 8
 """Batches of history from which τ is taken as known (simulated: sizes under 1 from there on)."""
+
+EVEN = 0.25
+"""Share, or 1 less it, from which either kind of rows may be the rarer one (simulated: a share of a half)."""
 
 FEWEST_RUNS = 10
 """Runs of the rarer kind that begin to tell how it clusters (simulated: fewer give up to 300 times the risk)."""
@@ -242,9 +246,11 @@ def against_share(marks: Floats, start: int, share: float, power: float, *, seas
     """The law of the share of marked rows from column ``start`` on against a literal share; arrays of shape (S, 1).
 
     Where history is shorter than ``LONG_HISTORY`` batches, τ comes from little more than the batch that it judges:
-    its bias is given back and its degrees of freedom, observed/τ − 1, are used. On the side where the rarer kind of
+    its bias is given back, a model of the marks is a second witness of it (``modelled_clusters``) of which the larger
+    counts, and its degrees of freedom, observed/τ − 1, are used. On the side where the rarer kind of
     row would be too rare ('lower' for a share up to ½, else 'upper') few of them are left to tell how they cluster:
-    there half of their runs, less 1, are the degrees of freedom when fewer, and below ``FEWEST_RUNS`` it is blind.
+    there half of their runs, less 1, are the degrees of freedom when fewer (on both sides for a share near ½, where
+    either kind is the rarer one), and below ``FEWEST_RUNS`` it is blind.
 
     Args:
         marks: history and batch, shape (S, T), NaN takes no part.
@@ -257,14 +263,19 @@ def against_share(marks: Floats, start: int, share: float, power: float, *, seas
     if start >= LONG_HISTORY * (marks.shape[1] - start):
         tau, behind = (each[:, None] for each in clusters(marks, season=season, start=start))
         return AgainstShare(hits, rows, tau, power, np.asarray(share), dict.fromkeys(SIDES, _freedom(behind)))
-    tau, behind = (each[:, None] for each in clusters(marks, short=True, season=season))
+    modelled = modelled_clusters(marks, season, marks.shape[1] - start)
+    within = np.maximum(cluster_size(marks, short=True), modelled.size) * modelled.cycles
+    cycles = clusters(marks, short=True, season=season)
+    tau = np.maximum(within, cycles.size)[:, None]
     observed = np.count_nonzero(~np.isnan(marks), axis=1)[:, None]
-    df = np.where(tau > 1.0, _freedom(np.minimum(observed / tau, behind)), np.inf)
+    df = np.where(tau > 1.0, _freedom(np.minimum(observed / tau, cycles.behind[:, None])), np.inf)
+    df = np.minimum(df, np.maximum(modelled.df, 1.0)[:, None])
     marked, unmarked = (runs[:, None] for runs in runs_of(marks))
     thin: Side = "lower" if share <= 0.5 else "upper"
     full: Side = "upper" if share <= 0.5 else "lower"
     runs = marked if share <= 0.5 else unmarked
-    few = {thin: np.minimum(df, np.maximum(runs / 2.0 - 1.0, 1.0)), full: df}
+    thinned = np.minimum(df, np.maximum(runs / 2.0 - 1.0, 1.0))
+    few = {thin: thinned, full: thinned if min(share, 1 - share) >= EVEN else df}
     return AgainstShare(hits, rows, tau, power, np.asarray(share), few, {thin: runs < FEWEST_RUNS})
 
 
