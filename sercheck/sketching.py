@@ -25,8 +25,8 @@ from sercheck.serial.sampling_error import bartlett_error
 from sercheck.sketches import Numbers, Sketch
 from sercheck.transforms import apply, spelled
 
-POINTS = 600
-"""Points of a line at most: two for each pixel of a telephone; of longer stretches each point is a mean."""
+POINTS = 360
+"""Points of a line at most, one for each pixel of a telephone; of longer stretches each point is a mean."""
 CYCLES = 28
 """Cycles of history in a band (ours: four weeks of days follow the weather and have every weekday four times)."""
 STEPS = 200

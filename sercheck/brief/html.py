@@ -9,8 +9,8 @@ from sercheck.brief.view import FIGURES, Brief, Failed
 from sercheck.brief.words import zone_of
 from sercheck.page import render
 
-MOST_PLOTS = 12
-"""Rules with a plot; each takes some 15 kB, and the page is to stay far below 500 kB."""
+MOST_DRAWN = 250_000
+"""Letters of the plots of one page, after which further rules have none: the page is to stay far below 500 kB."""
 
 
 def page(brief: Brief, way: Sequence[tuple[str, str]] = ()) -> str:
@@ -22,14 +22,16 @@ def page(brief: Brief, way: Sequence[tuple[str, str]] = ()) -> str:
     """
     zone = zone_of(brief.zone)
     shown: list[tuple[Failed, object, str]] = []
+    drawn = 0
     for place, rule in enumerate(brief.failed):
-        if rule.sketch is None or place >= MOST_PLOTS:
-            shown.append((rule, "", ""))
-        else:
-            shown.append((rule, *plots.plot(rule, f"plot{place}", zone)))
-    row, caption = plots.run_chart(brief.last, "row") if len(brief.last) > 1 else ("", "")
+        drawing, caption = "", ""
+        if rule.sketch is not None and drawn < MOST_DRAWN:
+            drawing, caption = plots.plot(rule, f"plot{place}", zone)
+            drawn += len(drawing)
+        shown.append((rule, drawing, caption))
+    row, said = plots.run_chart(brief.last, "row") if len(brief.last) > 1 else ("", "")
     guides = [rule for rule in brief.failed if rule.runbook]
     return render(
-        "brief.html", brief=brief, shown=shown, row=row, row_caption=caption, heads=FIGURES, way=way,
+        "brief.html", brief=brief, shown=shown, row=row, row_caption=said, heads=FIGURES, way=way,
         guides=guides[:6],
     )  # fmt: skip

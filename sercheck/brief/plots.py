@@ -5,7 +5,7 @@ Depends on ``sketches`` and ``page.svg``. Shapes, widths and dashes tell what co
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Literal
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -44,15 +44,16 @@ def _stretch(sketch: Sketch, name: str, zone: ZoneInfo) -> tuple[Drawing, str]:
         at = x / DAY if sketch.in_time else x
         low, middle, high = (_floats(line) for line in (sketch.low, sketch.middle, sketch.high))
         if sketch.band:
-            axes.fill_between(at, low, high, color=INKS["band"], linewidth=0, step="mid")
+            steps: Literal["mid"] | None = "mid" if len(x) <= 2 * DOTS else None
+            axes.fill_between(at, low, high, color=INKS["band"], linewidth=0, step=steps)
             axes.plot(at, middle, color=INKS["muted"], linewidth=1, dashes=(4, 2))
         axes.plot(at[~mine], y[~mine], color=INKS["ink"], linewidth=0.9)
         dots = "o" if np.count_nonzero(mine) <= DOTS else ""
         axes.plot(at[mine], y[mine], color=INKS["batch"], linewidth=2, marker=dots, markersize=3.5)
         gone = mine & np.isnan(y)
-        edge = axes.get_ylim()[0]
-        axes.plot(at[gone], np.full(np.count_nonzero(gone), edge), "x", color=INKS["fail"], markersize=4, clip_on=False)
-        axes.set_ylim(bottom=edge)
+        if gone.any():
+            foot = axes.get_xaxis_transform()
+            axes.fill_between(at, 0, 0.03, where=gone, step="mid", color=INKS["fail"], linewidth=0, transform=foot)
         if not mine.all():
             axes.axvline(at[mine][0], color=INKS["muted"], linewidth=0.8, dashes=(1, 2))
         _time_axis(axes, zone) if sketch.in_time else axes.set_xlabel("rows, the oldest first")
@@ -62,11 +63,12 @@ def _stretch(sketch: Sketch, name: str, zone: ZoneInfo) -> tuple[Drawing, str]:
         ends = f"{number(_least(y[mine]))} to {number(_most(y[mine]))}"
         alt = f"{plain(sketch.of, 80)} of the judged stretch: {many(shown, 'point')} from {ends}"
         alt += f", {outside} of them outside history's band" if sketch.band else ""
+        alt += f", {many(int(np.count_nonzero(gone)), 'point')} missing" if gone.any() else ""
         drawn = inline(figure, name, alt + ".")
     told = ["Thick: the judged stretch."]
     told += ["Thin: what came before."] if not mine.all() else []
     told += [f"Band: {sketch.band}; dashed: its middle."] if sketch.band else ["No band: too little history."]
-    told += ["Crosses: missing."] if gone.any() else []
+    told += ["Bar at the foot: missing."] if gone.any() else []
     return drawn, " ".join(told)
 
 

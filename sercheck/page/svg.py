@@ -7,7 +7,9 @@ both colour schemes and paper. Nothing is told by colour alone.
 from __future__ import annotations
 
 import io
+import logging
 import re
+import warnings
 from collections.abc import Iterator
 from contextlib import contextmanager
 from typing import TYPE_CHECKING, Any
@@ -51,7 +53,9 @@ def drawing(width: float = WIDTH, height: float = HEIGHT) -> Iterator[tuple[Figu
     from matplotlib import rc_context
     from matplotlib.figure import Figure
 
-    with rc_context(_SETTINGS):
+    logging.getLogger("matplotlib").setLevel(logging.ERROR)  # where it keeps its fonts is nobody's trouble here
+    with rc_context(_SETTINGS), warnings.catch_warnings():
+        warnings.filterwarnings("ignore", "Glyph ")  # the reader's own fonts set the letters, not these
         figure = Figure(figsize=(width / 72, height / 72), dpi=72, layout="constrained")
         yield figure, figure.add_subplot()
 
@@ -78,7 +82,7 @@ def inline(figure: Figure, name: str, alt: str) -> Drawing:
     used = set(re.findall(r"#([\w-]+)", " ".join(re.findall(r'(?:url\(|href=")#[\w-]+', text))))
     text = _ID.sub(lambda found: f' id="{name}-{found[1]}"' if found[1] in used else "", text)
     text = re.sub(r'(url\(|href=")#', rf"\1#{name}-", text)
-    text = re.sub(r"(\d+\.\d{2})\d+", r"\1", text)
+    text = re.sub(r"(\d+\.\d)\d+", r"\1", text)  # a tenth of a point is less than a pixel
     text = re.sub(r"\n\s*", "\n", text)
     view = re.search(r'viewBox="[^"]*"', text)
     body = text[text.index(">") + 1 :]
