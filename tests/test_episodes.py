@@ -25,7 +25,7 @@ from sercheck.store.episodes import (
 )
 from sercheck.store.ledger import open_ledger
 from sercheck.store.outbox import messages_of
-from sercheck.store.rows import Settlement
+from sercheck.store.rows import Filters, Settlement
 
 RULE = "keeps little memory"
 DESKS = {RULE: ("heat-desk",)}
@@ -251,6 +251,7 @@ def test_a_ledger_from_before_there_were_episodes_gets_them(tmp_path, monkeypatc
             old.execute(f"DROP TABLE {table}")
         old.execute("DROP INDEX records_that_failed")
         old.execute("DELETE FROM migrations WHERE name >= '004'")
+        old.execute("DROP INDEX records_of_series")
     old.close()
     with open_ledger(str(tmp_path / "new")) as kept:
         assert [(e.started, e.state, e.batches, e.worst, e.beyond) for e in episodes(kept)] == wanted
@@ -352,3 +353,21 @@ def test_batches_of_a_feed_judged_at_once_open_one_episode(ledger_store):
         (found,) = episodes(kept)
         assert found.batches == 8
         assert [each.split()[1] for each in told(kept)] == ["opened"]
+
+
+def test_records_of_a_series_are_found_by_an_index(ledger):
+    """Of a ledger of many batches only the records asked for are read."""
+    store(ledger, 1, "fail")
+    with sqlite3.connect(ledger.place) as kept:
+        plan = kept.execute("EXPLAIN QUERY PLAN SELECT * FROM records WHERE series = 's1'").fetchall()
+    kept.close()
+    assert "records_of_series" in str(plan)
+
+
+def test_a_key_of_many_letters_is_stored_on_a_server_too(either):
+    """An index on keys takes keys that are longer than a page of it."""
+    name = "".join(random.Random(3).choices("abcdefghijklmnopqrstuvwxyz0123456789", k=10_000))
+    rows = records(3, "heat-01", feed="heat", series=["s0", name, "s2"], outcome="fail", action="hold")
+    either.add(batch("heat-01", feed="heat"), judgement("heat-01"), rows, tell=DESKS)
+    assert len(either.records(Filters(series=name))) == 1
+    assert len(episodes(either, EpisodeFilters(series=name))) == 1
