@@ -13,6 +13,7 @@ from typing import Protocol
 
 import numpy as np
 
+from sercheck import limits
 from sercheck.errors import UsageError
 from sercheck.grid import Grid, Panel
 from sercheck.judge import Judged, Seen, judge
@@ -111,6 +112,7 @@ def _measured(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
         return panels[key]
 
     for place, rule in enumerate(run.book.rules):
+        limits.check()
         measure = get(rule.measure)
         chosen = chosen_series(rule, grid.keys)
         if not chosen.any():

@@ -66,6 +66,10 @@ class OutputError(SercheckError):
     """A file that was asked for cannot be written or moved."""
 
 
+class LimitError(SercheckError):
+    """A batch takes more memory or time than its rule file allows."""
+
+
 class UsageError(SercheckError):
     """A call that asks for something contradictory or unknown."""
 

@@ -25,12 +25,12 @@ NO_LINKS = frozenset({errno.EPERM, errno.EACCES, errno.ENOTSUP, errno.EOPNOTSUPP
 
 
 @contextmanager
-def whole_file(path: str | Path) -> Iterator[BinaryIO]:
+def whole_file(path: str | Path, *, private: bool = False) -> Iterator[BinaryIO]:
     """Open ``path`` for writing so that nobody ever sees half of it.
 
     What is written goes to a hidden file in the same folder; when the block ends well it is flushed to the disk and
     takes the name in one step, when it ends badly it is removed and an older file of that name stays as it was. A link
-    is followed; an older file hands on its permissions.
+    is followed; an older file hands on its permissions. A ``private`` file is made for this user alone.
 
     Raises:
         OutputError: missing folder, no permission, not an ordinary file, full disk.
@@ -38,7 +38,7 @@ def whole_file(path: str | Path) -> Iterator[BinaryIO]:
     target = Path(os.path.realpath(path))
     with _as_output_error(path):
         mode = _mode_of_old(path, target)
-        draft, handle = _draft_in(target.parent)
+        draft, handle = _draft_in(target.parent, 0o600 if private else 0o666)
         try:
             with os.fdopen(handle, "wb") as file:
                 yield file
@@ -216,8 +216,8 @@ def _mode_of_old(path: str | Path, target: Path) -> int | None:
     return stat.S_IMODE(found.st_mode)
 
 
-def _draft_in(folder: Path) -> tuple[Path, int]:
-    """A new hidden file in the folder, with the permissions that any new file of this user gets.
+def _draft_in(folder: Path, mode: int = 0o666) -> tuple[Path, int]:
+    """A new hidden file in the folder, with the permissions that new files of this user get, or fewer.
 
     Its name tells machine and process, so that what a killed process left behind is known and cleared away.
     """
@@ -227,7 +227,7 @@ def _draft_in(folder: Path) -> tuple[Path, int]:
             with suppress(OSError):
                 old.unlink()
     draft = folder / f".sercheck-{machine}-{os.getpid()}-{secrets.token_hex(8)}.tmp"
-    return draft, os.open(draft, os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, 0o666)
+    return draft, os.open(draft, os.O_WRONLY | os.O_CREAT | os.O_EXCL | os.O_CLOEXEC, mode)
 
 
 def _is_dead(process: str) -> bool:

@@ -22,6 +22,7 @@ from sercheck.history import find_past, open_memory
 from sercheck.intake.layout import Layout
 from sercheck.intake.stream import feed_cadence, feed_grids, open_feed
 from sercheck.judge import Seen
+from sercheck.limits import Watch, within
 from sercheck.record import Records, utc_text
 from sercheck.rulebook import load_rules
 from sercheck.rulebook.budget import expected_false_holds, explain, in_short
@@ -202,9 +203,25 @@ def gate(
     and is returned.
 
     Raises:
-        SercheckError: rule file, batch, history or store cannot be used. Nothing is released then.
+        SercheckError: rule file, batch, history or store cannot be used, or the rule file's ``limits`` are passed.
+            Nothing is released then.
     """
     book = rules if isinstance(rules, Rulebook) else load_rules(rules)
+    with within(book.limits) as watch:
+        return _gate(book, batch, history, as_of, store, ledger, keep=keep, watch=watch)
+
+
+def _gate(
+    book: Rulebook,
+    batch: Rows,
+    history: Rows | None,
+    as_of: str | None,
+    store: str | Path | None,
+    ledger: str | None,
+    *,
+    keep: bool,
+    watch: Watch,
+) -> Verdict:
     judged_at, began = _clock(as_of), time.perf_counter()
     kept_in = _open_ledger(store, ledger) if store is not None or ledger is not None else None
     layout = layout_of(book)
@@ -258,6 +275,8 @@ def gate(
         rules=book.text,
         seconds=time.perf_counter() - began,
     )
+    watch.check()
+    watch.end()
     if kept_in is None or not keep:
         return verdict
     verdict = _kept(verdict, common, book, kept_in)

@@ -24,6 +24,7 @@ WRITING = {"errors", "record", "formats", "outputs"}
 ALLOWED: dict[str, set[str]] = {
     "errors": set(),
     "serial": {"serial"},
+    "limits": {"errors"},
     "grid": {"serial"},
     "baseline": {"serial", "grid"},
     "measure": {"serial", "grid"},
@@ -31,7 +32,7 @@ ALLOWED: dict[str, set[str]] = {
     "measures": MEASURING | {"measures"},
     "rulebook": RULES | {"record"},
     "transforms": DATA | {"rulebook"},
-    "intake": NUMBERS | {"grid", "intake", "rulebook", "outputs"},
+    "intake": NUMBERS | {"grid", "intake", "limits", "rulebook", "outputs"},
     "record": WRITING,
     "formats": WRITING,
     "outputs": WRITING,
@@ -195,6 +196,44 @@ def test_a_file_has_one_subject(module):
     text = FILES[module].read_text()
     assert len(text.splitlines()) <= LONGEST
     assert ast.get_docstring(TREES[module]) or not text.strip()
+
+
+NEVER = {"eval", "exec", "compile", "__import__", "input", "breakpoint"}
+"""Built-in functions that run what they are given."""
+FORBIDDEN = {"pickle", "marshal", "shelve", "dill", "joblib", "cloudpickle", "code", "pty", "ctypes"}
+"""Libraries that run what they read."""
+STARTS_PROCESSES = {"sercheck.desks"}
+"""Files that may start another process, never through a shell."""
+
+
+def test_nothing_that_was_read_is_run():
+    """No eval, no pickle, no shell, no YAML that builds objects, no template from outside, anywhere in the program."""
+    wrong = []
+    for module, tree in TREES.items():
+        for node in ast.walk(tree):
+            if not isinstance(node, ast.Call):
+                continue
+            name = ast.unparse(node.func)
+            words = {keyword.arg: ast.unparse(keyword.value) for keyword in node.keywords}
+            bad = name in NEVER or name in {"os.system", "os.popen", "yaml.load", "yaml.unsafe_load", "pd.read_pickle"}
+            bad |= words.get("shell", "False") != "False" or words.get("allow_pickle", "False") != "False"
+            bad |= name.startswith(("os.exec", "os.spawn")) or name == "os.fork"
+            bad |= name.startswith("subprocess.") and module not in STARTS_PROCESSES
+            if bad:
+                wrong.append(f"{module}:{node.lineno} calls {name}")
+    wrong += [f"{f.module}:{f.line} imports {f.target}" for f in IMPORTS if f.target.split(".")[0] in FORBIDDEN]
+    assert wrong == []
+
+
+def test_the_scan_finds_what_it_looks_for(monkeypatch):
+    """A file that does any of it is told."""
+    started = "import subprocess; subprocess.run('ls', shell=True)"
+    for line in ("eval('1')", "import pickle", started, "os.system('ls')", "yaml.load(text)"):
+        tree = ast.parse(line)
+        monkeypatch.setitem(TREES, "sercheck.bad", tree)
+        monkeypatch.setitem(globals(), "IMPORTS", list(imports_in("sercheck.bad", tree.body)))
+        with pytest.raises(AssertionError):
+            test_nothing_that_was_read_is_run()
 
 
 def catches_all(handler: ast.ExceptHandler) -> bool:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from sercheck import limits
 from sercheck.errors import BatchError
 from sercheck.intake import arrow
 from sercheck.intake.calendar import Cadence
@@ -41,6 +42,7 @@ def to_chunk(columns: Mapping[str, pa.Array], layout: Layout, cadence: Cadence, 
     Raises:
         BatchError: a column's type cannot be what the layout says it is.
     """
+    limits.check()
     stamps = read_stamps(columns[layout.time], cadence, f"{place}, column {layout.time}")
     values = {name: to_values(columns[name], f"{place}, column {name}") for name in layout.values}
     if layout.series:

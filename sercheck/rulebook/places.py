@@ -71,8 +71,8 @@ def read(text: str, source: str) -> Document:
         raise RuleFileError(f"{source}:1:1", came, f"at most {LARGEST:,}", "Split the feed's rules.")
     try:
         return _Builder(source).build(text)
-    except yaml.reader.ReaderError as trouble:
-        before = text[: trouble.position]
+    except (yaml.reader.ReaderError, UnicodeEncodeError) as trouble:  # the latter: half a surrogate pair
+        before = text[: trouble.position if isinstance(trouble, yaml.reader.ReaderError) else trouble.start]
         line, column = before.count("\n") + 1, len(before) - (before.rfind("\n") + 1) + 1
         came = f"a character that YAML does not allow: {trouble.reason}"
         raise RuleFileError(f"{source}:{line}:{column}", came, "plain text in UTF-8") from trouble

@@ -83,12 +83,12 @@ class Folder:
 
     def write(self, name: str, content: bytes) -> None:
         path = self.root / name
-        with whole_file(_made(path.parent) / path.name) as file:
+        with whole_file(_made(path.parent) / path.name, private=True) as file:
             file.write(content)
 
     @contextmanager
     def part(self, day: str, batch_id: str, tell: Tell) -> Iterator[BinaryIO]:
-        with whole_file(_made(self.root / day) / f"{batch_id}.parquet") as file:
+        with whole_file(_made(self.root / day) / f"{batch_id}.parquet", private=True) as file:
             yield file
 
 
