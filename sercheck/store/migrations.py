@@ -168,7 +168,7 @@ def _episodes(connection: Connection) -> None:
         connection.execute(text("CREATE INDEX episodes_of_feed ON episodes (feed)"))
         failed = "CREATE INDEX records_that_failed ON records (judgement_id) WHERE outcome = 'fail'"
         connection.execute(text(failed))
-        how = "(series)" if connection.dialect.name == "sqlite" else "USING hash (series)"  # a tree's keys are short there
+        how = "(series)" if connection.dialect.name == "sqlite" else "USING hash (series)"  # its trees take short keys
         connection.execute(text(f"CREATE INDEX records_of_series ON records {how}"))
 
 
