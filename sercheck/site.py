@@ -92,7 +92,7 @@ def write_site(folder: str | Path, store: str | Path | None = None, ledger: str 
         OutputError: the folder cannot be written.
         StoreError: the ledger cannot be read.
     """
-    site = _Site(Path(folder))
+    site = _Site(Path(folder), "" if store is None or "://" in str(store) else str(store))
     with open_ledger(None if store is None else str(store), ledger) as kept_in:
         feeds: dict[str, list[JudgedBatch]] = {}
         for batch in kept_in.batches():
@@ -107,8 +107,8 @@ def write_site(folder: str | Path, store: str | Path | None = None, ledger: str 
 class _Site:
     """The folder, and from what each page in it was made."""
 
-    def __init__(self, folder: Path) -> None:
-        self._folder = folder
+    def __init__(self, folder: Path, store: str) -> None:
+        self._folder, self.store = folder, store
         for each in (folder, folder / "feeds", folder / "batches"):
             make_folder(each)
         self._before = _read_list(folder / LIST)
@@ -160,7 +160,7 @@ def _feed(site: _Site, ledger: Ledger, feed: str, batches: Sequence[JudgedBatch]
         earlier = tuple(batches[place + 1 : place + 1 + LAST])
         file = f"batches/{_file(batch.batch.batch_id)}"
         made_from = [*_told(batch), *(text for each in earlier for text in _told(each))]
-        site.put(file, made_from, partial(_batch, ledger, batch, earlier, way))
+        site.put(file, [site.store, *made_from], partial(_batch, site, ledger, batch, earlier, way))
     episodes = tuple(
         (name(each.rule), moment(each.started, zone), each.batches) for each in open_episodes(ledger, feed)[:LAST]
     )
@@ -172,9 +172,9 @@ def _feed(site: _Site, ledger: Ledger, feed: str, batches: Sequence[JudgedBatch]
 
 
 def _batch(
-    ledger: Ledger, batch: JudgedBatch, earlier: tuple[JudgedBatch, ...], way: Sequence[tuple[str, str]]
+    site: _Site, ledger: Ledger, batch: JudgedBatch, earlier: tuple[JudgedBatch, ...], way: Sequence[tuple[str, str]]
 ) -> str:
-    return page(digest(case_of(ledger, batch, earlier=earlier)), way)
+    return page(digest(case_of(ledger, batch, site.store, earlier)), way)
 
 
 def _told(batch: JudgedBatch) -> list[str]:

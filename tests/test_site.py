@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import re
 import shutil
+import sqlite3
 
 import brief_cases as cases
 import pytest
@@ -86,6 +87,19 @@ def test_only_what_changed_is_written(store, tmp_path):
     assert write_site(tmp_path / "site", store).written == 1
     (tmp_path / "site" / "pages.json").write_text("{ half")
     assert write_site(tmp_path / "site", store).written == 7
+
+
+def test_a_judgement_without_sketches_has_pages_all_the_same(store, tmp_path):
+    """A ledger from before sketches were kept: everything but the plots."""
+    with sqlite3.connect(store / "ledger.sqlite") as ledger:
+        ledger.execute("DELETE FROM sketches")
+    ledger.close()
+    brief = brief_of(None, store)
+    assert {rule.sketch for rule in brief.failed} == {None}
+    assert "hold a batch failed" in shown(brief, "html")
+    assert write_site(tmp_path / "site", store).written == 7
+    held = (tmp_path / "site" / "batches" / f"{brief.batch_id}.html").read_text()
+    assert f"--store {store}" in held.replace('<span class="word">', "").replace("</span>", "")
 
 
 def test_files_of_others_stay(store, tmp_path):
