@@ -8,6 +8,7 @@ from __future__ import annotations
 import zlib
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
+from functools import cache
 
 import numpy as np
 
@@ -17,14 +18,24 @@ from sercheck.intake.calendar import Cadence
 from sercheck.intake.rows import Rows
 from sercheck.intake.stretch import Plan
 from sercheck.intake.zone import LATEST, NOT_A_STAMP
-from sercheck.rehearsal.deliveries import Delivery
-from sercheck.rehearsal.faults import Fault
+from sercheck.rehearsal.deliveries import DELIVERIES, Delivery
+from sercheck.rehearsal.faults import Fault, catalogue
 from sercheck.serial.arrays import Bools, Floats, Ints
 
 EVERYTHING = 1 << 62
 """Cells of a block: more than any memory holds, so that all series come in one."""
 USABLE = 0.5
 """Share of a batch's rows that a series must have for a fault to be put into it (ours)."""
+
+
+def known_faults() -> dict[str, Fault | Delivery]:
+    """Every fault by name, those of installed packages among them.
+
+    Raises:
+        UsageError: an announced fault cannot be loaded.
+    """
+    known: dict[str, Fault | Delivery] = {fault.name: fault for fault in catalogue()}
+    return known | {fault.name: fault for fault in DELIVERIES}
 
 
 @dataclass(frozen=True)
@@ -36,6 +47,10 @@ class Case:
     every: bool
     number: int
 
+    def __reduce__(self) -> tuple[object, ...]:
+        """Goes to another process by the name of its fault, whose function may be one that cannot go."""
+        return _case, (self.fault.name, self.size, self.every, self.number)
+
     def generator(self, seed: int, day: int) -> np.random.Generator:
         """Its own chance; a fault that draws series draws the same ones every day."""
         same = _fewest(self.fault) > 1
@@ -43,6 +58,15 @@ class Case:
         return np.random.default_rng(
             [seed, name, round(abs(self.size) * 1e6), int(self.every), self.number, 0 if same else day]
         )
+
+
+@cache
+def _in_this_process() -> dict[str, Fault | Delivery]:
+    return known_faults()
+
+
+def _case(name: str, size: float, every: bool, number: int) -> Case:
+    return Case(_in_this_process()[name], size, every, number)
 
 
 @dataclass(frozen=True)

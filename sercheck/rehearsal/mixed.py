@@ -148,7 +148,8 @@ def mixed(sources: Sequence[Source], keys: np.ndarray) -> Seen:
     """The whole: each source's rows at their places.
 
     Args:
-        sources: cover all places, each once; all of one rule, column and window.
+        sources: cover all places, each once; all of one rule, column and window. ``method`` names what each of them
+            was measured by.
         keys: names of all series, shape (S,).
     """
     able = tuple(source for source in sources if len(source.rows))
@@ -178,7 +179,7 @@ def mixed(sources: Sequence[Source], keys: np.ndarray) -> Seen:
     upper, lower = (
         Picked(able, both, shape) if any(each is not None for each in both) else None for both in references
     )
-    widths = {None if one.scores is None else one.scores.shape[1] for one in told}
+    widths = {one.scores.shape[1] for one in told if one.scores is not None}
     measurement = replace(
         seen,
         observed=picked(lambda one: one.observed),
@@ -189,12 +190,19 @@ def mixed(sources: Sequence[Source], keys: np.ndarray) -> Seen:
         lower=lower,
         undecided=picked(lambda one: moved(one.undecided, one)),
         reasons=tuple(reason for one in told for reason in one.reasons),
-        scores=None if len(widths) > 1 or None in widths else picked(_scores),
+        scores=None if len(widths) != 1 else picked(lambda one: _scores(one, *widths)),
         unsure=picked(unsure) if any(one.unsure is not None for one in told) else None,
+        method=_said([one.method for one in told]),
+        assumes=_said([one.assumes for one in told]),
     )
     return replace(first, keys=keys, measurement=measurement, cause=None, support=None, whole=None)
 
 
-def _scores(one: Measurement) -> Floats:
-    assert one.scores is not None
-    return one.scores
+def _scores(one: Measurement, width: int) -> Floats:
+    return np.full((len(one.observed), width), np.nan) if one.scores is None else one.scores
+
+
+def _said(texts: Sequence[str]) -> str:
+    """What is said of the whole: each of the texts that no other one holds, once."""
+    apart = [text for text in dict.fromkeys(texts) if not any(text != other and text in other for other in texts)]
+    return "; ".join(apart)

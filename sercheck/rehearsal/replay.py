@@ -17,9 +17,9 @@ import numpy as np
 from sercheck.errors import UsageError
 from sercheck.history import LOOK
 from sercheck.rehearsal.bench import Judgement, Marks, Outcome
-from sercheck.rehearsal.damage import Case, possible
-from sercheck.rehearsal.deliveries import DELIVERIES, Delivery
-from sercheck.rehearsal.faults import Fault, catalogue
+from sercheck.rehearsal.damage import Case, known_faults, possible
+from sercheck.rehearsal.deliveries import Delivery
+from sercheck.rehearsal.faults import Fault
 from sercheck.rehearsal.feed import Feed
 from sercheck.rehearsal.pool import Play, Pool, pool
 
@@ -110,6 +110,7 @@ def replay(feed: Feed, asked: Plan, workers: int, tell: Tell, records: Path | No
                     future.result()
             starts = draw_starts(feed, healthy, asked)
             planned = len(cases) * len(starts)
+            all_work = whole + sum(_work(case, feed) for case in cases) * len(starts)
             for part, play in _plays(_pieces(cases, len(feed.keys)), starts, marks, asked, work):
                 outcomes += part
                 done += sum(_work(case, feed) for case in play.cases)
@@ -128,8 +129,7 @@ def wanted(names: Collection[str] | None) -> list[Fault | Delivery]:
     Raises:
         UsageError: there is no such fault.
     """
-    known: dict[str, Fault | Delivery] = {fault.name: fault for fault in catalogue()}
-    known |= {fault.name: fault for fault in DELIVERIES}
+    known = known_faults()
     if names is None:
         return list(known.values())
     strange = [name for name in names if name not in known]

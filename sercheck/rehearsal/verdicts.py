@@ -62,7 +62,7 @@ def next_interval(count: int, times: float = 1.0) -> tuple[int, int]:
     low = 0
     while 1 - at_most(count - 1, count + low) <= tail:
         low += 1
-    high = max(low, count)
+    high = low
     while at_most(count, count + high + 1) > tail:
         high += 1
     return low, high
