@@ -1,6 +1,4 @@
-"""References for a batch that is looked at in more than one way: the sooner of two looks, the least likely of several
-counts; depends on ``serial`` and ``measure``.
-"""
+"""The reference of a batch that is looked at twice: the sooner of two looks; depends on ``serial``, ``measure``."""
 
 from __future__ import annotations
 
@@ -9,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from sercheck.measure import Reference, Side
-from sercheck.serial.arrays import Floats, Ints
+from sercheck.serial.arrays import Floats
 
 
 @dataclass(frozen=True)
@@ -45,82 +43,3 @@ class Sooner:
 
     def detectable(self, side: Side, risk: Floats) -> Floats:
         return np.fmin(self.first.detectable(side, risk / 2), self.second.detectable(side, risk / 2))
-
-
-@dataclass(frozen=True)
-class Shares:
-    """A count with a known law, told as a share; only too many is ever a fault.
-
-    Attributes:
-        tails: P(count ≥ k) for k = 0 .. K, shape (S, K + 1), NaN where nothing is known.
-        count: the observed count, shape (S, 1).
-        step: what one more count adds to the share, shape (S, 1).
-        bound: what history gives, shape (S, 1).
-    """
-
-    tails: Floats
-    count: Ints
-    step: Floats
-    bound: Floats
-
-    @property
-    def observed(self) -> Floats:
-        return np.asarray(self.count * self.step)
-
-    @property
-    def standard_error(self) -> Floats:
-        return np.full(self.count.shape, np.nan)
-
-    def p_value(self, side: Side) -> Floats:
-        if side == "lower":
-            return np.where(np.isnan(self.tails[:, :1]), np.nan, 1.0)
-        return np.take_along_axis(self.tails, np.minimum(self.count, self.tails.shape[1] - 1), axis=1)
-
-    def limit(self, side: Side, risk: Floats) -> Floats:
-        if side == "lower":
-            return np.full(self.count.shape, np.nan)
-        with np.errstate(invalid="ignore"):
-            above = self.tails > np.broadcast_to(risk, self.count.shape)
-        return np.asarray(above.sum(axis=1, keepdims=True) * self.step)
-
-    def naive_limit(self, side: Side, risk: Floats) -> Floats:
-        return np.full(np.broadcast(self.count, risk).shape, np.nan)
-
-    def detectable(self, side: Side, risk: Floats) -> Floats:
-        return np.asarray(self.limit(side, risk) - self.bound)
-
-
-@dataclass(frozen=True)
-class Least:
-    """Several counts of the same batch at an equal part of the risk each: the least likely one is told."""
-
-    parts: tuple[Shares, ...]
-
-    def _pick(self, values: list[Floats]) -> Floats:
-        p = np.stack([part.p_value("upper") for part in self.parts])
-        best = np.argmin(np.where(np.isnan(p), np.inf, p), axis=0)
-        return np.asarray(np.take_along_axis(np.stack(values), best[None], axis=0)[0])
-
-    @property
-    def observed(self) -> Floats:
-        return self._pick([part.observed for part in self.parts])
-
-    @property
-    def bound(self) -> Floats:
-        return self._pick([part.bound for part in self.parts])
-
-    @property
-    def standard_error(self) -> Floats:
-        return self.parts[0].standard_error
-
-    def p_value(self, side: Side) -> Floats:
-        return np.minimum(1.0, len(self.parts) * self._pick([part.p_value(side) for part in self.parts]))
-
-    def limit(self, side: Side, risk: Floats) -> Floats:
-        return self._pick([part.limit(side, risk / len(self.parts)) for part in self.parts])
-
-    def naive_limit(self, side: Side, risk: Floats) -> Floats:
-        return self.parts[0].naive_limit(side, risk)
-
-    def detectable(self, side: Side, risk: Floats) -> Floats:
-        return self._pick([part.detectable(side, risk / len(self.parts)) for part in self.parts])

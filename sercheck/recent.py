@@ -15,7 +15,6 @@ import numpy as np
 
 from sercheck.baseline import chosen_seasons
 from sercheck.grid import Axis, Panel
-from sercheck.looks import Least
 from sercheck.measure import POWER, Measurement, Reasons
 from sercheck.recent_past import Comparison, RecentPast
 from sercheck.serial.arrays import Bools, Floats, Ints
@@ -42,7 +41,6 @@ DAY = 86_400_000_000_000
 """Nanoseconds of a day."""
 
 METHOD = "one-step forecast from the statistics of the last batches, tails from its own misses"
-COUNTED = "beta-binomial law of the share and geometric law of the longest run, clusters as in the last batches"
 ASSUMES = "the batch is to the week before it as the last batches were to theirs"
 
 
@@ -95,7 +93,6 @@ def recent_measurement(
         lag: the lag looked at, or None.
         idle: series in which the fault could hardly be seen, shape (S,): a pass of theirs says nothing.
     """
-    counted = isinstance(told.reference, Least)
     reasons = Reasons(told.observed.shape)
     ask_told(reasons, told)
     index, texts = reasons.index, list(reasons.texts)
@@ -109,10 +106,10 @@ def recent_measurement(
         n_missing=panel.values.shape[1] - panel.start - told.n,
         n_eff=told.n_eff,
         upper=told.reference,
-        lower=None if counted else told.reference,
+        lower=told.reference,
         undecided=index,
         reasons=tuple(texts),
-        method=COUNTED if counted else METHOD,
+        method=METHOD,
         assumes=ASSUMES,
         lags=None if lag is None else (lag,),
         season=season,
@@ -169,7 +166,7 @@ def day_steps(axis: Axis) -> float:
 def _recent_past(panel: Panel, *, logs: bool) -> RecentPast:
     axis, start = panel.axis, panel.start
     n = panel.values.shape[1] - start
-    day, week = round(day_steps(axis)), round(7 * day_steps(axis))
+    week = round(7 * day_steps(axis))
     counts = _counts(panel.history)
     x, scale = _scaled(panel.values, start)
     taught = np.where(axis.closed, np.nan, x)
@@ -189,7 +186,7 @@ def _recent_past(panel: Panel, *, logs: bool) -> RecentPast:
     batches = min(BATCHES, start // n)
     steps = (batches + 1) * n
     return RecentPast(
-        x=x[:, -min(x.shape[1], steps + week) :],
+        x=x[:, -steps:],
         y=y[:, -steps:],
         profile=None if profile is None else profile.last(steps),
         n=n,
@@ -197,7 +194,6 @@ def _recent_past(panel: Panel, *, logs: bool) -> RecentPast:
         log=log,
         counts=counts,
         scale=scale,
-        repeats_at=tuple(step for step in (day, week) if step > 1),
     )
 
 

@@ -13,7 +13,7 @@ from functools import cached_property
 
 import numpy as np
 
-from sercheck.looks import Least, Shares, Sooner
+from sercheck.looks import Sooner
 from sercheck.reference import Larger, Pivot
 from sercheck.serial import batch_statistics as statistic
 from sercheck.serial.arrays import Bools, Floats, Ints
@@ -43,7 +43,7 @@ class Comparison:
     """
 
     observed: Floats
-    reference: Sooner | Pivot | Least
+    reference: Sooner | Pivot
     n: Ints
     n_eff: Floats
     t: Floats
@@ -56,8 +56,7 @@ class RecentPast:
     """The newest batch and the stretches of its length before it. Arrays of W steps end with the batch.
 
     Attributes:
-        x: values as delivered (but for ``scale``), shape (S, W), W at least (B + 1)·n (more, for what lies a week
-            before the first).
+        x: values as delivered (but for ``scale``), shape (S, W), W at least (B + 1)·n.
         y: the same on the scale that is judged, closed days missing, shape (S, (B + 1)·n).
         profile: what was expected a week before, on that scale; None for a feed without a season.
         n: steps in one batch.
@@ -65,7 +64,6 @@ class RecentPast:
         counts: series of whole numbers not below 0, shape (S,).
         scale: unit of x in the feed's unit, a power of two, shape (S,).
         log: c of the series judged on the scale ln(1 + x/c), NaN for the others, shape (S,).
-        repeats_at: distances in steps at which a replay is looked for (a day, a week).
     """
 
     x: Floats
@@ -76,7 +74,6 @@ class RecentPast:
     log: Floats
     counts: Bools
     scale: Floats
-    repeats_at: tuple[int, ...]
 
     # -- shared by the measures, each computed once ------------------------------------------------------------------
 
@@ -173,11 +170,22 @@ class RecentPast:
 
     def difference_autocorrelation(self, paused: Bools | bool = False) -> Comparison:
         """Lag-one autocorrelation of the first differences, the season left in; two looks."""
-        root = np.sqrt(np.maximum(self.x[:, -self.y.shape[1] :], 0.0))  # counts: Anscombe (1948)
-        y = np.where(self.counts[:, None] & ~np.isnan(self.y), root, self.y)
-        table = statistic.difference_autocorrelation(y, self.n)
-        n = self._count(y)
+        table = statistic.difference_autocorrelation(self._even, self.n)
+        n = self._count(self._even)
         return self._two_looks(self._without_held(table), np.tanh, n, 1 / np.sqrt(np.maximum(n - 2, 1)), paused)
+
+    def roughness(self, paused: Bools | bool = False) -> Comparison:
+        """Mean square of the fourth differences over the first, 1 for independent values, season left in; two looks."""
+        table = statistic.roughness(self._even, self.n)
+        n = self._count(self._even)
+        naive = np.sqrt(statistic.ROUGH_VARIANCE / np.maximum(n, 1))
+        return self._two_looks(self._without_held(table), statistic.rough_unit, n, naive, paused)
+
+    @cached_property
+    def _even(self) -> Floats:
+        """Values whose noise is of even size: roots of counts (Anscombe 1948), else the scale that is judged."""
+        root = np.sqrt(np.maximum(self.x[:, -self.y.shape[1] :], 0.0))
+        return np.where(self.counts[:, None] & ~np.isnan(self.y), root, self.y)
 
     def _white(self, x: Floats) -> Floats:
         return statistic.through_filter(x, self.whitener)
@@ -236,18 +244,6 @@ class RecentPast:
 
         return _comparison(step, to_unit, _pivot(step, to_unit, naive), n, naive)
 
-    def repeats(self) -> Comparison:
-        """Values equal to the one before: their share, and the longest run as a share of the batch."""
-        return self._equal((1,))
-
-    def replay(self) -> Comparison:
-        """Values equal to those a day or a week earlier: their share, and the longest run as a share of the batch.
-
-        Raises:
-            ValueError: for a feed whose steps are longer than a week.
-        """
-        return self._equal(self.repeats_at)
-
     def sight(self, fit: statistic.Fitted | None) -> Floats:
         """How far a lost season (or a slip of one step) moves T, in standard deviations of T, shape (S,).
 
@@ -304,30 +300,6 @@ class RecentPast:
             self._without_held(fit.score), to_unit, self._count(self.y), np.ones((len(self.x), 1)), paused
         )
         return replace(told, observed=fit.estimate[:, -1:])  # the score is clipped, the estimate is not
-
-    def _equal(self, distances: tuple[int, ...]) -> Comparison:
-        if not distances:
-            raise ValueError("a feed whose steps are longer than a week has no day or week to deliver again")
-        parts: list[Shares] = []
-        counts: list[Ints] = []
-        for distance in distances:
-            marks = statistic.equal_before(self.x, distance, self.n)
-            n = np.maximum(marks.count[:, -1:], 1).astype(np.float64)
-            counts.append(marks.count[:, -1:])
-            told = np.where(marks.count[:, -1:] > 0, 1.0, np.nan)
-            share = statistic.share_tails(marks)
-            usual = marks.equal[:, :-1].sum(axis=1) / np.maximum(marks.count[:, :-1].sum(axis=1), 1)
-            parts.append(Shares(share * told, marks.equal[:, -1:], 1 / n, usual[:, None]))
-            runs = statistic.run_tails(marks, self.n)
-            parts.append(Shares(runs * told, marks.longest[:, None], 1 / n, np.zeros_like(n)))
-        reference = Least(tuple(parts))
-        count = np.max(np.stack(counts), axis=0)
-        series = len(self.x)
-        nothing = np.full(series, np.nan)
-        history = np.full((series, 1), self.held.shape[1], dtype=np.int64)
-        return Comparison(
-            reference.observed, reference, count, nothing[:, None], nothing, np.empty((series, 0)), history
-        )
 
 
 def _then(first: Map, second: Map) -> Map:

@@ -3,8 +3,8 @@
 Run it with ``python -m tests.causes`` (``--replications 200 --n 168 336 24``). Hourly feeds have a strong daily cycle
 with weekly modulation and AR(1) noise, daily feeds a weekly cycle; the daily windows that stand beside 24, 168 and 336
 hours are one, four and eight weeks. A fault counts where the battery detects it: level, spread, innovations variance,
-amplitude, phase, autocorrelation of the difference, repeats and replay against the recent past, and the hash of earlier
-stretches, each at a risk of 1/720.
+amplitude, phase, autocorrelation of the difference, roughness and repeats (run and share) against the recent past, each
+at a risk of 1/720, or stretches that came before.
 
 With ``--together`` the series come in batches of twelve, of which all are broken alike, and each is judged with the
 others of its batch, as ``gate`` does it; without it each is judged by itself.
@@ -23,6 +23,8 @@ import numpy as np
 from sercheck import causes
 from sercheck.cause import likely_causes
 from sercheck.grid import Axis, Panel
+from sercheck.measure import Question, Stays
+from sercheck.measures import get
 from sercheck.recent import recent_past
 from sercheck.rehearsal.faults import Fault, catalogue
 from sercheck.serial.replay import seen_before
@@ -30,6 +32,8 @@ from sercheck.serial.replay import seen_before
 HOUR = 3_600_000_000_000
 RISK = 1 / 720
 """Risk of each measure of the battery: eight of them, one false hold in 90 days."""
+
+REPEATS = get("repeats")
 
 
 @dataclass(frozen=True)
@@ -92,14 +96,16 @@ def detected(panel: Panel) -> np.ndarray:
     past = recent_past(panel)
     found = np.zeros(len(panel.values), dtype=bool)
     looks = [past.level, past.spread, past.innovations_variance, past.amplitude, past.phase,
-             past.difference_autocorrelation]  # fmt: skip
+             past.difference_autocorrelation, past.roughness]  # fmt: skip
     with np.errstate(invalid="ignore"):
         for look in looks:
             reference = look().reference
             up, down = reference.p_value("upper")[:, 0], reference.p_value("lower")[:, 0]
             found |= 2 * np.minimum(up, down) <= RISK
-        for look in (past.repeats, past.replay):
-            found |= look().reference.p_value("upper")[:, 0] <= RISK
+        for look in ("run", "share"):
+            told = REPEATS.run(panel, Question(REPEATS.Fields(look=look), Stays("like_history"), RISK))
+            assert told.upper is not None
+            found |= told.upper.p_value("upper")[:, 0] <= RISK
     seen = seen_before(panel.values, panel.start)
     missing = np.isnan(panel.window).mean(axis=1) > 0.05
     return found | (np.nansum(seen.batch, axis=1) >= 3) | missing

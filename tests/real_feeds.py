@@ -2,10 +2,10 @@
 
 Run it with ``python -m tests.real_feeds`` (two minutes; ``--feeds bike_rentals`` picks feeds, ``--dates`` lists the
 held days, ``--closed`` makes public holidays closed days, ``--no-faults`` leaves the injections out). Every column of
-every series is a feed of its own with eight rules: level, spread, innovations variance, amplitude, phase,
-autocorrelation of the difference, repeats and replay, a budget of one false hold in 90 days and a rolling history of
-90 days. A held day counts as let in by a person: it stays in level and profile and leaves the looks and the histories
-of autocorrelation, amplitude and phase.
+every series is a feed of its own with nine rules: level, spread, innovations variance, amplitude, phase,
+autocorrelation of the difference, roughness, repeats and replay, a budget of one false hold in 90 days and a rolling
+history of 90 days. A held day counts as let in by a person: it stays in level and profile and leaves the looks and the
+histories of autocorrelation, roughness, amplitude and phase.
 
 Measured (``--every 14``), false-hold episodes per 90 days with exact interval: airport weather .84 (.56-1.21), wind and
 solar .95 (.31-2.21), road 1.00 (.40-2.07), bicycles .51 (.23-.96), electricity 2.27 (1.47-3.35; 1.54 (.90-2.47) without
@@ -43,15 +43,20 @@ from scipy import stats
 
 from sercheck.recent import BATCHES, idle
 from sercheck.recent_past import RecentPast
+from sercheck.serial.recurrence import beta_binomial_share
+from sercheck.serial.repeats import equal_to_earlier, resting_value
+from sercheck.serial.replay import seen_before
+from sercheck.serial.runs import chain_runs
 from sercheck.serial.walk_forward import Profile, log_unit, on_scale, walk_forward
+from tests.found import Found, table
 from tests.real_faults import FAULTS
 
 FOLDER = Path(__file__).parent / "reference" / "feeds"
 DAY, WEEK = 24, 168
 FIRST = 104
 """Day of the first judgement: 90 days of history and two weeks that teach the first profile."""
-RULES = ("level", "spread", "innovations", "amplitude", "phase", "autocorrelation", "repeats", "replay")
-LOOKS = ("spread", "innovations", "amplitude", "phase", "autocorrelation")
+RULES = ("level", "spread", "innovations", "amplitude", "phase", "autocorrelation", "roughness", "repeats", "replay")
+LOOKS = ("spread", "innovations", "amplitude", "phase", "autocorrelation", "roughness")
 SHARE = 1 / 90 / len(RULES)
 """Risk of one rule on one day."""
 RISK = {rule: SHARE / 4 if rule == "level" else SHARE for rule in RULES}
@@ -185,7 +190,7 @@ class Ready:
         part = [a[rows, first:last] for a in (self.profile.here, self.profile.ahead, self.profile.behind)]
         profile = Profile(part[0], part[1], part[2], self.profile.gain[rows])
         return RecentPast(
-            x, y, profile, DAY, held, self.log[rows], self.counts[rows], np.ones(len(rows)), (DAY, WEEK)
+            x, y, profile, DAY, held, self.log[rows], self.counts[rows], np.ones(len(rows))
         )
 
 
@@ -205,7 +210,7 @@ def prepare(feed: Feed, *, closing: bool = False) -> Ready:
 
 
 def judge(past: RecentPast, rested: dict[str, np.ndarray]) -> tuple[dict[str, np.ndarray], dict[str, np.ndarray]]:
-    """Two-sided p-values of the eight rules, and whether the longer look alone would fail."""
+    """Two-sided p-values of the nine rules, and whether the longer look alone would fail."""
     judged = {
         "level": past.level(),
         "spread": past.spread(rested["spread"]),
@@ -213,17 +218,29 @@ def judge(past: RecentPast, rested: dict[str, np.ndarray]) -> tuple[dict[str, np
         "amplitude": past.amplitude(rested["amplitude"]),
         "phase": past.phase(rested["phase"]),
         "autocorrelation": past.difference_autocorrelation(rested["autocorrelation"]),
-        "repeats": past.repeats(),
-        "replay": past.replay(),
+        "roughness": past.roughness(rested["roughness"]),
     }
-    p, by_look = {}, {}
+    p, by_look = counted(past.x, past.x.shape[1] - past.n), {}
     for rule, one in judged.items():
         up, down = one.reference.p_value("upper")[:, 0], one.reference.p_value("lower")[:, 0]
-        p[rule] = up if rule in ("repeats", "replay") else np.minimum(1, 2 * np.minimum(up, down))
+        p[rule] = np.minimum(1, 2 * np.minimum(up, down))
         if rule in LOOKS:
             half = np.full((len(up), 1), RISK[rule] / 2)
             by_look[rule] = (one.reference.by_second("upper", half) | one.reference.by_second("lower", half))[:, 0]
     return p, by_look
+
+
+def counted(x: np.ndarray, start: int) -> dict[str, np.ndarray]:
+    """P-values of repeats (run and share, the smaller one twice) and of replay, as the measures compute them."""
+    rest = resting_value(x[:, :start])
+    marks = np.where(x == rest[:, None], np.nan, equal_to_earlier(x))
+    laws = chain_runs(marks[:, :start], marks[:, start:]), beta_binomial_share(marks[:, :start], marks[:, start:], 0.8)
+    seen = seen_before(x, start)
+    again = beta_binomial_share(seen.history, seen.batch, 0.8, seen.length)
+    return {
+        "repeats": np.minimum(1, 2 * np.fmin(*(law.p_value("upper")[:, 0] for law in laws))),
+        "replay": again.p_value("upper")[:, 0],
+    }
 
 
 def sighted(past: RecentPast) -> dict[str, np.ndarray]:
@@ -288,7 +305,8 @@ def inject(ready: Ready, healthy: Healthy, every: int, seed: int = 7) -> dict[st
             if not len(rows):
                 continue
             begin, end = start * DAY, (start + 7) * DAY
-            broken = fault(ready.feed.x[rows, :end], ready.profile.here[rows, begin:end], ready.log[rows], begin, rng)
+            here = ready.profile.here[rows, begin:end]
+            broken = fault(ready.feed.x[rows, :end], here, ready.log[rows], begin, rng, DAY)
             usable = np.isfinite(ready.y[rows, begin : begin + DAY]).sum(axis=1) >= 20
             rows, broken = rows[usable], broken[usable]
             caught = np.zeros(len(rows), dtype=bool)
@@ -322,7 +340,7 @@ def main(argv: list[str]) -> int:
     parser.add_argument("--every", type=int, default=35, help="days between injections")
     parser.add_argument("--closed", action="store_true", help="public holidays are closed days")
     asked = parser.parse_args(argv)
-    totals: dict[str, np.ndarray] = {}
+    all_found: list[Found] = []
     sums = np.zeros(2)
     for name in asked.feeds:
         ready = prepare(FEEDS[name](), closing=asked.closed)
@@ -353,15 +371,14 @@ def main(argv: list[str]) -> int:
                     print(f"      {date} {', '.join(rules)}  {NAMED.get(name, {}).get(date, '')}")
         sys.stdout.flush()
         if not asked.no_faults:
+            all_found.append(Found(name, ready.feed.weather))
             for fault, found in inject(ready, healthy, asked.every).items():
-                for kind in ("all", "weather" if ready.feed.weather else "activity"):
-                    totals[f"{kind} {fault}"] = totals.get(f"{kind} {fault}", np.zeros(3)) + np.asarray(found)
+                all_found[-1].add(fault, *found)
                 tried = max(found[0], 1)
                 print(f"  {fault:24s} {found[1] / tried:.2f} / {found[2] / tried:.2f}  of {found[0]}")
     low, high = (90 * bound / sums[1] for bound in interval(int(sums[0])))
     print(f"\nall feeds: {90 * sums[0] / sums[1]:.2f} per 90 days ({low:.2f}-{high:.2f})")
-    for kind, found in sorted(totals.items()):
-        print(f"  {kind:32s} {found[1] / found[0]:.2f} / {found[2] / found[0]:.2f}  of {int(found[0])}")
+    print("\n".join(table(all_found)))
     return 0
 
 

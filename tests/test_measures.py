@@ -286,7 +286,7 @@ class Fields(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True)
     power: int = Field(default=1, ge=1)
 
-class Roughness(Measure):
+class Bumpiness(Measure):
     """How rough is the series?
 
     Mean absolute step, missing values left out."""
@@ -315,42 +315,42 @@ def announce(folder, name: str, target: str, source: str = OUTSIDE) -> None:
 
 def test_a_measure_of_another_package_is_found_and_run(tmp_path, monkeypatch):
     """A class announced by entry point is listed, compiled, measured and printed like one of ours."""
-    announce(tmp_path, "roughness", "scratch_roughness:Roughness")
+    announce(tmp_path, "bumpiness", "scratch_bumpiness:Bumpiness")
     monkeypatch.syspath_prepend(tmp_path)
-    assert "roughness" in names()
-    text = HEAD + "  - {name: smooth, measure: roughness, power: 2, stays: {below: 3}}\n"
+    assert "bumpiness" in names()
+    text = HEAD + "  - {name: smooth, measure: bumpiness, power: 2, stays: {below: 3}}\n"
     rule = load_rules(text).rules[0]
     assert rule.fields.power == 2
     panel = panel_of(BASE, N)
-    seen = get("roughness").run(panel, Question(rule.fields, rule.stays, rule.false_alarm))
+    seen = get("bumpiness").run(panel, Question(rule.fields, rule.stays, rule.false_alarm))
     np.testing.assert_allclose(seen.observed[:, 0], np.mean(np.diff(BASE[:, N:], axis=1) ** 2, axis=1))
-    assert "How rough is the series?" in CliRunner().invoke(command, ["roughness"]).output
+    assert "How rough is the series?" in CliRunner().invoke(command, ["bumpiness"]).output
     monkeypatch.undo()
-    assert "roughness" not in names()
+    assert "bumpiness" not in names()
 
 
 @pytest.mark.parametrize(
     ("source", "reason"),
     [
         ("import no_such_package\n", "ModuleNotFoundError: No module named 'no_such_package'"),
-        ("class Roughness: pass\n", "is not a subclass"),
-        ("x = 1\n", "has no attribute 'Roughness'"),
+        ("class Bumpiness: pass\n", "is not a subclass"),
+        ("x = 1\n", "has no attribute 'Bumpiness'"),
         ("def broken(:\n", "SyntaxError"),
     ],
 )
 def test_a_broken_measure_fails_with_its_name_and_reason(tmp_path, monkeypatch, source, reason):
     """A rule that asks for it is not read as if there were no such measure."""
-    announce(tmp_path, "roughness", "scratch_broken:Roughness", source)
+    announce(tmp_path, "bumpiness", "scratch_broken:Bumpiness", source)
     monkeypatch.syspath_prepend(tmp_path)
     sys.modules.pop("scratch_broken", None)
-    with pytest.raises(UsageError, match="measure roughness") as caught:
-        load_rules(HEAD + "  - {name: smooth, measure: roughness, stays: {below: 3}}\n")
+    with pytest.raises(UsageError, match="measure bumpiness") as caught:
+        load_rules(HEAD + "  - {name: smooth, measure: bumpiness, stays: {below: 3}}\n")
     assert reason in caught.value.sentence()
 
 
 def test_two_measures_of_one_name_are_an_error(tmp_path, monkeypatch):
     """A package cannot take the place of a measure of ours unseen."""
-    announce(tmp_path, "level", "scratch_level:Roughness")
+    announce(tmp_path, "level", "scratch_level:Bumpiness")
     monkeypatch.syspath_prepend(tmp_path)
     with pytest.raises(UsageError, match="two measures have this name"):
         names()

@@ -12,7 +12,7 @@ from naive import recent as naive
 from scipy import stats
 
 from sercheck.grid import Axis, Panel
-from sercheck.looks import Least, Shares, Sooner
+from sercheck.looks import Sooner
 from sercheck.measure import Reasons
 from sercheck.recent import FEWEST, ask_told, enough, idle_amplitude, recent_measurement, recent_past, season_of
 from sercheck.reference import Pivot
@@ -22,9 +22,8 @@ from sercheck.serial.risk import t_tail
 FEEDS = Path(__file__).parent / "reference" / "feeds"
 HOUR = 3600 * 10**9
 MEASURES = (
-    "level", "spread", "innovations_variance", "difference_autocorrelation", "amplitude", "phase", "repeats", "replay",
+    "level", "spread", "innovations_variance", "difference_autocorrelation", "roughness", "amplitude", "phase",
 )  # fmt: skip
-COUNTED = ("repeats", "replay")
 
 
 def panel_of(x, closed=(), held=(), seasons=(24,), n=24):
@@ -50,15 +49,15 @@ def feeds(rng, series=3, days=111, phi=0.6):
     return 40 + 5 * np.sin(2 * np.pi * hours / 24) + 2 * np.sin(4 * np.pi * hours / 24) + x
 
 
-def p_of(told, name=""):
-    """Two-sided p-value, one-sided for counts."""
+def p_of(told):
+    """Two-sided p-value."""
     up, down = told.reference.p_value("upper"), told.reference.p_value("lower")
-    return (up if name in COUNTED else np.minimum(1, 2 * np.minimum(up, down)))[:, 0]
+    return np.minimum(1, 2 * np.minimum(up, down))[:, 0]
 
 
 def all_p(panel):
     """P-values of all measures."""
-    return {name: p_of(getattr(recent_past(panel), name)(), name) for name in MEASURES}
+    return {name: p_of(getattr(recent_past(panel), name)()) for name in MEASURES}
 
 
 # -- the regression and the looks ----------------------------------------------------------------------------------
@@ -161,27 +160,6 @@ def test_sooner_look_decides(side):
     assert np.isnan(Sooner(pivot(0.0, np.nan), pivot(0.0, 1.0)).p_value(side)).all()
 
 
-def test_counts_fail_at_their_limit():
-    """A count has p at or under the risk exactly from its limit on, for every part and the least likely of them."""
-    tails_of = stats.binom.sf(np.arange(25) - 1, 24, 0.1)[None]
-    risk = np.array([[0.01]])
-    for k in range(25):
-        part = Shares(tails_of, np.array([[k]]), np.array([[1 / 24]]), np.array([[0.1]]))
-        for reference, observed in ((part, part.observed), (Least((part, part)), Least((part, part)).observed)):
-            fails = reference.p_value("upper") <= risk
-            assert fails == (observed >= reference.limit("upper", risk) - 1e-12)
-            assert reference.p_value("lower") == 1
-
-
-def test_least_tells_the_least_likely():
-    """Of two counts the less likely one is told, at twice its p-value."""
-    tails_of = stats.binom.sf(np.arange(25) - 1, 24, 0.1)[None]
-    usual, rare = (Shares(tails_of, np.array([[k]]), np.array([[1 / 24]]), np.array([[0.1]])) for k in (2, 12))
-    least = Least((usual, rare))
-    assert least.observed[0, 0] == 0.5
-    assert least.p_value("upper") == pytest.approx(2 * rare.p_value("upper"))
-
-
 # -- the measures on panels ----------------------------------------------------------------------------------------
 
 
@@ -194,8 +172,7 @@ def test_limit_and_p_value_agree(name, side):
     for risk in (0.3, 0.05):
         limit = told.reference.limit(side, np.full((60, 1), risk))
         beyond = told.observed >= limit - 1e-9 if side == "upper" else told.observed <= limit + 1e-9
-        if not (name in COUNTED and side == "lower"):
-            np.testing.assert_array_equal(p <= risk, beyond)
+        np.testing.assert_array_equal(p <= risk, beyond)
 
 
 def test_units_are_those_a_reader_knows():
@@ -207,17 +184,14 @@ def test_units_are_those_a_reader_knows():
     assert means["innovations_variance"] == pytest.approx(1, abs=0.1)
     assert means["amplitude"] == pytest.approx(1, abs=0.05)
     assert means["phase"] == pytest.approx(0, abs=0.05)
-    assert means["repeats"] == 0
+    assert means["roughness"] == pytest.approx(0.43, abs=0.1)  # AR(1) .6: 1.0 for white noise
 
 
 def test_sizes_of_healthy_batches():
     """Five in a hundred healthy batches, give or take, fall under .05 in every measure with a law."""
     p = all_p(panel_of(feeds(np.random.default_rng(9), 400, days=105)))
     for name in MEASURES:
-        if name in COUNTED:
-            assert (p[name] == 1).all()
-        else:
-            assert 0.01 < np.mean(p[name] <= 0.05) < 0.08
+        assert 0.01 < np.mean(p[name] <= 0.05) < 0.08
 
 
 FAULTS = {
@@ -228,8 +202,8 @@ FAULTS = {
     "wilder": (lambda x: 40 + 3 * (x[:, -24:] - 40), "spread"),
     "smoothed": (lambda x: sum(x[:, x.shape[1] - 27 + k : x.shape[1] - 3 + k] for k in range(4)) / 4,
                  "difference_autocorrelation"),
-    "stuck": (lambda x: np.concatenate([x[:, -24:-16], np.repeat(x[:, -17:-16], 16, axis=1)], axis=1), "repeats"),
-    "again": (lambda x: x[:, -48:-24], "replay"),
+    "smoothed over three": (lambda x: sum(x[:, x.shape[1] - 26 + k : x.shape[1] - 2 + k] for k in range(3)) / 3,
+                            "roughness"),
 }  # fmt: skip
 
 
@@ -286,12 +260,11 @@ def test_nothing_to_say(x):
     past = recent_past(panel_of(x))
     for name in MEASURES:
         told = getattr(past, name)()
-        p = p_of(told, name)
-        assert np.isnan(p).all() or (name in COUNTED and (p == 1).all())
-        if name not in COUNTED:
-            reasons = Reasons(told.observed.shape)
-            ask_told(reasons, told)
-            assert reasons.undecided.all()
+        p = p_of(told)
+        assert np.isnan(p).all()
+        reasons = Reasons(told.observed.shape)
+        ask_told(reasons, told)
+        assert reasons.undecided.all()
 
 
 def test_wild_values_do_not_blind_it():
@@ -353,8 +326,6 @@ def test_what_the_judge_gets():
     np.testing.assert_array_equal(got.unsure[:, 0] >= 0, [False, False, True])
     np.testing.assert_array_equal(got.n + got.n_missing, [[24]] * 3)
     assert "too weak" in got.reasons[got.unsure[2, 0]]
-    counted = recent_measurement(panel, recent_past(panel).repeats())
-    assert counted.lower is None
 
 
 def test_when_it_applies():
@@ -389,10 +360,7 @@ def test_months():
     panel = panel_of(x, seasons=(24,), n=1)
     panel = replace(panel, axis=replace(panel.axis, stamps=panel.axis.stamps * 24 * 30))
     past = recent_past(panel)
-    assert past.repeats_at == ()
     assert np.isnan(past.level().t).all()
-    with pytest.raises(ValueError, match="day or week"):
-        past.replay()
 
 
 def test_whiteness_of_a_week():
@@ -436,7 +404,6 @@ def delivered(name, last):
 @pytest.mark.parametrize(("feed", "day", "name"), [
     ("electricity", "2012-10-28", "difference_autocorrelation"),  # the doubled autumn hour summed
     ("electricity", "2014-03-30", "difference_autocorrelation"),  # the skipped spring hour delivered near 0
-    ("road_occupancy", "2016-03-22", "repeats"),  # one value for nine hours
     ("bike_rentals", "2016-01-23", "level"),  # no service in a blizzard
 ])  # fmt: skip
 def test_real_faults_are_found(feed, day, name):

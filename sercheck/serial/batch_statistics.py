@@ -23,6 +23,13 @@ FARTHEST = 8.0
 OBSERVED = 0.5
 """Share of a batch's values that must be there for it to have a statistic (a plain half)."""
 
+INDEPENDENT = 35.0
+"""Mean square of fourth differences over that of first ones, of independent values."""
+
+ROUGH_VARIANCE = 1.0530612244897959
+"""n times the variance of that ratio's logarithm for independent normal values: 2 mean (g⁴/70 - g/2)², g = |1 - e^iw|²
+over all frequencies w (Bartlett 1946)."""
+
 EXISTING = 0.75
 """Share of innovations that must exist; else the model's order is halved, since each gap costs order + 1 of them."""
 
@@ -72,6 +79,35 @@ def difference_autocorrelation(y: Floats, n: int) -> Floats:
     enough = (told.sum(axis=-1) >= max(2.0, OBSERVED * (n - 2))) & (size > 0)
     r = np.where(enough, product / np.where(size > 0, size, 1.0), np.nan)
     return np.asarray(np.arctanh(np.clip(r, -1 + 1e-12, 1 - 1e-12)))
+
+
+def roughness(y: Floats, n: int) -> Floats:
+    """Ln of the mean square of the fourth differences over that of the first, the season left in.
+
+    Independent values give ln 35 (Σ binom(4, j)² / Σ binom(1, j)² = 70/2), smooth ones much less: a cycle of a day of
+    hours alone gives ln .0003. The mean square successive difference (von Neumann 1941) carried on: what is smooth
+    is gone from the fourth differences, so that they hold the noise, and smoothing takes most of it.
+    """
+    cut = batches(y, n)
+
+    def mean_square(order: int) -> Floats:
+        d = np.diff(cut, n=order, axis=-1)
+        told = ~np.isnan(d)
+        enough = told.sum(axis=-1) >= max(2.0, OBSERVED * (n - order))
+        total = np.where(told, d, 0.0) ** 2
+        return np.where(enough, total.sum(axis=-1) / np.maximum(told.sum(axis=-1), 1), 0.0)
+
+    if n < 6:
+        return np.full(cut.shape[:2], np.nan)
+    first, fourth = mean_square(1), mean_square(4)
+    able = (first > 0) & (fourth > 0)
+    return np.where(able, np.log(np.where(able, fourth, 1.0)) - np.log(np.where(able, first, 1.0)), np.nan)
+
+
+def rough_unit(log_ratio: Floats) -> Floats:
+    """From ln(fourth over first differences) to the roughness, 1 for independent values."""
+    with np.errstate(over="ignore"):
+        return np.asarray(np.exp(log_ratio) / INDEPENDENT)
 
 
 def portmanteau(e: Floats, n: int, stride: int, lags: int) -> Floats:
@@ -234,130 +270,3 @@ def existing(model: Autoregression, x: Floats, wanted: Bools) -> Autoregression:
     kept = np.arange(1, model.reflection.shape[1] + 1) <= order[:, None]
     reflection = np.where(kept, model.reflection, 0.0)
     return replace(model, order=order, reflection=reflection, coefficients=step_up(reflection))
-
-
-@dataclass(frozen=True)
-class Marks:
-    """Where a value equals an earlier one, counted in batches.
-
-    Attributes:
-        count: comparisons in each batch, shape (S, B).
-        equal: those that are equal, shape (S, B).
-        longest: longest run of equals within the newest batch, shape (S,).
-        starts: chance that an equal follows an unequal in history, shape (S,).
-        goes_on: chance that an equal follows an equal (or three of them, where that is larger), shape (S,).
-    """
-
-    count: Ints
-    equal: Ints
-    longest: Ints
-    starts: Floats
-    goes_on: Floats
-
-
-def equal_before(x: Floats, distance: int, n: int) -> Marks:
-    """Compare every value with the one ``distance`` steps earlier.
-
-    A commonest value of history that lies at the end of its range and makes up more than 5 % (zero at night) is not
-    compared: its repeats tell nothing.
-
-    Args:
-        x: values as delivered, shape (S, B·n + more); the batches are its end.
-        distance: steps back.
-        n: steps in one batch.
-    """
-    x = np.where(x == pinned(x[:, :-n])[:, None], np.nan, x)
-    size = x.shape[1] // n * n
-    now, then = x[:, -size:], np.full((len(x), size), np.nan)
-    if distance < x.shape[1]:
-        shifted = np.full_like(x, np.nan)
-        shifted[:, distance:] = x[:, :-distance]
-        then = shifted[:, -size:]
-    told = ~np.isnan(now) & ~np.isnan(then)
-    equal = told & (now == then)
-    past_told, past_equal = told[:, :-n], equal[:, :-n]
-    after = past_equal[:, :-1]
-    three = after[:, 2:] & after[:, 1:-1] & after[:, :-2]
-
-    def chance(given: Bools, result: Bools) -> Floats:
-        return np.asarray(((given & result).sum(axis=1) + 0.5) / (given.sum(axis=1) + 1.0))
-
-    pairs = past_told[:, 1:]
-    starts = chance(pairs & ~after, past_equal[:, 1:])
-    goes_on = np.maximum(
-        chance(pairs & after, past_equal[:, 1:]),
-        np.where(three.any(axis=1), chance(pairs[:, 2:] & three, past_equal[:, 3:]), 0.0),
-    )
-    count, hits = (batches(part.astype(np.float64), n).sum(axis=-1).astype(np.int64) for part in (told, equal))
-    return Marks(count, hits, longest_run(equal[:, -n:]), starts, goes_on)
-
-
-def longest_run(marks: Bools) -> Ints:
-    """Longest run of true in each row, shape (S,)."""
-    place = np.arange(1, marks.shape[1] + 1)
-    last_gap = np.maximum.accumulate(np.where(marks, 0, place), axis=1)
-    return np.asarray((place - last_gap).max(axis=1, initial=0), dtype=np.int64)
-
-
-def pinned(x: Floats) -> Floats:
-    """The commonest value where it ends the range and makes up more than 5 %, NaN elsewhere; shape (S,)."""
-    count = np.maximum((~np.isnan(x)).sum(axis=1), 1)
-    result = np.full(len(x), np.nan)
-    if not x.shape[1]:
-        return result
-    ordered = np.sort(x, axis=1)
-    place = np.arange(x.shape[1])
-    new = np.ones(ordered.shape, dtype=bool)
-    new[:, 1:] = ordered[:, 1:] != ordered[:, :-1]
-    first = np.maximum.accumulate(np.where(new, place, 0), axis=1)
-    length = np.where(np.isnan(ordered), 0, place - first + 1)
-    at = length.argmax(axis=1)
-    most = length.max(axis=1)
-    value = np.take_along_axis(ordered, at[:, None], axis=1)[:, 0]
-    lowest, highest = ordered[:, 0], np.take_along_axis(ordered, (count - 1)[:, None], axis=1)[:, 0]
-    ends = (value == lowest) | (value == highest)
-    varies = lowest < highest
-    return np.where(ends & varies & (most > 0.05 * count), value, result)
-
-
-def share_tails(marks: Marks) -> Floats:
-    """P(at least k equals in the newest batch) for k = 0 .. n, shape (S, n + 1): as clustered as history is.
-
-    π = (K + ½)/(N + 1) of history; τ = max(1, variance of the batches' counts over the binomial's), 4 with at most 20
-    batches; M = min(N + 1, max(½, (n - τ)/(τ - 1))), N + 1 at τ = 1 (what history's length leaves unknown of π);
-    X ~ BetaBin(n, πM, (1 - π)M).
-    """
-    past_count, past_equal = marks.count[:, :-1], marks.equal[:, :-1]
-    n, total, equal = marks.count[:, -1], past_count.sum(axis=1), past_equal.sum(axis=1)
-    pi = (equal + 0.5) / (total + 1.0)
-    whole = past_count > 0
-    expected = past_count * pi[:, None]
-    excess = np.where(whole, past_equal - expected, 0.0) ** 2
-    binomial = np.where(total > 0, (expected * (1 - pi[:, None])).sum(axis=1), 1.0)
-    tau = np.where(whole.sum(axis=1) > 20, np.maximum(1.0, excess.sum(axis=1) / binomial), 4.0)
-    most = total + 1.0
-    size = np.where(tau > 1, np.maximum(0.5, (n - tau) / np.where(tau > 1, tau - 1, 1.0)), most)
-    size = np.minimum(most, size)
-    return beta_binomial_tails(n, pi * size, (1 - pi) * size)
-
-
-def beta_binomial_tails(n: Ints, a: Floats, b: Floats) -> Floats:
-    """P(X ≥ k) of the beta-binomial laws, k = 0 .. max n; n, a, b of shape (S,): sums of the upper terms."""
-    j = np.arange(int(n.max(initial=0)) + 1)
-    inside = j <= n[:, None]
-    rest = np.where(inside, n[:, None] - j, 0)
-    log_p = (
-        special.gammaln(n[:, None] + 1.0) - special.gammaln(j + 1.0) - special.gammaln(rest + 1.0)
-        + special.betaln(j + a[:, None], rest + b[:, None]) - special.betaln(a, b)[:, None]
-    )  # fmt: skip
-    p = np.where(inside, np.exp(log_p), 0.0)
-    tails: Floats = np.minimum(1.0, np.cumsum(p[:, ::-1], axis=1)[:, ::-1])
-    tails[:, 0] = 1.0
-    return tails
-
-
-def run_tails(marks: Marks, longest: int) -> Floats:
-    """P(a run of at least r equals in the newest batch) = 1 - exp(-n p01 p11^(r-1)), r = 0 .. longest."""
-    r = np.arange(longest + 1)
-    rate = marks.count[:, -1:] * marks.starts[:, None] * marks.goes_on[:, None] ** np.maximum(r - 1, 0)
-    return np.asarray(np.where(r < 1, 1.0, -np.expm1(-rate)))
