@@ -411,7 +411,7 @@ def test_another_version_of_the_same_hours_is_noted(feed):
 
 def test_another_version_is_counted_whole_where_it_is_streamed(feed, tmp_path, monkeypatch):
     """Of a sorted file read block by block every stamp counts, not those of a sample."""
-    monkeypatch.setattr("sercheck.intake.stream.open_feed.__defaults__", (40,))
+    monkeypatch.setattr("sercheck.intake.stream.open_feed.__defaults__", (40, None))
     first = feed.gate(wave("2026-03-01", 2, seed=1))
     frame = wave("2026-03-02", 2, seed=9).sort_values(["key", "t"])
     frame["t"] = pd.to_datetime(frame["t"])
@@ -509,7 +509,7 @@ def test_a_history_file_that_holds_the_batch_teaches_only_what_lies_before_it(tm
     frame["t"] = pd.to_datetime(frame["t"])
     frame.to_parquet(tmp_path / "all.parquet", row_group_size=300)
     if stream:
-        monkeypatch.setattr("sercheck.intake.stream.open_feed.__defaults__", (500,))
+        monkeypatch.setattr("sercheck.intake.stream.open_feed.__defaults__", (500, None))
     feed = Feed(tmp_path, RULES + f"history: [{tmp_path}/all.parquet]\n")
     batch = frame[frame["t"] >= pd.Timestamp("2026-02-10", tz="UTC")][:24]
     verdict = feed.gate(batch)

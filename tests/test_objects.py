@@ -5,6 +5,7 @@ from __future__ import annotations
 import sys
 import threading
 from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 
 import fsspec
@@ -17,7 +18,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 import sercheck
-from sercheck.archived import archived, keep_history
+from sercheck.archived import archived, keep, keep_history
 from sercheck.errors import SercheckError, StoreError
 from sercheck.intake.stream import MemorySource
 from sercheck.rulebook import load_rules
@@ -117,6 +118,36 @@ def test_only_the_days_and_columns_asked_for_are_fetched(archive, monkeypatch):
     source = archived(archive, LAYOUT, FIRST, FIRST + 24 * 9 * HOUR, None, 500)
     assert source is not None
     assert sum(len(block) for block in source.blocks()) == 36_000
+
+
+def test_a_large_object_is_sent_in_parts_and_read_by_ranges(archive, monkeypatch):
+    """What is too large for memory is spooled to a file, sent in blocks and comes back the same."""
+    monkeypatch.setattr("sercheck.store.objects.IN_MEMORY", 1_000)
+    monkeypatch.setattr("sercheck.store.objects.AT_ONCE", 1_000)
+    monkeypatch.setattr("sercheck.store.objects.BLOCK", 10_000)
+    monkeypatch.setattr("sercheck.store.archive.SMALL", 0)
+    values = np.random.default_rng(4).normal(size=12_000)
+    cells = [(f"k{place:05d}", 9, float(value)) for place, value in enumerate(values)]
+    put(archive, "one", cells)
+    assert max(len(MemoryFileSystem.store[name].getvalue()) for name in objects()) > 50_000
+    assert read(archive) == {(key, hour): value for key, hour, value in cells}
+
+
+def test_a_million_rows(archive):
+    """Forty days of a thousand series come back, row for row."""
+    hours = np.arange(40 * 24)
+    rows = rows_of([])
+    keys = np.array([f"k{place:04d}" for place in range(1_050)], dtype=object)
+    codes = np.repeat(np.arange(len(keys), dtype=np.int32), len(hours))
+    stamps = np.tile(FIRST + hours * HOUR, len(keys))
+    values = np.random.default_rng(5).normal(size=len(codes))
+    whole = replace(rows, keys=keys, codes=codes, stamps=stamps, values={"x": values})
+    assert keep(archive, "one", "f", [whole], CADENCE, "released", ALWAYS) == 1_008_000
+    source = archived(archive, LAYOUT, *ALWAYS)
+    assert source is not None
+    found = source.rows()
+    np.testing.assert_array_equal(found.values["x"], values)
+    np.testing.assert_array_equal(found.stamps, stamps)
 
 
 def test_nothing_counts_before_its_entry(archive, monkeypatch):
