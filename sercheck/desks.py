@@ -29,6 +29,7 @@ from sercheck.plain import plain, without_secrets
 from sercheck.store.outbox import LATE, Message, claim, due, mark_sent, mark_undelivered, waiting_desks
 
 if TYPE_CHECKING:
+    from sercheck.rulebook.compiled import Rulebook
     from sercheck.store.ledger import Ledger
 
 SECONDS = 10.0
@@ -51,6 +52,11 @@ Send = Callable[[str, str, str, str, float], str]
 def setting(desk: str) -> str:
     """The environment variable that holds the address of a desk."""
     return "SERCHECK_DESK_" + re.sub(r"[^A-Z0-9]", "_", desk.upper())
+
+
+def desks_of(book: Rulebook) -> dict[str, tuple[str, ...]]:
+    """The desks of each rule; one that only notes tells no desk but such as it names itself, other than the file's."""
+    return {rule.name: () if rule.otherwise == "note" and rule.tell == book.tell else rule.tell for rule in book.rules}
 
 
 def tell(

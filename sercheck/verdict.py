@@ -323,6 +323,7 @@ def _unjudged(book: Rulebook, seen: Sequence[Seen], table: Records) -> list[str]
 
 def _kept(verdict: Verdict, common: Common, book: Rulebook, ledger: Ledger) -> Verdict:
     """Store the judgement; what was stored before stands."""
+    from sercheck.desks import desks_of
     from sercheck.store.rows import BatchRow, Filters, JudgementRow
 
     facts = verdict.facts
@@ -336,9 +337,8 @@ def _kept(verdict: Verdict, common: Common, book: Rulebook, ledger: Ledger) -> V
     )  # fmt: skip
     with ledger:
         known = ledger.find(judgement.batch_id, judgement.rules_fingerprint, judgement.baseline_id)
-        desks = {rule.name: rule.tell for rule in book.rules}
         sketched = to_text(verdict.sketches, verdict.notes)
-        stored = known or ledger.add(batch, judgement, verdict.table, sketched, desks)
+        stored = known or ledger.add(batch, judgement, verdict.table, sketched, desks_of(book))
         table = ledger.records(Filters(judgement_id=stored.judgement_id))
     if known is None and stored.decision == verdict.decision:
         return verdict

@@ -18,7 +18,7 @@ from desk_servers import hook, mail_server, silent_server
 from record_samples import batch, judgement, records
 
 from sercheck import sending
-from sercheck.desks import setting, tell
+from sercheck.desks import desks_of, setting, tell
 from sercheck.rulebook import load_rules
 from sercheck.store.ledger import open_ledger
 from sercheck.store.outbox import LONGEST_PAUSE, claim, due, mark_undelivered, messages_of
@@ -279,7 +279,7 @@ def test_a_rule_that_notes_tells_only_the_desks_it_names_itself(tmp_path):
         gate_runs.RULES.replace("rules:\n", "tell: [heat-desk]\nrules:\n")
         + "  - {name: own, measure: freshness, stays: {below: 3D}, otherwise: note, tell: night}\n"
     )
-    told = {rule.name: rule.tell for rule in load_rules(file).rules}
+    told = desks_of(load_rules(file))
     assert told["fresh"] == ()
     assert told["own"] == ("night",)
     assert told["no gap"] == ("heat-desk",)

@@ -206,7 +206,7 @@ class Compiler:
                 matters=rule.matters,
                 otherwise=rule.otherwise or keys.otherwise,
                 when_undecided=rule.when_undecided or keys.when_undecided,
-                tell=self._desks(keys, rule),
+                tell=keys.tell if rule.tell is None else rule.tell,
                 runbook=rule.runbook,
                 about=rule.about,
                 weight=share.weight,
@@ -215,13 +215,6 @@ class Compiler:
             )
             for (line, rule, _, compiled), share in zip(parsed, shares, strict=True)
         ]
-
-    @staticmethod
-    def _desks(keys: FileKeys, rule: RuleKeys) -> tuple[str, ...]:
-        """The rule's own desks, else the file's; a rule that only notes tells nobody that it does not name itself."""
-        if rule.tell is not None:
-            return rule.tell
-        return keys.tell if (rule.otherwise or keys.otherwise) == "hold" else ()
 
     def _shares(
         self, keys: FileKeys, parsed: list[tuple[int, RuleKeys, type[Measure], dict[str, Any]]]

@@ -92,5 +92,5 @@ class RuleKeys(_Strict):
     across: Across = Field(default=("batch",), description="How the risk is shared among series.")
     otherwise: Otherwise | None = Field(default=None, description="What a failure does; default the file's.")
     when_undecided: WhenUndecided | None = Field(default=None, description="What an undecided outcome does.")
-    tell: Desks | None = Field(default=None, description="Desks told; default the file's, where the rule holds.")
+    tell: Desks | None = Field(default=None, description="Desks told; default the file's, if the rule holds.")
     runbook: Text | None = Field(default=None, description="Where to read what to do: a link or a path.")
