@@ -9,7 +9,8 @@ by itself. ``feeds.yaml`` names, file by file, what differs from the defaults be
       zone: America/New_York         # clock of stamps without an offset, and of the days; default UTC
       clock: America/New_York        # clock of the cycle; default the zone
       people: true                   # made by people: a cycle by day and week, not by day alone; default true
-      broken: {2016-01-23: closed}   # days whose rows are broken: listed, not counted as false holds
+      broken: {2016-01-23: closed}   # days whose rows are broken: listed, not counted as false holds;
+                                     # {COLUMN: {DAY: WHY}} for days of one column
 """
 
 from __future__ import annotations
@@ -37,7 +38,7 @@ class Source:
     zone: str = "UTC"
     clock: str = ""
     people: bool = True
-    broken: dict[str, str] = field(default_factory=dict)
+    broken: dict[str, str | dict[str, str]] = field(default_factory=dict)
 
     @property
     def name(self) -> str:
@@ -71,6 +72,14 @@ class Column:
     step: np.ndarray
     phase: np.ndarray
     per_day: int
+
+    @property
+    def broken(self) -> dict[str, str]:
+        """Days whose rows are broken, and what is the matter with them."""
+        said = self.source.broken
+        everywhere = {day: why for day, why in said.items() if isinstance(why, str)}
+        own = [days for part, days in said.items() if isinstance(days, dict) and self.name.endswith(" " + part)]
+        return everywhere | {str(day): why for days in own for day, why in days.items()}
 
     def axis_values(self) -> np.ndarray:
         """The values on the regular axis, shape (1, steps); NaN where no row is."""

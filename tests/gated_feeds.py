@@ -146,15 +146,15 @@ def rate(count: int, judged: int) -> str:
 
 def healthy_days(gated: Gated, *, dates: bool) -> tuple[int, int]:
     """Print one line for a column (and its held days); days judged and episodes."""
-    source, column = gated.column.source, gated.column
+    column = gated.column
     judged, held = sum(map(gated.has_values, range(HISTORY, len(column.days)))), gated.held_days()
-    count = episodes([day for day, _, _ in held if day not in source.broken])
+    count = episodes([day for day, _, _ in held if day not in column.broken])
     low, high = stats.poisson.interval(0.95, judged / 90)
     mark = "" if low <= count <= high else "  outside"
     print(f"{column.name:32s} {judged:5d} days {count:3d} episodes, {count / judged * 90:.2f} per 90 days; "
           f"budget {judged / 90:.1f} ({low:.0f} to {high:.0f}){mark}", flush=True)  # fmt: skip
     for day, rules, cause in held if dates else ():
-        print(f"    {day} {rules}: {cause} {source.broken.get(day, '')}")
+        print(f"    {day} {rules}: {cause} {column.broken.get(day, '')}")
     return judged, count
 
 

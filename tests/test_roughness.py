@@ -58,8 +58,8 @@ def test_a_stationary_history_keeps_the_risk(kind):
 
 
 def test_smoothing_is_found_and_noise_too():
-    """A day of AR(1) .6 about a cycle is found by its fall where smoothed over three rows, by its rise where shuffled."""
-    x = make("ar.6", [4, 0], 200, 105 * 24) + 5 * np.sin(2 * np.pi * np.arange(105 * 24) / 24)
+    """AR(1) .6 about a daily cycle: a day smoothed over three rows is found by its fall, a shuffled one by its rise."""
+    x = make("ar.6", [4, 0], 200, 105 * 24) + 15 * np.sin(2 * np.pi * np.arange(105 * 24) / 24)
     smooth = x.copy()
     smooth[:, -24:] = sum(x[:, x.shape[1] - 26 + k : x.shape[1] - 2 + k] for k in range(3)) / 3
     mixed = x.copy()
