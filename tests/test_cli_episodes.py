@@ -96,7 +96,7 @@ def test_a_batch_names_its_episodes_and_who_was_told(store):
     """On its page and as plain data."""
     page = ask("show", "heat-03", "--store", store).output
     assert "open: memory, since 2026-01-03, 2 batches" in page
-    assert "heat-desk not told yet (waiting, 0 attempts)" in page
+    assert "heat-desk not told yet (waiting, attempts: 0)" in page
     facts = json.loads(ask("show", "heat-03", "--store", store, "--format", "json").stdout)
     assert facts["episodes"][0]["rule"] == "memory"
     assert facts["messages"][0]["changes"][0]["change"] == "opened"

@@ -115,7 +115,7 @@ def _told(message: Message) -> str:
     if message.state == "sent":
         return f"{message.desk} told at {message.sent_at}"
     trouble = f": {message.trouble}" if message.trouble else ""
-    return f"{message.desk} not told yet ({message.state}, {message.attempts} attempts){trouble}"
+    return f"{message.desk} not told yet ({message.state}, attempts: {message.attempts}){trouble}"
 
 
 def record_page(row: dict[str, Any]) -> str:
