@@ -20,7 +20,7 @@ if TYPE_CHECKING:
 
 WIDTH, HEIGHT = 360, 210
 """Size in points; a telephone shows about as many pixels, so that letters keep their size."""
-LETTERS = 10
+LETTERS = 11
 INKS = {
     "ink": "#010203", "muted": "#010204", "band": "#010205", "batch": "#010206", "fail": "#010207", "rule": "#010208",
 }  # fmt: skip
