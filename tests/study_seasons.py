@@ -1,4 +1,4 @@
-"""How often ``study`` names the right seasons of simulated feeds, none where there is none, and what it says of real ones.
+"""How often ``study`` names the right seasons of simulated feeds, or none rightly, and what it says of real ones.
 
 Run it with ``python -m tests.study_seasons`` (about three minutes; ``--feeds N`` simulated feeds of each kind, 400
 without it). Shares stand with their exact 95 % intervals (Clopper and Pearson 1934). Each feed is looked at twice:

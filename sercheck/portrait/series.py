@@ -8,10 +8,10 @@ import numpy as np
 
 from sercheck.grid import Grid
 from sercheck.portrait.findings import Finding
-from sercheck.portrait.oddities import oddities
+from sercheck.portrait.oddities import breaks, oddities
 from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.autocovariances import autocorrelation
-from sercheck.serial.differencing import OVER, TREND_RISK, differencing, worth
+from sercheck.serial.differencing import OVER, TREND_RISK, Differencing, differencing, worth
 from sercheck.serial.periods import find_seasons
 from sercheck.serial.sampling_error import moving_average_band
 
@@ -102,9 +102,14 @@ def portraits(grid: Grid, column: str, natural: dict[str, int]) -> list[Portrait
     T = x.shape[1]
     seasons = find_seasons(x, tuple(natural.values()))
     advice = differencing(x, seasons.steps, seasons.share)
-    value = worth(x, seasons.steps)
+    broken = breaks(grid, column, x, seasons.steps)
+    if (broken.level >= 0).any():  # a level that jumps once looks as if it wandered; one that wanders seems to jump
+        apart = differencing(broken.without(x), seasons.steps, seasons.share)
+        broken = broken.only((broken.level >= 0) & ~apart.wanders)
+        advice = Differencing(*(np.where(broken.level >= 0, *pair) for pair in zip(apart, advice, strict=True)))
+    value = worth(broken.without(x), seasons.steps)
     lags, r, band = correlogram(x, int(seasons.steps.max(initial=0)))
-    found = oddities(grid, column, x, seasons.steps, advice.wanders, natural)
+    found = oddities(grid, column, x, seasons.steps, broken, natural)
     due = due_from_first(grid)
     missing = (np.isnan(x) & due).sum(axis=1)
     seen = ~np.isnan(x)

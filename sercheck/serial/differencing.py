@@ -180,7 +180,10 @@ def worth(x: object, steps: Ints) -> Worth:
     if rest.shape[1] < 2:
         return Worth(nothing, nothing, n, np.where(n > 0, 0.0, np.nan), nothing)
     slope, p = _slope(rest)
-    return Worth(slope, np.where(n >= FEWEST, p, np.nan), n, np.sqrt(_variance(rest)), effective_size(rest))
+    top = np.max(np.abs(rest), axis=1, where=~np.isnan(rest), initial=0.0)
+    unit = rest / np.where(top > 0, top, 1.0)[:, None]  # squares of the largest doubles overflow
+    deviation = np.where(n > 0, np.sqrt(_variance(unit)) * top, np.nan)
+    return Worth(slope, np.where(n >= FEWEST, p, np.nan), n, deviation, effective_size(rest))
 
 
 def _slope(x: Floats) -> tuple[Floats, Floats]:
