@@ -14,6 +14,7 @@ from sercheck.cli.ledger_episodes import episode_page
 from sercheck.cli.ledger_episodes import write as write_episodes
 from sercheck.cli.ledger_options import BATCHES, FORMAT, STORE, say_more, say_none, so_asked, taking
 from sercheck.cli.ledger_text import TEXT_LIMIT, batch_page, batch_table, record_page, record_table
+from sercheck.cli.ledger_tidy import prune, verify
 
 if TYPE_CHECKING:
     from sercheck.record import Records
@@ -26,6 +27,8 @@ def command() -> None:
 
 
 command.add_command(episodes)
+command.add_command(verify)
+command.add_command(prune)
 
 
 @command.command("batches")
