@@ -12,20 +12,28 @@ if TYPE_CHECKING:
     from sercheck import serial
     from sercheck.errors import BatchHeld, SercheckError
     from sercheck.intake.databases import rows
+    from sercheck.portrait.whole import Study, study
+    from sercheck.rehearsal.run import rehearse
     from sercheck.rulebook import load_rules
     from sercheck.verdict import Verdict, gate
 
-__all__ = ["BatchHeld", "SercheckError", "Verdict", "__version__", "gate", "load_rules", "rows", "serial"]
+__all__ = [
+    "BatchHeld", "SercheckError", "Study", "Verdict", "__version__", "gate", "load_rules", "rehearse", "rows", "serial",
+    "study",
+]  # fmt: skip
 
 __version__ = "0.1.0"
 
 _PLACES = {
     "BatchHeld": "sercheck.errors",
     "SercheckError": "sercheck.errors",
+    "Study": "sercheck.portrait.whole",
     "Verdict": "sercheck.verdict",
     "gate": "sercheck.verdict",
     "load_rules": "sercheck.rulebook",
+    "rehearse": "sercheck.rehearsal.run",
     "rows": "sercheck.intake.databases",
+    "study": "sercheck.portrait.whole",
 }
 
 

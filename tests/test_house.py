@@ -42,6 +42,9 @@ ALLOWED: dict[str, set[str]] = {
     "page": set(),
     "brief": WRITING | {"store", "sketches", "plain", "page", "causes"},
     "store": WRITING | {"store", "episodes"},
+    "guess_clock": {"errors", "serial", "intake"},
+    "guess": {"errors", "serial", "intake", "guess_clock"},
+    "portrait": NUMBERS | {"grid", "intake", "facts", "guess", "guess_clock", "page", "plain"},
 }
 """Rooms and what of ours they may import; a room that is not named here may import anything but ``cli``."""
 
