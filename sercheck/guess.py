@@ -223,6 +223,7 @@ def _keys(columns: dict[str, pa.Array], stamps: Ints, time: str, values: set[str
     if _doubles(stamps, np.zeros(rows, dtype=np.int64)) <= CLEAR:
         return []
     able: list[tuple[float, int, str, Ints]] = []
+    numeric = [name for name, column in columns.items() if name != time and _numbers(column) is not None]
     for place, (name, column) in enumerate(columns.items()):
         if name == time or name in values:
             continue
@@ -230,8 +231,8 @@ def _keys(columns: dict[str, pa.Array], stamps: Ints, time: str, values: set[str
         number = _numbers(column)
         whole = number is None or bool((number[np.isfinite(number)] == np.floor(number[np.isfinite(number)])).all())
         hint = bool(KEY_NAME.search(name))
-        if not whole or count < 2 or count > FEWER * rows or (number is not None and not hint and len(columns) < 4):
-            continue
+        if not whole or count < 2 or count > FEWER * rows or (number is not None and len(numeric) < 2):
+            continue  # a column of numbers is a key only where another is left to hold the values
         able.append((0.0 if number is None else 1.0 if hint else 2.0, place, name, codes))
     able.sort(key=lambda one: one[:2])
     chosen: list[str] = []
@@ -240,7 +241,9 @@ def _keys(columns: dict[str, pa.Array], stamps: Ints, time: str, values: set[str
     complete = [one for one in single if one[0] <= CLEAR]
     if complete:
         return [min(complete, key=lambda one: one[1:3])[3]]
-    for _, _, name, codes in able:
+    for rank, _, name, codes in able:
+        if rank > 1:  # numbers without a telling name count only where they are the whole key
+            continue
         joined = np.unique(together * (codes.max(initial=0) + 1) + codes, return_inverse=True)[1].reshape(-1)
         now = _doubles(stamps, joined)
         if now < left:

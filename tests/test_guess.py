@@ -46,6 +46,15 @@ def test_keys_are_found_where_stamps_repeat(tmp_path):
     assert "x" in found.values
 
 
+def test_numbers_are_a_key_only_where_they_tell_all_series_apart(tmp_path):
+    """A key of numbers without a telling name; no key in two columns whose rows came twice."""
+    frame = pd.DataFrame({"t": np.tile(hours(100), 3), "k": np.repeat([1, 2, 3], 100), "x": np.arange(300.0) % 7})
+    assert guess(written(tmp_path, frame)).layout.series == ("k",)
+    twice = pd.DataFrame({"t": np.repeat(hours(100), 2), "x": np.repeat(np.arange(100) % 7, 2)})
+    found = guess(written(tmp_path, twice)).layout
+    assert (found.series, found.values, found.every) == ((), ("x",), "1h")
+
+
 def test_a_key_is_not_asked_for_where_stamps_do_not_repeat(tmp_path):
     """One series with a text column beside it."""
     x = np.random.default_rng(1).normal(size=200)

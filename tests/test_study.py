@@ -83,7 +83,16 @@ def test_text_goes_to_people_and_fits_a_screen():
     assert "a trend up" in done.stderr
     keys = [f"m{i:02d}" for i in range(30)]
     frame = pd.DataFrame({"t": np.tile(stamps(1440), 30), "k": np.repeat(keys, 1440), "x": daily(series=30).ravel()})
-    for text in (done.stderr, answer(sercheck.study(frame))):
+    x = daily(series=12).reshape(4, 3, 1440)
+    x[0, 0, 100:140] = x[0, 0, 100]
+    x[1, 1, 500:] += np.arange(940) * 0.05
+    x[2, 1] = np.random.default_rng(1).normal(size=1440).cumsum()
+    x[3, 0, 240:264] = x[3, 0, 216:240]
+    mixed = pd.DataFrame({"t": np.tile(stamps(1440), 4), "k": np.repeat(list("abcd"), 1440)})
+    for place, column in enumerate(("kwh", "flow", "degrees")):
+        mixed[column] = x[:, place].ravel()
+    mixed = mixed.drop(index=range(200, 300))
+    for text in (done.stderr, answer(sercheck.study(mixed)), answer(sercheck.study(frame))):
         lines = re.sub(r"\x1b\[[0-9;]*m", "", text).splitlines()
         assert len(lines) <= SCREEN
         assert max(map(len, lines)) <= WIDTH

@@ -27,8 +27,8 @@ def answer(study: Study) -> str:
     lines.append(_folded(f"found: {plain('; '.join(study.told), 300)}", "  ", "    ") if study.told else "")
     together = words.groups(study.portraits)
     many = len(study.portraits)
-    for group in together[:MOST_GROUPS]:
-        lines += _group(study, group, many)
+    for place, group in enumerate(together[:MOST_GROUPS]):
+        lines += _group(study, group, many)[: None if place == 0 else 1]
     if len(together) > MOST_GROUPS:
         rest = sum(len(group.members) for group in together[MOST_GROUPS:])
         lines.append(f"  and {rest} more in {len(together) - MOST_GROUPS} groups (--format json tells all)")
