@@ -2,7 +2,8 @@
 
 import numpy as np
 import pytest
-from processes import agrees, alarms, look, make, p_values, power_at_detectable
+from cells import PROCESSES
+from processes import SEASONAL, agrees, alarms, look, make, p_values, power_at_detectable
 
 from sercheck.measure import Stays
 from sercheck.measures.spread import Spread
@@ -17,13 +18,29 @@ def test_false_alarms_against_history(kind):
         assert naive[0] > 0.05
 
 
+SIGMAS = {"white": 1.0, "ar0.6": 1.25, "ar0.9": 0.19**-0.5, "seasonal_ar": PROCESSES["seasonal AR"].deviation}
+
+
+@pytest.mark.parametrize("kind", SIGMAS)
+@pytest.mark.parametrize("side", ["below", "above"])
+def test_false_alarms_against_a_number_alone(kind, side):
+    """A light-tailed feed's variance scatters by its effective size, too small a one by a careful view of it."""
+    bound = SIGMAS[kind]
+    stays = Stays("below", high=bound) if side == "below" else Stays("above", low=bound)
+    honest, naive = alarms(Spread(), kind, 336, 0, risks=(0.01,), series=3000, stays=stays, tails="light")
+    assert honest[0] <= 0.015 + 3 * np.sqrt(0.015 / 3000)
+    if kind == "ar0.9":
+        assert naive[0] > 0.1
+
+
 @pytest.mark.parametrize("kind", ["white", "ar0.6"])
-def test_false_alarms_against_a_number_alone(kind):
-    """A light-tailed feed's variance scatters by its effective size."""
-    sigma = 1.0 if kind == "white" else 1.25
-    stays = Stays("between", sigma, sigma)
-    honest, _ = alarms(Spread(), kind, 336, 0, risks=(0.01,), series=1500, stays=stays, tails="light")
-    assert honest[0] <= 0.013 + 3 * np.sqrt(0.013 / 1500)
+def test_a_change_is_found_without_history(kind):
+    """A spread a third larger or smaller than allowed is found in two weeks of hours, and never left undecided."""
+    x = make(kind, 7, 500, 336)
+    for stays in (Stays("below", high=x.std() / 1.33), Stays("above", low=x.std() * 1.33)):
+        seen = look(Spread(), x, 0, stays, tails="light")
+        assert (seen.undecided < 0).all()
+        assert (p_values(seen) <= 0.01).mean() > 0.85
 
 
 @pytest.mark.parametrize("past", [0, 3360])
@@ -57,12 +74,15 @@ def test_detectable_is_found():
 
 
 def test_reasons():
-    """Heavy tails, strong memory and missing history are told."""
+    """Heavy tails, missing history and a window's own cycle are told."""
+    x = make("seasonal", 8, 30, 336)
+    narrow = look(Spread(), x, 0, Stays("above", low=1.0), lengths=SEASONAL, tails="light")
+    assert (narrow.undecided >= 0).all()
+    assert "needs history" in narrow.reasons[0]
+    assert (look(Spread(), x, 0, Stays("below", high=1.0), lengths=SEASONAL, tails="light").undecided < 0).all()
     assert "tails: light" in look(Spread(), make("white", 3, 2, 336), 0, Stays("below", high=2.0)).reasons[0]
     heavy = look(Spread(), make("t3", 4, 30, 1056), 960, Stays("below", high=2.0))
     assert (heavy.undecided >= 0).mean() > 0.8
-    strong = look(Spread(), make("ar0.95", 5, 30, 336), 0, Stays("below", high=2.0), tails="light")
-    assert (strong.undecided >= 0).all()
     assert "no history" in look(Spread(), make("white", 6, 2, 96), 0).reasons[0]
 
 

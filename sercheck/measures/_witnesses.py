@@ -108,5 +108,5 @@ def mean_alone(panel: Panel, question: Question) -> Measurement:
         sides(question, against),
         n_eff=cell(n_eff),
         method="mean, two long-run variances (Berk 1974; Lazarus, Lewis, Stock and Watson 2018)",
-        assumes="short memory" + taken_out(taken),
+        assumes="short memory, no long tail on one side" + taken_out(taken),
     )

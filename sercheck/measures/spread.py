@@ -9,7 +9,11 @@ T = (L - mean)/(sd √(1 + 1/m)) on m - 1 degrees of freedom (log variances are 
 A literal bound with history: the log variances of the values themselves, about the bound, with history's scatter.
 A literal bound without history is answered only for a feed declared light-tailed (``tails: light``): the variance has
 χ² scatter on n/(1 + 2 Σ (1 - k/n) ρ_k²) degrees of freedom (Bayley and Hammersley 1946) with the autocorrelations ρ of
-a fitted autoregression, taken to the cube root (Wilson and Hilferty 1931).
+a fitted autoregression (order at most 16, times one echo of a cycle that evolves), taken to the cube root (Wilson and
+Hilferty 1931). A window that varies too little shows too little memory as well: for too small a spread the first
+reflection coefficient is freed of its bias, -(1 + 3k)/n (Shaman and Stine 1988), and taken 1.5 standard errors stronger
+than it looks, and the tail is that of Student's t on half the degrees of freedom (both found by simulation; memory up
+to an autoregression at .95 keeps the risk so).
 
 Fixed cycles (``seasons``) are taken out first.
 
@@ -18,9 +22,10 @@ ratio of the scores' standard deviations, so that one wild value does not make i
 values is told too small.
 Missing values take no part and are never closed up.
 Minimum: 24 rows and 8 stretches of history of the window's length (20 at a risk of .001 or less); a literal bound
-without history 336 rows of a light-tailed feed whose rows do not depend strongly on each other. A literal bound on a
-history with far-out values (excess kurtosis above 4) is undecided unless ``tails: light`` is declared. Undecided when
-one value makes up more than 80 % of the rows (50 % at a risk of .001 or less).
+without history 336 rows of a light-tailed feed, and only ``below`` where ``seasons`` are declared: a window's own cycle
+takes some of the spread with it, one that evolves so much that half the windows would look too narrow. A literal bound
+on a history with far-out values (excess kurtosis above 4) is undecided unless ``tails: light`` is declared. Undecided
+when one value makes up more than 80 % of the rows (50 % at a risk of .001 or less).
 
 Example::
 
@@ -56,17 +61,22 @@ from sercheck.measures._past import (
     window_scores,
     without,
 )
-from sercheck.measures._witnesses import STRONG, own_cycles_out, sides
+from sercheck.measures._witnesses import own_cycles_out, sides
 from sercheck.recent import enough as recent_enough
 from sercheck.recent import recent_measurement, recent_past
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats, Ints
-from sercheck.serial.autoregression import burg, model_autocorrelation
+from sercheck.serial.autoregression import Autoregression, model_autocorrelation
 from sercheck.serial.effective_sizes import effective_size_of
+from sercheck.serial.far_lag import alone
 from sercheck.serial.window_t import fewest_windows, window_t, windows
 
 FEWEST_ALONE = 336
 """Rows that a literal bound without history needs (simulated for light tails)."""
+ERRORS = 1.5
+"""Standard errors by which memory is taken for stronger than it looks where a window varies too little (simulated)."""
+STRONGEST = 0.99
+"""Largest first reflection coefficient that is allowed for (keeps the model stationary)."""
 HEAVY = 4.0
 """Excess kurtosis of history (Laplace's law has 3) above which a literal bound is not answered: on Student's t with 3
 degrees of freedom the false-alarm rate at .001 would be .009 (simulated)."""
@@ -247,32 +257,52 @@ def _alone(panel: Panel, question: Question) -> Measurement:
     )
     ask_rows(reasons, told, FEWEST_ALONE, "a literal spread without history")
     ask_variety(reasons, told, question.risk)
-    values, _ = own_cycles_out(panel)
+    values, taken = own_cycles_out(panel)
+    reasons.add(
+        bool(taken) and question.stays.low is not None,
+        f"the window's own cycle of {', '.join(taken)} takes part of the spread with it, how much depends on how the "
+        "cycle evolves: too small a spread then needs history (below alone can be judged)",
+    )
     rows = np.maximum(told.n, 2)
-    model = burg(values)
-    rho = model_autocorrelation(model, min(200, max(told.steps - 1, 0)))
+    model, lags = alone(values, 1).model, min(200, max(told.steps - 1, 0))
+    rho = model_autocorrelation(model, lags)
     about_mean = effective_size_of(rows, rho)
     size = effective_size_of(rows, rho**2)
+    careful = np.maximum(effective_size_of(rows, model_autocorrelation(_stronger(model), lags) ** 2) - 1, 1)
     with np.errstate(divide="ignore", invalid="ignore"):
         corrected = variance(values) * (1 - 1 / rows) / (1 - 1 / np.maximum(about_mean, 1.5))
-        df = np.maximum(size - 1, 1)
-    strong = cell(1 - np.prod(1 - model.reflection, axis=1)) > STRONG
-    reasons.add(strong, "rows depend strongly on each other: a spread then needs history")
+    wide = np.maximum(size - 1, 1), np.full(len(rows), np.inf)
+    narrow = careful, np.maximum(careful / 2, 2)
     reasons.add(~(cell(corrected) > 0), "the window does not vary: there is no sampling error to allow for")
     at, unit = np.cbrt(corrected), _CubeRoot(told.scale)
 
-    def against(bound: float) -> Pivot:
+    def against(bound: float | None, law: tuple[Floats, Floats]) -> Pivot | None:
+        if bound is None:
+            return None
+        df, tail = law
         root = np.cbrt(bound / told.scale) ** 2
         centre, scale = root * (1 - 2 / (9 * df)), root * np.sqrt(2 / (9 * df))
         naive, number = root * np.sqrt(2 / (9.0 * (rows - 1))), np.full((len(at), 1), bound)
-        return pivot_through(unit, at, centre, scale, np.full(len(at), np.inf), bound=number, naive=naive)
+        return pivot_through(unit, at, centre, scale, tail, bound=number, naive=naive)
 
     return measured(
         panel,
         reasons,
         unit(cell(at)),
-        sides(question, against),
+        (against(question.stays.high, wide), against(question.stays.low, narrow)),
         n_eff=cell(size),
         method="variance on its effective size (Bayley and Hammersley 1946; Wilson and Hilferty 1931)",
-        assumes="short memory, light tails" + without(told),
+        assumes="short memory, light tails, no cycle longer than a third of the window" + without(told),
     )
+
+
+def _stronger(model: Autoregression) -> Autoregression:
+    """The models with a first reflection coefficient free of its bias and ``ERRORS`` standard errors farther from 0."""
+    if not model.reflection.shape[1]:
+        return model
+    reflection = model.reflection.copy()
+    first, n = np.minimum(np.abs(reflection[:, 0]), STRONGEST), np.maximum(model.n, 1)
+    g = 1 - first**2
+    moved = np.tanh(np.arctanh(first) + ((1 + 3 * first) / n + ERRORS * np.sqrt(g / n)) / g)
+    reflection[:, 0] = np.where(model.order > 0, np.sign(reflection[:, 0]) * np.minimum(moved, STRONGEST), 0.0)
+    return replace(model, reflection=reflection)

@@ -32,6 +32,10 @@ LONG_HISTORY = 8
 EVEN = 0.25
 """Share, or 1 less it, from which either kind of rows may be the rarer one (simulated: a share of a half)."""
 
+RUNS = 0.75
+"""Degrees of freedom for each run of the rarer kind (simulated: with 1 a share of .3 of a hidden autoregression at .9
+fails 3 times too often at a risk of .001)."""
+
 FEWEST_RUNS = 10
 """Runs of the rarer kind that begin to tell how it clusters (simulated: fewer give up to 300 times the risk)."""
 
@@ -249,8 +253,8 @@ def against_share(marks: Floats, start: int, share: float, power: float, *, seas
     its bias is given back, a model of the marks is a second witness of it (``modelled_clusters``) of which the larger
     counts, and its degrees of freedom, observed/τ − 1, are used. On the side where the rarer kind of
     row would be too rare ('lower' for a share up to ½, else 'upper') few of them are left to tell how they cluster:
-    there half of their runs, less 1, are the degrees of freedom when fewer (on both sides for a share near ½, where
-    either kind is the rarer one), and below ``FEWEST_RUNS`` it is blind.
+    there three quarters of their runs, less 1, are the degrees of freedom when fewer (on both sides for a share near ½,
+    where either kind is the rarer one), and below ``FEWEST_RUNS`` it is blind.
 
     Args:
         marks: history and batch, shape (S, T), NaN takes no part.
@@ -274,7 +278,7 @@ def against_share(marks: Floats, start: int, share: float, power: float, *, seas
     thin: Side = "lower" if share <= 0.5 else "upper"
     full: Side = "upper" if share <= 0.5 else "lower"
     runs = marked if share <= 0.5 else unmarked
-    thinned = np.minimum(df, np.maximum(runs / 2.0 - 1.0, 1.0))
+    thinned = np.minimum(df, np.maximum(RUNS * runs - 1.0, 1.0))
     few = {thin: thinned, full: thinned if min(share, 1 - share) >= EVEN else df}
     return AgainstShare(hits, rows, tau, power, np.asarray(share), few, {thin: runs < FEWEST_RUNS})
 
