@@ -29,6 +29,7 @@ from sercheck.plain import plain, without_secrets
 from sercheck.store.outbox import LATE, Message, claim, due, mark_sent, mark_undelivered, waiting_desks
 
 if TYPE_CHECKING:
+    from sercheck.episodes import Changed
     from sercheck.rulebook.compiled import Rulebook
     from sercheck.store.ledger import Ledger
 
@@ -43,6 +44,7 @@ CHANGES = {
     "worse": "is clearly worse than when it was told",
     "spread": "fails in many more series than when it was told",
     "closed": "passes again",
+    "gone": "is no longer asked",
 }
 
 Send = Callable[[str, str, str, str, float], str]
@@ -187,11 +189,22 @@ class _Texts:
         if message.batch_id not in self._known:
             self._known[message.batch_id] = self._of_batch(message.batch_id)
         decision, cause, brief = self._known[message.batch_id]
-        lines = [f"{CHANGES[each.change]}: {plain(each.rule)}" for each in message.changes]
+        lines = [f"{CHANGES[each.change]}: {plain(each.rule)}{self._episode(each)}" for each in message.changes]
         if message.uncertain:
             lines.append("An earlier attempt ended without an answer: you may have this message already.")
         body = "\n".join([*lines, "", brief, "", f"message {message.message_id}"])
         return _subject(message, decision, cause), without_secrets(body)
+
+    def _episode(self, change: Changed) -> str:
+        """Since when, on how many batches and series; nothing of an episode that another has taken in meanwhile."""
+        from sercheck.store.episodes import episode
+        from sercheck.store.ids import UnknownIdError
+
+        try:
+            found = episode(self._ledger, change.episode_id)
+        except UnknownIdError:
+            return ""
+        return f" (since {found.started}, batches: {found.batches}, series: {found.series})"
 
     def _of_batch(self, batch_id: str) -> tuple[str, str, str]:
         """Decision, likely cause and brief of a batch."""
@@ -211,7 +224,8 @@ def _subject(message: Message, decision: str, cause: str) -> str:
     bad = [name for name in ("opened", "spread", "worse") if name in changes]
     if not bad:
         more = len(message.changes) - 1
-        said = f"closed: {changes['closed']} passes again" + (f" and {more} more" if more else "")
+        word, rule = next((word, rule) for word, rule in changes.items() if word in ("closed", "gone"))
+        said = f"closed: {rule} {CHANGES[word]}" + (f" and {more} more" if more else "")
     else:
         said = cause or changes[bad[0]]
         said = said if bad[0] == "opened" else f"{'spreads' if bad[0] == 'spread' else 'worse'}: {said}"

@@ -17,7 +17,8 @@ import numpy as np
 from sercheck.record import Records
 
 State = Literal["fail", "pass", "undecided", "gone"]
-Change = Literal["opened", "worse", "spread", "closed"]
+Change = Literal["opened", "worse", "spread", "closed", "gone"]
+"""What is told of an episode; it is gone when it closes because its rule is no longer asked."""
 
 CLEARLY = 2.0
 """An episode is worse when the observation lies this many times as far from the bound as when it was told last, and
@@ -153,7 +154,9 @@ def change_by(steps: Sequence[Step], runs: Sequence[Run], own: Step) -> tuple[Ch
     closed_before = any(step.state in CLOSING and step.key > own.key for step in steps)
     for run in runs:
         if run.closed_by is own:
-            return None if closed_before or run is not runs[-1] else ("closed", run)
+            if closed_before or run is not runs[-1]:
+                return None
+            return "gone" if own.state == "gone" else "closed", run
         if own in run.steps:
             told = _grown([step for step in run.steps if step is not own], own)
             return None if told is None else (told, run)

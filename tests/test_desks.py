@@ -100,6 +100,8 @@ def test_the_end_of_an_episode_is_told_too(ledger, monkeypatch):
         monkeypatch.setenv("SERCHECK_DESK_HEAT_DESK", desk.address)
         assert tell(ledger, "heat-02") == ()
         titles = [told["title"] for told in desk.received]
+        told = f"passes again: {RULE} (since 2026-01-12T00:00:00Z, batches: 1, series: 2)"
+        assert told in desk.received[1]["message"]
     assert titles == ["HELD heat: clock shifted", f"RELEASED heat: closed: {RULE} passes again"]
 
 
@@ -162,8 +164,8 @@ def test_a_server_that_hangs_costs_a_bounded_time(ledger, monkeypatch, how):
         monkeypatch.setenv("SERCHECK_DESK_HEAT_DESK", mail if how == "mail" else desk.address)
         began = time.monotonic()
         (sentence,) = tell(ledger, "heat-01", seconds=1.5)
-        assert time.monotonic() - began < 4
-        assert "gave no answer within 1." in sentence
+        assert time.monotonic() - began < 8  # the time that was given, and a busy machine's start and end
+        assert "gave no answer within" in sentence
         (message,) = messages_of(ledger)
         assert (message.state, message.uncertain) == ("undelivered", True)
 
