@@ -197,7 +197,7 @@ def gate(
         as_of: the clock to judge by, RFC 3339 or ISO 8601 (UTC when it has no offset); default now.
         store: folder of ledger and archive, which the judgement and the rows are kept in; default none are kept.
         ledger: SQLAlchemy URL of the ledger, where it is not in the store.
-        keep: write to ledger and archive; without it they are only read.
+        keep: write to ledger and archive, and tell the desks that the rules name; without it they are only read.
 
     The same batch judged again by the same rules against the same history changes nothing: what the ledger has stands
     and is returned.

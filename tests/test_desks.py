@@ -19,6 +19,7 @@ from record_samples import batch, judgement, records
 
 from sercheck import sending
 from sercheck.desks import desks_of, setting, tell
+from sercheck.errors import StoreError
 from sercheck.rulebook import load_rules
 from sercheck.store.ledger import open_ledger
 from sercheck.store.outbox import LONGEST_PAUSE, claim, due, mark_undelivered, messages_of
@@ -188,6 +189,31 @@ def test_without_the_library_it_is_said_how_to_get_it(ledger, monkeypatch):
     monkeypatch.setattr(sending, "installed", lambda: False)
     assert "pip install 'sercheck[notify]'" in tell(ledger, "heat-01")[0]
     assert states(ledger) == ["undelivered"]
+
+
+def test_a_sender_that_breaks_is_a_sentence(ledger, monkeypatch):
+    """Whatever happens to the process that sends, the message stays and the decision stands."""
+    monkeypatch.setenv("SERCHECK_DESK_HEAT_DESK", NOTHING)
+    monkeypatch.setattr("sys.executable", "/bin/false")
+    assert "ended without an answer" in tell(ledger, "heat-01")[0]
+    monkeypatch.setattr("sys.executable", "/no/such/program")
+    held(ledger, 1, feed="b")
+    assert "ended without an answer" in tell(ledger, "b-01")[0]
+    assert states(ledger) == ["undelivered", "undelivered"]
+
+
+def test_a_ledger_that_fails_while_telling_is_a_sentence(ledger, monkeypatch):
+    """The disk is full after the decision: that is said, and no error ends the run."""
+    def full(*_):
+        raise StoreError("ledger", "the disk is full; nothing was stored")
+
+    monkeypatch.setenv("SERCHECK_DESK_HEAT_DESK", NOTHING)
+    monkeypatch.setattr("sercheck.desks.mark_sent", full)
+    (sentence,) = tell(ledger, "heat-01", send=lambda *_: "sent")
+    assert sentence == "desk heat-desk may not have been told: ledger: the disk is full; nothing was stored"
+    assert states(ledger) == ["sending"]
+    monkeypatch.setattr("sercheck.desks.waiting_desks", full)
+    assert tell(ledger, "heat-01") == ("desks were not told: ledger: the disk is full; nothing was stored",)
 
 
 def test_many_at_once_tell_once(ledger_store, monkeypatch):
