@@ -25,7 +25,7 @@ FEW = 3
 WOULD = {
     causes.WRONG_ORDER: ("autocorrelation", "measure: autocorrelation, lag: 1, after: difference"),
     causes.NOISE: ("autocorrelation", "measure: autocorrelation, lag: 1, after: difference"),
-    causes.SMOOTHED: ("autocorrelation", "measure: autocorrelation, lag: 1, after: difference"),
+    causes.SMOOTHED: ("roughness", "measure: roughness"),
     causes.INTERPOLATED: ("innovations", "measure: innovations, look: variance"),
     causes.DIFFERENCED: ("innovations", "measure: innovations, look: variance"),
     causes.TWICE: ("innovations", "measure: innovations, look: variance"),
