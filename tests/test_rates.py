@@ -223,9 +223,9 @@ def test_independent_rows_would_fail_far_too_often():
     assert honest.max() <= 1.6
 
 
-@pytest.mark.parametrize("name", [name for name in CLUSTERS if "latent .3" not in name])
+@pytest.mark.parametrize("name", CLUSTERS)
 def test_without_history_the_law_is_widened(name):
-    """The window alone keeps the risk within 1.6 where marks are rare or remember little."""
+    """The window alone keeps the risk within 1.6 too."""
     honest, _ = sizes(name, 0, 336, 4000, 9, (0.05, 0.01))
     assert honest.max() <= 1.6
 
@@ -252,8 +252,7 @@ def test_sizes_at_small_risks(name, past, n):
 @pytest.mark.parametrize("name", CLUSTERS)
 @pytest.mark.parametrize("n", [96, 168, 336, 1000])
 def test_sizes_without_history(name, n):
-    """Without history the sizes are told; the common mark with a long memory is the known weak cell."""
+    """Without history no cell exceeds 1.6 times the risk down to .001 either, on 20,000 healthy batches."""
     honest, naive = sizes(name, 0, n, 20_000, 12, (0.05, 0.01, 0.001))
     print(name, n, "honest", honest.round(2), "naive", naive.round(1))
-    weak = name == "latent .3 at .9"
-    assert honest.max() <= (8 if weak else 1.6)
+    assert honest.max() <= 1.6
