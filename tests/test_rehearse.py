@@ -13,7 +13,7 @@ import pytest
 from scipy import stats
 
 import sercheck
-from sercheck.errors import OutputError, UsageError
+from sercheck.errors import BatchError, OutputError, UsageError
 from sercheck.rehearsal.advice import advice
 from sercheck.rehearsal.bench import Bench, Judgement, Marks
 from sercheck.rehearsal.damage import Case
@@ -264,6 +264,17 @@ def test_batches_judged_ahead_are_judged_anew_when_one_before_is_held(feed):
     last = dict(pool.asked)
     assert last[59] == (58,)
     assert last[70] == (58, 62)
+
+
+def test_a_history_without_numbers_is_refused(book, rows):
+    """Nothing could be judged; a fault that changes nothing is not tried, and rows without a stamp are counted."""
+    with pytest.raises(BatchError, match="not one of its 3,454 rows holds a number in cm"):
+        rehearse(book, rows.assign(cm="?"))
+    odd = rows.assign(cm=5.0)
+    odd.loc[[7, 9], "read_at"] = ["never", "2299-01-01T00:00:00Z"]
+    told = rehearse(book, odd, begins=LATE, faults=["sorted", "unit changed"], tries=1, batches=1)
+    assert {line.fault for line in told.faults} == {"unit changed"}
+    assert told.feed.unplaced == 2
 
 
 def test_the_same_seed_gives_the_same_rehearsal(book, rows):

@@ -55,7 +55,8 @@ def test_twelve_weeks_of_fifty_series_and_twenty_faults(tmp_path):
     begun, used = time.perf_counter(), resource.getrusage(resource.RUSAGE_CHILDREN)
     files = (str(tmp_path / "rules.yaml"), str(tmp_path / "history.parquet"))
     asked = ("--faults", ",".join(FAULTS), "--workers", "2", "--format", "json")
-    ended = subprocess.run(command("rehearse", *files, *asked), capture_output=True, text=True, check=False, timeout=1800)
+    call = command("rehearse", *files, *asked)
+    ended = subprocess.run(call, capture_output=True, text=True, check=False, timeout=1800)
     wall, now = time.perf_counter() - begun, resource.getrusage(resource.RUSAGE_CHILDREN)
     assert ended.returncode == 0, ended.stderr
     told = json.loads(ended.stdout)

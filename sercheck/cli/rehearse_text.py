@@ -13,6 +13,9 @@ if TYPE_CHECKING:
 MOST_RULES, MOST_FAULTS, MOST_ADVICE, MOST_DATES = 10, 10, 4, 3
 """Lines told of each; more are counted, so that the answer stays on a screen of 40 lines."""
 
+FAR = 10
+"""Budgets in the interval from which it says next to nothing (ours)."""
+
 
 def answer(told: Rehearsal, missed: list[str]) -> str:
     """The whole answer as text."""
@@ -54,7 +57,8 @@ def false_holds(told: Rehearsal) -> str:
     if budget:
         verdict = (
             ", more than that" if low / told.periods > budget.count
-            else ", less than that" if high / told.periods < budget.count else ", which fits"
+            else ", less than that" if high / told.periods < budget.count
+            else ", which so few batches cannot tell" if high / told.periods > FAR * budget.count else ", which fits"
         )  # fmt: skip
     return f"{count}: {rate} ({between}){allowed}{verdict}."
 
@@ -81,6 +85,8 @@ def _held(told: Rehearsal) -> list[str]:
             shown = [f"{told.feed.began(one.batch)[:10]} ({', '.join(one.held_by)})" for one in held[:MOST_DATES]]
             more = f" and {len(held) - MOST_DATES} more" if len(held) > MOST_DATES else ""
             lines.append(f"{what}: {plain('; '.join(shown), 400)}{more}")
+    if told.feed.unplaced:
+        lines.append(f"{told.feed.unplaced} rows could not be placed in time and belong to no batch")
     return lines
 
 
@@ -112,9 +118,9 @@ def _interest(line: RuleLine) -> tuple[bool, bool, int, float]:
 def _caught(told: Rehearsal) -> str:
     tried = sum(line.tried for line in told.faults)
     first, caught = (sum(getattr(line, name) for line in told.faults) for name in ("first", "caught"))
-    return (
+    return folded(
         f"{caught / tried:.0%} of {tried} faults caught within {told.looked} batches, {first / tried:.0%} in the first."
-        " The worst caught (first batch / in all):"
+        " Worst caught (first / all batches):"
     )
 
 

@@ -21,7 +21,7 @@ from sercheck.grid import Grid, Tally
 from sercheck.judge import Seen
 from sercheck.measures import get
 from sercheck.record import Records, utc_text
-from sercheck.rehearsal.damage import Broken, Case, broken, hit
+from sercheck.rehearsal.damage import Broken, Case, broken, hit, nothing_changed
 from sercheck.rehearsal.feed import Feed
 from sercheck.rehearsal.mixed import Source, known, mixed, unsaid
 from sercheck.rulebook.compiled import Rulebook
@@ -126,6 +126,7 @@ class _Trial:
     series: Ints
     days: dict[int, Broken]
     judged: Judgement | None = None
+    idle: bool = False
 
 
 class Bench:
@@ -187,23 +188,27 @@ class Bench:
     def play(self, cases: Sequence[Case], start: int, marks: Marks, batches: int, seed: int) -> list[Outcome]:
         """Let faults begin in a batch and go on until it is held, for so many batches at most.
 
-        Every batch before was let in, the broken ones too: that is what happens where nothing is held.
+        Every batch before was let in, the broken ones too: that is what happens where nothing is held. A fault that
+        leaves its first batch as it was (equal values in another order) is not tried.
         """
         first = self._grid(start, marks)
         places = np.flatnonzero(self.feed.series(start))
         trials = [_Trial(case, places[rows], {}) for case in cases if len(rows := hit(case, first, seed))]
         last = min(start + batches, len(self.feed.edges))
         for batch in range(start, last):
+            trials = [trial for trial in trials if not trial.idle]
             going = [trial for trial in trials if trial.judged is None or not trial.judged.held_by]
             if going:
                 self._play_batch(going, start, batch, marks, seed)
-        return [self._outcome(trial, start, last - start) for trial in trials]
+        return [self._outcome(trial, start, last - start) for trial in trials if not trial.idle]
 
     def _play_batch(self, trials: Sequence[_Trial], start: int, batch: int, marks: Marks, seed: int) -> None:
         grid = self._grid(batch, marks)
         at = np.cumsum(self.feed.series(batch)) - 1
         for trial in trials:
             trial.days[batch] = broken(trial.case, grid, at[trial.series], batch - start, seed, self.feed.cadence)
+            trial.idle = batch == start and nothing_changed(trial.days[batch], grid, at[trial.series])
+        trials = [trial for trial in trials if not trial.idle]
         for group in _groups(trials):
             stacked = self._stacked(group, grid, at, batch)
             seen = [known(one) for one in look_at_block(stacked, self._run(batch, marks, self._alone))[0]]

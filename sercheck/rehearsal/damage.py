@@ -131,6 +131,18 @@ def broken(case: Case, grid: Grid, rows: Ints, day: int, seed: int, cadence: Cad
     return _damaged(fault, case, grid, rows, whole, day, seed)
 
 
+def nothing_changed(sent: Broken, grid: Grid, rows: Ints) -> bool:
+    """The fault left the batch as it was: there is nothing to catch."""
+    was, now = part(grid.tally, rows), sent.tally
+    counts = ("rows", "doubles", "differing", "disorder", "off_grid")
+    return (
+        all(np.array_equal(sent.values[name], column[rows, grid.start :], equal_nan=True)
+            for name, column in grid.values.items())
+        and np.array_equal(sent.delivered, grid.delivered[rows, grid.start :])
+        and all(np.array_equal(getattr(was, name), getattr(now, name)) for name in counts)
+    )  # fmt: skip
+
+
 def part(tally: Tally, rows: Ints) -> Tally:
     """The tally of some series."""
     return Tally(

@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from sercheck.errors import UsageError
+from sercheck.errors import BatchError, UsageError
 from sercheck.grid import Axis, Grid, Tally
 from sercheck.history import local_midnight, teaches_from
 from sercheck.intake.assemble import planned_grids
@@ -76,7 +76,7 @@ class Feed:
         edges: first step and last step (exclusive) of every batch, shape (B, 2).
         counts: what was counted about the rows of every batch.
         first: the first batch that is judged; those before only teach.
-        unplaced: rows without a readable stamp, which belong to no batch.
+        unplaced: rows whose stamp cannot be read or lies far from all others, which belong to no batch.
     """
 
     book: Rulebook
@@ -182,6 +182,7 @@ def read_feed(book: Rulebook, history: GivenRows, begins: str | None = None) -> 
     laid = plan(whole, None, cadence, replace(layout, batch_every=None), None)
     rows = source.rows().by_series()
     (grid,) = planned_grids(rows, None, laid, EVERYTHING)
+    _must_have_numbers(rows, grid)
     edges, last = _cut(whole, cadence, layout)
     first = int(laid.axis.index[0])
     if last > first + len(laid.axis):  # the last batch ends after its last row
@@ -196,9 +197,20 @@ def read_feed(book: Rulebook, history: GivenRows, begins: str | None = None) -> 
     edges, counts = edges[some], _of_batches(tallies, some)
     feed = Feed(
         book, layout, cadence, grid.keys, grid.axis, grid.values, grid.delivered, edges, counts, 0,
-        int(np.count_nonzero(rows.stamps == NOT_A_STAMP)),
+        len(rows) - int(counts.plain["rows"].sum()),
     )  # fmt: skip
     return replace(feed, first=_first(feed, begins))
+
+
+def _must_have_numbers(rows: Rows, grid: Grid) -> None:
+    if any(np.isfinite(column).any() for column in grid.values.values()):
+        return
+    garbled = any(int(counts.sum()) for counts in grid.tally.unreadable.values())
+    raise BatchError(
+        "the history", f"not one of its {len(rows):,} rows holds a number in {', '.join(grid.values)}",
+        "a point as the decimal mark, no mark of thousands, no units" if garbled else "at least one value",
+        "" if garbled else "Is it the right column?",
+    )  # fmt: skip
 
 
 def _batch_length(book: Rulebook) -> str | int:
@@ -283,7 +295,7 @@ def _first(feed: Feed, begins: str | None) -> int:
     if begin >= len(stamps):
         raise UsageError(
             "rehearse", f"the history holds {len(stamps)} batches, of which the first {least} only teach",
-            f"{least + LEAST_LEFT} or more", "Give a longer history, or --from DATE to judge with less.",
+            f"more than {least}", "Give a longer history, or --from DATE to judge with less.",
         )  # fmt: skip
     return begin
 
