@@ -83,8 +83,7 @@ def settle(
             wish = Settlement(row.batch_id, row.feed, release_as, by, because, now)
             notes = _release(kept_in, batch, archive, wish, said)
         if moment is not None:
-            said.append(Settlement(row.batch_id, row.feed, "relearn", by, because, now, moment))
-            kept_in.settle(said[-1])
+            said.append(kept_in.settle(Settlement(row.batch_id, row.feed, "relearn", by, because, now, moment)))
     return Settled(row.batch_id, row.feed, tuple(said), notes)
 
 
@@ -102,8 +101,7 @@ def _release(
         if before is not None and again and (known is None or known.what == STATES["released"]):
             raise UsageError(place, f"it is settled already: {before.sentence()}", wanted)
     if not again:
-        ledger.settle(wish)
-        said.append(wish)
+        said.append(ledger.settle(wish))
     if known is None:
         return ("the archive has no rows of this batch: judge it again with `sercheck gate` to keep them",)
     standing = ledger.batch(wish.batch_id).settled or wish  # somebody else may have said something meanwhile

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 from sercheck.errors import StoreError
 from sercheck.record import Records, storable
 from sercheck.store.queries import COUNT_OF
-from sercheck.store.rows import BatchRow, Judgement, JudgementRow
+from sercheck.store.rows import BatchRow, Judgement, JudgementRow, later_than
 from sercheck.store.tables import BATCH_COLUMNS, RECORD_COLUMNS, tables
 
 if TYPE_CHECKING:
@@ -43,11 +43,13 @@ def put_batch(connection: Connection, batch: BatchRow, place: str) -> None:
 
 def put_judgement(connection: Connection, judgement: JudgementRow, records: Records) -> Judgement:
     """A judgement, with the counts of its records and the time it is stored."""
-    from sqlalchemy import insert
+    from sqlalchemy import func, insert, select
 
     given = {each.name: getattr(judgement, each.name) for each in fields(JudgementRow)}
     given["rules"] = storable(judgement.rules)
-    now = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%S.%fZ")
+    kept = tables().judgements
+    before = connection.execute(select(func.max(kept.c.stored_at)).where(kept.c.batch_id == judgement.batch_id))
+    now = later_than(before.scalar(), datetime.now(UTC))
     stored = Judgement(**given, stored_at=now, counts=records.counts())
     counted = {COUNT_OF[outcome]: number for outcome, number in stored.counts.items()}
     values = {"judgement_id": judgement.judgement_id, **given, "stored_at": now, **counted}

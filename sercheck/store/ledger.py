@@ -208,11 +208,11 @@ class Ledger:
             columns = [tables().records.c[name] for name in COLUMNS]
             return _gathered(connection.execute(select(*columns).where(columns[0] == whole)))
 
-    def settle(self, settlement: Settlement) -> None:
-        """Add what a person said about a batch; nothing is changed or erased by it."""
+    def settle(self, settlement: Settlement) -> Settlement:
+        """Add what a person said about a batch, and give it as stored; nothing is changed or erased by it."""
         self.prepare()
         with self._database.writing() as connection:
-            put_settlement(connection, settlement)
+            return put_settlement(connection, settlement)
 
     def relearn_from(self, feed: str) -> str | None:
         """The moment (UTC, RFC 3339) before which history no longer teaches this feed, or None."""

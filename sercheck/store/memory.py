@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import fields
+from dataclasses import fields, replace
+from datetime import datetime
 from typing import TYPE_CHECKING, Any
 
 from sercheck.record import storable
-from sercheck.store.rows import BaselineRow, Settlement
+from sercheck.store.rows import BaselineRow, Settlement, later_than
 from sercheck.store.tables import BASELINE_COLUMNS, SETTLEMENT_COLUMNS, tables
 
 if TYPE_CHECKING:
@@ -57,16 +58,24 @@ def facts_of(connection: Connection, baseline_id: str) -> bytes | None:
     return None if found is None else bytes(found)
 
 
-def put_settlement(connection: Connection, row: Settlement) -> None:
-    """Add a settlement; the same one (all of it, the second included) is there once."""
-    from sqlalchemy import insert, select
+def put_settlement(connection: Connection, row: Settlement) -> Settlement:
+    """Add a settlement and give it as stored; the same one (all of it, the second included) is there once.
+
+    Where the feed has one of a later time, because a clock was set back, it gets the moment after that.
+    """
+    from sqlalchemy import func, insert, select
 
     settlements = tables().settlements
     known = select(settlements.c.settlement_id).where(settlements.c.settlement_id == row.settlement_id)
     if connection.execute(known).first() is None:
+        newest = select(func.max(settlements.c.settled_at)).where(settlements.c.feed == storable(row.feed))
+        before = connection.execute(newest).scalar()
+        if before is not None and before >= row.settled_at:
+            row = replace(row, settled_at=later_than(before, datetime.fromisoformat(row.settled_at)))
         values = {name: getattr(row, name) for name in SETTLEMENT_COLUMNS}
         texts = {name: storable(values[name]) for name in ("feed", "settled_by", "because")}
         connection.execute(insert(settlements).values({**values, **texts}))
+    return row
 
 
 def settlements_of(connection: Connection, batch_ids: list[str]) -> dict[str, tuple[Settlement, ...]]:

@@ -8,6 +8,7 @@ from __future__ import annotations
 import json
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from datetime import datetime, timedelta
 from hashlib import blake2b
 
 
@@ -177,6 +178,13 @@ class Filters:
     batch_id: str | None = None
     judgement_id: str | None = None
     limit: int | None = None
+
+
+def later_than(before: str | None, now: datetime) -> str:
+    """Now as text, or just after ``before`` where a clock was set back: what is stored last is also the latest."""
+    if before is not None:
+        now = max(now, datetime.fromisoformat(before) + timedelta(microseconds=1))
+    return now.strftime("%Y-%m-%dT%H:%M:%S.%fZ")
 
 
 def judgement_id(batch_id: str, rules_fingerprint: str, baseline_id: str | None) -> str:
