@@ -14,6 +14,8 @@ from sercheck.portrait.findings import Finding
 from sercheck.portrait.series import Portrait, Season
 from sercheck.portrait.whole import Study
 
+FEWEST = 20
+"""Values from which differencing and the worth of the mean are spoken of (as where both are measured)."""
 LONG_DAYS = 3
 """Days from which a season's length is told in days."""
 
@@ -101,7 +103,7 @@ def length_text(steps: int, every: str) -> str:
 
 def differencing_text(one: Portrait) -> str:
     """Which differences are advised, and what one more would show."""
-    if one.r1 is None:
+    if one.r1 is None or one.n < FEWEST:
         return ""
     more = f"{one.r1_more:.2f}" if one.r1_more is not None else "unknown"
     mark = " (near -.5, which differencing makes of noise: one too many)" if one.over else ""
@@ -115,7 +117,7 @@ def differencing_text(one: Portrait) -> str:
 
 def mean_text(one: Portrait) -> str:
     """What the mean is worth, and what that does to a naive standard error."""
-    if one.n_eff_mean is None or one.deviation is None or not one.n or one.error_ratio is None:
+    if one.n_eff_mean is None or one.deviation is None or one.n < FEWEST or one.error_ratio is None:
         return ""
     naive = one.deviation / np.sqrt(one.n)
     seasons = ", seasons taken out," if one.seasons else ""
