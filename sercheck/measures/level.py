@@ -15,6 +15,7 @@ long-run variance (Burg 1975; Berk 1974; degrees of freedom after Satterthwaite 
 .41 n^(2/3) cosine powers (Lazarus, Lewis, Stock and Watson 2018). Short memory and values without a long tail on one
 side are then taken for granted: of 336 rows of the exponential of an autoregression .10/.035/.009 fail for too low a
 mean at a risk of .05/.01/.001 (with history, or after a logarithm, they do not).
+So it is that no cycle evolves: with one of 24 rows, in 168 rows .18/.09/.035 fail, in 336 .05/.017/.004.
 
 Fixed cycles (``seasons``) are taken out first where history, or a window without history, holds at least four of them.
 
