@@ -371,3 +371,13 @@ def test_a_key_of_many_letters_is_stored_on_a_server_too(either):
     either.add(batch("heat-01", feed="heat"), judgement("heat-01"), rows, tell=DESKS)
     assert len(either.records(Filters(series=name))) == 1
     assert len(episodes(either, EpisodeFilters(series=name))) == 1
+
+
+def test_the_series_of_a_very_long_episode_are_no_longer_counted(ledger, monkeypatch):
+    """Beyond a million failed records the number stays, or grows to the most of one batch: a gate costs no more."""
+    store(ledger, 1, "fail", series=3)
+    monkeypatch.setattr("sercheck.store.standings.COUNTED", 0)
+    store(ledger, 2, "fail", series=2)
+    assert [e.series for e in episodes(ledger)] == [3]
+    store(ledger, 3, "fail", series=5)
+    assert [(e.series, e.widest) for e in episodes(ledger)] == [(5, 5)]

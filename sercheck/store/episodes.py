@@ -33,7 +33,7 @@ class Episode:
         closed_as: pass, or gone when the rule is no longer asked.
         closed_by: that batch.
         batches: how many batches failed.
-        series: how many different series failed in all.
+        series: how many different series failed in all (at least; counted up to a million failed records).
         widest: the most that failed on one batch.
         worst: id of the worst record: the smallest p-value, then the farthest beyond its bound.
         p_value: of that record; None for an exact rule.

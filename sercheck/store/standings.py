@@ -23,6 +23,11 @@ if TYPE_CHECKING:
     from sercheck.store.database import Database
 
 
+COUNTED = 1_000_000
+"""Failed records of an episode up to which its series are counted one by one (half a second); of a longer one the
+number stays what it was, or grows to the most that failed on one batch."""
+
+
 @dataclass(frozen=True)
 class _Here:
     """One judgement of one batch: where its standings lie in time."""
@@ -192,10 +197,10 @@ def _renew(connection: Connection, here: _Here, rule: str) -> Changed | None:
     runs = runs_around(list(steps), own)
     change = change_by(list(steps), runs, own)
     names = _names(here, rule, runs)
-    _forget(connection, {step.episode_id for run in runs for step in run.steps if step.episode_id})
+    known = _forget(connection, {step.episode_id for run in runs for step in run.steps if step.episode_id})
     for run, name in zip(runs, names, strict=True):
         closing = None if run.closed_by is None else steps[run.closed_by]
-        _keep(connection, name, [steps[step] for step in run.steps], closing)
+        _keep(connection, name, [steps[step] for step in run.steps], closing, known.get(name, 0))
     if change is None:
         return None
     return Changed(rule, change[0], names[[run is change[1] for run in runs].index(True)])
@@ -230,16 +235,21 @@ def _names(here: _Here, rule: str, runs: Sequence[Run]) -> list[str]:
     return names
 
 
-def _forget(connection: Connection, names: set[str]) -> None:
-    from sqlalchemy import delete
+def _forget(connection: Connection, names: set[str]) -> dict[str, int]:
+    """Take the episodes out; how many series each had."""
+    from sqlalchemy import delete, select
 
-    if names:
-        episodes = tables().episodes
-        connection.execute(delete(episodes).where(episodes.c.episode_id.in_(sorted(names))))
+    if not names:
+        return {}
+    episodes = tables().episodes
+    these = episodes.c.episode_id.in_(sorted(names))
+    known = connection.execute(select(episodes.c.episode_id, episodes.c.series).where(these)).all()
+    connection.execute(delete(episodes).where(these))
+    return {str(name): int(series) for name, series in known}
 
 
 def _keep(
-    connection: Connection, name: str, rows: Sequence[RowMapping], closing: RowMapping | None
+    connection: Connection, name: str, rows: Sequence[RowMapping], closing: RowMapping | None, series: int
 ) -> None:
     from sqlalchemy import insert, update
 
@@ -250,6 +260,8 @@ def _keep(
             connection.execute(update(kept).where(*own).values(episode_id=name))
     worst = min(rows, key=lambda row: (row["failed"] == 0, row["p_value"] or 0.0, -(row["beyond"] or 0.0)))
     beyond = [row["beyond"] for row in rows if row["beyond"] is not None]
+    if sum(row["failed"] for row in rows) <= COUNTED:
+        series = _series_of(connection, name)
     values = {
         "episode_id": name,
         "feed": rows[0]["feed"],
@@ -265,7 +277,7 @@ def _keep(
         "first_batch": rows[0]["batch_id"],
         "last_batch": rows[-1]["batch_id"],
         "batches": len({row["batch_id"] for row in rows}),
-        "series": _series_of(connection, name, max(row["series"] for row in rows)),
+        "series": max(series, *(row["series"] for row in rows)),
         "widest": max(row["series"] for row in rows),
         "worst": worst["record_id"],
         "p_value": worst["p_value"],
@@ -281,7 +293,7 @@ def _first_stamp(connection: Connection, batch_id: str) -> str | None:
     return connection.execute(select(batches.c.first_stamp).where(batches.c.batch_id == batch_id)).scalar()
 
 
-def _series_of(connection: Connection, episode_id: str, least: int) -> int:
+def _series_of(connection: Connection, episode_id: str) -> int:
     """Number of different series that failed in an episode; of a rule that judges all together it is one."""
     from sqlalchemy import func, literal_column, select
 
@@ -292,4 +304,4 @@ def _series_of(connection: Connection, episode_id: str, least: int) -> int:
         .where(kept.c.episode_id == episode_id, records.c.rule == kept.c.rule)
         .where(records.c.outcome == literal_column("'fail'"))  # as text: a partial index serves only what it names
     )
-    return max(int(connection.execute(query).scalar() or 0), least)
+    return int(connection.execute(query).scalar() or 0)
