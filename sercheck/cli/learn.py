@@ -16,7 +16,9 @@ from sercheck.cli.say import say
 @click.option("--no-keep", is_flag=True, help="Write nothing to store or archive.")
 @click.option("--format", "form", type=click.Choice(["text", "json"]), default="text", show_default=True)
 def command(rules: str, history: tuple[str, ...], store: str, no_keep: bool, form: str) -> None:
-    """Learn the baseline of the rule file RULES from HISTORY (files, globs or db:NAME?table=TABLE) and fill the archive with its rows.
+    """Learn the baseline of the rule file RULES from HISTORY and fill the archive with its rows.
+
+    HISTORY is files, globs or db:NAME?table=TABLE.
 
     Tells what is odd in the history and which rules will be undecided for want of more of it.
     With --format json the facts of each series too: moments, seasonal profile, autoregression, the variance and n_eff
