@@ -124,10 +124,10 @@ def differencing(x: object, steps: Ints, share: Floats) -> Differencing:
     season = np.where(strength >= STRONG, strongest, 0)
     adf_p, kpss_p, first = _unit_root(left)
     once = differences(left, 1)
-    r = autocorrelation(left, [1])[:, 0], autocorrelation(once, [1])[:, 0]
+    now, then = autocorrelation(left, [1])[:, 0], autocorrelation(once, [1])[:, 0]
     more = autocorrelation(differences(once, 1), [1])[:, 0]
     return Differencing(
-        season, first, wanders, strength, adf_p, kpss_p, np.where(first, r[1], r[0]), np.where(first, more, r[1])
+        season, first, wanders, strength, adf_p, kpss_p, np.where(first, then, now), np.where(first, more, then)
     )
 
 
