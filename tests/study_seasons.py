@@ -1,9 +1,9 @@
 """How often ``study`` names the right seasons of simulated feeds, or none rightly, and what it says of real ones.
 
 Run it with ``python -m tests.study_seasons`` (eighty seconds of one processor; ``--feeds N`` simulated feeds of each
-kind, 400 without it). Shares stand with their exact 95 % intervals (Clopper and Pearson 1934). Each feed is looked at twice:
-knowing nothing of a calendar, and knowing the names that the calendar has for its season, as ``study`` does when the
-cadence is found.
+kind, 400 without it). Shares stand with their exact 95 % intervals (Clopper and Pearson 1934). Each feed is looked at
+twice: knowing nothing of a calendar, and knowing the names that the calendar has for its season, as ``study`` does
+when the cadence is found.
 
 A seasonal feed has ten cycles or 120 steps, half of its variance in the season, the rest AR(1) noise with φ of 0 or
 .6; the season's shape is a sine, a sine with two harmonics (amplitudes 1, .6, .3 and random phases), or an independent
