@@ -9,8 +9,8 @@ from typing import Self
 
 WAIT = 0.5
 """Seconds between two tellings."""
-SURE = 3.0
-"""Seconds after which the time left is worth telling."""
+SURE, SEEN = 3.0, 0.02
+"""Seconds, and share of the work, after which the time left is worth telling."""
 
 
 class Progress:
@@ -29,7 +29,7 @@ class Progress:
         if not sys.stderr.isatty() or now - self._told < WAIT:
             return
         self._told, spent = now, now - self._begun
-        left = f", {_spelled(spent / share - spent)} left" if share > 0 and spent > SURE else ""
+        left = f", {_spelled(spent / share - spent)} left" if share > SEEN and spent > SURE else ""
         sys.stderr.write(f"\r\x1b[K{min(share, 1):4.0%}  {what}{left}")
         sys.stderr.flush()
         self._shown = True

@@ -72,10 +72,9 @@ def _head(told: Rehearsal) -> str:
     if told.replayed.finished:
         return f"{strong('REHEARSED', good=True)}  {head}"
     batches, faults = told.replayed.planned
-    return (
-        f"{strong('INTERRUPTED', good=False)}  {head}: {told.batches} of {batches} batches and "
-        f"{len(told.replayed.outcomes)} of {faults} faults were finished and are told"
-    )
+    unfinished = f"{told.batches} of {batches} batches and {len(told.replayed.outcomes)} of {faults} faults"
+    finished = folded(f"told is what was finished: {unfinished}", "  ", "  ")
+    return f"{strong('INTERRUPTED', good=False)}  {head}\n{finished}"
 
 
 def _held(told: Rehearsal) -> list[str]:

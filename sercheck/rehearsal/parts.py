@@ -32,11 +32,13 @@ def tagged(table: Records, tags: Mapping[str, object]) -> pa.Table:
 
 
 def write_part(parts: Sequence[pa.Table], path: Path) -> None:
-    """Write tables as one file."""
+    """Write tables as one file, which has its name when it is whole."""
     import pyarrow as pa
     import pyarrow.parquet as pq
 
-    pq.write_table(pa.concat_tables(parts), path)
+    draft = path.with_suffix(".draft")
+    pq.write_table(pa.concat_tables(parts), draft)
+    draft.replace(path)
 
 
 def join(folder: Path, path: str | Path) -> None:

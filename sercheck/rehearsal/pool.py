@@ -13,7 +13,7 @@ from collections.abc import Iterator, Mapping, Sequence
 from concurrent.futures import Future, ProcessPoolExecutor
 from contextlib import contextmanager
 from dataclasses import dataclass, field
-from multiprocessing import get_context
+from multiprocessing import active_children, get_context
 from pathlib import Path
 from typing import Protocol
 
@@ -175,9 +175,14 @@ def pool(feed: Feed, look: int, workers: int, records: Path | None) -> Iterator[
         return
     with tempfile.TemporaryDirectory(prefix="sercheck-") as name, _one_thread_each():
         setting = Setting(feed.save(Path(name)), Path(name), look, records)
+        others = set(active_children())
         executor = ProcessPoolExecutor(workers, get_context("spawn"), _begin, (setting,))
         try:
             yield Processes(executor, workers)
+        except BaseException:  # nobody waits for what is not finished
+            for child in set(active_children()) - others:
+                child.terminate()
+            raise
         finally:
             executor.shutdown(wait=True, cancel_futures=True)
 

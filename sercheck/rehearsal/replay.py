@@ -85,7 +85,7 @@ def replay(feed: Feed, asked: Plan, workers: int, tell: Tell, records: Path | No
         tell: is told how far the work is.
         records: a folder for the parts of the records, or None.
 
-    An interrupt (Ctrl-C) ends the replay and what is finished is returned.
+    An interrupt (Ctrl-C) ends the replay and what is finished is returned; before the first batch it goes on up.
     """
     faults = wanted(asked.faults)
     cases = cases_of(faults, asked, len(feed.keys))
@@ -117,7 +117,8 @@ def replay(feed: Feed, asked: Plan, workers: int, tell: Tell, records: Path | No
                 tell(min(done / all_work, 1.0), f"{len(outcomes)} of {planned} faults")
         finished = True
     except KeyboardInterrupt:
-        pass
+        if not healthy:
+            raise
     order = {fault.name: place for place, fault in enumerate(faults)}
     outcomes.sort(key=lambda one: (order[one.fault], one.every, one.size, one.number))
     return Replayed(tuple(healthy), tuple(outcomes), starts, (len(feed.judged), planned), finished)
