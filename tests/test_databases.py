@@ -134,6 +134,15 @@ def test_learn_fills_the_archive_from_a_database(here, monkeypatch):
     assert "db:warehouse?table=staged" in listed
 
 
+def test_a_table_is_studied_as_its_file_is(here, monkeypatch):
+    """What a table looks like, its columns found or named, is what the same rows in a file look like."""
+    monkeypatch.setenv("SERCHECK_SOURCE_WAREHOUSE", in_sqlite(here.folder))
+    named_columns = ("--time", "read_at", "--series", "gauge", "--values", "cm", "--format", "json")
+    told = [here.sercheck("study", history, *named_columns) for history in ("db:warehouse?table=past", "history.csv")]
+    assert [ended.status for ended in told] == [0, 0], told[0].err
+    assert told[0].out.replace("db:warehouse?table=past", "history.csv") == told[1].out
+
+
 def moments(days: int = 30) -> pd.DatetimeIndex:
     """Hours of a month."""
     return pd.date_range("2026-03-15", periods=24 * days, freq="h", tz="UTC")

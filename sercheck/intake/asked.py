@@ -76,19 +76,30 @@ class Statement:
 
 def statement_of(table: str | None, query: str | None, layout: Layout) -> Statement:
     """Ask a table (its schema before a point) or a query for the needed columns, spelled as the database has them."""
-    from sqlalchemy import column, quoted_name, select, text
+    from sqlalchemy import column, quoted_name, select
+
+    source = _source(table, query, [column(quoted_name(name, quote=True)) for name in layout.needed])
+    wanted = [source.c[name] for name in layout.needed]
+    return Statement(select(*wanted), source.c[layout.time])
+
+
+def first_rows(table: str | None, query: str | None, rows: int) -> Select[Any]:
+    """All columns of the first rows of a table or a query."""
+    from sqlalchemy import literal_column, select
+
+    return select(literal_column("*")).select_from(_source(table, query, [])).limit(rows)
+
+
+def _source(table: str | None, query: str | None, columns: list[Any]) -> Any:
+    from sqlalchemy import quoted_name, text
     from sqlalchemy import table as named
 
-    columns: list[Any] = [column(quoted_name(name, quote=True)) for name in layout.needed]
     if table is not None:
         schema, _, name = table.rpartition(".")
         owner = quoted_name(schema, quote=True) if schema else None
-        source: Any = named(quoted_name(name, quote=True), *columns, schema=owner)
-    else:
-        escaped = (query or "").replace(":", r"\:")  # a colon is the query's own, not a value of ours
-        source = text(escaped).columns(*columns).subquery("asked")
-    wanted = [source.c[name] for name in layout.needed]
-    return Statement(select(*wanted), source.c[layout.time])
+        return named(quoted_name(name, quote=True), *columns, schema=owner)
+    escaped = (query or "").replace(":", r"\:")  # a colon is the query's own, not a value of ours
+    return text(escaped).columns(*columns).subquery("asked")
 
 
 def _moment(nanoseconds: int) -> datetime:

@@ -17,7 +17,7 @@ from typing import TYPE_CHECKING, Any
 from urllib.parse import parse_qsl, quote
 
 from sercheck.errors import BatchError
-from sercheck.intake.asked import statement_of
+from sercheck.intake.asked import first_rows, statement_of
 from sercheck.intake.build import Chunk, to_chunk
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.layout import Layout
@@ -136,6 +136,20 @@ def read_rows(
     if not chunks and between is None:
         raise BatchError(asked.place, "it has columns and no rows", "at least one row")
     return chunks or [_no_rows(layout, cadence)]
+
+
+def some_rows(asked: DatabaseRows, rows: int) -> dict[str, pa.Array]:
+    """Every column of the first rows, for a look at a feed whose columns nobody has named yet.
+
+    Raises:
+        BatchError: the database cannot be reached or asked.
+    """
+    with _told(asked), _reader(asked) as reader:
+        select = first_rows(asked.table, asked.query, rows)
+        names = reader.columns(select.limit(0))
+        cells = [row for block in reader.blocks(select) for row in block]
+        found = zip(names, zip(*cells, strict=True), strict=True) if cells else ()
+        return {name: _column(list(column), stamps=True) for name, column in found}
 
 
 class _Reader:

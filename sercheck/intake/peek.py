@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 from sercheck.errors import BatchError
 from sercheck.intake.csvfiles import some_csv
+from sercheck.intake.databases import DatabaseRows, is_source, named, some_rows
 from sercheck.intake.frames import some_frame
 from sercheck.intake.jsonlines import some_json
 from sercheck.intake.parquet import some_parquet
@@ -17,7 +18,7 @@ if TYPE_CHECKING:
     import pandas as pd
     import pyarrow as pa
 
-    Given = str | Path | Sequence[str | Path] | pd.DataFrame
+    Given = str | Path | Sequence[str | Path] | pd.DataFrame | DatabaseRows
 
 ROWS = 200_000
 """Rows looked at: four thousand steps of fifty series that come together, in a fraction of a second (ours)."""
@@ -27,13 +28,17 @@ def peek(given: Given, rows: int = ROWS) -> dict[str, pa.Array]:
     """The first rows of every column; those of CSV as text.
 
     Args:
-        given: a file, several, a glob (the first file that has rows is looked at), or a DataFrame.
+        given: a file, several, a glob (the first file that has rows is looked at), a DataFrame, or rows of a database.
         rows: how many, at most.
 
     Raises:
         BatchError: a file cannot be read, or there is not one row.
     """
-    if not isinstance(given, str | Path | Sequence):
+    first = next(iter(given), "") if isinstance(given, list | tuple) else given
+    if isinstance(given, DatabaseRows) or is_source(first):
+        asked = given if isinstance(given, DatabaseRows) else named(str(first))
+        place, columns = asked.place, some_rows(asked, rows)
+    elif not isinstance(given, str | Path | Sequence):
         columns = some_frame(given, rows)
         place = "DataFrame"
     else:
