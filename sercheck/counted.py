@@ -59,6 +59,17 @@ class Counted:
             for name, counts in columns.items():
                 self._odd[f"hold {kind} in {name} (taken as missing)"] += int(counts.sum())
 
+    def join(self, other: Counted) -> None:
+        """Count what was counted elsewhere."""
+        self._stretch = other._stretch or self._stretch
+        self._rows += other._rows
+        self._series += other._series
+        self._placed += other._placed
+        self._past += other._past
+        for mine, theirs in ((self._numbers, other._numbers), (self._text, other._text), (self._odd, other._odd)):
+            for name, number in theirs.items():
+                mine[name] += number
+
     def facts(self) -> Facts:
         """The batch in numbers."""
         if self._stretch is None:

@@ -13,7 +13,7 @@ from typing import Protocol
 
 import numpy as np
 
-from sercheck import limits
+from sercheck import limits, stopwatch
 from sercheck.errors import UsageError
 from sercheck.grid import Grid, Panel
 from sercheck.judge import Judged, Seen, judge
@@ -68,6 +68,7 @@ def measure_block(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
         What was seen, in the order of the rules, and notes for the reader.
     """
     seen, notes = look_at_block(grid, run)
+    stopwatch.begin("causes")
     return name_causes(seen, grid, run), notes
 
 
@@ -113,6 +114,7 @@ def _measured(grid: Grid, run: Run) -> tuple[list[Seen], list[str]]:
 
     for place, rule in enumerate(run.book.rules):
         limits.check()
+        stopwatch.begin(f"measure {rule.name}")
         measure = get(rule.measure)
         chosen = chosen_series(rule, grid.keys)
         if not chosen.any():

@@ -24,6 +24,10 @@ class SercheckError(Exception):
         self.todo = todo
         super().__init__(self.sentence())
 
+    def __reduce__(self) -> tuple[object, ...]:
+        """An error of another process arrives whole."""
+        return type(self), (self.place, self.came, self.wanted, self.todo)
+
     def sentence(self) -> str:
         """The whole error as one line of text."""
         text = f"{self.place}: {self.came}"
@@ -68,6 +72,10 @@ class OutputError(SercheckError):
 
 class LimitError(SercheckError):
     """A batch takes more memory or time than its rule file allows."""
+
+
+class EngineError(SercheckError):
+    """Workers that were asked for cannot be started, reached or kept."""
 
 
 class UsageError(SercheckError):

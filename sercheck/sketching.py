@@ -6,7 +6,7 @@ that breaks it most clearly is kept as the blocks go by: memory grows with the r
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -44,7 +44,7 @@ BATCHES = 30
 
 
 @dataclass(frozen=True)
-class _Clearest:
+class Clearest:
     """The series that breaks a rule most clearly: how clearly, and its rows."""
 
     order: tuple[float, float]
@@ -59,7 +59,7 @@ class Sketcher:
 
     def __init__(self, book: Rulebook) -> None:
         self._book = book
-        self._kept: dict[tuple[int, str | None], _Clearest] = {}
+        self.kept: dict[tuple[int, str | None], Clearest] = {}
 
     def watch(self, grid: Grid, seen: Sequence[Seen]) -> None:
         """Keep the rows of the series that break a rule more clearly than all before."""
@@ -70,9 +70,16 @@ class Sketcher:
             order = clearest(part.measurement)
             row = int(np.lexsort(order[::-1])[0])
             told = (float(order[0][row]), float(order[1][row]))
-            known = self._kept.get((part.rule, part.column))
+            known = self.kept.get((part.rule, part.column))
             if np.isfinite(told[0]) and (known is None or told < known.order):
-                self._kept[part.rule, part.column] = _kept(grid, part, row, column, told)
+                self.kept[part.rule, part.column] = _kept(grid, part, row, column, told)
+
+    def join(self, kept: Mapping[tuple[int, str | None], Clearest]) -> None:
+        """Take in what was kept of later blocks elsewhere."""
+        for place, other in kept.items():
+            known = self.kept.get(place)
+            if known is None or other.order < known.order:
+                self.kept[place] = other
 
     def sketches(self, judged: Sequence[Judged]) -> tuple[Sketch, ...]:
         """One sketch for each column of each rule that fails, and one for each verdict on all series that fails."""
@@ -88,23 +95,23 @@ class Sketcher:
                 continue
             if whole and place in scores:
                 made[*place, True] = _course(rule, place[1], scores[place])
-            elif not whole and place in self._kept:
-                made[*place, False] = _sketch(rule, place[1], self._kept[place])
+            elif not whole and place in self.kept:
+                made[*place, False] = _sketch(rule, place[1], self.kept[place])
         return tuple(made.values())
 
 
-def _kept(grid: Grid, part: Seen, row: int, column: str, order: tuple[float, float]) -> _Clearest:
+def _kept(grid: Grid, part: Seen, row: int, column: str, order: tuple[float, float]) -> Clearest:
     key = str(part.keys[row])
     at = row if len(part.keys) == len(grid.keys) else int(np.flatnonzero(grid.keys == key)[0])
     values, delivered = grid.values[column][at : at + 1].copy(), grid.delivered[at : at + 1].copy()
     begin = int(np.searchsorted(grid.axis.stamps, part.window_start))
     start = grid.start if grid.irregular else begin
-    return _Clearest(
+    return Clearest(
         order, key, Panel(values, start, grid.axis, delivered, column), part.measurement.lags or (), grid.irregular
     )
 
 
-def _sketch(rule: Rule, column: str | None, kept: _Clearest) -> Sketch:
+def _sketch(rule: Rule, column: str | None, kept: Clearest) -> Sketch:
     picture = get(rule.measure).picture(rule.fields, rule.stays)
     if picture in ("stretch", "course"):
         return _stretch(rule, column, kept, course_first=picture == "course")
@@ -116,7 +123,7 @@ def _sketch(rule: Rule, column: str | None, kept: _Clearest) -> Sketch:
     return told or _stretch(rule, column, kept, course_first=False)
 
 
-def _stretch(rule: Rule, column: str | None, kept: _Clearest, *, course_first: bool) -> Sketch:
+def _stretch(rule: Rule, column: str | None, kept: Clearest, *, course_first: bool) -> Sketch:
     """Values of the window, some of what came before it, and where history's values lay."""
     panel = kept.panel
     steps = panel.values.shape[1]
@@ -183,7 +190,7 @@ def _thinned(line: Floats, each: int) -> Floats:
     return np.where(count > 0, np.where(seen, padded, 0.0).sum(axis=1) / np.maximum(count, 1), np.nan)
 
 
-def _correlogram(rule: Rule, column: str | None, kept: _Clearest, panel: Panel, picture: str) -> Sketch | None:
+def _correlogram(rule: Rule, column: str | None, kept: Clearest, panel: Panel, picture: str) -> Sketch | None:
     """Coefficients of the window by lag, over those of history's stretches of its length."""
     window, history = panel.window, panel.history[0]
     n = window.shape[1]

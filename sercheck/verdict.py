@@ -7,20 +7,22 @@ import time
 from collections import Counter
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field, replace
-from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from sercheck import __version__
+from sercheck import __version__, stopwatch
+from sercheck.as_of import clock
+from sercheck.blocks import Gathered, Workers
 from sercheck.collect import Common, records
-from sercheck.counted import Counted, Facts
-from sercheck.engine import Run, decide, measure_block
-from sercheck.errors import BatchHeld, UsageError
+from sercheck.counted import Facts
+from sercheck.engine import Run, decide
+from sercheck.engines import workers_of
+from sercheck.errors import BatchHeld
 from sercheck.history import find_past, open_memory
 from sercheck.intake.layout import Layout
-from sercheck.intake.stream import feed_cadence, feed_grids, open_feed
+from sercheck.intake.stream import feed_cadence
 from sercheck.judge import Seen
 from sercheck.limits import Watch, within
 from sercheck.record import Records, utc_text
@@ -28,7 +30,7 @@ from sercheck.rulebook import load_rules
 from sercheck.rulebook.budget import expected_false_holds, explain, in_short
 from sercheck.rulebook.compiled import Rulebook
 from sercheck.sketches import Sketch, to_text
-from sercheck.sketching import Sketcher
+from sercheck.stopwatch import Timing
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -38,9 +40,6 @@ if TYPE_CHECKING:
     from sercheck.store.rows import Settlement
 
     Rows = str | Path | Sequence[str | Path] | pd.DataFrame | DatabaseRows
-
-EARLIEST, LATEST = 1678, 2261
-"""Whole years that nanoseconds since 1970 reach in 64 bits."""
 
 
 @dataclass(frozen=True)
@@ -65,6 +64,7 @@ class Verdict:
         rules: text of the rule file.
         untold: a sentence for each desk that could not be told; the message waits in the ledger.
         seconds: how long reading and judging took.
+        timings: what each stage took, where that was asked for.
     """
 
     decision: str
@@ -83,6 +83,7 @@ class Verdict:
     rules: str = ""
     untold: tuple[str, ...] = ()
     seconds: float = 0.0
+    timings: tuple[Timing, ...] = ()
 
     @property
     def counts(self) -> dict[str, int]:
@@ -186,6 +187,9 @@ def gate(
     store: str | Path | None = None,
     ledger: str | None = None,
     keep: bool = True,
+    engine: str = "local",
+    scheduler: str | None = None,
+    timings: bool = False,
 ) -> Verdict:
     """Judge a batch.
 
@@ -198,6 +202,9 @@ def gate(
         store: folder of ledger and archive, which the judgement and the rows are kept in; default none are kept.
         ledger: SQLAlchemy URL of the ledger, where it is not in the store.
         keep: write to ledger and archive, and tell the desks that the rules name; without it they are only read.
+        engine: ``local``, or ``dask`` for the same records from many processes (see ``scale``).
+        scheduler: address of a running Dask scheduler; default as many processes here as there are cores.
+        timings: tell what each stage took (``Verdict.timings``).
 
     The same batch judged again by the same rules against the same history changes nothing: what the ledger has stands
     and is returned.
@@ -207,8 +214,9 @@ def gate(
             Nothing is released then.
     """
     book = rules if isinstance(rules, Rulebook) else load_rules(rules)
-    with within(book.limits) as watch:
-        return _gate(book, batch, history, as_of, store, ledger, keep=keep, watch=watch)
+    with stopwatch.timed(asked=timings), within(book.limits) as watch, workers_of(engine, scheduler) as workers:
+        verdict = _gate(book, batch, history, as_of, store, ledger, keep=keep, watch=watch, workers=workers)
+        return replace(verdict, timings=stopwatch.timings()) if stopwatch.asked() else verdict
 
 
 def _gate(
@@ -221,8 +229,10 @@ def _gate(
     *,
     keep: bool,
     watch: Watch,
+    workers: Workers,
 ) -> Verdict:
-    judged_at, began = _clock(as_of), time.perf_counter()
+    judged_at, began = clock(as_of), time.perf_counter()
+    stopwatch.begin("open")
     kept_in = _open_ledger(store, ledger) if store is not None or ledger is not None else None
     layout = layout_of(book)
     memory = open_memory(book, layout, kept_in, store, writes=keep) if kept_in and store is not None else None
@@ -230,20 +240,13 @@ def _gate(
         kept_in.prepare()
         if memory:
             memory.prepare()
-    source = open_feed(batch, layout)
+    source = workers.open(batch, layout)
     past = find_past(book, layout, source, history, memory, str(utc_text(judged_at)[0]))
-    counted = Counted()
     cadence = feed_cadence(source, past.source, layout)
     run = Run(book, cadence, judged_at, past.rests)
-    sketcher = Sketcher(book)
-    seen: list[Seen] = []
-    notes: list[str] = [*past.notes]
-    for grid in feed_grids(source, past.source, layout):
-        counted.add(grid)
-        block, said = measure_block(past.marked(grid), run)
-        sketcher.watch(grid, block)
-        seen += block
-        notes += said
+    gathered = Gathered(run, workers.looked(source, past, layout, run))
+    seen, counted, notes = gathered.seen, gathered.counted, [*past.notes, *gathered.notes]
+    stopwatch.begin("read")
     facts = counted.facts()
     common = Common(
         feed=book.feed,
@@ -254,7 +257,9 @@ def _gate(
         baseline_id=past.baseline_id,
         sercheck_version=__version__,
     )
+    stopwatch.begin("decide")
     judged = decide(book, seen)
+    stopwatch.begin("records")
     table = records(book, judged, common)
     if not np.any(table["action"] == "hold"):
         counted.must_say_something(seen)
@@ -271,7 +276,7 @@ def _gate(
         expected=expected_false_holds(book),
         arithmetic=tuple(explain(book)),
         budget=in_short(book),
-        sketches=sketcher.sketches(judged),
+        sketches=gathered.sketcher.sketches(judged),
         rules=book.text,
         seconds=time.perf_counter() - began,
     )
@@ -279,10 +284,13 @@ def _gate(
     watch.end()
     if kept_in is None or not keep:
         return verdict
+    stopwatch.begin("store")
     verdict = _kept(verdict, common, book, kept_in)
     settled = kept_in.batch(verdict.batch_id).settled
     if memory:
+        stopwatch.begin("archive")
         memory.keep(verdict.batch_id, source, cadence, verdict.decision, settled)
+    stopwatch.begin("tell")
     verdict = replace(verdict, untold=_tell(kept_in, verdict.batch_id, store))
     return _overruled(verdict, settled) if settled else verdict
 
@@ -359,21 +367,6 @@ def _overruled(verdict: Verdict, settled: Settlement) -> Verdict:
     decision = "released" if settled.what == "released" else "held"
     note = f"{verdict.decision} by its rules; {settled.sentence()}"
     return replace(verdict, decision=decision, notes=(*verdict.notes, note))
-
-
-def _clock(as_of: str | None) -> int:
-    """The time to judge by as nanoseconds since 1970 UTC."""
-    if as_of is None:
-        return time.time_ns()
-    wanted = "a time such as 2026-01-20T06:00:00Z"
-    try:
-        stamp = datetime.fromisoformat(as_of)
-        utc = stamp.replace(tzinfo=UTC) if stamp.tzinfo is None else stamp.astimezone(UTC)
-    except (TypeError, ValueError, OverflowError) as trouble:
-        raise UsageError("--as-of", f"'{as_of}' is no time", wanted) from trouble
-    if not EARLIEST <= utc.year <= LATEST:
-        raise UsageError("--as-of", f"the year {utc.year}", f"{wanted}, in the years {EARLIEST} to {LATEST}")
-    return (utc - datetime(1970, 1, 1, tzinfo=UTC)) // timedelta(microseconds=1) * 1000
 
 
 def _slug(feed: str) -> str:
