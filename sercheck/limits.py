@@ -20,6 +20,9 @@ from typing import Any, NoReturn
 
 from sercheck.errors import LimitError
 
+ROOM = 256 << 20
+"""Bytes that the system grants beyond the limit (ours: libraries that are loaded on the way must find room, or they
+break in ways of their own). What is smaller than that is found between pieces of work."""
 PAGE = os.sysconf("SC_PAGE_SIZE")
 _STATM = Path("/proc/self/statm")
 
@@ -77,7 +80,7 @@ class Watch:
 
     def _refuse_beyond(self, size: float) -> None:
         soft, hard = resource.getrlimit(resource.RLIMIT_DATA)
-        most = int(_data() + size)
+        most = int(_data() + size) + ROOM
         if hard == resource.RLIM_INFINITY or most < hard:
             resource.setrlimit(resource.RLIMIT_DATA, (most, hard))
             self._undo.append(lambda: resource.setrlimit(resource.RLIMIT_DATA, (soft, hard)))

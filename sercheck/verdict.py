@@ -349,7 +349,7 @@ def _kept(verdict: Verdict, common: Common, book: Rulebook, ledger: Ledger) -> V
         stored = known or ledger.add(batch, judgement, verdict.table, sketched, desks_of(book))
         table = ledger.records(Filters(judgement_id=stored.judgement_id))
     if known is None and stored.decision == verdict.decision:
-        return verdict
+        return replace(verdict, table=table)  # of two at once the records of the one that stored first
     note = f"this batch was judged by these rules before, at {stored.judged_at}; that judgement stands"
     return replace(verdict, decision=stored.decision, table=table, notes=(*verdict.notes, note))
 
