@@ -1,7 +1,8 @@
 """A block of series to what is kept of it once its rows are gone: the same function wherever the block is.
 
-The gate calls ``look`` on one block after another, the workers of a distributed run on blocks of their own; ``Gathered``
-puts the pieces together in the order of the blocks. Depends on ``engine``, ``counted``, ``sketching`` and ``history``.
+The gate calls ``look`` on one block after another, the workers of a distributed run on blocks of their own;
+``Gathered`` puts the pieces together in the order of the blocks. Depends on ``engine``, ``counted``, ``sketching`` and
+``history``.
 """
 
 from __future__ import annotations
@@ -83,7 +84,7 @@ class Workers(Protocol):
 
 
 class Here:
-    """This process, one block after another."""
+    """One process, one block after another."""
 
     def open(self, given: Given, layout: Layout) -> Source:
         return open_feed(given, layout)

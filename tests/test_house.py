@@ -61,6 +61,7 @@ OUTSIDE: dict[str, set[str]] = {
 
 LATE = {
     "pandas", "pyarrow", "sqlalchemy", "statsmodels", "matplotlib", "scipy.stats", "scipy.signal", "jinja2", "dask",
+    "distributed",
     "apprise",
     "fsspec",
 }  # fmt: skip

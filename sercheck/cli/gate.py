@@ -28,6 +28,9 @@ if TYPE_CHECKING:
 @click.option("--held-to", type=click.Path(), metavar="DIR", help="Move the batch files here when held.")
 @click.option("--as-of", metavar="TIME", help="The clock to judge by (default: now).")
 @click.option("--no-keep", is_flag=True, help="Write nothing to store or archive.")
+@click.option("--engine", type=click.Choice(["local", "dask"]), default="local", show_default=True)
+@click.option("--scheduler", metavar="ADDRESS", help="A running Dask scheduler (default: processes on this machine).")
+@click.option("--timings", is_flag=True, help="Tell the seconds that each stage takes.")
 @click.option("--format", "form", type=click.Choice(["text", "json"]), default="text", show_default=True)
 def command(
     rules: str,
@@ -41,13 +44,18 @@ def command(
     held_to: str | None,
     as_of: str | None,
     no_keep: bool,
+    engine: str,
+    scheduler: str | None,
+    timings: bool,
     form: str,
 ) -> None:
     """Judge BATCH (files, globs or db:NAME?table=TABLE) by the rule file RULES.
 
     Ends with 0 when the batch is released, 1 when it is held, 2 in trouble.
     """
+    from sercheck import stopwatch
     from sercheck.cli.screen import answer
+    from sercheck.cli.stages import as_data, stages
     from sercheck.intake.databases import is_source
     from sercheck.outputs import check_place, move_batch
     from sercheck.record import check_suffix
@@ -64,17 +72,25 @@ def command(
         check_place(folder, folder=True)
     if (released_to or held_to) and any(map(is_source, batch)):
         raise click.UsageError("the rows of a database have no file that --released-to or --held-to could move")
-    verdict = gate(rules, list(batch), list(history) or None, as_of=as_of, store=store, keep=not no_keep)
-    if records:
-        verdict.table.write(records)
-    if form == "json":
-        click.echo(json.dumps(verdict.summary(), allow_nan=False, ensure_ascii=False))
-    else:
-        say(answer(verdict))
-    if brief:
-        _write_brief(brief, verdict, None if store == ".sercheck" else store)
-    if metrics:
-        _write_metrics(metrics, verdict, None if no_keep else store)
+    with stopwatch.timed(asked=timings):
+        verdict = gate(
+            rules, list(batch), list(history) or None, as_of=as_of, store=store, keep=not no_keep, engine=engine,
+            scheduler=scheduler,
+        )  # fmt: skip
+        stopwatch.begin("write")
+        if records:
+            verdict.table.write(records)
+        if form == "json":
+            told = verdict.summary() | ({"timings": as_data(stopwatch.timings())} if timings else {})
+            click.echo(json.dumps(told, allow_nan=False, ensure_ascii=False))
+        else:
+            say(answer(verdict))
+        if brief:
+            _write_brief(brief, verdict, None if store == ".sercheck" else store)
+        if metrics:
+            _write_metrics(metrics, verdict, None if no_keep else store)
+        if timings:
+            click.echo(stages(stopwatch.timings()), err=True)
     for sentence in verdict.untold:
         click.echo(plain(sentence, 1000), err=True)
     into = released_to if verdict.released else held_to

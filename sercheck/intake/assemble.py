@@ -27,7 +27,7 @@ def grids(
     cadence: Cadence,
     layout: Layout,
     need_steps: int | None = None,
-    block_cells: int = BLOCK_CELLS,
+    block_cells: int | None = None,
 ) -> Iterator[Grid]:
     """Grids of blocks of series, history before the batch, all on the same axis.
 
@@ -41,14 +41,14 @@ def grids(
         layout: the feed.
         need_steps: steps (rows of a series, for an irregular feed) of history before the batch, at most; None for
             all there are.
-        block_cells: series times steps in a block, at most (a single series may have more).
+        block_cells: series times steps in a block, at most (default ``BLOCK_CELLS``; a single series may have more).
 
     Raises:
         BatchError: the rows are spread too thinly for the cadence.
         UsageError: a season's length does not fit the cadence.
     """
     if cadence.irregular:
-        yield from irregular_grids(batch, history, layout, need_steps, block_cells)
+        yield from irregular_grids(batch, history, layout, need_steps, block_cells or BLOCK_CELLS)
         return
     if cadence.anchor is None:
         cadence = cadence.anchored((batch if history is None else history).stamps)
@@ -57,15 +57,20 @@ def grids(
     yield from planned_grids(batch, history, laid, block_cells)
 
 
-def planned_grids(batch: Rows, history: Rows | None, laid: Plan, block_cells: int = BLOCK_CELLS) -> Iterator[Grid]:
+def planned_grids(batch: Rows, history: Rows | None, laid: Plan, block_cells: int | None = None) -> Iterator[Grid]:
     """As ``grids``, on an axis that is laid out already (so that blocks of a stream share it)."""
     keys = batch.keys if history is None else union(batch.keys, history.keys)
     batch = aligned(batch, keys)
     history = None if history is None or laid.start == 0 else aligned(history, keys)
-    height = max(1, block_cells // max(1, len(laid.axis)))
+    height = height_of(laid, block_cells)
     for low in range(0, len(keys), height):
         high = min(low + height, len(keys))
         yield _grid(batch.of_series(low, high), None if history is None else history.of_series(low, high), laid)
+
+
+def height_of(laid: Plan, block_cells: int | None = None) -> int:
+    """Series of a block."""
+    return max(1, (block_cells or BLOCK_CELLS) // max(1, len(laid.axis)))
 
 
 def _grid(batch: Rows, history: Rows | None, laid: Plan) -> Grid:

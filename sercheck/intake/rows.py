@@ -125,6 +125,11 @@ class Fingerprint:
             mixed ^= other
             self._sums[1] += int(mixed.sum())
 
+    def join(self, other: Fingerprint) -> None:
+        """Take in rows that were mixed elsewhere."""
+        self._sums = [mine + theirs for mine, theirs in zip(self._sums, other._sums, strict=True)]
+        self._rows += other._rows
+
     def text(self) -> str:
         """The fingerprint as hexadecimal digits."""
         first, second = (total % (1 << 64) for total in self._sums)

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import replace
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -11,7 +11,7 @@ import numpy as np
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.layout import Layout
 from sercheck.intake.rows import Fingerprint, Rows
-from sercheck.intake.stream import MemorySource, ReadForFingerprint, Source, open_feed
+from sercheck.intake.stream import MemorySource, Piece, ReadForFingerprint, Source, open_feed
 from sercheck.intake.stretch import Extent
 from sercheck.intake.zone import EARLIEST, LATEST
 from sercheck.serial.arrays import Ints
@@ -81,6 +81,22 @@ class _Cut(ReadForFingerprint):
 
     def rows(self) -> Rows:
         return _between(self._whole.rows(), self._first, self._before)
+
+    def pieces(self) -> Sequence[Piece] | None:
+        whole = self._whole.pieces()
+        return None if whole is None else [_CutPiece(piece, self._first, self._before) for piece in whole]
+
+
+@dataclass(frozen=True)
+class _CutPiece:
+    """A piece without its rows before one moment and from another on."""
+
+    whole: Piece
+    first: int
+    before: int
+
+    def rows(self) -> Rows:
+        return _between(self.whole.rows(), self.first, self.before)
 
 
 def both(one: Rows, other: Rows) -> Rows:

@@ -30,7 +30,7 @@ BLOCK_ROWS = 1_000_000
 
 
 @dataclass(frozen=True)
-class _Group:
+class Group:
     """One row group: its file and number there, its rows, and the smallest and largest key in it."""
 
     path: Path
@@ -43,7 +43,7 @@ class _Group:
 class SortedParquet:
     """Files that hold one sequence of series, in order of key."""
 
-    def __init__(self, groups: list[_Group], layout: Layout, cadence: Cadence, block_rows: int) -> None:
+    def __init__(self, groups: list[Group], layout: Layout, cadence: Cadence, block_rows: int) -> None:
         self.groups, self.layout, self.cadence, self.block_rows = groups, layout, cadence, block_rows
 
     @classmethod
@@ -57,7 +57,7 @@ class SortedParquet:
         """
         if not layout.series:
             return None
-        groups: list[_Group] = []
+        groups: list[Group] = []
         for path in paths:
             with told(path):
                 found = _groups(path, layout)
@@ -81,7 +81,7 @@ class SortedParquet:
         places = sorted({0, len(self.groups) // 2, len(self.groups) - 1})
         return np.concatenate(list(self.stamps([self.groups[place] for place in places])))
 
-    def stamps(self, groups: list[_Group] | None = None) -> Iterator[Ints]:
+    def stamps(self, groups: list[Group] | None = None) -> Iterator[Ints]:
         """Stamps of each row group, nanoseconds UTC (an hour that comes twice is read as the first)."""
         name = self.layout.time
         for table in self._tables(self.groups if groups is None else groups, [name]):
@@ -116,17 +116,39 @@ class SortedParquet:
     def blocks(self) -> Iterator[Rows]:
         """Rows of whole series, in order of key; a series that runs over into the next row group waits for it."""
         waiting: list[pa.Table] = []
-        size = 0
-        for group, table in zip(self.groups, self._tables(self.groups, list(self.layout.needed)), strict=True):
+        cuts = set(self._cuts)
+        tables = self._tables(self.groups, list(self.layout.needed))
+        for place, table in enumerate(tables, start=1):
             waiting.append(table)
-            size += table.num_rows
-            after = self._next(group)
-            if after is not None and size < self.block_rows:
-                continue
-            ready, waiting = self._split(waiting, after)
-            size = sum(part.num_rows for part in waiting)
-            if ready:
+            if place in cuts:
+                ready, waiting = self._split(waiting, self.groups[place] if place < len(self.groups) else None)
                 yield self._rows(ready)
+
+    @cached_property
+    def _cuts(self) -> list[int]:
+        """How many row groups are read when a block is complete: its rows have keys below the least of the next group.
+
+        A block has ``block_rows`` rows or more; a key that fills row groups to their ends leaves nothing to cut.
+        """
+        cuts: list[int] = []
+        size, done = 0, None
+        for place, group in enumerate(self.groups[:-1], start=1):
+            size += group.rows
+            least = self.groups[place].least
+            if size >= self.block_rows and least != (self.groups[0].least if done is None else done):
+                cuts.append(place)
+                size, done = 0, least
+        return [*cuts, len(self.groups)]
+
+    def pieces(self) -> list[KeyRange]:
+        """What ``blocks`` yields, each to be read by itself; a row group that straddles two is read for both."""
+        made = []
+        bounds = [None, *(self.groups[cut].least for cut in self._cuts[:-1]), None]
+        for low, cut, least, before in zip([0, *self._cuts], self._cuts, bounds, bounds[1:], strict=False):
+            while low > 0 and self.groups[low - 1].most == least:  # its last rows belong to this block
+                low -= 1  # noqa: PLW2901
+            made.append(KeyRange(tuple(self.groups[low:cut]), self.layout, self.cadence, least, before))
+        return made
 
     def chunks(self) -> list[Chunk]:
         """All rows, row group after row group."""
@@ -137,15 +159,19 @@ class SortedParquet:
         place = str(self.groups[0].path)
         return to_rows([table_chunk(table, self.layout, self.cadence, place) for table in tables], self.cadence)
 
-    def _next(self, group: _Group) -> _Group | None:
-        place = self._places[id(group)] + 1
-        return self.groups[place] if place < len(self.groups) else None
+    def between(self, least: Any, before: Any) -> Rows:
+        """The rows whose key is ``least`` or more and smaller than ``before`` (None: no bound)."""
+        parts = []
+        for table in self._tables(self.groups, list(self.layout.needed)):
+            keys = table.column(self.layout.series[0])
+            inside = np.ones(table.num_rows, dtype=bool) if least is None else ~_before(keys, least)
+            if before is not None:
+                inside &= _before(keys, before)
+            if inside.any():
+                parts.append(table if inside.all() else table.filter(arrow.mask(inside)))
+        return self._rows(parts)
 
-    @cached_property
-    def _places(self) -> dict[int, int]:
-        return {id(group): place for place, group in enumerate(self.groups)}
-
-    def _split(self, tables: list[pa.Table], after: _Group | None) -> tuple[list[pa.Table], list[pa.Table]]:
+    def _split(self, tables: list[pa.Table], after: Group | None) -> tuple[list[pa.Table], list[pa.Table]]:
         """Rows of series that are complete, and those whose key may come again in the next group."""
         if after is None:
             return tables, []
@@ -165,7 +191,7 @@ class SortedParquet:
                 waiting.append(table.filter(arrow.mask(~done)))
         return ready, waiting
 
-    def _tables(self, groups: list[_Group], columns: list[str]) -> Iterator[pa.Table]:
+    def _tables(self, groups: list[Group], columns: list[str]) -> Iterator[pa.Table]:
         opened: tuple[Path, Any] | None = None
         for group in groups:
             with told(group.path):
@@ -179,7 +205,23 @@ class SortedParquet:
             opened[1].close()
 
 
-def _groups(path: Path, layout: Layout) -> list[_Group] | None:
+@dataclass(frozen=True)
+class KeyRange:
+    """The rows of some row groups whose key is ``least`` or more and smaller than ``before`` (None: no bound)."""
+
+    groups: tuple[Group, ...]
+    layout: Layout
+    cadence: Cadence
+    least: Any
+    before: Any
+
+    def rows(self) -> Rows:
+        """The rows, each series whole."""
+        files = SortedParquet(list(self.groups), self.layout, self.cadence, 0)
+        return files.between(self.least, self.before)
+
+
+def _groups(path: Path, layout: Layout) -> list[Group] | None:
     """The row groups with the range of their first key column; None where the footer does not tell."""
     with parquet_file(path, layout) as file:
         metadata = file.metadata
@@ -192,7 +234,7 @@ def _groups(path: Path, layout: Layout) -> list[_Group] | None:
             statistics = group.column(place).statistics
             if statistics is None or not statistics.has_min_max or statistics.null_count:
                 return None
-            found.append(_Group(path, number, group.num_rows, statistics.min, statistics.max))
+            found.append(Group(path, number, group.num_rows, statistics.min, statistics.max))
     return found
 
 

@@ -5,12 +5,13 @@ from __future__ import annotations
 from abc import ABC, abstractmethod
 from collections.abc import Iterator, Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 
 from sercheck.grid import Grid
-from sercheck.intake.assemble import BLOCK_CELLS, grids, planned_grids
+from sercheck.intake import sorted_parquet
+from sercheck.intake.assemble import grids, planned_grids
 from sercheck.intake.build import Chunk, must_have_stamps, to_rows
 from sercheck.intake.calendar import Cadence
 from sercheck.intake.databases import DatabaseRows, is_source, named, read_rows
@@ -20,8 +21,9 @@ from sercheck.intake.layout import Layout
 from sercheck.intake.pairs import aligned, places_of
 from sercheck.intake.paths import expand, kind_of
 from sercheck.intake.rows import Fingerprint, Rows
-from sercheck.intake.sorted_parquet import BLOCK_ROWS, SortedParquet
+from sercheck.intake.sorted_parquet import SortedParquet
 from sercheck.intake.stretch import Extent, Plan, extent, fences, plan, span
+from sercheck.intake.whole_files import WholeFiles
 from sercheck.intake.zone import NOT_A_STAMP
 from sercheck.serial.arrays import Ints
 
@@ -29,6 +31,13 @@ if TYPE_CHECKING:
     import pandas as pd
 
     Given = str | Path | Sequence[str | Path] | pd.DataFrame | DatabaseRows
+
+
+class Piece(Protocol):
+    """A part of a feed that any process can read by itself, each of its series whole; it can be sent to one."""
+
+    def rows(self) -> Rows:
+        """Its rows, none perhaps."""
 
 
 class Source(ABC):
@@ -57,6 +66,10 @@ class Source(ABC):
     @abstractmethod
     def rows(self) -> Rows:
         """All rows at once."""
+
+    def pieces(self) -> Sequence[Piece] | None:
+        """What ``blocks`` yields, in its order, to be read elsewhere; None where only this process can read it."""
+        return None
 
 
 class MemorySource(Source):
@@ -99,6 +112,10 @@ class ReadForFingerprint(Source):
                 pass
         return str(self._fingerprint)
 
+    def was_read(self, fingerprint: Fingerprint) -> None:
+        """All pieces were read elsewhere, and this is what their content is."""
+        self._fingerprint = fingerprint.text()
+
 
 class StreamSource(ReadForFingerprint):
     """Parquet sorted by key, read by row groups; no more than a block of series is held."""
@@ -136,19 +153,22 @@ class StreamSource(ReadForFingerprint):
     def rows(self) -> Rows:
         return to_rows(self._files.chunks(), self._files.cadence)
 
+    def pieces(self) -> Sequence[Piece]:
+        return self._files.pieces()
+
 
 def open_feed(
-    given: Given, layout: Layout, block_rows: int = BLOCK_ROWS, between: tuple[int, int] | None = None
+    given: Given, layout: Layout, block_rows: int | None = None, between: tuple[int, int] | None = None
 ) -> Source:
     """Open a feed.
 
     Args:
         given: a file, several, a glob, a DataFrame, or rows of a database (``db:NAME?table=...``,
             ``sercheck.rows``). Parquet of more than ``block_rows`` rows whose row groups are
-            sorted by key is streamed; everything else is read into compact columns (20 bytes a row and 8 for every
-            further value column).
+            sorted by key, or of whose files each has series of its own, is streamed; everything else is read into
+            compact columns (20 bytes a row and 8 for every further value column).
         layout: the feed's columns and clocks.
-        block_rows: rows of a streamed block, about.
+        block_rows: rows of a streamed block, about (default ``BLOCK_ROWS``).
         between: a window, nanoseconds UTC, that a database is asked for; what comes may be more, and files come whole.
 
     Raises:
@@ -164,12 +184,20 @@ def open_feed(
     files = expand(given)
     paths = tuple(map(str, files))
     if all(kind_of(path)[0] == "parquet" for path in files) and not cadence.irregular:
-        sorted_files = SortedParquet.recognise(files, layout, cadence, block_rows)
-        if sorted_files is not None:
-            return StreamSource(sorted_files, layout, paths)
+        apart = files_apart(files, layout, cadence, block_rows)
+        if apart is not None:
+            return StreamSource(apart, layout, paths)
     rows = to_rows([chunk for path in files for chunk in read_file(path, layout, cadence)], cadence)
     must_have_stamps(rows, layout, paths[0] if len(paths) == 1 else f"{paths[0]} and {len(paths) - 1} more")
     return MemorySource(rows, layout, paths)
+
+
+def files_apart(
+    files: list[Path], layout: Layout, cadence: Cadence, block_rows: int | None = None
+) -> SortedParquet | None:
+    """Parquet files of which blocks of whole series can be read one by one; None where that does not pay or work."""
+    rows = sorted_parquet.BLOCK_ROWS if block_rows is None else block_rows
+    return SortedParquet.recognise(files, layout, cadence, rows) or WholeFiles.recognise(files, layout, cadence, rows)
 
 
 def _each(given: Given) -> list[str | Path]:
@@ -206,7 +234,7 @@ def feed_grids(
     history: Source | None,
     layout: Layout,
     need_steps: int | None = None,
-    block_cells: int = BLOCK_CELLS,
+    block_cells: int | None = None,
 ) -> Iterator[Grid]:
     """Grids of a feed, block by block (see ``assemble.grids``), with flat memory where a source is a stream.
 
@@ -222,22 +250,30 @@ def feed_grids(
         for rows in batch.blocks():
             yield from planned_grids(rows, None, laid, block_cells)
     else:
-        rows, past_extent = batch.rows().by_series(), history.extent(cadence)
-        laid = plan(extent(rows, cadence, past_extent), past_extent, cadence, layout, need_steps)
+        rows, laid = plan_beside(batch, history, cadence, layout, need_steps)
         yield from _beside(rows, history, laid, block_cells)
 
 
-def _beside(batch: Rows, history: Source, laid: Plan, block_cells: int) -> Iterator[Grid]:
+def plan_beside(
+    batch: Source, history: Source, cadence: Cadence, layout: Layout, need_steps: int | None = None
+) -> tuple[Rows, Plan]:
+    """The batch's rows by series, and the axis that they share with a history that is read block by block."""
+    rows, past = batch.rows().by_series(), history.extent(cadence)
+    return rows, plan(extent(rows, cadence, past), past, cadence, layout, need_steps)
+
+
+def _beside(batch: Rows, history: Source, laid: Plan, block_cells: int | None) -> Iterator[Grid]:
     """History's blocks, each with the batch's rows of the same series; then the series that only the batch knows."""
     left = np.ones(len(batch.keys), dtype=bool)
     for past in history.blocks():
-        left[_known(past.keys, batch.keys)] = False
+        left[known(past.keys, batch.keys)] = False
         yield from planned_grids(aligned(batch, past.keys), past, laid, block_cells)
     if left.any():
         yield from planned_grids(aligned(batch, batch.keys[left]), None, laid, block_cells)
 
 
-def _known(names: np.ndarray, among: np.ndarray) -> Ints:
+def known(names: np.ndarray, among: np.ndarray) -> Ints:
+    """Places of the names that are among others."""
     place = places_of(names, among)
     return place[place >= 0]
 
