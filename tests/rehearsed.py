@@ -15,8 +15,8 @@ Each is to cover in 90 % of the feeds at least. Beside them stands how often the
 the other half, which it is not made for.
 
 Measured (``--feeds 100 --batches 30 --budget "9 per 90D"``, six processes): the mean is covered in .99 of the feeds
-(.98 to 1.00), the next count in 1.00; the interval of the mean holds the other half's count in .74. Feeds had .9 false holds
-a half where the budget allows 3, so the counts are small and the exact intervals wide.
+(.98 to 1.00), the next count in 1.00; the interval of the mean holds the other half's count in .74. Feeds had .9 false
+holds a half where the budget allows 3, so the counts are small and the exact intervals wide.
 """
 
 from __future__ import annotations
