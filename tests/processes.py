@@ -1,6 +1,8 @@
-"""Panels of simulated feeds and false-alarm rates, for the tests of the measures."""
+"""Panels of simulated feeds and false-alarm rates, for the tests of the measures and for ``calibration``."""
 
 from __future__ import annotations
+
+import math
 
 import numpy as np
 
@@ -9,6 +11,10 @@ from sercheck.measure import Measure, Measurement, Question, Stays
 
 HOUR = 3_600_000_000_000
 LIKE = Stays("like_history")
+CYCLIC = (1.3, -0.7)
+"""AR(2) with a pseudo-cycle of nine rows."""
+MIXED = {"ma-0.8": ((-0.8,), ()), "arma11": ((-0.4,), (0.8,)), "arma21": ((0.4,), (1.1, -0.3))}
+SLOPE, SLOW = 0.01, 0.995
 
 
 def axis(steps, lengths=None, closed=None):
@@ -55,9 +61,102 @@ def garch(seed, series, steps, phi=0.6, warm=400):
     return x[warm:].T
 
 
+def fractional(seed, series, steps, d=0.3):
+    """Fractional noise (1 - B)^d x = e, exactly, by embedding its autocovariances in a circle (Davies and Harte 1987).
+
+    γ_0 = Γ(1 - 2d)/Γ(1 - d)², γ_k = γ_{k-1} (k - 1 + d)/(k - d) (Hosking 1981).
+    """
+    lags = np.arange(1, steps + 1)
+    gamma = math.gamma(1 - 2 * d) / math.gamma(1 - d) ** 2
+    covariances = np.concatenate([[gamma], gamma * np.cumprod((lags - 1 + d) / (lags - d))])
+    circle = np.concatenate([covariances, covariances[-2:0:-1]])
+    spectrum = np.fft.fft(circle).real
+    assert spectrum.min() > -1e-9
+    seeded = np.random.default_rng(seed)
+    both = seeded.normal(size=(series, 2, len(circle)))
+    turned = np.fft.fft(np.sqrt(np.maximum(spectrum, 0)) * (both[:, 0] + 1j * both[:, 1]), axis=1)
+    return turned.real[:, :steps] / np.sqrt(len(circle))
+
+
+def counts_with_memory(seed, series, steps, alpha=0.6, warm=100):
+    """INAR(1): of the last row's x items each stays with chance α, and a negative binomial number comes (mean 1)."""
+    seeded = np.random.default_rng(seed)
+    x = np.zeros((steps + warm, series), dtype=np.int64)
+    fresh = seeded.negative_binomial(1, 0.5, size=x.shape)
+    for t in range(1, len(x)):
+        x[t] = seeded.binomial(x[t - 1], alpha) + fresh[t]
+    return x[warm:].T.astype(float)
+
+
+def states(seeded, series, steps, stay, share):
+    """A chain of two states: True for a share of the steps, each stretch of True lasting 1/(1 - stay) on average."""
+    begin = (1 - stay) * share / (1 - share)
+    chance = seeded.random((steps, series))
+    on = np.zeros((steps, series), dtype=bool)
+    on[0] = chance[0] < share
+    for t in range(1, steps):
+        on[t] = np.where(on[t - 1], chance[t] < stay, chance[t] < begin)
+    return on.T
+
+
+def regimes(seed, series, steps, phi=0.6, warm=400):
+    """AR(1) whose innovations have variance 1 on average: 2.5 in a state that holds for 50 rows, else .5."""
+    seeded = np.random.default_rng(seed)
+    wild = states(seeded, series, steps + warm, 0.98, 0.25)
+    shocks = seeded.normal(size=wild.shape) * np.sqrt(np.where(wild, 2.5, 0.5))
+    for t in range(1, shocks.shape[1]):
+        shocks[:, t] += phi * shocks[:, t - 1]
+    return shocks[:, warm:]
+
+
+LOST = {"clusters": (5 / 6, 0.15), "5 %": (0.05, 0.05), "20 %": (0.2, 0.2)}
+"""How rows get lost: the chance that one is after a lost one, and the share of them."""
+
+
+def with_gaps(x, seed, how):
+    """Rows taken out, at random or in clusters of six."""
+    seeded = np.random.default_rng([9, *np.atleast_1d(seed)])
+    return np.where(states(seeded, *x.shape, *LOST[how]), np.nan, x)
+
+
+def moving(seed, series, steps, thetas, phi=()):
+    """ARMA: Σφ x_{t-j} + e_t + Σθ e_{t-j} with standard normal innovations."""
+    e = autoregressive(seed, series, steps + len(thetas), phi) if len(phi) else (
+        np.random.default_rng(seed).normal(size=(series, steps + len(thetas)))
+    )
+    first = len(thetas)
+    return e[:, first:] + sum(theta * e[:, first - j : -j] for j, theta in enumerate(thetas, start=1))
+
+
 def make(kind, seed, series, steps):
     """One of the processes that the measures are held against."""
     seeded = np.random.default_rng(seed)
+    if "; lost " in kind:
+        kind, how = kind.split("; lost ")
+        return with_gaps(make(kind, seed, series, steps), seed, how)
+    if kind == "cyclic":
+        return autoregressive(seed, series, steps, CYCLIC)
+    if kind in MIXED:
+        return moving(seed, series, steps, *MIXED[kind])
+    if kind == "fractional":
+        return fractional(seed, series, steps)
+    if kind == "inar":
+        return counts_with_memory(seed, series, steps)
+    if kind == "regimes":
+        return regimes(seed, series, steps)
+    if kind == "rounded":
+        return np.round(autoregressive(seed, series, steps, 0.6))
+    if kind == "walk":
+        return np.cumsum(seeded.normal(size=(series, steps)), axis=1)
+    if kind == "trend":
+        return autoregressive(seed, series, steps, 0.6) + SLOPE * np.arange(steps)
+    if kind == "wandering":  # a second, slow part: of the same variance as the first, with a memory of 200 rows
+        slow = autoregressive([7, *np.atleast_1d(seed)], series, steps, SLOW, warm=1500)
+        return autoregressive(seed, series, steps, 0.6) + 1.25 * np.sqrt(1 - SLOW**2) * slow
+    if kind == "two seasons":
+        hour = np.arange(steps)
+        weekend = hour % 168 >= 120
+        return make("seasonal", seed, series, steps) - weekend * (2 + np.sin(2 * np.pi * hour / 24))
     if kind == "white":
         return seeded.normal(size=(series, steps))
     if kind.startswith("ar"):
