@@ -128,7 +128,7 @@ class RecentPast:
 
     def inverse(self, y: Floats) -> Floats:
         """From the scale that is judged back to the feed's unit, shape (S, ...)."""
-        return off_scale(y, self.log) * self.scale.reshape(-1, *([1] * (y.ndim - 1)))
+        return _to_feed(y, self.log, self.scale)
 
     def _count(self, values: Floats) -> Ints:
         return np.asarray((~np.isnan(values[:, -self.n :])).sum(axis=1, keepdims=True), dtype=np.int64)
@@ -139,10 +139,10 @@ class RecentPast:
         """Where the batch lies, in the unit of the values; one look."""
         step = one_step(statistic.level(self.scores, self.n))
         middle = _last_mean(self.expected, self.n)
-        unit = self.places.unit
+        unit, log, scale = self.places.unit, self.log, self.scale  # not all of history, as the map outlives the block
 
         def to_unit(score: Floats) -> Floats:
-            return self.inverse(unit(score) + middle)
+            return _to_feed(unit(score) + middle, log, scale)
 
         n = self._count(self.scores)
         naive = 1 / np.sqrt(np.maximum(n, 1))
@@ -300,6 +300,11 @@ class RecentPast:
             self._without_held(fit.score), to_unit, self._count(self.y), np.ones((len(self.x), 1)), paused
         )
         return replace(told, observed=fit.estimate[:, -1:])  # the score is clipped, the estimate is not
+
+
+def _to_feed(y: Floats, log: Floats, scale: Floats) -> Floats:
+    """From the scale that is judged to the feed's unit, shape (S, ...)."""
+    return off_scale(y, log) * scale.reshape(-1, *([1] * (y.ndim - 1)))
 
 
 def _then(first: Map, second: Map) -> Map:
