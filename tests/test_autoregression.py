@@ -7,6 +7,7 @@ from processes import autoregressive
 from reference_values import closed, series, told
 
 from sercheck.serial import autoregression as module
+from sercheck.serial import reflections
 from sercheck.serial.autoregression import (
     Autoregression,
     burg,
@@ -86,7 +87,7 @@ def test_products_give_what_passes_over_the_series_give():
     x -= x.mean(axis=1, keepdims=True)
     for width in (1, 8, 26):
         k, exact = reflections_from_products(x, width)
-        np.testing.assert_allclose(k[exact], module._lattice(x, width)[exact], rtol=0, atol=1e-11)
+        np.testing.assert_allclose(k[exact], reflections._lattice(x, width)[exact], rtol=0, atol=1e-11)
         assert exact[:12].all()
         assert exact[12] == (width == 1)
 
@@ -96,7 +97,8 @@ def test_blocks_do_not_matter(monkeypatch):
     x = autoregressive(4, 30, 60, 0.5)
     x[::3, 10:14] = np.nan
     whole = burg(x)
-    monkeypatch.setattr(module, "BLOCK", 60 * 7)
+    for place in (module, reflections):
+        monkeypatch.setattr(place, "BLOCK", 60 * 7)
     for again, rows in ((burg(x), slice(None)), (burg(x[::4]), slice(None, None, 4))):
         np.testing.assert_array_equal(again.order, whole.order[rows])
         width = min(again.coefficients.shape[1], whole.coefficients.shape[1])

@@ -8,8 +8,9 @@ from processes import autoregressive, make
 from scipy import special
 
 from sercheck.serial.autoregression import burg, innovations, model_autocorrelation
-from sercheck.serial.far_lag import alone, with_far_lag
+from sercheck.serial.far_lag import with_far_lag
 from sercheck.serial.lag_law import bound_law, forward, lagged_alone
+from sercheck.serial.own_models import alone
 from sercheck.serial.partial_law import PartialLaws
 from sercheck.serial.sampling_error import autocorrelation_bias, mean_bias
 from sercheck.serial.season import phase_means

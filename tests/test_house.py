@@ -49,7 +49,7 @@ ALLOWED: dict[str, set[str]] = {
 """Rooms and what of ours they may import; a room that is not named here may import anything but ``cli``."""
 
 OUTSIDE: dict[str, set[str]] = {
-    "serial": {"numpy", "scipy.special"},
+    "serial": {"numpy", "scipy.special", "scipy.fft"},
     "grid": {"numpy"},
     "measure": {"numpy", "pydantic"},
     "measures": {"numpy", "pydantic", "scipy.special"},
@@ -60,7 +60,8 @@ OUTSIDE: dict[str, set[str]] = {
 """Libraries that a room may import, anywhere in its files."""
 
 LATE = {
-    "pandas", "pyarrow", "sqlalchemy", "statsmodels", "matplotlib", "scipy.stats", "scipy.signal", "jinja2", "dask",
+    "pandas", "pyarrow", "sqlalchemy", "statsmodels", "matplotlib", "scipy.stats", "scipy.signal", "scipy.fft",
+    "jinja2", "dask",
     "distributed",
     "apprise",
     "fsspec",

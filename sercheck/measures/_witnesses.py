@@ -13,9 +13,11 @@ from sercheck.baseline import chosen_seasons
 from sercheck.grid import Panel
 from sercheck.measure import Measurement, Question, Reasons, Reference
 from sercheck.measures._past import ToUnit, ask_rows, ask_variety, cell, mean, measured, past, taken_out, variance
+from sercheck.measures._window_models import own_models
 from sercheck.reference import Larger, Pivot
 from sercheck.serial.arrays import Floats
-from sercheck.serial.long_run import LongRun, autoregressive_long_run, cosine_long_run
+from sercheck.serial.long_run import LongRun, corrected_long_run, cosine_long_run, longest_order
+from sercheck.serial.own_models import OwnModels
 from sercheck.serial.season import phase_means
 
 FEWEST_ALONE = 96
@@ -93,7 +95,9 @@ def mean_alone(panel: Panel, question: Question) -> Measurement:
     told, reasons = past(panel), Reasons((len(past(panel).n), 1))
     values, taken = own_cycles_out(panel)
     level = mean(panel.window / told.scale[:, None])
-    first, second = autoregressive_long_run(values), cosine_long_run(values)
+    models = OwnModels(values) if taken else own_models(panel).in_unit(told.scale)
+    first = corrected_long_run(models.burg(longest_order(values.shape[1])))
+    second = cosine_long_run(models.data)
     ask_alone(reasons, panel, question, first, "a level", FEWEST_STRONG)
     rows = np.maximum(told.n, 1)
     spread = variance(values)

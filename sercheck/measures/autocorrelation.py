@@ -58,6 +58,7 @@ from sercheck.measures._lags import (
     window_counts,
 )
 from sercheck.measures._past import combined
+from sercheck.measures._window_models import own_models
 from sercheck.recent import enough, recent_measurement, recent_past
 from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.autocovariances import autocorrelation as sample
@@ -94,7 +95,9 @@ class Autocorrelation(Measure):
 
 def _against_bounds(panel: Panel, question: Question, lags: tuple[int, ...]) -> Measurement:
     steps: Ints = np.array(lags, dtype=np.int64)
-    seen = panel.remember(("lagged", lags), lambda: lagged_alone(panel.window, steps, panel.own_cycle))
+    seen = panel.remember(
+        ("lagged", lags), lambda: lagged_alone(panel.window, steps, panel.own_cycle, own_models(panel))
+    )
     return held_to_bounds(
         panel,
         question,

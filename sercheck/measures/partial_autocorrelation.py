@@ -58,8 +58,10 @@ from sercheck.measures._lags import (
     seasons_left,
     window_counts,
 )
+from sercheck.measures._window_models import own_models
 from sercheck.reference import Pivot, same
 from sercheck.serial.arrays import Floats, Ints
+from sercheck.serial.autocovariances import autocorrelation_of, step_down
 from sercheck.serial.autocovariances import partial_autocorrelation as sample
 from sercheck.serial.lag_law import forward
 from sercheck.serial.partial_law import PartialLaws, reflections
@@ -89,8 +91,11 @@ class PartialAutocorrelation(Measure):
 def _against_bounds(panel: Panel, question: Question, lags: tuple[int, ...]) -> Measurement:
     steps: Ints = np.array(lags, dtype=np.int64)
     n, n_missing = window_counts(panel, lags)
-    laws = panel.remember(("partial laws", lags), lambda: PartialLaws(panel.window, steps, panel.own_cycle))
-    observed = sample(panel.window, steps)
+    models = own_models(panel)
+    laws = panel.remember(
+        ("partial laws", lags), lambda: PartialLaws(panel.window, steps, panel.own_cycle, models)
+    )
+    observed = step_down(autocorrelation_of(models.data, np.arange(1, max(lags) + 1)))[:, steps - 1]
     bounds = literal_bounds(question)
     reasons = Reasons(n.shape)
     ask_variety(reasons, panel, observed, question.risk)

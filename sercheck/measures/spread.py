@@ -61,6 +61,7 @@ from sercheck.measures._past import (
     window_scores,
     without,
 )
+from sercheck.measures._window_models import own_models
 from sercheck.measures._witnesses import own_cycles_out, sides
 from sercheck.recent import enough as recent_enough
 from sercheck.recent import recent_measurement, recent_past
@@ -68,7 +69,7 @@ from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats, Ints
 from sercheck.serial.autoregression import Autoregression, model_autocorrelation
 from sercheck.serial.effective_sizes import effective_size_of
-from sercheck.serial.far_lag import alone
+from sercheck.serial.own_models import OwnModels
 from sercheck.serial.window_t import fewest_windows, window_t, windows
 
 FEWEST_ALONE = 336
@@ -264,7 +265,8 @@ def _alone(panel: Panel, question: Question) -> Measurement:
         "cycle evolves: too small a spread then needs history (below alone can be judged)",
     )
     rows = np.maximum(told.n, 2)
-    model, lags = alone(values, 1).model, min(200, max(told.steps - 1, 0))
+    models = OwnModels(values) if taken else own_models(panel)
+    model, lags = models.alone(1).model, min(200, max(told.steps - 1, 0))
     rho = model_autocorrelation(model, lags)
     about_mean = effective_size_of(rows, rho)
     size = effective_size_of(rows, rho**2)

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass, replace
 
 import numpy as np
 
 from sercheck.serial.arrays import Bools, Floats, Ints
-from sercheck.serial.burg_products import reflections_from_products
-from sercheck.serial.centre import Centred, centred
+from sercheck.serial.centre import centred
+from sercheck.serial.reflections import BLOCK, Reflected, blocks, reflected
 
 STEEPEST = 0.98
 """Largest modulus of a reflection coefficient that a null hypothesis may put into a model (keeps it stationary)."""
@@ -18,8 +19,8 @@ STEP, LONGEST = 1e-6, 0.3
 """Step of the numerical gradient (and change at which a series is done), and longest step of a round, in radians."""
 WIDTHS = (1, 2, 4, 8, 16)
 """Orders up to which models share a recursion (each wider one costs about twice the last)."""
-BLOCK = 1 << 15
-"""Values worked on at a time: two arrays of 256 kB stay in a second-level cache through all orders."""
+FEW = 2000
+"""Coefficients fewer than which are no recursion of their own (measured: a step costs a few microseconds anyway)."""
 
 
 @dataclass(frozen=True)
@@ -79,73 +80,18 @@ def burg(x: object, max_order: int | None = None, min_order: int = 0) -> Autoreg
         The models. Scale and shift of a series change neither order nor coefficients.
     """
     data = centred(x)
-    series, steps = data.values.shape
+    steps = data.values.shape[1]
+    width = max(largest_order(steps) if max_order is None else max_order, min_order)
+    return chosen(reflected(data, width), max_order, min_order)
+
+
+def chosen(told: Reflected, max_order: int | None = None, min_order: int = 0) -> Autoregression:
+    """``burg`` of series whose reflection coefficients are known, at least up to the highest order tried."""
+    data = told.data
+    steps = data.values.shape[1]
     width = max(largest_order(steps) if max_order is None else max_order, min_order)
     width = max(min(width, steps // 3), 0)
-    reflection = np.zeros((series, width))
-    weight = np.zeros((series, width))
-    block = max(1, BLOCK // max(steps, 1))
-    gaps = data.n < steps
-    whole = np.flatnonzero(~gaps)
-    weight[whole] = steps
-    if width:
-        rows_of = data.values if len(whole) == series else data.values[whole]
-        reflection[whole], exact = reflections_from_products(rows_of, width)
-        whole = whole[~exact]
-    for rows in _blocks(whole, block):
-        reflection[rows] = _lattice(data.values[rows], width)
-    for rows in _blocks(np.flatnonzero(gaps), block):
-        reflection[rows], weight[rows] = _lattice_with_gaps(data.values[rows], data.seen[rows], width)
-    return _chosen(data, reflection, weight, max_order, min_order)
-
-
-def _blocks(rows: Ints, size: int) -> list[Ints]:
-    return [rows[first : first + size] for first in range(0, len(rows), size)]
-
-
-def _lattice(x: Floats, width: int) -> Floats:
-    """Reflection coefficients of complete series."""
-    k = np.zeros((len(x), width))
-    f, b = x.copy(), x.copy()
-    held = np.empty_like(x)
-    for m in range(1, width + 1):
-        ahead, behind, spare = f[:, m:], b[:, m - 1 : -1], held[:, m:]
-        power = np.einsum("ij,ij->i", ahead, ahead) + np.einsum("ij,ij->i", behind, behind)
-        k[:, m - 1] = _ratio(2 * np.einsum("ij,ij->i", ahead, behind), power)
-        step = k[:, m - 1 : m]
-        np.multiply(ahead, step, out=spare)
-        np.subtract(behind, spare, out=spare)
-        behind *= step
-        ahead -= behind
-        # b of this order becomes the spare array, shifted by one step as the recursion wants it
-        b, held = held, b
-    return k
-
-
-def _lattice_with_gaps(x: Floats, seen: Bools, width: int) -> tuple[Floats, Floats]:
-    """Reflection coefficients and stretch counts plus order; f and b are 0 where a value of theirs is missing."""
-    k = np.zeros((len(x), width))
-    weight = np.zeros((len(x), width))
-    f, b = x.copy(), x.copy()
-    whole = seen.copy()
-    for m in range(1, width + 1):
-        whole = whole[:, 1:] & seen[:, : seen.shape[1] - m]
-        ahead, behind = f[:, 1:] * whole, b[:, :-1] * whole
-        power = np.einsum("ij,ij->i", ahead, ahead) + np.einsum("ij,ij->i", behind, behind)
-        k[:, m - 1] = _ratio(2 * np.einsum("ij,ij->i", ahead, behind), power)
-        weight[:, m - 1] = whole.sum(axis=1) + m
-        step = k[:, m - 1 : m]
-        f, b = ahead - step * behind, behind - step * ahead
-    return k, weight
-
-
-def _ratio(top: Floats, bottom: Floats) -> Floats:
-    return np.divide(top, bottom, out=np.zeros_like(top), where=bottom > 0)
-
-
-def _chosen(data: Centred, reflection: Floats, weight: Floats, max_order: int | None, min_order: int) -> Autoregression:
-    """Select each series' order and put the models together."""
-    width = reflection.shape[1]
+    reflection, weight = told.k[:, :width], told.weight[:, :width]
     orders = np.arange(1, width + 1)
     n = data.n[:, None].astype(np.float64)
     usual = 10 * np.log10(np.maximum(n, 1)) if max_order is None else np.full_like(n, max_order)
@@ -171,11 +117,33 @@ def _chosen(data: Centred, reflection: Floats, weight: Floats, max_order: int | 
 def step_up(reflection: Floats) -> Floats:
     """Coefficients a_1 .. a_P from reflection coefficients, both of shape (S, P) (Levinson 1947, Durbin 1960)."""
     a = np.zeros_like(reflection)
-    for m in range(reflection.shape[1]):
-        k = reflection[:, m : m + 1]
-        a[:, :m] -= k * a[:, :m][:, ::-1]
-        a[:, m] = reflection[:, m]
+    for rows, most in _alike(reflection):
+        a[rows, :most] = _stepped_up(reflection[rows, :most])
     return a
+
+
+def _stepped_up(reflection: Floats) -> Floats:
+    """The recursion with the orders in rows: each step works on whole rows of memory."""
+    k = np.ascontiguousarray(reflection.T)
+    a = np.zeros_like(k)
+    for m in range(len(k)):
+        a[:m] -= k[m] * a[:m][::-1]
+        a[m] = k[m]
+    return a.T
+
+
+def _alike(reflection: Floats) -> Iterator[tuple[Ints, int]]:
+    """Models that share a recursion, and its width: most are short, and padding them to the longest would cost most."""
+    width = reflection.shape[1]
+    order = np.where(reflection != 0, np.arange(1, width + 1), 0).max(axis=1, initial=0)
+    least = -1
+    for most in (*(one for one in WIDTHS if one < width), width):
+        rows = np.flatnonzero((order > least) & (order <= most))
+        if most < width and len(rows) * most < FEW:
+            continue
+        if len(rows):
+            yield rows, most
+        least = most
 
 
 def model_autocorrelation(model: Autoregression, lags: int) -> Floats:
@@ -185,17 +153,9 @@ def model_autocorrelation(model: Autoregression, lags: int) -> Floats:
 
 def _autocorrelation(reflection: Floats, lags: int) -> Floats:
     """The same from reflection coefficients, padded with zeros beyond each model's order."""
-    series, width = reflection.shape
-    order = np.where(reflection != 0, np.arange(1, width + 1), 0).max(axis=1, initial=0)
-    rho = np.empty((series, lags + 1))
-    least = -1
-    # most models are short: the recursion runs once for each width, over the models that need it
-    for most in (*WIDTHS, width):
-        rows = np.flatnonzero((order > least) & (order <= most))
-        if len(rows):
-            whole = len(rows) == series
-            rho[rows] = _durbin_levinson(reflection[:, :most] if whole else reflection[rows, :most], lags)
-        least = most
+    rho = np.empty((len(reflection), lags + 1))
+    for rows, most in _alike(reflection):
+        rho[rows] = _durbin_levinson(reflection[rows, :most], lags)
     return rho
 
 
@@ -204,6 +164,9 @@ def _durbin_levinson(reflection: Floats, lags: int) -> Floats:
     series, width = reflection.shape
     rho = np.zeros((lags + 1, series))
     rho[0] = 1.0
+    if width == 1:
+        rho[1:] = reflection.T
+        return np.ascontiguousarray(np.multiply.accumulate(rho, axis=0).T)
     a = np.zeros((width, series))
     left = np.ones(series)
     for m in range(min(width, lags)):
@@ -214,7 +177,7 @@ def _durbin_levinson(reflection: Floats, lags: int) -> Floats:
         left *= 1 - k**2
     backward = np.ascontiguousarray(a[::-1])
     for j in range(width + 1, lags + 1 if width else 0):
-        np.sum(backward * rho[j - width : j], axis=0, out=rho[j])
+        np.add.reduce(backward * rho[j - width : j], axis=0, out=rho[j])
     return np.ascontiguousarray(rho.T)
 
 
@@ -330,7 +293,7 @@ def innovations(x: object, model: Autoregression) -> Floats:
     if width:
         busy = by_order[: np.searchsorted(-order, 0, side="left")]
         block = max(1, BLOCK // max(steps, 1))
-        for rows in _blocks(busy, block):
+        for rows in blocks(busy, block):
             e[rows] = _filtered(values[rows], model.coefficients[rows], model.order[rows])
     e[~np.isfinite(e) | np.isnan(model.variance)[:, None]] = np.nan
     return e

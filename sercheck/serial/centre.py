@@ -45,8 +45,10 @@ def centred(x: object) -> Centred:
     twice: the deviations from a first mean are nearly exact, and their own mean removes what it missed.
 
     Args:
-        x: one series or (S, T); NaN and infinite values are missing.
+        x: one series or (S, T); NaN and infinite values are missing. What is centred already comes back as it is.
     """
+    if isinstance(x, Centred):
+        return x
     x = as_series(x)
     seen = ~np.isnan(x)
     n = seen.sum(axis=1)

@@ -19,8 +19,9 @@ from sercheck.serial.autoregression import (
     root_beyond,
 )
 from sercheck.serial.centre import centred
-from sercheck.serial.far_lag import ROOT, alone
+from sercheck.serial.far_lag import ROOT
 from sercheck.serial.gap_variance import gapped_variance, row_counts
+from sercheck.serial.own_models import OwnModels
 from sercheck.serial.sampling_error import Residuals, autocorrelation_bias, bartlett_weights, mean_bias, model_lags
 from sercheck.serial.window_t import WindowT, count_windows, window_t, windows
 
@@ -98,13 +99,17 @@ def lagged(x: Floats, lags: Ints) -> Lagged:
     return Lagged(r, rows, data.seen, model, residuals, lags, root_beyond(model, ROOT))
 
 
-def lagged_alone(x: Floats, lags: Ints, cycle: int = 1) -> Lagged:
+def lagged_alone(x: Floats, lags: Ints, cycle: int = 1, models: OwnModels | None = None) -> Lagged:
     """The same of a window that is judged without a history: its model may hold an echo beyond its order.
 
-    ``cycle``: steps of the cycle whose means, of these very rows, were taken out; 1 for the mean alone.
+    Args:
+        x: shape (S, T), NaN is missing.
+        lags: from 1.
+        cycle: steps of the cycle whose means, of these very rows, were taken out; 1 for the mean alone.
+        models: those of ``x``, where other statistics need them too.
     """
-    data = centred(x)
-    own = alone(x, int(lags.max(initial=1)))
+    models = OwnModels(x) if models is None else models
+    own, data = models.alone(int(lags.max(initial=1))), models.data
     r, rows = autocorrelation_of(data, lags), row_counts(data.seen, lags)
     return Lagged(r, rows, data.seen, own.model, own.residuals, lags, own.wanders, cycle)
 

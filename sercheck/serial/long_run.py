@@ -171,6 +171,11 @@ def model_long_run(model: Autoregression) -> Floats:
     return np.asarray(model.variance / np.prod(1 - model.reflection, axis=1) ** 2, dtype=np.float64)
 
 
+def longest_order(steps: int) -> int:
+    """Highest order of the autoregressions that long-run variances are taken from: min(10 log10 n, n/6)."""
+    return min(largest_order(steps), steps // 6)
+
+
 def autoregressive_long_run(x: object, trend: bool = False) -> LongRun:
     """Long-run variance by Burg's autoregression, corrected for its bias.
 
@@ -186,8 +191,7 @@ def autoregressive_long_run(x: object, trend: bool = False) -> LongRun:
     Returns:
         NaN for a series that is constant or has no two successive values.
     """
-    steps = np.atleast_2d(np.asarray(x)).shape[-1]
-    return corrected_long_run(burg(x, max_order=min(largest_order(steps), steps // 6)), trend)
+    return corrected_long_run(burg(x, max_order=longest_order(np.atleast_2d(np.asarray(x)).shape[-1])), trend)
 
 
 def corrected_long_run(model: Autoregression, trend: bool = False) -> LongRun:

@@ -14,7 +14,8 @@ from sercheck.serial.autoregression import (
     step_up,
 )
 from sercheck.serial.centre import centred
-from sercheck.serial.far_lag import alone
+from sercheck.serial.own_models import OwnModels
+from sercheck.serial.reflections import Reflected, blocks
 from sercheck.serial.sampling_error import mean_bias, model_lags
 
 BLOCK = 1 << 15
@@ -43,7 +44,7 @@ class PartialLaw:
     error: Floats
 
 
-def reflections(x: object, lags: Ints) -> Reflections:
+def reflections(x: object, lags: Ints, known: Reflected | None = None) -> Reflections:
     """Burg's recursion (Burg 1975) up to the largest lag, nothing closed up over gaps.
 
     With f and b the forward and backward prediction errors of order j - 1, k_j = 2 Σ f_t b_{t-1}/Σ (f_t² + b_{t-1}²).
@@ -51,14 +52,18 @@ def reflections(x: object, lags: Ints) -> Reflections:
     Args:
         x: one series or (S, T); NaN is missing.
         lags: from 1, shape (L,).
+        known: what is known of complete series already; the recursion goes over the others.
     """
     data = centred(x)
     series, steps = data.values.shape
     k = np.full((series, len(lags)), np.nan)
     rows = np.zeros(k.shape, dtype=np.int64)
+    left = np.arange(series)
+    if known is not None and lags.max(initial=0) <= known.k.shape[1]:
+        k[known.easy], rows[known.easy] = known.k[known.easy][:, lags - 1], steps
+        left = np.flatnonzero(~known.easy)
     block = max(1, BLOCK // max(steps, 1))
-    for first in range(0, series, block):
-        part = slice(first, first + block)
+    for part in blocks(left, block):
         f = b = data.values[part]
         seen = whole = data.seen[part]
         for order in range(1, min(int(lags.max(initial=0)), steps - 1) + 1):
@@ -67,8 +72,8 @@ def reflections(x: object, lags: Ints) -> Reflections:
             power = np.einsum("ij,ij->i", ahead, ahead) + np.einsum("ij,ij->i", behind, behind)
             step = 2 * np.einsum("ij,ij->i", ahead, behind) / np.where(power > 0, power, np.inf)
             here = np.flatnonzero(lags == order)
-            k[part, here] = step[:, None]
-            rows[part, here] = np.where(power > 0, whole.sum(axis=1) + order, 0)[:, None]
+            k[part[:, None], here] = step[:, None]
+            rows[part[:, None], here] = np.where(power > 0, whole.sum(axis=1) + order, 0)[:, None]
             f, b = ahead - step[:, None] * behind, behind - step[:, None] * ahead
     return Reflections(np.where(data.varies[:, None] & (rows > 0), k, np.nan), rows)
 
@@ -80,12 +85,15 @@ class PartialLaws:
         x: the series, shape (S, T), NaN is missing.
         lags: from 1, shape (L,).
         cycle: steps of the cycle whose means, of these very rows, were taken out; 1 for the mean alone.
+        models: those of ``x``, where other statistics need them too.
     """
 
-    def __init__(self, x: Floats, lags: Ints, cycle: int = 1) -> None:
+    def __init__(self, x: Floats, lags: Ints, cycle: int = 1, models: OwnModels | None = None) -> None:
         self.lags, self.cycle = lags, cycle
-        self.estimate = reflections(x, lags)
-        own = alone(x, int(lags.max(initial=1)))
+        models = OwnModels(x) if models is None else models
+        longest = int(lags.max(initial=1))
+        self.estimate = reflections(models.data, lags, models.reflected(longest))
+        own = models.alone(longest)
         self.model, self.residuals, self.wanders = own.model, own.residuals, own.wanders
 
     def under(self, b: float) -> PartialLaw:

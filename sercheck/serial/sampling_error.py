@@ -6,6 +6,8 @@ as 0 beyond L.
 
 from __future__ import annotations
 
+from copy import copy
+
 import numpy as np
 from scipy import special
 
@@ -130,6 +132,7 @@ class Residuals:
         self.order = order
         self.parameters = order if parameters is None else parameters
         self.power = np.einsum("ij,ij->i", self.e, self.e)
+        self._spectrum: tuple[int, np.ndarray] | None = None
 
     def robust_variance(self, weights: Floats, n: Floats | Ints, lag: int = 1) -> Floats:
         """Variance of r_k that does not suppose independent innovations (after Taylor 1984), shape (S,).
@@ -154,9 +157,12 @@ class Residuals:
         total = np.empty(len(self.e))
         terms = np.empty(len(self.e))
         block = max(1, BLOCK // size)
+        spectrum = self._transformed(size)
         for first in range(0, len(self.e), block):
             rows = slice(first, first + block)
-            total[rows] = np.einsum("ij,ij->i", self.e[rows] ** 2, _filtered(self.e[rows], weights[rows], size) ** 2)
+            foreseen = np.fft.irfft(spectrum[rows] * np.fft.rfft(weights[rows], size), size)[:, : max(steps - 1, 0)]
+            foreseen *= self.e[rows, 1:]
+            total[rows] = np.einsum("ij,ij->i", foreseen, foreseen)
             terms[rows] = self._terms(rows, squares[rows], size)
         count = self.count
         rows_that_count = np.asarray(n, dtype=np.float64)
@@ -167,6 +173,30 @@ class Residuals:
             share = total / self.power**2 * count**2 / terms
             variance = np.where(freedom > 0, rows_that_count / freedom, np.nan) * share * full / whole**2
         return np.where((self.power > 0) & (terms > 0), variance, np.nan)
+
+    def changed(self, rows: Ints, other: Residuals) -> Residuals:
+        """The same innovations, those of ``rows`` from another block."""
+
+        def put(name: str) -> np.ndarray:
+            whole: np.ndarray = getattr(self, name).copy()
+            whole[rows] = getattr(other, name)
+            return whole
+
+        result = copy(self)
+        vars(result).update({name: put(name) for name in ("seen", "e", "count", "order", "parameters", "power")})
+        if self._spectrum is not None:
+            spectrum = self._spectrum[1].copy()
+            spectrum[rows] = other._transformed(self._spectrum[0])
+            vars(result)["_spectrum"] = self._spectrum[0], spectrum
+        return result
+
+    def _transformed(self, size: int) -> np.ndarray:
+        """The innovations' transform of ``size`` points: most statistics ask for the same."""
+        if self._spectrum is None or self._spectrum[0] != size:
+            block = max(1, BLOCK // size)
+            parts = [np.fft.rfft(self.e[first : first + block], size) for first in range(0, len(self.e), block)]
+            self._spectrum = size, np.concatenate(parts or [np.zeros((0, size // 2 + 1), dtype=np.complex128)])
+        return self._spectrum[1]
 
     def _terms(self, rows: slice, squares: Floats, size: int) -> Floats:
         """Σ_t Σ_j W_j² over the pairs whose innovations are both there."""
