@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from sercheck import serial
+    from sercheck.drafting.run import Draft, draft
     from sercheck.errors import BatchHeld, SercheckError
     from sercheck.intake.databases import rows
     from sercheck.portrait.whole import Study, study
@@ -18,17 +19,19 @@ if TYPE_CHECKING:
     from sercheck.verdict import Verdict, gate
 
 __all__ = [
-    "BatchHeld", "SercheckError", "Study", "Verdict", "__version__", "gate", "load_rules", "rehearse", "rows", "serial",
-    "study",
+    "BatchHeld", "Draft", "SercheckError", "Study", "Verdict", "__version__", "draft", "gate", "load_rules", "rehearse",
+    "rows", "serial", "study",
 ]  # fmt: skip
 
 __version__ = "0.1.0"
 
 _PLACES = {
     "BatchHeld": "sercheck.errors",
+    "Draft": "sercheck.drafting.run",
     "SercheckError": "sercheck.errors",
     "Study": "sercheck.portrait.whole",
     "Verdict": "sercheck.verdict",
+    "draft": "sercheck.drafting.run",
     "gate": "sercheck.verdict",
     "load_rules": "sercheck.rulebook",
     "rehearse": "sercheck.rehearsal.run",

@@ -21,6 +21,7 @@ from sercheck.errors import OutputError, RuleFileError, SercheckError
 
 COMMANDS = {
     "study": "what the feed's serial correlation looks like",
+    "draft": "a first rule file, with bounds from history",
     "learn": "learn the baseline, fill the archive",
     "gate": "judge a batch",
     "settle": "a person overrules: release or discard a held batch, or declare a new regime",

@@ -147,7 +147,7 @@ def study(
     Raises:
         SercheckError: the history cannot be read, or has no time or value column.
     """
-    history = _named_index(history)
+    history = named_index(history)
     found = guess(history, time=time, series=series, values=values, every=every, timezone=timezone)
     natural = {name: steps for name, (steps, _) in calendar_seasons(found.layout.every).items()}
     source = open_feed(history, found.layout)
@@ -179,7 +179,7 @@ def _unstamped(grid: Grid) -> Grid:
     return replace(grid, axis=replace(grid.axis, stamps=np.full(len(grid.axis), NOT_A_STAMP)))
 
 
-def _named_index(history: Given) -> Given:
+def named_index(history: Given) -> Given:
     """A frame whose nameless index holds dates has a column ``time``."""
     if isinstance(history, str | Path | Sequence):
         return history
