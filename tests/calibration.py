@@ -42,7 +42,7 @@ nothing judged; no mark: no target. n_eff: as records tell it / as the observati
 
 
 def rules_of(
-    group: Group, risks: Iterable[float], measures: Collection[str] = ()
+    group: Group, risks: Iterable[float], measures: Collection[str] = (), only: Collection[str] = ()
 ) -> tuple[str, dict[str, tuple[str, str, float]]]:
     """The rule file of a group as YAML, and for each rule's name its question, form (with its side) and risk."""
     process = PROCESSES[group.process]
@@ -50,6 +50,8 @@ def rules_of(
     columns = ["x"]
     for name, question in group.questions.items():
         keys = question.rule(process)
+        if only and name not in only:
+            continue
         for form in question.forms:
             wanted = not measures or keys["measure"] in measures
             if not wanted or form not in group.forms or not question.fits(process, form, group.n):
@@ -166,6 +168,14 @@ def count(group: Group, risks: Iterable[float], replications: int, measures: Col
     return pd.concat([names.assign(**where), total.reset_index(drop=True)], axis=1)
 
 
+def exact_interval(found, tried):
+    """The 95 % interval of a share (Clopper and Pearson 1934)."""
+    found, tried = np.asarray(found, dtype=float), np.asarray(tried, dtype=float)
+    low = special.betaincinv(np.maximum(found, 0.5), tried - found + 1, 0.025)
+    high = special.betaincinv(found + 1, np.maximum(tried - found, 0.5), 0.975)
+    return np.where(found > 0, low, 0.0), np.where(found < tried, high, 1.0)
+
+
 def rated(counts: pd.DataFrame) -> pd.DataFrame:
     """Counts with rates, their exact 95 % intervals (Clopper and Pearson 1934), targets and how they compare."""
     table = counts.copy()
@@ -174,15 +184,12 @@ def rated(counts: pd.DataFrame) -> pd.DataFrame:
         table["naive_rate"] = table["naive"] / table["compared"]
         table["mean_n_eff"] = table["n_eff"] / table["sized"]
     table["undecided"] /= table["records"]
-    failed, judged = table["failed"].to_numpy(), table["judged"].to_numpy()
-    low = special.betaincinv(np.maximum(failed, 0.5), judged - failed + 1, 0.025)
-    high = special.betaincinv(failed + 1, np.maximum(judged - failed, 0.5), 0.975)
-    table["low"], table["high"] = np.where(failed > 0, low, 0.0), np.where(failed < judged, high, 1.0)
+    table["low"], table["high"] = exact_interval(table["failed"].to_numpy(), table["judged"].to_numpy())
     targets = [_target(row) for row in table.itertuples()]
     table["least"], table["most"] = zip(*targets, strict=True) if targets else ((), ())
     table["weakness"] = [weakness(row.question, row.asked, row.process, row.n) for row in table.itertuples()]
     marks = {
-        "none": judged == 0,
+        "none": table["judged"] == 0,
         "": table["most"].isna(),
         "known": too_many(table) & table["weakness"].ne(""),
         "MISSES": too_many(table),
@@ -287,6 +294,7 @@ def main(arguments: list[str] | None = None) -> int:
     what.add_argument("--gaps", action="store_true", help="missing rows, windows that overlap, gated histories, budget")
     what.add_argument("--page", type=Path, help="write a page with curves of size and power (of --table, if given)")
     reader.add_argument("--table", type=Path, help="for --page: a table that --out wrote")
+    reader.add_argument("--curves", type=Path, help="for --page: a table that --power --out wrote")
     asked = reader.parse_args(arguments)
     if asked.power or asked.gaps or asked.page:
         return _others(asked)
@@ -307,7 +315,7 @@ def _others(asked: argparse.Namespace) -> int:
         return power.report(asked.replications, asked.measure, asked.seed, asked.out)
     if asked.gaps:
         return gaps.report(asked.replications, asked.measure, asked.seed, asked.out)
-    return calibration_page.write(asked.page, asked.table, asked.replications, asked.seed)
+    return calibration_page.write(asked.page, asked.table, asked.curves, asked.replications, asked.seed)
 
 
 if __name__ == "__main__":
