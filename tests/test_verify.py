@@ -1,30 +1,50 @@
 from __future__ import annotations
 
 import json
+import shutil
 from pathlib import Path
 
 import pandas as pd
 import pytest
+from fsspec.implementations.memory import MemoryFileSystem
 from gate_runs import DAY, NOW, Place, place, water
+from servers import new_database
 from sqlalchemy import NullPool, create_engine, text
 
 from sercheck.store import prune
 
 
+@pytest.fixture(scope="module")
+def templates(tmp_path_factory) -> dict[str, tuple[Path, str]]:
+    """Of each kind of store the folder and the ledger's URL of one that was made, for the tests to copy."""
+    return {}
+
+
 @pytest.fixture(params=["sqlite", "postgresql"])
-def here(request, tmp_path, capsys, monkeypatch) -> Place:
+def here(request, tmp_path, capsys, monkeypatch, templates, tmp_path_factory) -> Place:
     """A store of each kind with a learned history, a released and a held batch."""
-    made = place(tmp_path, capsys, monkeypatch)
-    url = f"sqlite:///{tmp_path}/.sercheck/ledger.sqlite"
-    if request.param == "postgresql":
-        url = request.getfixturevalue("server")
+    servers = request.param == "postgresql"
+    if request.param not in templates:
+        made = place(tmp_path_factory.mktemp("template"), capsys, monkeypatch)
+        url = request.getfixturevalue("server") if servers else f"sqlite:///{made.folder}/.sercheck/ledger.sqlite"
         monkeypatch.setenv("SERCHECK_LEDGER", url)
+        assert made.sercheck("learn", "rules.yaml", "history.csv").status == 0
+        assert made.gate("batch.csv", history=None).status == 0
+        made.frame("bad.csv", water(DAY + pd.Timedelta(days=1), 1, seed=4).assign(cm=777.0))
+        assert made.gate("bad.csv", "--as-of", "2026-03-12T01:00:00Z", history=None).status == 1
+        templates[request.param] = made.folder, url
+    folder, url = templates[request.param]
+    shutil.copytree(folder, tmp_path, dirs_exist_ok=True)
+    monkeypatch.chdir(tmp_path)
+    monkeypatch.delenv("SERCHECK_STORE", raising=False)
+    monkeypatch.delenv("SERCHECK_LEDGER", raising=False)
+    if servers:
+        url = new_database(request.getfixturevalue("running_server"), url)
+        monkeypatch.setenv("SERCHECK_LEDGER", url)
+    else:
+        url = f"sqlite:///{tmp_path}/.sercheck/ledger.sqlite"
     monkeypatch.setenv("LEDGER_OF_TEST", url)
-    assert made.sercheck("learn", "rules.yaml", "history.csv").status == 0
-    assert made.gate("batch.csv", history=None).status == 0
-    made.frame("bad.csv", water(DAY + pd.Timedelta(days=1), 1, seed=4).assign(cm=777.0))
-    assert made.gate("bad.csv", "--as-of", "2026-03-12T01:00:00Z", history=None).status == 1
-    return made
+    return Place(tmp_path, capsys, monkeypatch)
 
 
 def change(here: Place, statement: str) -> None:
@@ -87,28 +107,110 @@ def test_a_ledger_that_was_meddled_with(here, statement, said):
 
 @pytest.mark.parametrize("here", ["sqlite"], indirect=True)
 def test_an_archive_that_lost_something(here):
-    """A missing, a cut and a changed file, a missing entry and a missing archive are each told."""
+    """A missing, a cut, a changed and a foreign file, a missing entry and a missing archive are each told."""
     (part,) = files(here, "2026-03-10/harbour*.parquet")
     content = part.read_bytes()
-    part.write_bytes(content[:-9])
-    assert "no whole Parquet file" in verified(here)[1][0]
-    part.unlink()
-    assert verified(here) == (1, ["0 of its 48 rows are in the archive"])
     (other,) = files(here, "2026-03-11/harbour*.parquet")
-    part.write_bytes(other.read_bytes())
-    assert verified(here) == (1, ["its rows in the archive are of other times than when they were kept"])
+    flipped = bytearray(content)
+    flipped[len(content) // 2] ^= 1
+    for wrong in (content[:-9], other.read_bytes(), bytes(flipped), b""):
+        part.write_bytes(wrong)
+        status, (said,) = verified(here)
+        assert (status, said[:34]) == (1, "its bytes are not those that were ")
+    part.unlink()
+    assert verified(here) == (1, ["the file cannot be read: the archive cannot be read: no such file or directory"])
     part.write_bytes(content)
     assert verified(here) == (0, [])
+    for foreign in (part.with_name("harbour_water-other.parquet"), part.parent / "notes.txt", part.parents[1] / "notes",
+                    part.parents[1] / "log" / "notes"):  # fmt: skip
+        foreign.write_bytes(content)
+        assert verified(here) == (1, ["no batch in the archive's log has this file"])
+        foreign.unlink()
+    (part.parents[2] / "harbor_water").mkdir()
+    assert verified(here) == (1, ["the ledger knows no feed of this name"])
+    (part.parents[2] / "harbor_water").rmdir()
     entry = next(path for path in files(here, "log/*.json") if '"released"' in path.read_text() and
                  "harbour_water-" in path.read_text())  # fmt: skip
     said = entry.read_text()
     entry.write_text("{")
     assert "cannot be read" in verified(here)[1][0]
     entry.unlink()
-    assert verified(here) == (1, ["it is released and the archive has none of its rows"])
+    faults = ["it is released and the archive has none of its rows", "no batch in the archive's log has this file"]
+    assert verified(here) == (1, faults)
     assert here.gate("batch.csv", history=None).status == 0
     assert verified(here) == (0, [])
     assert "harbour_water" in said
+
+
+@pytest.mark.parametrize("here", ["sqlite"], indirect=True)
+def test_files_kept_before_their_hashes_were(here):
+    """An archive of an older version is counted and read as ever, and what is not checked is said."""
+    for path in files(here, "log/*.json"):
+        entry = json.loads(path.read_text())
+        assert len(entry.pop("hashes")) >= 1
+        path.write_text(json.dumps(entry))
+    ended = here.sercheck("ledger", "verify")
+    assert ended.status == 0
+    assert "42 files without a hash (kept by an older version) are unchecked but for their rows" in ended.out
+    (part,) = files(here, "2026-03-10/harbour*.parquet")
+    (other,) = files(here, "2026-03-11/harbour*.parquet")
+    content = part.read_bytes()
+    part.write_bytes(other.read_bytes())
+    assert verified(here) == (1, ["its rows in the archive are of other times than when they were kept"])
+    part.write_bytes(content[:-9])
+    assert "no whole Parquet file" in verified(here)[1][0]
+    part.unlink()
+    assert verified(here) == (1, ["0 of its 48 rows are in the archive"])
+
+
+@pytest.mark.parametrize("named", [True, False])
+def test_an_archive_at_a_url_that_lost_something(tmp_path, capsys, monkeypatch, named):
+    """The same at a URL, with the hashes in the log and, in an older log, in the names of the objects."""
+    MemoryFileSystem.store.clear()
+    monkeypatch.setattr(MemoryFileSystem, "pseudo_dirs", [""])
+    here = place(tmp_path, capsys, monkeypatch)
+    monkeypatch.setenv("SERCHECK_STORE", "memory://bucket/prefix")
+    monkeypatch.setenv("SERCHECK_LEDGER", f"sqlite:///{tmp_path}/ledger.db")
+    assert here.sercheck("learn", "rules.yaml", "history.csv").status == 0
+    assert here.gate("batch.csv", history=None).status == 0
+    if not named:
+        for name in [name for name in MemoryFileSystem.store if "/log/" in name]:
+            entry = json.loads(MemoryFileSystem.store[name].getvalue())
+            del entry["hashes"]
+            MemoryFileSystem().pipe_file(name, json.dumps(entry).encode())
+    ended = json.loads(here.sercheck("ledger", "verify", "--format", "json").out)
+    assert (ended["faults"], ended["files"], ended["unchecked"]) == ([], 41, 0)
+    (name,) = [name for name in MemoryFileSystem.store if "/2026-03-10/" in name]
+    content = MemoryFileSystem.store[name].getvalue()
+    flipped = bytearray(content)
+    flipped[len(content) // 2] ^= 1
+    files = MemoryFileSystem()
+    files.pipe_file(name, bytes(flipped))
+    assert "its bytes are not those that were written" in verified(here)[1][0]
+    files.pipe_file(name, content[:-9])
+    assert verified(here) == (1, [f"it has {len(content) - 9} bytes instead of {len(content)}"])
+    files.rm(name)
+    assert verified(here) == (1, ["the file cannot be read: there is no such place or object"])
+    files.pipe_file(name, content)
+    files.pipe_file(name.replace(".parquet", "0.parquet"), content)
+    assert verified(here) == (1, ["no batch in the archive's log has this file"])
+    files.rm(name.replace(".parquet", "0.parquet"))
+    files.pipe_file("/bucket/prefix/archive/harbor_water/log/x", b"")
+    assert verified(here) == (1, ["the ledger knows no feed of this name"])
+    MemoryFileSystem.store.clear()
+
+
+def test_an_archive_at_the_url_of_a_folder(tmp_path, capsys, monkeypatch):
+    """``file://`` is a folder: a flipped byte there is told."""
+    here = place(tmp_path, capsys, monkeypatch)
+    monkeypatch.setenv("SERCHECK_STORE", f"file://{tmp_path}/by%20url")
+    assert here.gate("batch.csv").status == 0
+    assert verified(here) == (0, [])
+    (part,) = (tmp_path / "by url" / "archive").rglob("*.parquet")
+    content = bytearray(part.read_bytes())
+    content[len(content) // 2] ^= 1
+    part.write_bytes(content)
+    assert "its bytes are not those that were written" in verified(here)[1][0]
 
 
 def test_a_store_with_nothing_in_it(tmp_path, capsys, monkeypatch):

@@ -19,8 +19,8 @@ _FORM = click.option("--format", "form", type=click.Choice(["text", "json"]), de
 def verify(form: str, store: str | None) -> None:
     """Check that the store holds together; tell what is wrong and what to do.
 
-    Every batch has its records, every released batch its rows in the archive, every file is whole. Nothing is changed.
-    Ends with 0 when all is well, 1 when something is wrong.
+    Every batch has its records, every released batch its rows in the archive, every file the bytes that were
+    written. Nothing is changed. Ends with 0 when all is well, 1 when something is wrong.
     """
     from sercheck.store.ledger import open_ledger
     from sercheck.store.where import archive_place
@@ -36,9 +36,11 @@ def verify(form: str, store: str | None) -> None:
         for fault in found.faults:
             click.echo(fault.sentence())
         wrong = f"{len(found.faults)} faults" if found.faults else "nothing is wrong"
+        old = f"; {found.unchecked} files without a hash (kept by an older version) are unchecked but for their rows"
+        old = old if found.unchecked else ""
         click.echo(
             f"{wrong} in {place}: {found.batches} batches, {found.records} records, {found.files} files with "
-            f"{found.rows} rows"
+            f"{found.rows} rows{old}"
         )
     sys.exit(1 if found.faults else 0)
 

@@ -7,7 +7,8 @@ under a hidden name, flushed and then named: a batch is there whole from its ent
 the process dies. An entry's name is nobody else's, so that of several processes none undoes what another wrote.
 
 At a URL the same names are objects, but that the name of a day's rows also holds the hash of its bytes, and the entry
-says which objects belong to it: nothing is ever written over, and a day is found without listing.
+says which objects belong to it: nothing is ever written over, and a day is found without listing. Here and there the
+entry has the hash of every file that was written.
 """
 
 from __future__ import annotations
@@ -55,6 +56,7 @@ class Entry:
         rows: rows kept, each stamp once.
         parts: names and sizes in bytes of the objects that hold the rows, where their names do not follow from the
             batch's.
+        hashes: names and hashes of all files that were written with it; empty in a log older than them.
     """
 
     number: int
@@ -65,6 +67,7 @@ class Entry:
     last: int
     rows: int
     parts: tuple[tuple[str, int], ...] = ()
+    hashes: tuple[tuple[str, str], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -118,7 +121,7 @@ class Archive:
     def __init__(self, folder: str | Path, feed: str) -> None:
         self.feed = feed
         name = feed_folder(feed)
-        self.place: Place = Objects(f"{folder}/{name}") if "://" in str(folder) else Folder(Path(folder) / name)
+        self.place = place_at(f"{folder}/{name}" if "://" in str(folder) else Path(folder) / name)
         self._read: dict[str, Entry] = {}
 
     @property
@@ -169,8 +172,8 @@ class Archive:
             adding = Adding(self.place, batch_id, files)
             yield adding
         if adding.rows:
-            parts = tuple(sorted(adding.parts))
-            self._enter(Entry(0, batch_id, what, fingerprint, adding.first, adding.last, adding.rows, parts))
+            parts, hashes = tuple(sorted(adding.parts)), tuple(sorted(adding.hashes))
+            self._enter(Entry(0, batch_id, what, fingerprint, adding.first, adding.last, adding.rows, parts, hashes))
 
     def mark(self, known: Entry, what: What) -> None:
         """Say that something else became of a batch whose rows are there."""
@@ -180,7 +183,7 @@ class Archive:
     def _enter(self, entry: Entry) -> None:
         newest = max((int(name.partition("-")[0]) for name in self._names_of_entries()), default=0)
         entry = replace(entry, number=max(time.time_ns(), newest + 1))
-        facts = {name: value for name, value in asdict(entry).items() if name != "parts" or value}
+        facts = {name: value for name, value in asdict(entry).items() if name not in ("parts", "hashes") or value}
         name = f"log/{entry.number:020d}-{secrets.token_hex(4)}.json"
         self.place.write(name, json.dumps(facts, ensure_ascii=False).encode())
 
@@ -198,7 +201,8 @@ class Archive:
         try:
             facts = json.loads(content)
             parts = tuple((str(each), int(size)) for each, size in facts.pop("parts", ()))
-            return Entry(**facts, parts=parts)
+            hashes = tuple((str(each), str(digest)) for each, digest in facts.pop("hashes", ()))
+            return Entry(**facts, parts=parts, hashes=hashes)
         except (ValueError, TypeError, AttributeError) as error:
             raise StoreError(
                 without_password(str(self.place.path(f"log/{name}"))),
@@ -230,6 +234,7 @@ class Adding:
         self._place, self._batch_id, self._files = place, batch_id, files
         self._writers: dict[str, Any] = {}
         self.parts: list[tuple[str, int]] = []
+        self.hashes: list[tuple[str, str]] = []
         self.rows, self.first, self.last = 0, 2**63 - 1, -(2**63)
 
     def add(self, day: str, table: pa.Table, first: int, last: int) -> Self:
@@ -248,8 +253,15 @@ class Adding:
         self.first, self.last = min(self.first, first), max(self.last, last)
         return self
 
-    def _told(self, name: str, size: int) -> None:
-        self.parts.append((name, size))
+    def _told(self, name: str, size: int, digest: str) -> None:
+        self.hashes.append((name, digest))
+        if not name.endswith(f"/{self._batch_id}.parquet"):  # a name that does not follow from the batch's
+            self.parts.append((name, size))
+
+
+def place_at(folder: str | Path) -> Place:
+    """A folder, or the place for objects at a URL."""
+    return Objects(str(folder)) if "://" in str(folder) else Folder(Path(folder))
 
 
 def feed_folder(feed: str) -> str:

@@ -1,7 +1,10 @@
-"""A place for objects (a bucket, any other fsspec URL) as the place of the archive; depends on ``where``.
+"""A place for objects (a bucket, any other fsspec URL) as the place of the archive; depends on ``where`` and
+``hashed``.
 
 An object is written whole under a name that nobody else gives to other content (rows carry the hash of their bytes,
 entries random letters), so that nothing is ever written over and a reader who knows a name finds all of it or nothing.
+Buckets show an object when it is whole; where the place behind a URL is made of folders that can rename (a disk, a file
+server), it is written under a hidden name first, so that a writer who dies half-way leaves nothing that counts.
 Credentials and endpoints come from where fsspec's own packages look for them, never from us.
 """
 
@@ -17,6 +20,7 @@ from tempfile import SpooledTemporaryFile
 from typing import TYPE_CHECKING, Any, BinaryIO, cast
 
 from sercheck.errors import StoreError
+from sercheck.store.hashed import SIZE
 from sercheck.store.where import without_password
 
 if TYPE_CHECKING:
@@ -32,6 +36,8 @@ SMALL = 256 << 10
 pieces of one costs more round trips than it saves bytes)."""
 FLAT = frozenset({"s3", "s3a", "gs", "gcs", "abfs", "abfss", "az", "oci", "oss", "memory"})
 """Kinds of places without folders: there nothing has to be made before an object (and asking might make a bucket)."""
+WRITABLE = "writable"
+"""The empty object by which it is tried whether a place can be written."""
 BLOCK = 1 << 20
 """Bytes copied at a time."""
 STRANGERS = (
@@ -58,7 +64,9 @@ class Objects:
         return f"{self._open[1]}/{name}" if name else self._open[1]
 
     def prepare(self) -> None:
-        self.write("writable", b"")
+        with trouble(self.path(WRITABLE)):
+            self._parent(WRITABLE)
+            self._open[0].pipe_file(self._at(WRITABLE), b"")
 
     def names(self, inside: str = "") -> list[str]:
         files, path = self._open[0], self._at(inside)
@@ -87,13 +95,31 @@ class Objects:
     def write(self, name: str, content: bytes) -> None:
         with trouble(self.path(name)):
             self._parent(name)
-            self._open[0].pipe_file(self._at(name), content)
+            with self._draft(self._at(name)) as path:
+                self._open[0].pipe_file(path, content)
 
     def _parent(self, name: str) -> None:
+        if not self._flat:
+            self._open[0].makedirs(self._at(name).rpartition("/")[0], exist_ok=True)
+
+    @property
+    def _flat(self) -> bool:
+        kinds = self._open[0].protocol
+        return bool(({kinds} if isinstance(kinds, str) else set(kinds)) & FLAT)
+
+    @contextmanager
+    def _draft(self, path: str) -> Iterator[str]:
+        """The name to write under; it becomes ``path`` in one step when the block ends well."""
+        from fsspec import AbstractFileSystem
+
         files = self._open[0]
-        kinds = {files.protocol} if isinstance(files.protocol, str) else set(files.protocol)
-        if not kinds & FLAT:
-            files.makedirs(self._at(name).rpartition("/")[0], exist_ok=True)
+        if self._flat or type(files).mv is AbstractFileSystem.mv:  # its move is a copy: nothing would be won
+            yield path
+            return
+        folder, _, name = path.rpartition("/")
+        draft = f"{folder}/.{name}"  # the same after a kill, so that a repeat takes it over
+        yield draft
+        files.mv(draft, path)
 
     @contextmanager
     def part(self, day: str, batch_id: str, tell: Tell) -> Iterator[BinaryIO]:
@@ -103,7 +129,7 @@ class Objects:
             size, digest = _measured(spool)
             name = f"{day}/{batch_id}-{digest}.parquet"
             self._send(name, spool, size)
-            tell(name, size)
+            tell(name, size, digest)
 
     def _send(self, name: str, spool: BinaryIO, size: int) -> None:
         files, path = self._open[0], self._at(name)
@@ -111,16 +137,17 @@ class Objects:
             if files.exists(path) and files.size(path) == size:  # the name says that it is the same
                 return
             self._parent(name)
-            if size <= AT_ONCE:
-                files.pipe_file(path, spool.read())
-                return
-            with files.open(path, "wb") as target:
-                shutil.copyfileobj(spool, target, BLOCK)
+            with self._draft(path) as draft:
+                if size <= AT_ONCE:
+                    files.pipe_file(draft, spool.read())
+                    return
+                with files.open(draft, "wb") as target:
+                    shutil.copyfileobj(spool, target, BLOCK)
 
 
 def _measured(spool: BinaryIO) -> tuple[int, str]:
     """Bytes and hash of a file that was written; it is then at its beginning."""
-    size, digest = spool.tell(), blake2b(digest_size=8)
+    size, digest = spool.tell(), blake2b(digest_size=SIZE)
     spool.seek(0)
     while block := spool.read(BLOCK):
         digest.update(block)

@@ -1,4 +1,4 @@
-"""What an archive asks of the place that it lies in, and a folder as such a place; depends on ``outputs``."""
+"""What an archive asks of the place that it lies in, and a folder as one; depends on ``outputs`` and ``hashed``."""
 
 from __future__ import annotations
 
@@ -6,13 +6,14 @@ import os
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import AbstractContextManager, contextmanager, suppress
 from pathlib import Path
-from typing import BinaryIO, Protocol
+from typing import BinaryIO, Protocol, cast
 
 from sercheck.errors import StoreError
 from sercheck.outputs import whole_file
+from sercheck.store.hashed import Hashing
 
-Tell = Callable[[str, int], None]
-"""Called with the name and the size of what was written."""
+Tell = Callable[[str, int, str], None]
+"""Called with the name, the size and the hash of what was written."""
 
 
 class Place(Protocol):
@@ -43,7 +44,7 @@ class Place(Protocol):
     def part(self, day: str, batch_id: str, tell: Tell) -> AbstractContextManager[BinaryIO]:
         """A context manager: a file for rows of a batch on a day, which is there when the block ends well.
 
-        ``tell`` learns its name and size where the name cannot be known beforehand.
+        ``tell`` learns its name, its size and the hash of its bytes.
         """
 
 
@@ -88,8 +89,11 @@ class Folder:
 
     @contextmanager
     def part(self, day: str, batch_id: str, tell: Tell) -> Iterator[BinaryIO]:
-        with whole_file(_made(self.root / day) / f"{batch_id}.parquet", private=True) as file:
-            yield file
+        name = f"{batch_id}.parquet"
+        with whole_file(_made(self.root / day) / name, private=True) as file:
+            hashing = Hashing(file)
+            yield cast("BinaryIO", hashing)
+        tell(f"{day}/{name}", hashing.size, hashing.hexdigest())
 
 
 def _unreadable(path: Path, error: OSError) -> StoreError:
