@@ -71,7 +71,19 @@ def test_reasons():
     values = make("white", 6, 2, 1056)
     assert "3 rows" in look(Quantile(), values, 960, q=0.99).reasons[0]
     assert "no history" in look(Quantile(), values, 0, q=0.5).reasons[0]
-    assert (look(Quantile(), values, 960, Stays("below", high=2.4), q=0.99).undecided >= 0).all()
+    mute = look(Quantile(), values, 960, Stays("below", high=2.4), q=0.99)
+    assert mute.unsure is not None
+    assert (mute.unsure >= 0).all()
+    assert "longer window" in mute.reasons[mute.unsure[0, 0]]
+
+
+def test_a_pass_that_says_nothing_keeps_its_share_of_the_risk():
+    """All series take part in sharing the risk, whatever a pass of theirs would say: else the others get too much."""
+    values = make("ar0.9", 7, 60, 168 * 13)
+    seen = look(Quantile(), values, 168 * 12, Stays("below", high=2.94), q=0.9)
+    assert seen.unsure is not None
+    assert (seen.unsure >= 0).any()
+    assert not np.isnan(p_values(seen)).any()
 
 
 @pytest.mark.calibration

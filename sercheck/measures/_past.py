@@ -300,15 +300,19 @@ def combined(pick: Bools, make_first: Callable[[], Measurement], make_second: Ca
     def either(a: Reference | None, b: Reference | None) -> Reference | None:
         return None if a is None or b is None else Chosen(here, a, b)
 
+    def places(a: Ints | None, b: Ints | None) -> Ints:
+        a, b = (np.full(here.shape, -1) if each is None else each for each in (a, b))
+        return np.where(here, a, np.where(b < 0, -1, b + len(first.reasons)))
+
+    nothing_unsure = first.unsure is None and second.unsure is None
     return replace(
         first,
         observed=np.where(here, first.observed, second.observed),
         n_eff=np.where(here, first.n_eff, second.n_eff),
         upper=either(first.upper, second.upper),
         lower=either(first.lower, second.lower),
-        undecided=np.where(
-            here, first.undecided, np.where(second.undecided < 0, -1, second.undecided + len(first.reasons))
-        ),
+        undecided=places(first.undecided, second.undecided),
+        unsure=None if nothing_unsure else places(first.unsure, second.unsure),
         reasons=(*first.reasons, *second.reasons),
         scores=second.scores if first.scores is None else first.scores,
         method=f"{first.method}; where history is too short: {second.method}",

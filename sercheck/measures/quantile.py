@@ -28,7 +28,7 @@ Example::
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import ClassVar
 
 import numpy as np
@@ -36,7 +36,7 @@ from pydantic import BaseModel, ConfigDict, Field
 from scipy import special
 
 from sercheck.grid import Panel
-from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Side
+from sercheck.measure import POWER, Measure, Measurement, Question, Reasons, Side, told_reasons
 from sercheck.measures._cycle import clusters_assumed, shortest_cycle
 from sercheck.measures._past import (
     MUTE,
@@ -146,7 +146,7 @@ class OrderStatistic:
 
 
 def _literal(panel: Panel, question: Question, q: float) -> Measurement:
-    reasons = Reasons((len(panel.values), 1))
+    reasons, unsure = Reasons((len(panel.values), 1)), Reasons((len(panel.values), 1))
     n = counts(panel)[0]
     rows = in_order(panel.window)
     everything, held = in_order(panel.values), cell((~np.isnan(panel.values)).sum(axis=1))
@@ -162,14 +162,13 @@ def _literal(panel: Panel, question: Question, q: float) -> Measurement:
         with np.errstate(invalid="ignore"):
             mute = law.too_few | law.blind.get("upper", False)
             mute = mute | np.isnan(law.limit("upper", np.full(law.tau.shape, question.risk)))
-            silent = mute & (law.p_value("upper") > question.risk)
-        reasons.add(silent, "too few effective rows are expected beyond the bound to tell: a longer window is needed")
+        unsure.add(mute, "too few effective rows are expected beyond the bound to tell: a longer window is needed")
         return OrderStatistic(law, upper, observed, np.full(law.tau.shape, bound), rows, everything, held, q)
 
     stays = question.stays
     upper = None if stays.high is None else against(bound=stays.high, upper=True)
     lower = None if stays.low is None else against(bound=stays.low, upper=False)
-    return measured(
+    seen = measured(
         panel,
         reasons,
         observed,
@@ -178,6 +177,9 @@ def _literal(panel: Panel, question: Question, q: float) -> Measurement:
         method="binomial on effective sizes (Clopper and Pearson 1934; Korn and Graubard 1998; Geyer 1992)",
         assumes=clusters_assumed(panel, "clusters of rows beyond", "history and window"),
     )
+    # a mute pass keeps its p-value: left out, it would leave its share of the risk to those that fail
+    texts, unsure_at = told_reasons(reasons, unsure)
+    return replace(seen, reasons=texts, unsure=unsure_at)
 
 
 def _scale(panel: Panel, told: Past) -> tuple[Ranking, Floats, Floats, str]:
