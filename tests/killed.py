@@ -1,12 +1,15 @@
 """A process killed at every place where it writes: after the same command again all is as if it had never been killed.
 
-    python -m tests.killed --runs 200 [--seed 1] [--ledger sqlite|postgresql|both] [--list]
+    python -m tests.killed --runs 200 [--seed 1] [--ledger sqlite|postgresql|both] [--archive folder|url|both] [--list]
 
 The boundaries are found, not listed by hand: a first run in a process of its own counts every rename, link, removal,
 new folder, flush, new file, statement and commit, and names each. A killed run is the same command in a fresh copy of
 the same store, ended by SIGKILL just before one of them; every fourth is killed at any moment instead, in the middle of
 whatever it does. Then the command is given again, and ledger, archive, files and what the desk was told are compared
 with those of a run that was left alone. The program itself knows nothing of this.
+
+The archive lies in the store's folder or at a URL. What is behind the URL is a folder that writes every object in two
+halves under the name it was asked for (a file server; a bucket is kinder), with a boundary between them.
 """
 
 from __future__ import annotations
@@ -18,7 +21,6 @@ import os
 import re
 import shutil
 import signal
-import sqlite3
 import sys
 import tempfile
 import time
@@ -26,23 +28,20 @@ from collections import Counter
 from collections.abc import Callable, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass, field
-from hashlib import blake2b
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 import pandas as pd
+from fsspec import register_implementation
+from fsspec.implementations.local import LocalFileSystem
 
 from sercheck.cli import main as sercheck_main
 from tests.gate_runs import DAY, NOW, RULES, water
+from tests.left_behind import FILE, state
 from tests.servers import databases
 
 DESK = "tell: [harbour]\n"
-CLOCKS = {
-    "stored_at", "applied_at", "learned_at", "settled_at", "made_at", "sent_at", "claimed_at", "claimed_by", "next_at",
-    "received_at", "opened_at", "attempts", "settlement_id", "episode_id", "message_id", "changes", "told_at",
-}  # fmt: skip
-"""Columns of the ledger that tell when and by whom, or ids made of that."""
 WARM = (
     "pandas", "pyarrow.parquet", "pyarrow.csv", "pyarrow.compute", "sqlalchemy", "sqlalchemy.dialects.sqlite",
     "sqlalchemy.dialects.postgresql", "psycopg", "scipy.stats", "statsmodels.api", "matplotlib.figure", "jinja2",
@@ -95,6 +94,7 @@ class Tracer:
 
     def install(self) -> None:
         """Put it around everything that writes."""
+        Shelf.tracer = self
         for name in ("replace", "rename", "link", "unlink", "mkdir", "rmdir", "fsync", "symlink", "truncate"):
             setattr(os, name, self._around(getattr(os, name), name))
         plain_open = os.open
@@ -131,13 +131,43 @@ class Tracer:
         return wrapped
 
 
+class Shelf(LocalFileSystem):  # type: ignore[misc]  # fsspec has no types
+    """A folder behind a URL; every object is written in two halves."""
+
+    protocol = "shelf"
+    tracer: Tracer | None = None
+
+    @classmethod
+    def _strip_protocol(cls, path: str) -> str:
+        return str(super()._strip_protocol(str(path).removeprefix("shelf://")))
+
+    def pipe_file(self, path: str, value: bytes, mode: str = "overwrite", **more: Any) -> None:
+        """Put an object there as a file server does."""
+        half = len(value) // 2
+        self._at(f"create {_short(path)}")
+        with Path(path).open("wb") as file:
+            file.write(value[:half])
+            file.flush()
+            self._at(f"half of {_short(path)}")
+            file.write(value[half:])
+
+    def _at(self, name: str) -> None:
+        if self.tracer:
+            self.tracer.at(name)
+
+
+register_implementation("shelf", Shelf)
+SHELF = "shelf"
+"""Name of the folder behind the URL, in the working folder of a run whose archive lies at one."""
+
+
 def _short(target: Any) -> str:
     """A path without what differs from run to run."""
     if isinstance(target, int):
         target = Path(f"/proc/self/fd/{target}").readlink()
     name = Path(str(target)).name
     name = re.sub(r"\.sercheck-[0-9a-f]+-\d+-[0-9a-f]+", ".draft", name)
-    return re.sub(r"^\d{20}-[0-9a-f]{8}", "entry", name)
+    return re.sub(r"^(\.?)\d{20}-[0-9a-f]{8}", r"\1entry", name)
 
 
 def run(command: Sequence[str], folder: Path, url: str | None, tracer: Tracer | None, moment: float = 0.0) -> int:
@@ -168,6 +198,8 @@ def _child(command: Sequence[str], folder: Path, url: str | None, tracer: Tracer
             os.dup2(said, stream)
         sys.stdout, sys.stderr = open(1, "w", closefd=False), open(2, "w", closefd=False)  # noqa: SIM115
         os.environ.update({"SERCHECK_DESK_HARBOUR": "here://", "SERCHECK_STORE": "store", "SERCHECK_TRACEBACK": "1"})
+        if (folder / SHELF).is_dir():
+            os.environ |= {"SERCHECK_STORE": f"shelf://{folder / SHELF}", "SERCHECK_LEDGER": f"sqlite:///{folder}/{FILE}"}
         if url:
             os.environ["SERCHECK_LEDGER"] = url
         _send_to(folder.parent / "told.txt", tracer)
@@ -204,9 +236,11 @@ def _send_to(file: Path, tracer: Tracer | None) -> None:
     sending.installed = lambda: True
 
 
-def prepared(scene: Scene, folder: Path, url: str | None) -> None:
+def prepared(scene: Scene, folder: Path, url: str | None, *, at_url: bool = False) -> None:
     """The folder just before the scene's command."""
-    folder.mkdir(parents=True)
+    (folder / (SHELF if at_url else "")).mkdir(parents=True)
+    if at_url:
+        (folder / FILE).parent.mkdir()
     (folder / "rules.yaml").write_text(RULES + DESK)
     water(DAY - pd.Timedelta(days=40), 40, seed=1).to_csv(folder / "history.csv", index=False)
     batch = water(DAY, 1, seed=2)
@@ -215,63 +249,6 @@ def prepared(scene: Scene, folder: Path, url: str | None) -> None:
     for command in scene.before:
         status = run(command, folder, url, None)
         assert status in (0, 1), (folder.parent / "said.txt").read_text()
-
-
-def state(folder: Path, url: str | None) -> dict[str, Any]:
-    """All that a command leaves, without clocks."""
-    found: dict[str, Any] = {}
-    for path in sorted(folder.rglob("*")):
-        name = str(path.relative_to(folder))
-        if path.is_dir() or name.startswith("store/ledger.sqlite"):
-            continue
-        if "/log/" in name and path.suffix == ".json":
-            entry = json.loads(path.read_text())
-            states = found.setdefault(f"log of {Path(name).parents[1]}", {})
-            states[entry["batch_id"]] = {**states.get(entry["batch_id"], {}), **entry, "number": None}
-        else:
-            found[name] = blake2b(_without_clock(path), digest_size=8).hexdigest()
-    told = folder.parent / "told.txt"
-    found["told"] = len(set(told.read_text().split())) if told.exists() else 0
-    return found | {f"table {name}": rows for name, rows in tables(folder, url).items()}
-
-
-def _without_clock(path: Path) -> bytes:
-    if path.suffix != ".html":
-        return path.read_bytes()
-    page = re.sub(r"(?s)<style.*?</style>|<[^>]*>", " ", path.read_text(encoding="utf-8"))
-    again = r"(Notes\s+)?this batch was judged by these rules before, at .*? stands"  # what only a repeat says
-    page = re.sub(again, "", page)
-    page = re.sub(r"\d{4}-\d\d-\d\d[T ]\d\d:\d\d(:\d\d(\.\d+)?)?Z?|[0-9a-f]{12,}", "", page)
-    return " ".join(page.split()).encode()
-
-
-def tables(folder: Path, url: str | None) -> dict[str, list[str]]:
-    """The ledger's rows as sorted text."""
-    if url is None:
-        file = folder / "store" / "ledger.sqlite"
-        if not file.exists():
-            return {}
-        kept: Any = sqlite3.connect(file)
-        kept.row_factory = sqlite3.Row
-        assert kept.execute("PRAGMA integrity_check").fetchone()[0] == "ok"
-        names = [row[0] for row in kept.execute("SELECT name FROM sqlite_master WHERE type = 'table'")]
-    else:
-        import psycopg
-        from psycopg.rows import dict_row
-
-        kept = psycopg.connect(url.replace("+psycopg", ""), row_factory=dict_row)  # type: ignore[arg-type]
-        names = [row["tablename"] for row in kept.execute("SELECT tablename FROM pg_tables WHERE schemaname='public'")]
-    found = {}
-    for name in sorted(names):
-        rows = [dict(row) for row in kept.execute(f'SELECT * FROM "{name}"')]
-        plain = [{key: _plain(value) for key, value in row.items() if key not in CLOCKS} for row in rows]
-        found[name] = sorted(json.dumps(row, sort_keys=True) for row in plain)
-    kept.close()
-    return found
-
-
-def _plain(value: Any) -> Any:
-    return len(bytes(value)) if isinstance(value, bytes | memoryview) else value
 
 
 @dataclass
@@ -287,12 +264,12 @@ class Figures:
 class Stage:
     """One scene with one kind of ledger: its folder before, its boundaries, and the state of a run left alone."""
 
-    def __init__(self, scene: Scene, at: Path, new_url: Callable[[str | None], str] | None) -> None:
+    def __init__(self, scene: Scene, at: Path, new_url: Callable[[str | None], str] | None, *, at_url: bool) -> None:
         self.scene, self._at, self._new_url = scene, at, new_url
         self._count = 0
         self._template_url = new_url(None) if new_url else None
         self._template = at / "template" / "work"
-        prepared(scene, self._template, self._template_url)
+        prepared(scene, self._template, self._template_url, at_url=at_url)
         folder, url = self._fresh()
         tracer = Tracer(None)
         began = time.perf_counter()
@@ -331,7 +308,13 @@ class Stage:
 
 
 def harness(
-    at: Path, runs: int, seed: int, new_url: Callable[[str | None], str] | None, scenes: Sequence[Scene] = SCENES
+    at: Path,
+    runs: int,
+    seed: int,
+    new_url: Callable[[str | None], str] | None,
+    scenes: Sequence[Scene] = SCENES,
+    *,
+    at_url: bool = False,
 ) -> Figures:
     """Kill ``runs`` times, spread over all scenes and boundaries; the figures.
 
@@ -342,7 +325,7 @@ def harness(
         importlib.import_module(name)  # once, for all the processes that come from this one
     chance = np.random.default_rng(seed)
     figures = Figures()
-    stages = [Stage(scene, at / f"{place}", new_url) for place, scene in enumerate(scenes)]
+    stages = [Stage(scene, at / f"{place}", new_url, at_url=at_url) for place, scene in enumerate(scenes)]
     orders = [_order(stage.boundaries, chance) for stage in stages]
     for number in range(runs):
         stage, order = stages[number % len(stages)], orders[number % len(stages)]
@@ -367,18 +350,22 @@ def main() -> None:
     parser.add_argument("--runs", type=int, default=200)
     parser.add_argument("--seed", type=int, default=1)
     parser.add_argument("--ledger", choices=["sqlite", "postgresql", "both"], default="both")
+    parser.add_argument("--archive", choices=["folder", "url", "both"], default="both")
     parser.add_argument("--list", action="store_true", help="name the boundaries and how often each was killed at")
     asked = parser.parse_args()
-    kinds = ["sqlite", "postgresql"] if asked.ledger == "both" else [asked.ledger]
+    ledgers = ["sqlite", "postgresql"] if asked.ledger == "both" else [asked.ledger]
+    archives = ["folder", "url"] if asked.archive == "both" else [asked.archive]
+    kinds = [(ledger, archive) for ledger in ledgers for archive in archives]
     with ExitStack() as stack, tempfile.TemporaryDirectory() as folder:
-        new = stack.enter_context(databases()) if "postgresql" in kinds else None
-        for kind in kinds:
-            figures = harness(
-                Path(folder) / kind, asked.runs // len(kinds), asked.seed, new if kind == "postgresql" else None
-            )
+        new = stack.enter_context(databases()) if "postgresql" in ledgers else None
+        for ledger, archive in kinds:
+            at, new_url = Path(folder) / ledger / archive, new if ledger == "postgresql" else None
+            figures = harness(at, asked.runs // len(kinds), asked.seed, new_url, at_url=archive == "url")
             print(
-                f"{kind}: {figures.runs} runs, {figures.killed} killed at {len(figures.boundaries)} named places, "
+                f"{ledger}, archive in a folder: " if archive == "folder" else f"{ledger}, archive at a URL: ",
+                f"{figures.runs} runs, {figures.killed} killed at {len(figures.boundaries)} named places, "
                 f"status of the repeats {dict(figures.repeats)}, every state as if never killed",
+                sep="",
                 flush=True,
             )
             if asked.list:

@@ -457,7 +457,7 @@ def test_rows_of_the_window_are_no_history(feed, monkeypatch):
         seen.append(grid)
         return measure_block(grid, run)
 
-    monkeypatch.setattr("sercheck.verdict.measure_block", looked)
+    monkeypatch.setattr("sercheck.blocks.measure_block", looked)
     feed.gate(wave("2026-03-02", 1, seed=2))
     (grid,) = seen
     assert (grid.start, len(grid.axis)) == (24, 48)
@@ -472,7 +472,7 @@ def test_only_the_stretch_that_teaches_is_read(tmp_path, monkeypatch):
         lengths.append(grid.start // 24)
         return measure_block(grid, run)
 
-    monkeypatch.setattr("sercheck.verdict.measure_block", looked)
+    monkeypatch.setattr("sercheck.blocks.measure_block", looked)
     past, batch = wave("2026-01-01", 40, seed=1), wave("2026-02-10", 1, seed=2)
     for extra in ("baseline: {from: 9D}\n", "baseline: {from: 2026-02-03}\n"):
         folder = tmp_path / str(len(lengths))
@@ -496,7 +496,7 @@ def test_what_the_rule_file_names_fills_in_before_the_archive(tmp_path, monkeypa
         starts.append(int(grid.delivered[:, : grid.start].sum()))
         return measure_block(grid, run)
 
-    monkeypatch.setattr("sercheck.verdict.measure_block", looked)
+    monkeypatch.setattr("sercheck.blocks.measure_block", looked)
     feed.gate(wave("2026-02-10", 1, seed=2))
     feed.gate(wave("2026-02-11", 1, seed=3))
     assert starts == [40 * 48, 41 * 48]

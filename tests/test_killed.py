@@ -27,6 +27,13 @@ def test_killed_where_it_writes_and_repeated(tmp_path, new_url):
     assert figures.killed >= 4
 
 
+def test_killed_where_it_writes_to_a_url(tmp_path):
+    """The same with the archive at a URL whose objects are written half and half."""
+    figures = harness(tmp_path, 4, 20260311, None, scenes("released"), at_url=True)
+    assert figures.killed >= 3
+    assert {name.split(": ")[1].split()[0] for name in figures.boundaries} & {"half", "create", "rename"}
+
+
 @pytest.mark.scale
 def test_killed_two_hundred_times(tmp_path, new_url):
     """The same for every scene: learning, a new store, released, held with a page and a desk, settled."""
