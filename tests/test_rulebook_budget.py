@@ -104,7 +104,7 @@ def test_the_arithmetic_is_told_in_sentences():
 def test_the_budget_in_a_line():
     """Expected false holds, who shares the risk and how much it is; nothing where nothing holds by chance."""
     told = in_short(book(BUDGET, SPREAD + "a}", LEVEL + "b}", FRESH + "c}", LEVEL + "d, otherwise: note}"))
-    assert told == "at most 1 false hold per 90D: 2 rules share a risk of 0.0111 a batch"
+    assert told == "at most 1 false hold per 90D: 2 rules share 0.0111 a batch"
     hourly = in_short(book("batch_every: 1h\nfalse_alarm: 0.001\n", SPREAD + "a}"))
     assert hourly == "at most 2.16 false holds per 90D: 1 rule has a risk of 0.001 a batch"
     assert in_short(book("", SPREAD + "a}")) == "1 rule has a risk of 0.001 that a healthy batch is held"

@@ -32,7 +32,7 @@ def test_every_demo_batch_fits_one_screen(rules, batch):
     assert max(map(len, lines)) <= COLUMNS + 20  # terminal codes of bold words take no column
     assert ("RELEASED" if batch == "healthy" else "HELD") in lines[0]
     assert lines[1].startswith(f"  {verdict.counts['fail']} of {len(verdict.records)} records fail")
-    assert lines[-2].startswith("at most 1 false hold per 90D: 13 rules share a risk of 0.0111 a batch")
+    assert lines[-2].startswith("at most 1 false hold per 90D: 13 rules share 0.0111 a batch")
     assert "2026-01-19 00:00 to 2026-01-19 23:00 Europe/Oslo" in lines[0]
     for rule in [row["rule"] for row in verdict.table.rows_where("outcome", "fail")][:1]:
         assert any(rule in line for line in lines)

@@ -33,7 +33,7 @@ def answer(verdict: Verdict) -> str:
     if len(verdict.notes) > MOST_UNDECIDED:
         lines.append(f"  and {len(verdict.notes) - MOST_UNDECIDED} more notes")
     if verdict.budget:
-        lines.append(f"{verdict.budget} (sercheck measures --rules FILE)")
+        lines.append(folded(f"{verdict.budget} (sercheck measures --rules FILE)", "", "  "))
     lines.append(f"batch {verdict.batch_id}")
     return "\n".join(lines)
 

@@ -155,6 +155,10 @@ def _literal(panel: Panel, question: Question, marks: Floats) -> Measurement:
             told.too_few & (0 < share < 1),
             _says_nothing(share, side),
         )
+        unsure.add(
+            np.isnan(told.limit(side, np.asarray(question.risk / len(laws)))) & (0 < share < 1),
+            f"no share of these rows would be beyond chance at a risk of {question.risk:g}: judge a longer window",
+        )
     upper, lower = sides(question.stays, laws.get("upper", law), laws.get("lower", law))
     return _measurement(
         panel, law, (reasons, unsure), upper, lower,

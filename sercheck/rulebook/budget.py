@@ -111,12 +111,12 @@ def in_short(book: Rulebook) -> str:
     held, sharing = _held_risk(book), [rule for rule in book.rules if rule.otherwise == "hold" and rule.false_alarm > 0]
     if not sharing:
         return ""
-    who = f"{len(sharing)} rules share" if len(sharing) > 1 else "1 rule has"
+    who = f"{len(sharing)} rules share" if len(sharing) > 1 else "1 rule has a risk of"
     expected = expected_false_holds(book)
     if expected is None:
-        return f"{who} a risk of {held:.3g} that a healthy batch is held"
+        return f"{who} {held:.3g} that a healthy batch is held"
     count, per = expected
-    return f"at most {count:.3g} false hold{'' if count == 1 else 's'} per {per}: {who} a risk of {held:.3g} a batch"
+    return f"at most {count:.3g} false hold{'' if count == 1 else 's'} per {per}: {who} {held:.3g} a batch"
 
 
 def explain(book: Rulebook) -> list[str]:
