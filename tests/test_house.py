@@ -45,6 +45,7 @@ ALLOWED: dict[str, set[str]] = {
     "guess_clock": {"errors", "serial", "intake"},
     "guess": {"errors", "serial", "intake", "guess_clock"},
     "portrait": NUMBERS | {"grid", "intake", "facts", "guess", "guess_clock", "page", "plain"},
+    "drafting": NUMBERS | {"grid", "intake", "portrait", "guess_clock", "recent", "rehearsal", "rulebook", "plain"},
 }
 """Rooms and what of ours they may import; a room that is not named here may import anything but ``cli``."""
 

@@ -42,8 +42,8 @@ def command(
 ) -> None:
     """Write a first rule file for the feed whose past is HISTORY (files or globs).
 
-    Columns, cadence and seasons are found unless they are given. The rules that suit the feed are rehearsed on it; those
-    that hold too often only note, and what was left out is named in the file with the reason.
+    Columns, cadence and seasons are found unless they are given. The rules that suit the feed are rehearsed on it;
+    those that hold too often only note, and what was left out is named in the file with the reason.
     """
     from sercheck.drafting.run import draft
     from sercheck.outputs import write_text

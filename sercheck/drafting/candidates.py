@@ -17,6 +17,7 @@ WEEKS_TOGETHER = 4
 LONG_WINDOW = 24
 """Rows that rules of monthly and rarer rows look over: whole years of months, and the least that a level takes."""
 MOST_YEARS = 10
+"""Years that a rule of a yearly cycle looks over at most (common practice)."""
 
 
 def candidates(shape: Shape, figures: Figures) -> tuple[list[Entry], list[LeftOut]]:
@@ -120,7 +121,7 @@ def _coarse(entries: list[Entry], figures: Figures) -> list[Entry]:
         counted = one.fields[0][1] in ("repeats", "replay")
         if counted and whole and one.otherwise == "hold":
             rest = tuple(column for column in one.columns if column not in whole)
-            why = f"It only notes: {_listed(whole)} comes in whole numbers that no person makes, which repeat by themselves."
+            why = f"It only notes: {_listed(whole)}, of weather in whole numbers, repeats by itself."
             noted = replace(one, columns=tuple(whole), otherwise="note", why=(*one.why, why))
             if rest:
                 out.append(replace(one, columns=rest))

@@ -25,6 +25,9 @@ FEWEST_EMPTY = 0.05
 """Least bound for a share of empty cells (common practice)."""
 MOST_EMPTY = 0.25
 """Share of empty cells in history's worst week from which no bound is drafted (ours)."""
+NEAR, FAR = 0.05, 0.2
+"""Parts of history's range within which its lowest value says that 0 is the end, and beyond which a value on the other
+side of 0 would be far off as well (ours); between them it may be a temperature on a warm winter's day."""
 LATE = 1.5
 """Ages of the newest row in batches that are called late: half a batch of delay (ours)."""
 LOOKS = {
@@ -76,9 +79,8 @@ def _completeness(shape: Shape, counted: Batches, entries: list[Entry], left: li
         about = "Ask for a second delivery before loading."
         entries.append(_plain("the rows are delivered", fields, about, why))
         return
-    left.append(
-        LeftOut("completeness", f"some series had only {_share(counted.complete[1])} of their rows in a week of history")
-    )
+    reason = f"some series had only {_share(counted.complete[1])} of its rows in a week of history"
+    left.append(LeftOut("completeness", reason))
 
 
 def _spacing(look: str, counted: Batches | None, figures: Figures) -> Entry:
@@ -96,7 +98,7 @@ def _empty(shape: Shape, figures: Figures, entries: list[Entry], left: list[Left
     never = tuple(column for column in values if not figures.empty[column])
     if never and figures.rows >= NONE_IN:
         fields = (("measure", "rate"), ("of_rows", "missing"), ("stays", "{below: 0}"), ASIDE)
-        why = f"None in {figures.rows:,} rows of history, so the first one is told. Exact: next to no share of the budget."
+        why = f"None in {figures.rows:,} rows of history: the first one is told. Exact: next to no share of the budget."
         entries.append(_plain("no cell is empty", fields, about, why, never))
     elif never:
         left.append(LeftOut("rate of missing", f"{figures.rows:,} rows without one tell little: {NONE_IN:,} would"))
@@ -112,7 +114,10 @@ def _empty(shape: Shape, figures: Figures, entries: list[Entry], left: list[Left
         bound = max(FEWEST_EMPTY, math.ceil(200 * worst) / 100)
         wide = () if figures.batches is None else (("window", str(7 * shape.batch_rows)),)
         fields = (("measure", "rate"), ("of_rows", "missing"), *wide, ("stays", f"{{below: {bound}}}"))
-        why = f"{_share(share)} of history's cells are empty, {_share(worst)} in its worst week; the bound is twice that, .05 at least."
+        why = (
+            f"{_share(share)} of history's cells are empty, {_share(worst)} in its worst week; the bound is "
+            f"twice that, {FEWEST_EMPTY:g} at least."
+        )
         entries.append(_plain(f"few cells of {column} are empty", fields, about, why, (column,), exact=False))
 
 
@@ -123,18 +128,23 @@ def _range(shape: Shape, figures: Figures, entries: list[Entry], left: list[Left
         if not room > 0 or not math.isfinite(room):
             left.append(LeftOut(f"range of {column}", "history holds one value only, or none"))
             continue
-        least = 0.0 if low >= 0 and low <= 0.05 * room else _outward(low - room, up=False)
-        most = 0.0 if high <= 0 and high >= -0.05 * room else _outward(high + room, up=True)
+        least = 0.0 if _ends_at_zero(low, room) else _outward(low - room, up=False)
+        most = 0.0 if _ends_at_zero(-high, room) else _outward(high + room, up=True)
         fields = (
             ("measure", "rate"), ("of_rows", f"{{outside: [{least!r}, {most!r}]}}"), ("stays", "{below: 0}"), ASIDE,
         )  # fmt: skip
         why = (
             f"History lies between {low:.6g} and {high:.6g}; the bounds are as far again to either side"
-            + (", and not below 0." if least == 0 else ".")
+            + (", and not beyond 0." if 0.0 in (least, most) else ".")
             + " Put what is physically possible in their place. Exact: next to no share of the budget."
         )
         about = "A value that far off is another unit, a misplaced decimal mark or an overflow."
         entries.append(_plain(f"{column} stays in its range", fields, about, why, (column,)))
+
+
+def _ends_at_zero(least: float, room: float) -> bool:
+    """Values that begin near 0, or so far above that the other sign would be far off, never change their sign."""
+    return least >= 0 and not NEAR * room < least < FAR * room
 
 
 def _freshness(batch_every: str) -> Entry:

@@ -96,9 +96,9 @@ class Maker:
             if one.name in names:
                 line, dates = self.trial.lines[one.name], self.trial.dates[one.name]
                 why = (
-                    f"It only notes: rehearsed, it held {line.false_holds} times where its risk allows {line.share:.2g} "
-                    f"({', '.join(dates[:6])}{' …' if len(dates) > 6 else ''}). If those were events, name them "
-                    "closed_days and let it hold."
+                    f"It only notes: rehearsed, it held {line.false_holds} times where its risk allows "
+                    f"{line.share:.2g} ({', '.join(dates[:6])}{' …' if len(dates) > 6 else ''}). If "
+                    "those were events, name them closed_days and let it hold."
                 )
                 self.entries[place] = replace(one, otherwise="note", why=(*one.why, why))
 
@@ -106,4 +106,7 @@ class Maker:
         """The rules with what the rehearsal showed in their comments."""
         if self.trial is None:
             return self.entries
-        return [replace(one, why=(*one.why, *in_figures(self.trial, one.name))) for one in self.entries]
+        trial = self.trial
+        return [
+            replace(one, why=(*one.why, *in_figures(trial, one.name, values=one.like_history))) for one in self.entries
+        ]

@@ -10,7 +10,9 @@ from dataclasses import dataclass
 
 from sercheck.drafting.figures import Figures
 from sercheck.drafting.shape import Shape
+from sercheck.drafting.text import VERBATIM
 from sercheck.drafting.trial import Trial
+from sercheck.plain import without_secrets
 from sercheck.portrait.findings import Finding
 from sercheck.portrait.whole import Study
 
@@ -51,12 +53,13 @@ def head(story: Story) -> list[str]:
     """The paragraphs of the first comment."""
     study, figures, shape = story.study, story.figures, story.shape
     alarm = [] if not story.rehearsed or story.within else [f"OVER ITS BUDGET. {notes(story)[0]}"]
-    made = f"Rules for {study.feed}, drafted from its history"
+    command = without_secrets(story.command)
     length = f"{figures.rows:,} rows of {shape.series} series" if shape.series > 1 else f"{figures.rows:,} rows"
     between = f", {study.first} to {study.last}" if study.first else ""
     paragraphs = [
         *alarm,
-        f"{made} by: {story.command}" if story.command else f"{made}.",
+        f"Rules for {study.feed}, drafted from its history{' by' if command else ''}",
+        f"{VERBATIM}{command}" if command else "",
         f"History: {length}{between}; fingerprint {figures.fingerprint}.",
         f"Found, not given: {'; '.join(study.told)}." if study.told else "",
         f"Seasons: {_seasons(story)}.",
@@ -75,17 +78,17 @@ def notes(story: Story) -> tuple[str, ...]:
 def hints(story: Story) -> list[str]:
     """What a person may want to add to the keys of the file."""
     told = [
-        "tell: [desk]                   (whom to tell; SERCHECK_DESK_DESK holds the address)",
-        "runbook: docs/what-to-do.md    (a key of each rule: where to read what to do)",
+        "tell: [desk]                    # whom to tell; SERCHECK_DESK_DESK holds the address",
+        "runbook: docs/what-to-do.md     # a key of each rule: where to read what to do",
     ]
     counted = story.figures.batches
     if counted is not None and counted.silent:
         days = ", ".join(counted.silent[-CLOSED:])
         more = f" (the last {CLOSED} of {len(counted.silent)})" if len(counted.silent) > CLOSED else ""
-        told.append(f"closed_days: [{days}]{more}: no series had a row; name those on which none was due")
+        told.append(f"closed_days: [{days}]  # no series had a row{more}: keep those on which none was due")
     events = _events(story)
     if events:
-        told.append(f"closed_days: [{', '.join(events)}]: several rules failed at once; name those that were events")
+        told.append(f"closed_days: [{', '.join(events)}]  # several rules failed at once: keep those that were events")
     return told
 
 
@@ -121,8 +124,8 @@ def _people(shape: Shape) -> str:
     if shape.people:
         return "There is a cycle by week, so people make this feed: the profile is by hour of week."
     return (
-        "There is no cycle by week, so this is weather or a machine: the profile is by hour of day. A slip of an hour, a "
-        "flat day and a halved cycle are nearly invisible in weather."
+        "There is no cycle by week, so this is weather or a machine: the profile is by hour of day. In weather a slip "
+        "of an hour, a flat day and a halved cycle are nearly invisible."
     )
 
 
@@ -144,7 +147,7 @@ def _rehearsal(story: Story) -> str:
         f"Rehearsed on the last {told.batches} batches (from {first} on, no faults put in): {told.false_holds} false "
         f"holds{allowed} (exact 95 % interval {low:.2g} to {high:.2g})"
     )
-    data = f"; {len(told.by_data)} batches held for missing or doubled rows of history itself" if told.by_data else ""
+    data = f"; held for missing or doubled rows of history itself: {len(told.by_data)}" if told.by_data else ""
     if story.within:
         return f"{said}{data}."
     return f"{said}{data}. The file exceeds its budget, and no rule is left to leave out."
@@ -158,8 +161,8 @@ def _short(story: Story) -> str:
     if have > shape.fewest:
         return ""
     return (
-        f"History holds {have} batch{'es' if have > 1 else ''} of {shape.batch_every}; {shape.fewest} are needed before "
-        "rules that compare with it may hold. Until then only exact rules hold: draft again with a longer history."
+        f"History holds {have} batch{'es' if have > 1 else ''} of {shape.batch_every}; more than {shape.fewest} are "
+        "needed before rules that compare with it may hold. Until then only exact rules hold; draft again with more."
     )
 
 

@@ -80,8 +80,8 @@ def draft(
 ) -> Draft:
     """Write a first rule file for a feed: columns, cadence, seasons, and the rules that suit it.
 
-    The rules that suit the kind of feed are rehearsed on its own healthy batches; those that cannot decide are left out,
-    those that hold more often than their share only note, until the file keeps its alarm budget.
+    The rules that suit the kind of feed are rehearsed on its own healthy batches; those that cannot decide are left
+    out, those that hold more often than their share only note, until the file keeps its alarm budget.
 
     Args:
         history: rows that were let in: files, a glob, or a DataFrame.

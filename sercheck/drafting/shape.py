@@ -159,7 +159,8 @@ def _moved_clock(study: Study) -> str | None:
     if len(told) < MOST_OF * max(len(study.portraits), 1):
         return None
     places = {zone: zone.split("/")[-1].replace("_", " ") for zone in ZONES}
-    counts = {zone: sum(f"clock changes of {place} " in found.about for found in told) for zone, place in places.items()}
+    texts = [found.about for found in told]
+    counts = {zone: sum(f"clock changes of {place} " in text for text in texts) for zone, place in places.items()}
     best = max(counts, key=lambda zone: counts[zone])
     return best if counts[best] else None
 

@@ -17,6 +17,8 @@ BARE = re.compile(r"[A-Za-z_]([A-Za-z0-9_ /.()'-]*[A-Za-z0-9_)])?")
 """Names that YAML reads as they stand, in a list too."""
 PROSE = re.compile(r"[A-Za-z_][A-Za-z0-9_ /.,;()'-]*[A-Za-z0-9_.)]")
 """Sentences that YAML reads as they stand after a key."""
+VERBATIM = "    "
+"""Begins a paragraph that is not broken into lines: a command."""
 RESERVED = {"true", "false", "yes", "no", "on", "off", "null", "y", "n"}
 
 
@@ -43,18 +45,19 @@ def written(
             lines += comment(f"- {one.name}: {one.reason}.", "#   ", "#     ")
         lines.append("#")
     lines = [*lines[:-1], "", *_keys(shape, budget), ""]
-    for hint in hints:
-        lines += comment(hint)
+    lines += [f"# {plain(hint, 1000)}" for hint in hints]
     if hints:
         lines.append("")
     lines.append("rules:")
     for entry in entries:
-        lines += [*_rule(entry, shape), ""]
+        lines += [*_rule(entry, shape, weights=budget is not None and shape.batch_every is not None), ""]
     return "\n".join(lines[:-1]) + "\n"
 
 
 def comment(text: str, first: str = "# ", rest: str = "# ") -> list[str]:
     """A paragraph of a comment."""
+    if text.startswith(VERBATIM):
+        return [first + "  " + plain(text.strip(), 4000)]
     shown = plain(" ".join(text.split()), 4000)
     return textwrap.wrap(shown, WIDTH, initial_indent=first, subsequent_indent=rest, break_on_hyphens=False)
 
@@ -84,7 +87,7 @@ def _keys(shape: Shape, budget: str | None) -> list[str]:
     if layout.timezone != "UTC":
         lines.append(f"timezone: {quoted(layout.timezone)}")
     if shape.clock:
-        lines.append(f"season_clock: {shape.clock}  # the daily cycle moves at this zone's clock changes, the stamps do not")
+        lines.append(f"season_clock: {shape.clock}  # its clock changes move the daily cycle, and not the stamps")
     if shape.seasons:
         lines.append(f"seasons: {{{', '.join(f'{name}: {length}' for name, length in shape.seasons.items())}}}")
     if shape.batch_every and budget:
@@ -94,13 +97,13 @@ def _keys(shape: Shape, budget: str | None) -> list[str]:
     return lines
 
 
-def _rule(entry: Entry, shape: Shape) -> list[str]:
+def _rule(entry: Entry, shape: Shape, *, weights: bool) -> list[str]:
     lines = [line for why in entry.why for line in comment(why, "  # ", "  # ")]
     lines.append(f"  - name: {_prose(entry.name)}")
     if entry.columns and entry.columns != shape.layout.values:
         names = entry.columns
         lines.append(f"    of: {quoted(names[0]) if len(names) == 1 else _list(names)}")
-    lines += [f"    {key}: {value}" for key, value in entry.fields]
+    lines += [f"    {key}: {value}" for key, value in entry.fields if weights or key != "weight"]
     if entry.otherwise == "note":
         lines.append("    otherwise: note")
     return [*lines, f"    about: {_prose(entry.about)}"]

@@ -145,8 +145,14 @@ def _seen(path: Path) -> dict[str, dict[str, Seen]]:
     return seen
 
 
-def in_figures(trial: Trial, name: str) -> list[str]:
-    """What a rule's bound came from, in sentences for its comment."""
+def in_figures(trial: Trial, name: str, *, values: bool) -> list[str]:
+    """What a rule did in the rehearsal, in sentences for its comment.
+
+    Args:
+        trial: the rehearsal.
+        name: the rule.
+        values: tell the values that were observed: they are what its bound comes from.
+    """
     said: list[str] = []
     line = trial.lines.get(name)
     seen = trial.seen.get(name, {})
@@ -159,16 +165,16 @@ def in_figures(trial: Trial, name: str) -> list[str]:
         if one.usual is not None
     ]
     batches = trial.told.batches
-    if usual:
-        said.append(f"In {_counted(batches, 'batch', 'batches')} of history: {'; '.join(usual)}.")
+    if usual and values:
+        said.append(f"History's last {_counted(batches, 'batch', 'batches')}: {'; '.join(usual)}.")
     for column, one in seen.items():
         if OFTEN * one.records < one.undecided <= one.records:
             where = f" on {column}" if len(seen) > 1 and column else ""
             said.append(f"Undecided in {one.undecided / one.records:.0%} of its records{where}: {one.reason}")
     if line.rule.false_alarm > 0 and batches > 1 and line.share >= 0.005:
-        verb = "Held" if line.rule.otherwise == "hold" else "Failed"
-        times = "never" if not line.false_holds else _counted(line.false_holds, "time", "times")
-        said.append(f"{verb} {times} where its risk allows {line.share:.2g}{_dates(trial.dates[name])}.")
+        verb = "held" if line.rule.otherwise == "hold" else "failed"
+        times = _counted(line.false_holds, "time", "times")
+        said.append(f"It {verb} {times} where its risk allows {line.share:.2g}{_dates(trial.dates[name])}.")
     elif trial.dates[name]:
         said.append(f"Failed in {_counted(len(trial.dates[name]), 'batch', 'batches')}{_dates(trial.dates[name])}.")
     return said
