@@ -13,7 +13,7 @@ import sys
 import warnings
 from collections import deque
 from collections.abc import Iterable, Iterator, Sequence
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
@@ -44,8 +44,15 @@ if TYPE_CHECKING:
 
 AHEAD = 3
 """Tasks on their way for each thread of the cluster (ours: none waits, and few blocks are held by the client)."""
+NOBODY = "127.0.0.1:0"
+"""Where Dask's own pages are served: on a free port, for this machine only (several runs may go on at once)."""
 PATIENCE = 30
 """Seconds to wait for a scheduler (Dask's own default, from memory)."""
+
+
+MEMORY = {"MALLOC_TRIM_THRESHOLD_": 64 << 20, "MALLOC_MMAP_THRESHOLD_": 32 << 20}
+"""What glibc comes to by itself where arrays of some MB come and go. Dask tells its workers to give every array's
+memory back to the system at once, which costs more than what is computed in it."""
 
 
 @dataclass(frozen=True)
@@ -157,7 +164,7 @@ def cluster(scheduler: str | None) -> Iterator[Cluster]:
     own = None
     try:
         if scheduler is None:
-            own = dask.LocalCluster(n_workers=os.cpu_count(), threads_per_worker=1, dashboard_address=None)
+            own = local_cluster()
         client = dask.Client(own or scheduler, timeout=PATIENCE, set_as_default=False)
     except (OSError, ValueError, TypeError) as trouble:
         if own is not None:
@@ -172,6 +179,17 @@ def cluster(scheduler: str | None) -> Iterator[Cluster]:
         client.close()
         if own is not None:
             own.close()
+
+
+def local_cluster(workers: int | None = None) -> Any:
+    """Processes on this machine that work for one scheduler, one a core by default."""
+    import dask
+    import distributed
+
+    cluster: Any = distributed.LocalCluster  # it has no types
+    kept = {f"distributed.nanny.pre-spawn-environ.{name}": str(size) for name, size in MEMORY.items()}
+    with dask.config.set(kept):
+        return cluster(n_workers=workers or os.cpu_count(), threads_per_worker=1, dashboard_address=NOBODY)
 
 
 def _must_be_ours(client: Any, scheduler: str | None) -> None:
@@ -211,19 +229,17 @@ class Cluster:
 
         told = []
         for future in futures:
-            while True:
-                try:
-                    told.append(future.result(timeout=1))
-                    break
-                except TimeoutError:
-                    if future.done():
-                        raise
+            try:
+                while not future.done():
                     limits.check()
-                except KilledWorker as killed:
-                    came = "a block of series was given to several workers and each of them died"
-                    raise EngineError("--engine dask", came, todo="Have they enough memory?") from killed
-                except (CancelledError, CommClosedError) as gone:
-                    raise EngineError("--engine dask", "the scheduler is gone", "one that stays") from gone
+                    with suppress(TimeoutError):
+                        future.result(timeout=1)
+                told.append(future.result())
+            except KilledWorker as killed:
+                came = "a block of series was given to several workers and each of them died"
+                raise EngineError("--engine dask", came, todo="Have they enough memory?") from killed
+            except (CancelledError, CommClosedError) as gone:
+                raise EngineError("--engine dask", "the scheduler is gone", "one that stays") from gone
         return told
 
     def open(self, given: Given, layout: Layout) -> Source:

@@ -18,6 +18,8 @@ import pyarrow as pa
 import pyarrow.parquet as pq
 
 from sercheck import gate
+from sercheck.cli.stages import stages
+from sercheck.scale import local_cluster
 
 RULES = """
 feed: panel
@@ -32,8 +34,8 @@ rules:
 """
 
 
-def panel(folder, files, series, steps, seed=1):
-    """Parquet files that have series of their own, sorted by key; rows of autoregressive noise, seeded."""
+def panel(folder, files, series, steps, seed=1, group=250):
+    """Parquet files with series of their own, sorted by key, ``group`` series to a row group; seeded noise."""
     folder.mkdir(parents=True, exist_ok=True)
     t = pa.array(np.arange(steps) * 3600 * 10**6 + 1_760_000_400 * 10**6, pa.timestamp("us", "UTC"))
     rng = np.random.default_rng(seed)
@@ -48,7 +50,7 @@ def panel(folder, files, series, steps, seed=1):
             "key": pa.DictionaryArray.from_arrays(codes, names),
             "v": pa.array(noise.ravel()),
         }
-        pq.write_table(pa.table(columns), folder / f"{number:02d}.parquet", row_group_size=steps * 250)
+        pq.write_table(pa.table(columns), folder / f"{number:02d}.parquet", row_group_size=steps * group)
 
 
 def spent():
@@ -65,13 +67,13 @@ def _worker_cpu():
     return time.process_time()
 
 
-def dask_ratio(files=8, series=500, steps=1000, workers=2, repeats=3):
+def dask_ratio(files=8, series=500, steps=1000, workers=2, repeats=3, *, timings=False):
     """CPU and wall seconds of the local engine and of Dask workers on aligned files, and their ratios.
 
     Start-up aside: the cluster runs already and has judged one batch before; of it the CPU of client, scheduler and
     workers counts. The median of ``repeats`` pairs, one after the other, so that other load meets both.
     """
-    from distributed import Client, LocalCluster
+    from distributed import Client
 
     told = []
     with tempfile.TemporaryDirectory() as name:
@@ -80,21 +82,22 @@ def dask_ratio(files=8, series=500, steps=1000, workers=2, repeats=3):
         (place / "rules.yaml").write_text(RULES)
         batch = str(place / "feed" / "*.parquet")
         as_of = "2026-01-01T00:00:00Z"
-        with LocalCluster(n_workers=workers, threads_per_worker=1, dashboard_address=None) as cluster:
-            with Client(cluster) as client:
+        with local_cluster(workers) as cluster, Client(cluster) as client:
 
-                def run(**engine):
-                    before, began = _all_cpu(client), time.perf_counter()
-                    verdict = gate(str(place / "rules.yaml"), batch, as_of=as_of, **engine)
-                    return verdict, _all_cpu(client) - before, time.perf_counter() - began
+            def run(**engine):
+                before, began = _all_cpu(client), time.perf_counter()
+                verdict = gate(str(place / "rules.yaml"), batch, as_of=as_of, timings=timings, **engine)
+                if timings:
+                    print(stages(verdict.timings))
+                return verdict, _all_cpu(client) - before, time.perf_counter() - began
 
-                dask = {"engine": "dask", "scheduler": cluster.scheduler_address}
-                run(**dask)
-                run()
-                for _ in range(repeats):
-                    here, there = run(), run(**dask)
-                    assert here[0].decision == there[0].decision
-                    told.append([here[1], there[1], here[2], there[2]])
+            dask = {"engine": "dask", "scheduler": cluster.scheduler_address}
+            run(**dask)
+            run()
+            for _ in range(repeats):
+                here, there = run(), run(**dask)
+                assert here[0].decision == there[0].decision
+                told.append([here[1], there[1], here[2], there[2]])
     cpu_here, cpu_there, wall_here, wall_there = np.median(told, axis=0)
     cpu, wall = (float(np.median([row[k + 1] / row[k] for row in told])) for k in (0, 2))
     return {
@@ -116,9 +119,11 @@ def main():
     parser.add_argument("--series", type=int, default=500)
     parser.add_argument("--steps", type=int, default=1000)
     parser.add_argument("--repeats", type=int, default=3)
+    parser.add_argument("--timings", action="store_true", help="what each stage takes as well")
     asked = parser.parse_args()
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
-    print(json.dumps(dask_ratio(asked.files, asked.series, asked.steps, repeats=asked.repeats), indent=1))
+    told = dask_ratio(asked.files, asked.series, asked.steps, repeats=asked.repeats, timings=asked.timings)
+    print(json.dumps(told, indent=1))
 
 
 if __name__ == "__main__":

@@ -2,21 +2,32 @@
 
 import json
 import os
+import signal
 import subprocess
 import sys
+import threading
+import time
 from dataclasses import replace
 
 import numpy as np
 import pandas as pd
+import pyarrow as pa
 import pytest
+from scale_dask import RULES, panel
 
 from sercheck import gate, load_rules
+from sercheck.blocks import look
+from sercheck.engine import Run
 from sercheck.errors import BatchError, EngineError, SercheckError, UsageError
+from sercheck.history import Past
 from sercheck.intake import assemble, sorted_parquet
-from sercheck.intake.stream import MemorySource, StreamSource, open_feed
+from sercheck.intake.stream import MemorySource, StreamSource, feed_cadence, feed_grids, open_feed
+from sercheck.mapped import judge_batches
+from sercheck.scale import NOBODY, local_cluster
 from sercheck.verdict import layout_of
 
 distributed = pytest.importorskip("distributed")
+cloudpickle = pytest.importorskip("cloudpickle")
 
 HEAD = """
 feed: heat
@@ -99,7 +110,7 @@ def written(parts, folder):
 def address():
     """A scheduler with two threads in this process."""
     with distributed.LocalCluster(
-        n_workers=1, threads_per_worker=2, processes=False, dashboard_address=None
+        n_workers=1, threads_per_worker=2, processes=False, dashboard_address=NOBODY
     ) as cluster:
         yield cluster.scheduler_address
 
@@ -270,6 +281,98 @@ def test_stages_are_told_when_asked_for(tmp_path, address, small):
     assert 0 < sum(each.wall for each in told.timings) >= told.seconds * 0.5
     there = judged(rules, batch, engine="dask", scheduler=address, timings=True)
     assert "measure stuck" in [each.stage for each in there.timings]
+
+
+def test_what_is_sent_back_holds_no_history(tmp_path):
+    """What is kept of a block takes less than its rows: of twice as long a history no more comes back."""
+    rules = tmp_path / "rules.yaml"
+    rules.write_text(BESIDE)
+    book = load_rules(rules)
+    layout = layout_of(book)
+    sizes = []
+    for days in (66, 132):
+        begins = str(pd.Timestamp("2025-11-06") - pd.Timedelta(days=days))[:10]
+        batch, past = (open_feed(rows(*of), layout) for of in ((1, "2025-11-06", SERIES, 9), (days, begins)))
+        (grid,) = feed_grids(batch, past, layout)
+        seen = look(grid, Past(None), Run(book, feed_cadence(batch, past, layout), 0)).seen
+        sizes.append(len(cloudpickle.dumps(seen)) / grid.values["kwh"].nbytes)
+    assert sizes[0] < 0.8
+    assert sizes[1] < 0.6 * sizes[0]
+
+
+def killed_half_way(call, cluster, client):
+    """Run a call while one worker is killed once some tasks are done; what the call gives."""
+    victim = next(iter(cluster.workers.values())).pid
+    killed = threading.Event()
+
+    def kill():
+        while not killed.is_set():
+            if sum(client.run_on_scheduler(done).values()) > 3:
+                os.kill(victim, signal.SIGKILL)
+                killed.set()
+            time.sleep(0.01)
+
+    thread = threading.Thread(target=kill)
+    thread.start()
+    try:
+        return call(), killed.is_set()
+    finally:
+        killed.set()
+        thread.join()
+
+
+def done(dask_scheduler):
+    """Tasks by state that are done."""
+    return {"memory": sum(task.state == "memory" for task in dask_scheduler.tasks.values())}
+
+
+@pytest.mark.scale
+def test_a_worker_that_is_killed_costs_time_and_nothing_else(tmp_path, monkeypatch):
+    """A worker killed while it measures, by signal 9: the others do its work again, and the records are the same."""
+    rules = tmp_path / "rules.yaml"
+    rules.write_text(RULES)
+    panel(tmp_path / "feed", 4, 60, 400, group=5)
+    batch = str(tmp_path / "feed" / "*.parquet")
+    monkeypatch.setattr(sorted_parquet, "BLOCK_ROWS", 2000)
+    here = judged(rules, batch)
+    with local_cluster(2) as cluster, distributed.Client(cluster, set_as_default=False) as client:
+        engine = {"engine": "dask", "scheduler": cluster.scheduler_address}
+        there, killed = killed_half_way(lambda: judged(rules, batch, **engine), cluster, client)
+    assert killed
+    same(here, there)
+
+
+def test_arrow_batches_of_whole_series_have_the_same_records(tmp_path):
+    """Rules that look at one series give the gate's records, batch by batch of series, history in the same batch."""
+    rules = tmp_path / "rules.yaml"
+    alone = [line for line in BESIDE.replace("[batch, together]", "series").splitlines() if "places" not in line]
+    rules.write_text("\n".join(alone).replace("discoveries", "series").replace("0.9}}", "0.9}, across: series}"))
+    history, batch = rows(days=66, first="2025-09-01"), rows(days=1, first="2025-11-06", seed=9)
+    here = judged(rules, batch, history).records
+    feed = pd.concat([history, batch])
+    parts = [feed[feed.key.str[1:].astype(int) % 3 == number] for number in range(3)]
+    given = [pa.RecordBatch.from_pandas(part, preserve_index=False) for part in parts]
+    tables = judge_batches(
+        rules, given, batch="b7", since="2025-09-01T00:00+02:00", first="2025-11-06T00:00+01:00",
+        last="2025-11-06T23:00+01:00", as_of=AS_OF,
+    )  # fmt: skip
+    there = pd.concat([table.to_pandas() for table in tables])
+    order = ["rule", "series"]
+    plain = ["outcome", "n", "n_missing", "observed", "limit", "p_value", "false_alarm_used", "window_start", "reason"]
+    for frame in (here, there):
+        frame[plain] = frame[plain].astype(object)
+    ours, theirs = (frame.sort_values(order).set_index(order)[plain] for frame in (here, there))
+    assert (ours.isna() == theirs.isna()).all(axis=None)
+    assert (ours.fillna(0) == theirs.fillna(0)).all(axis=None)
+
+
+@pytest.mark.parametrize("rule", ["level", "places"])
+def test_arrow_batches_are_refused_where_series_count_together(rule, tmp_path):
+    """A rule that shares its risk or compares series cannot be judged batch by batch, and says so."""
+    rules = tmp_path / "rules.yaml"
+    rules.write_text(HEAD + "\n".join(line for line in BESIDE.splitlines() if f"name: {rule}" in line))
+    with pytest.raises(UsageError, match=f"rule '{rule}'"):
+        next(judge_batches(rules, [], batch="b", first="2025-11-06", last="2025-11-07"))
 
 
 def test_the_command_line_tells_stages_and_takes_processes(tmp_path):
