@@ -106,8 +106,9 @@ class RecentPast:
 
     @cached_property
     def places(self) -> Ranking:
-        """History's residuals, ordered."""
-        return ranking(self.residual[:, : -self.n])
+        """History's residuals, ordered; those that are equal but for their rounding are ties."""
+        terms = () if self.profile is None else (self.y[:, : -self.n], self.expected[:, : -self.n])
+        return ranking(self.residual[:, : -self.n], terms)
 
     @cached_property
     def scores(self) -> Floats:

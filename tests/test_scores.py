@@ -113,3 +113,18 @@ def test_the_commonest_share_without_places():
     x[4, ::2] = 0.0
     np.testing.assert_array_equal(commonest_share(x), ranking(x).commonest)
     assert commonest_share(np.empty((2, 0))).tolist() == pytest.approx([np.nan, np.nan], nan_ok=True)
+
+
+def test_what_rounding_parts_is_tied():
+    """Residuals of rounded readings are ties in every unit; outliers elsewhere do not tie what is apart."""
+    rng = np.random.default_rng(11)
+    readings, cycle = np.round(rng.normal(200, 5, (2, 400)), 1), np.tile(np.round(rng.normal(0, 9, 8), 2) / 7, 50)
+    scores = ranking(readings - cycle, (readings, np.broadcast_to(cycle, readings.shape))).own
+    for scale, shift in ((3.6, 0.0), (1 / 3.6, 64.0), (1.0, -4096.3)):
+        other, profile = readings * scale + shift, np.broadcast_to(cycle * scale + shift, readings.shape)
+        np.testing.assert_array_equal(ranking(other - profile, (other, profile)).own, scores)
+    exact = ranking(np.round((readings - cycle) * 7, 9)).own
+    np.testing.assert_array_equal(scores, exact)
+    apart = rng.normal(size=(1, 50))
+    apart[0, 7] = 1e15
+    np.testing.assert_array_equal(ranking(apart, (apart, np.zeros_like(apart))).own, ranking(apart).own)

@@ -93,7 +93,16 @@ def _past(panel: Panel) -> Past:
 
 def scored(panel: Panel, history: Floats | None = None) -> Ranking:
     """Normal scores in the series' own history, without its cycles."""
-    return panel.remember("ranking", lambda: ranking(past(panel).history if history is None else history))
+    return panel.remember("ranking", lambda: _scored(panel) if history is None else ranking(history))
+
+
+def _scored(panel: Panel) -> Ranking:
+    """Residuals that are equal but for their rounding are ties, as they are in every other unit."""
+    told = past(panel)
+    if not told.seasons:
+        return ranking(told.history)
+    terms = (panel.history, residual(panel).profile[:, : panel.start])
+    return ranking(told.history, [term / told.scale[:, None] for term in terms])
 
 
 def score_spectrum(panel: Panel) -> CosineSpectrum:

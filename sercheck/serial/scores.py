@@ -2,16 +2,20 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
 import numpy as np
 from scipy import special
 
-from sercheck.serial.arrays import Floats, Ints, as_series
+from sercheck.serial.arrays import Bools, Floats, Ints, as_series
 
 GRID = 257
 """Points of the compact quantile grid: steps of .03 standard deviations for 2,000 values, finer than any limit."""
+ROUNDING = 2.0**-44
+"""What a sum or difference of numbers may be off, as a share of their size: 256 units in the last place (ours: a
+profile is a mean of tens of values, and a reading in another unit is rounded anew)."""
 
 
 @dataclass(frozen=True)
@@ -89,7 +93,7 @@ class QuantileGrid:
         return np.asarray(value + slope * (score - np.clip(score, lowest, highest)), dtype=np.float64)
 
 
-def ranking(history: object) -> Ranking:
+def ranking(history: object, terms: Sequence[Floats] = ()) -> Ranking:
     """Order each series' history and give every value its normal score (van der Waerden 1952).
 
     z(v) = Φ⁻¹((values less than v + ½ values equal to v) / N): (i - ½)/N for the i-th of distinct values, the
@@ -97,6 +101,8 @@ def ranking(history: object) -> Ranking:
 
     Args:
         history: one series or shape (S, N); NaN is missing and takes no part.
+        terms: what history is the sum or difference of, shape (S, N) each. Values that differ by no more than their
+            rounding are ties; else the unit of the readings would decide which of them are.
     """
     history = as_series(history)
     series, length = history.shape
@@ -106,7 +112,7 @@ def ranking(history: object) -> Ranking:
         return Ranking(empty, empty, empty, counts, np.full(series, np.nan))
     order = np.argsort(history, axis=1, kind="stable")
     values = np.take_along_axis(history, order, axis=1)
-    first, last = _ties(values)
+    first, last = _ties(values, _apart(values, order, terms))
     last = np.minimum(last, np.maximum(counts - 1, 0)[:, None])
     scores = _score(first + last + 1, counts)
     scores[np.isnan(values)] = np.nan
@@ -131,7 +137,7 @@ def commonest_share(history: object) -> Floats:
     most = np.minimum(counts, 1)
     tied = np.flatnonzero((values[:, 1:] == values[:, :-1]).any(axis=1))
     if len(tied):
-        first, last = _ties(values[tied])
+        first, last = _ties(values[tied], _apart(values[tied]))
         most[tied] = np.where(np.isnan(values[tied]), 0, last - first + 1).max(axis=1)
     with np.errstate(invalid="ignore", divide="ignore"):
         return np.where(counts > 0, most / counts, np.nan)
@@ -142,11 +148,26 @@ def normal_scores(x: object, history: object) -> Floats:
     return ranking(history).of(as_series(x))
 
 
-def _ties(values: Floats) -> tuple[Ints, Ints]:
-    """First and last place of the run of equal values that each sorted value lies in."""
-    place = np.arange(values.shape[1])
+def _apart(values: Floats, order: Ints | None = None, terms: Sequence[Floats] = ()) -> Bools:
+    """Where a sorted value is not the same as the one before it, but for the rounding of its terms; shape (S, N)."""
     new = np.ones(values.shape, dtype=bool)
     new[:, 1:] = values[:, 1:] != values[:, :-1]
+    if order is None or not terms:
+        return new
+    largest = sum(np.max(np.abs(term), axis=1, where=~np.isnan(term), initial=0.0) for term in terms)
+    with np.errstate(invalid="ignore", over="ignore"):
+        close = values[:, 1:] - values[:, :-1] <= 2 * ROUNDING * np.asarray(largest)[:, None]
+    row, place = np.nonzero(close & new[:, 1:])
+    if len(row):  # few: only they are looked at with terms of their own
+        here, before = order[row, place + 1], order[row, place]
+        size = np.sum([np.abs(term[row, here]) + np.abs(term[row, before]) for term in terms], axis=0)
+        new[row, place + 1] = values[row, place + 1] - values[row, place] > ROUNDING * size
+    return new
+
+
+def _ties(values: Floats, new: Bools) -> tuple[Ints, Ints]:
+    """First and last place of the run of equal values that each sorted value lies in."""
+    place = np.arange(values.shape[1])
     first = np.maximum.accumulate(np.where(new, place, 0), axis=1)
     ends = np.ones(values.shape, dtype=bool)
     ends[:, :-1] = new[:, 1:]
