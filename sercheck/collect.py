@@ -43,7 +43,7 @@ def _part(rule: Rule, judged: Judged, common: Common) -> Records:
     if not series:
         return Records.empty()
     acts = actions(rule)
-    outcomes = judged.outcome.ravel().tolist()
+    outcomes = judged.outcome.ravel()
 
     def flat(values: np.ndarray) -> np.ndarray:
         return np.broadcast_to(values, seen.observed.shape).ravel()
@@ -85,9 +85,9 @@ def _part(rule: Rule, judged: Judged, common: Common) -> Records:
         "p_value": flat(judged.p_value),
         "false_alarm": None if seen.exact else rule.false_alarm,
         "false_alarm_used": flat(judged.risk_used),
-        "outcome": [OUTCOMES[code] for code in outcomes],
+        "outcome": np.array(OUTCOMES, dtype=object)[outcomes],
         "reason": sentences(rule, judged),
-        "action": [acts.get(code) for code in outcomes],
+        "action": np.array([acts.get(code) for code in range(len(OUTCOMES))], dtype=object)[outcomes],
         "likely_cause": cause,
         "cause_support": support,
     }

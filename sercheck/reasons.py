@@ -4,9 +4,14 @@ from __future__ import annotations
 
 import math
 
+import numpy as np
+
 from sercheck.judge import FAIL, PASS, Judged
 from sercheck.rulebook.compiled import Rule
+from sercheck.serial.arrays import Bools, Floats, Ints
 from sercheck.transforms import spelled
+
+SIDES = ("not above", "not below", "at", "above", "below")
 
 
 def number(x: float, *, integer: bool = False) -> str:
@@ -40,52 +45,58 @@ def sentences(rule: Rule, judged: Judged) -> list[str]:
     lags = seen.lags or (None,) * seen.observed.shape[1]
     whole = " over all series (in standard deviations)" if judged.seen.keys[:1].tolist() == [None] else ""
     names = [subject(rule, judged.seen.column, lag, seen.season) + whole for lag in lags] * seen.observed.shape[0]
-    cells = zip(
-        names,
-        judged.outcome.ravel().tolist(),
-        judged.why.ravel().tolist(),
-        seen.observed.ravel().tolist(),
-        judged.upper.ravel().tolist(),
-        judged.bound.ravel().tolist(),
-        judged.limit.ravel().tolist(),
-        seen.n.ravel().tolist(),
-        seen.n_eff.ravel().tolist(),
-        strict=True,
-    )
-    return [_sentence(rule, judged, *cell) for cell in cells]
-
-
-def _sentence(
-    rule: Rule,
-    judged: Judged,
-    name: str,
-    outcome: int,
-    why: int,
-    observed: float,
-    upper: bool,
-    bound: float,
-    limit: float,
-    n: int,
-    n_eff: float,
-) -> str:
-    seen = judged.seen.measurement
-    if outcome not in (PASS, FAIL):
-        return f"{name}: {judged.reasons[why]}"
+    outcome = judged.outcome.ravel()
     if seen.certify:
-        return f"{name}: {'is there' if outcome == PASS else 'no season can be certified'}"
-    value = number(observed, integer=seen.integer)
-    side = _side(outcome, upper=upper, at=observed == limit)
-    source = "history" if rule.stays.kind == "like_history" else "bound"
+        told = ["is there" if code == PASS else "no season can be certified" for code in outcome.tolist()]
+        texts = [f"{name}: {text}" for name, text in zip(names, told, strict=True)]
+    else:
+        texts = _compared(rule, judged, names)
+    for cell in np.flatnonzero((outcome != PASS) & (outcome != FAIL)).tolist():
+        texts[cell] = f"{names[cell]}: {judged.reasons[judged.why.flat[cell]]}"
+    return texts
+
+
+def _compared(rule: Rule, judged: Judged, names: list[str]) -> list[str]:
+    """What was observed beside its limit, column by column: these are most of a judgement's texts."""
+    seen = judged.seen.measurement
+    observed, limit, bound = (values.ravel() for values in (seen.observed, judged.limit, judged.bound))
+    values, bounds = numbers(observed, integer=seen.integer), numbers(bound, integer=seen.exact and seen.integer)
+    sides = _sides(judged.outcome.ravel(), judged.upper.ravel(), observed == limit)
+    cells = zip(names, values, sides, bounds, strict=True)
     if seen.exact:
-        return f"{name} is {value}, {side} the bound {number(bound, integer=seen.integer)}"
-    rows = "1 row" if n == 1 else f"{n} rows"
-    sizes = rows if math.isnan(n_eff) else f"{rows}, worth {number(n_eff)} independent ones"
-    edge = "a limit beyond all that could be seen" if math.isnan(limit) else f"the limit {number(limit)}"
-    return f"{name} is {value}, {side} {edge} ({source} {number(bound)}; {sizes})"
+        return [f"{name} is {value}, {side} the bound {number}" for name, value, side, number in cells]
+    source = "history" if rule.stays.kind == "like_history" else "bound"
+    edges = [f"the limit {text}" for text in numbers(limit)]
+    for cell in np.flatnonzero(np.isnan(limit)).tolist():
+        edges[cell] = "a limit beyond all that could be seen"
+    n_eff = seen.n_eff.ravel()
+    worth = [f", worth {text} independent ones" for text in numbers(n_eff)]
+    for cell in np.flatnonzero(np.isnan(n_eff)).tolist():
+        worth[cell] = ""
+    counts = seen.n.ravel().tolist()
+    rows = {n: "1 row" if n == 1 else f"{n} rows" for n in set(counts)}
+    return [
+        f"{name} is {value}, {side} {edge} ({source} {number}; {rows[n]}{size})"
+        for (name, value, side, number), edge, n, size in zip(cells, edges, counts, worth, strict=True)
+    ]
 
 
-def _side(outcome: int, *, upper: bool, at: bool) -> str:
-    """Where the observation lies; a pass names the side that it is nearer to break."""
-    if outcome == PASS:
-        return "not above" if upper else "not below"
-    return "at" if at else "above" if upper else "below"
+def numbers(x: Floats, *, integer: bool = False) -> list[str]:
+    """``number`` of each."""
+    if not len(x):
+        return []
+    if (x == x[0]).all():
+        return [number(float(x[0]), integer=integer)] * len(x)
+    if integer:
+        return [number(value, integer=True) for value in x.tolist()]
+    texts = [f"{value:.4g}" for value in x.tolist()]
+    size = np.abs(x)
+    for cell in np.flatnonzero(np.isnan(x) | ((size >= 1e4) & (size < 1e9))).tolist():
+        texts[cell] = number(float(x[cell]))
+    return texts
+
+
+def _sides(outcome: Ints, upper: Bools, at: Bools) -> list[str]:
+    """Where the observations lie; a pass names the side that it is nearer to break."""
+    code = np.where(outcome == PASS, np.where(upper, 0, 1), np.where(at, 2, np.where(upper, 3, 4)))
+    return [SIDES[number] for number in code.tolist()]

@@ -198,11 +198,14 @@ def record_ids(
     start = blake2b("".join(common).encode(), digest_size=16)
     spelled = _Spelled()
     lags = np.asarray(lag, dtype=np.float64)
+    numbers = [b"-" if none else b"%d" % number for number, none in zip(lags.tolist(), np.isnan(lags), strict=True)]
     ids = np.empty(len(lags), dtype=object)
-    ids[:] = [
-        _digest(start, spelled[a] + spelled[b] + spelled[c] + (b"-" if none else b"%d" % d))
-        for a, b, c, d, none in zip(rule, column, series, lags.tolist(), np.isnan(lags).tolist(), strict=True)
-    ]
+    heads: dict[tuple[str | None, str | None], blake2b] = {}
+    for pair in set(zip(rule, column, strict=True)):
+        heads[pair] = start.copy()
+        heads[pair].update(spelled[pair[0]] + spelled[pair[1]])
+    rest = (spelled[name] + number for name, number in zip(series, numbers, strict=True))
+    ids[:] = [_digest(heads[pair], part) for pair, part in zip(zip(rule, column, strict=True), rest, strict=True)]
     return ids
 
 
@@ -282,8 +285,9 @@ def _texts(name: str, given: Sequence[Any] | np.ndarray) -> np.ndarray:
     odd = {kind for kind in set(map(type, column.tolist())) if kind not in (str, type(None))}
     if odd:
         column[:] = [_text(name, value) for value in column.tolist()]
-    mended = {text: storable(text) for text in set(column.tolist()) - {None} if _UNSTORABLE.search(text)}
-    if mended:
+    texts = column.tolist()
+    if _UNSTORABLE.search("".join(texts if None not in texts else filter(None, texts))):
+        mended = {text: storable(text) for text in set(texts) - {None} if _UNSTORABLE.search(text)}
         column[:] = [mended.get(text, text) for text in column.tolist()]
     return column
 

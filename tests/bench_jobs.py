@@ -1,4 +1,4 @@
-"""What ``tests.bench`` measures, in processes of their own: a line of stdin, ``[job, fields]``, is answered by its cost.
+"""What ``tests.bench`` measures, in processes of their own: each line of stdin, ``[job, fields]``, gets its cost.
 
 CPU is user and system time of all threads, after everything was imported and run once on a small file; the least of
 the runs counts. Memory is the peak of the whole process.
