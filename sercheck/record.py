@@ -196,35 +196,28 @@ def record_ids(
     """
     common = map(_spelled, (batch_fingerprint, rules_fingerprint, baseline_id))
     start = blake2b("".join(common).encode(), digest_size=16)
-    spelled = _Spelled()
     lags = np.asarray(lag, dtype=np.float64)
     numbers = [b"-" if none else b"%d" % number for number, none in zip(lags.tolist(), np.isnan(lags), strict=True)]
-    ids = np.empty(len(lags), dtype=object)
     heads: dict[tuple[str | None, str | None], blake2b] = {}
     for pair in set(zip(rule, column, strict=True)):
         heads[pair] = start.copy()
-        heads[pair].update(spelled[pair[0]] + spelled[pair[1]])
-    rest = (spelled[name] + number for name, number in zip(series, numbers, strict=True))
-    ids[:] = [_digest(heads[pair], part) for pair, part in zip(zip(rule, column, strict=True), rest, strict=True)]
+        heads[pair].update(_bytes(pair[0]) + _bytes(pair[1]))
+    digests = []
+    for pair, name, number in zip(zip(rule, column, strict=True), series, numbers, strict=True):
+        digest = heads[pair].copy()
+        digest.update(_bytes(name) + number)
+        digests.append(digest.hexdigest())
+    ids = np.empty(len(lags), dtype=object)
+    ids[:] = digests
     return ids
 
 
-def _digest(start: blake2b, rest: bytes) -> str:
-    digest = start.copy()
-    digest.update(rest)
-    return digest.hexdigest()
+def _bytes(text: str | None) -> bytes:
+    return _spelled(text).encode("utf-8", "surrogatepass")
 
 
 def _spelled(text: str | None) -> str:
     return "-;" if text is None else f"{len(text)}:{text};"
-
-
-class _Spelled(dict[str | None, bytes]):
-    """Names repeat: each is spelled once."""
-
-    def __missing__(self, text: str | None) -> bytes:
-        spelled = self[text] = _spelled(text).encode("utf-8", "surrogatepass")
-        return spelled
 
 
 def storable(text: str) -> str:

@@ -16,8 +16,10 @@ from sercheck.serial.autoregression import (
 from sercheck.serial.centre import centred
 from sercheck.serial.own_models import OwnModels
 from sercheck.serial.reflections import Reflected, blocks
-from sercheck.serial.sampling_error import mean_bias, model_lags
+from sercheck.serial.sampling_error import autocorrelation_bias, bartlett_weights, mean_bias, model_lags
 
+FEW_LAGS = 4
+"""Lags up to which sums cost less than Fourier transforms (measured)."""
 BLOCK = 1 << 15
 """Values worked on at a time: the arrays of the recursion stay in a second-level cache."""
 
@@ -165,6 +167,11 @@ def _means(rho: Floats, slope: Floats, cycle: int) -> Floats:
 def _combined_weights(rho: Floats, slope: Floats) -> Floats:
     """Σ_i slope_i W^(i), W^(i) Bartlett's weights at lag i: a convolution of ρ with the slopes, both symmetric."""
     longest, lag = rho.shape[1] - 1, slope.shape[1]
+    if lag <= FEW_LAGS:
+        weights = np.zeros((len(slope), longest + lag))
+        for i in range(1, lag + 1):
+            weights[:, : longest + i] += slope[:, i - 1 : i] * bartlett_weights(rho, i)
+        return weights
     around = np.concatenate([np.zeros((len(slope), 1)), slope], axis=1)
     size = good_length(2 * (longest + lag) + 1)
     both = np.fft.irfft(_symmetric(rho, size) * _symmetric(around, size), size)[:, 1 : longest + lag + 1]
@@ -174,6 +181,8 @@ def _combined_weights(rho: Floats, slope: Floats) -> Floats:
 
 def _biases(rho: Floats, lag: int) -> Floats:
     """``autocorrelation_bias`` at the lags 1 .. lag, shape (S, lag)."""
+    if lag <= FEW_LAGS:
+        return np.stack([autocorrelation_bias(rho, i) for i in range(1, lag + 1)], axis=1)
     size = good_length(2 * rho.shape[1] + lag)
     shifted = np.fft.irfft(_symmetric(rho, size) ** 2, size)
     at = rho[:, 1 : lag + 1]

@@ -33,9 +33,12 @@ def bartlett_weights(rho: Floats, lag: int) -> Floats:
     sum of the squared weights.
     """
     longest = rho.shape[-1] - 1
-    j = np.arange(1, longest + lag + 1)
+    size = longest + lag
     wide = np.concatenate([rho, np.zeros((*rho.shape[:-1], 2 * lag + longest))], axis=-1)
-    weights: Floats = wide[..., lag + j] + wide[..., np.abs(lag - j)] - 2 * wide[..., j] * wide[..., lag : lag + 1]
+    weights: Floats = wide[..., lag + 1 : lag + 1 + size].copy()
+    weights[..., :lag] += wide[..., lag - 1 :: -1] if lag > 1 else wide[..., :1]
+    weights[..., lag:] += wide[..., 1 : size - lag + 1]
+    weights -= 2 * wide[..., 1 : size + 1] * wide[..., lag : lag + 1]
     return weights
 
 
