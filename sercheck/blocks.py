@@ -16,9 +16,12 @@ from sercheck.counted import Counted
 from sercheck.engine import Run, measure_block
 from sercheck.grid import Grid
 from sercheck.history import Past
+from sercheck.intake.calendar import Cadence
 from sercheck.intake.layout import Layout
 from sercheck.intake.stream import Source, feed_grids, open_feed
 from sercheck.judge import Seen
+from sercheck.learn import Learned, of_block
+from sercheck.rulebook.compiled import Rulebook
 from sercheck.sketching import Clearest, Sketcher
 
 if TYPE_CHECKING:
@@ -79,6 +82,9 @@ class Workers(Protocol):
     def open(self, given: Given, layout: Layout) -> Source:
         """Open the batch."""
 
+    def learned(self, history: Source, layout: Layout, book: Rulebook, cadence: Cadence) -> Iterator[Learned]:
+        """What all blocks of a history teach, in their order."""
+
     def looked(self, batch: Source, past: Past, layout: Layout, run: Run) -> Iterator[Looked]:
         """Look at all blocks of the batch beside its history, in their order."""
 
@@ -88,6 +94,9 @@ class Here:
 
     def open(self, given: Given, layout: Layout) -> Source:
         return open_feed(given, layout)
+
+    def learned(self, history: Source, layout: Layout, book: Rulebook, cadence: Cadence) -> Iterator[Learned]:
+        return (of_block(grid, book, cadence) for grid in feed_grids(history, None, layout))
 
     def looked(self, batch: Source, past: Past, layout: Layout, run: Run) -> Iterator[Looked]:
         stopwatch.begin("read")

@@ -99,18 +99,31 @@ class Lessons:
     findings: tuple[Finding, ...]
 
 
-def learn(source: Source, book: Rulebook, layout: Layout, cadence: Cadence, learned_at: str) -> Lessons:
-    """Learn from history, block by block of series."""
+Learned = tuple[list[Facts], list[Finding]]
+"""What one block teaches."""
+
+
+def of_block(grid: Grid, book: Rulebook, cadence: Cadence) -> Learned:
+    """What a block teaches: facts of each column, and what is odd. Pure."""
+    steps = _window_steps(book, cadence, grid)
+    parts = [facts_of(grid, column, book.rules, steps) for column in book.values]
+    return parts, [found for facts in parts for found in _findings(facts, grid.axis)]
+
+
+def learn(
+    source: Source,
+    book: Rulebook,
+    layout: Layout,
+    cadence: Cadence,
+    learned_at: str,
+    blocks: Iterable[Learned] | None = None,
+) -> Lessons:
+    """Learn from history, block by block of series; ``blocks`` come from workers that looked at it."""
     parts: list[Facts] = []
     findings: list[Finding] = []
-    axis: Axis | None = None
-    for grid in feed_grids(source, None, layout):
-        axis = grid.axis
-        steps = _window_steps(book, cadence, grid)
-        for column in book.values:
-            facts = facts_of(grid, column, book.rules, steps)
-            parts.append(facts)
-            findings += _findings(facts, axis)
+    for facts, found in blocks or (of_block(grid, book, cadence) for grid in feed_grids(source, None, layout)):
+        parts += facts
+        findings += found
     table = _table(parts)
     row = identity(source, book, cadence, learned_at, facts=_parquet(table), series=len(set(_keys(parts))))
     return Lessons(row, table, parts[0].seasons if parts else (), tuple(findings))

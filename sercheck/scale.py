@@ -34,6 +34,8 @@ from sercheck.intake.pairs import aligned
 from sercheck.intake.paths import expand, kind_of
 from sercheck.intake.rows import Fingerprint, Rows
 from sercheck.intake.stretch import Plan, plan
+from sercheck.learn import Learned, of_block
+from sercheck.rulebook.compiled import Rulebook
 from sercheck.shuffle import Shuffled, mixed_up, row_groups, side_by_side
 
 if TYPE_CHECKING:
@@ -79,13 +81,13 @@ class Done:
     """What comes back from a task.
 
     Attributes:
-        looked: what was kept of its blocks.
+        looked: what was kept of its blocks, or what they teach.
         mixed: fingerprint of the rows that it read.
         known: places of the batch's series that its history has.
         timings: what its stages took.
     """
 
-    looked: list[Looked]
+    looked: list[Any]
     mixed: Fingerprint | None = None
     known: np.ndarray | None = None
     timings: tuple[Timing, ...] = ()
@@ -135,6 +137,31 @@ def _looked(common: Common, grids: Iterable[Grid]) -> Done:
             looked.append(look(grid, common.past, common.run))
             stopwatch.begin("read")
         return Done(looked, timings=stopwatch.timings())
+
+
+@dataclass(frozen=True)
+class Teaching:
+    """What all tasks need that learn."""
+
+    book: Rulebook
+    cadence: Cadence
+    laid: Plan | None = None
+    batch: None = None
+
+
+def lesson_of_grid(common: Teaching, grid: Grid) -> Done:
+    """Learn from a block that was sent."""
+    return Done([of_block(grid, common.book, common.cadence)])
+
+
+def lesson_of_piece(common: Teaching, piece: Piece) -> Done:
+    """Read a piece of history and learn from it."""
+    assert common.laid is not None
+    rows = piece.rows()
+    if not len(rows):
+        return Done([])
+    grids = planned_grids(rows, None, common.laid)
+    return Done([of_block(grid, common.book, common.cadence) for grid in grids], mixed_up(rows))
 
 
 def same(what: Any) -> Any:
@@ -261,6 +288,18 @@ class Cluster:
         )
         return Shuffled(self, units, layout, paths, sorted_parquet.BLOCK_ROWS)
 
+    def learned(self, history: Source, layout: Layout, book: Rulebook, cadence: Cadence) -> Iterator[Learned]:
+        """What all blocks of a history teach, in the order of the local engine."""
+        common = Teaching(book, cadence)
+        pieces = None if cadence.irregular else history.pieces()
+        if pieces is None or not isinstance(history, stream.ReadForFingerprint):
+            grids = stream.feed_grids(history, None, layout)
+            yield from self._each(lesson_of_grid, common, ([grid] for grid in grids))
+            return
+        own = stream.feed_cadence(history, None, layout)
+        common = replace(common, laid=plan(history.extent(own), None, own, layout, None))
+        yield from self._pieces(lesson_of_piece, common, history, pieces)
+
     def looked(self, batch: Source, past: Past, layout: Layout, run: Run) -> Iterator[Looked]:
         """Look at all blocks of the batch beside its history, in the order of the local engine."""
         stopwatch.begin("wait for workers")
@@ -286,8 +325,8 @@ class Cluster:
             yield from self._pieces(of_history, replace(common, laid=laid, batch=rows), feed, pieces)
 
     def _pieces(
-        self, function: Any, common: Common, feed: stream.ReadForFingerprint, pieces: Sequence[Piece]
-    ) -> Iterator[Looked]:
+        self, function: Any, common: Common | Teaching, feed: stream.ReadForFingerprint, pieces: Sequence[Piece]
+    ) -> Iterator[Any]:
         """Pieces of the batch, or of its history and then the series that only the batch knows."""
         mixed = Fingerprint(feed.layout.values)
         batch = common.batch
@@ -302,6 +341,7 @@ class Cluster:
         if batch is not None and left.any():
             assert common.laid is not None
             grids = planned_grids(aligned(batch, batch.keys[left]), None, common.laid)
+            assert isinstance(common, Common)
             yield from self._each(of_grid, replace(common, batch=None), ([grid] for grid in grids))
 
     def _shuffled(self, batch: Shuffled, common: Common) -> Iterator[Looked]:
@@ -311,11 +351,11 @@ class Cluster:
         blocks = (batch.of_series(low, min(low + height, series)) for low in range(0, series, height))
         yield from self._each(of_parts, common, blocks)
 
-    def _each(self, function: Any, common: Common, calls: Iterable[Sequence[Any]]) -> Iterator[Looked]:
+    def _each(self, function: Any, common: Common | Teaching, calls: Iterable[Sequence[Any]]) -> Iterator[Any]:
         for done in self._done(function, common, calls):
             yield from done.looked
 
-    def _done(self, function: Any, common: Common, calls: Iterable[Sequence[Any]]) -> Iterator[Done]:
+    def _done(self, function: Any, common: Common | Teaching, calls: Iterable[Sequence[Any]]) -> Iterator[Done]:
         """What calls came to, in their order; few are on their way at a time."""
         sent = self.submit(same, common)
         waiting: deque[Any] = deque()

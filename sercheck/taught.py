@@ -9,6 +9,8 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from sercheck.archived import keep_history
+from sercheck.blocks import Workers
+from sercheck.engines import workers_of
 from sercheck.errors import BatchError
 from sercheck.history import Memory, open_memory, regime, regime_note, teaches_from
 from sercheck.intake.calendar import Cadence
@@ -50,7 +52,14 @@ class Taught:
 
 
 def teach(
-    rules: Rulebook | str | Path, history: Given, store: str | Path, *, ledger: str | None = None, keep: bool = True
+    rules: Rulebook | str | Path,
+    history: Given,
+    store: str | Path,
+    *,
+    ledger: str | None = None,
+    keep: bool = True,
+    engine: str = "local",
+    scheduler: str | None = None,
 ) -> Taught:
     """Fill the archive from history and learn the baseline from its newest part.
 
@@ -63,23 +72,25 @@ def teach(
         store: folder of ledger and archive.
         ledger: SQLAlchemy URL of the ledger, where it is not in the store.
         keep: write to ledger and archive.
+        engine: ``local`` or ``dask``, as for ``gate``.
+        scheduler: address of a running Dask scheduler; default as many processes here as there are cores.
 
     Raises:
         SercheckError: rule file, history or store cannot be used.
     """
     book = rules if isinstance(rules, Rulebook) else load_rules(rules)
     layout = layout_of(book)
-    with open_ledger(str(store), ledger) as kept_in:
+    with open_ledger(str(store), ledger) as kept_in, workers_of(engine, scheduler) as workers:
         memory = open_memory(book, layout, kept_in, store, writes=keep)
         if keep:
             kept_in.prepare()
             memory.prepare()
         source = open_feed(history, layout)
         cadence = Cadence(layout.every, layout.timezone).anchored(source.sample())
-        return _taught(memory, source, cadence)
+        return _taught(memory, source, cadence, workers)
 
 
-def _taught(memory: Memory, source: Source, cadence: Cadence) -> Taught:
+def _taught(memory: Memory, source: Source, cadence: Cadence, workers: Workers) -> Taught:
     book, layout = memory.book, memory.layout
     extent = source.extent(cadence)
     since = regime(memory)
@@ -89,7 +100,7 @@ def _taught(memory: Memory, source: Source, cadence: Cadence) -> Taught:
     if teaching is None:
         raise BatchError("the history", "no row of the time that teaches", "newer rows", "Look at `baseline: from`.")
     learned_at = datetime.now(UTC).strftime("%Y-%m-%dT%H:%M:%SZ")
-    lessons = learn(teaching, book, layout, cadence, learned_at)
+    lessons = learn(teaching, book, layout, cadence, learned_at, workers.learned(teaching, layout, book, cadence))
     lacks = tuple(lacking(teaching, book, layout, cadence))
     archived = there = 0
     if memory.writes:

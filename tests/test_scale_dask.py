@@ -24,6 +24,7 @@ from sercheck.intake import assemble, sorted_parquet
 from sercheck.intake.stream import MemorySource, StreamSource, feed_cadence, feed_grids, open_feed
 from sercheck.mapped import judge_batches
 from sercheck.scale import NOBODY, local_cluster
+from sercheck.taught import teach
 from sercheck.verdict import layout_of
 
 distributed = pytest.importorskip("distributed")
@@ -175,6 +176,24 @@ def test_the_same_records_beside_an_archive(tmp_path, address, small):
     again = gate(rules, batch, as_of=AS_OF, store=store)
     assert first.batch_id == again.batch_id
     assert "that judgement stands" in again.notes[-1]
+
+
+@pytest.mark.parametrize("form", [aligned, comma_separated])
+def test_the_same_baseline_is_learned(form, tmp_path, address, small):
+    """Workers learn the same facts, to the bit, and find the same oddities."""
+    rules = tmp_path / "rules.yaml"
+    rules.write_text(BESIDE)
+    past = form(rows(days=40, first="2025-09-20"), tmp_path)
+    here, there = (
+        teach(rules, past, tmp_path / name, keep=False, **engine)
+        for name, engine in (("a", {}), ("b", {"engine": "dask", "scheduler": address}))
+    )
+    assert here.lessons.findings
+    assert here.lessons.findings == there.lessons.findings
+    assert here.lessons.facts.num_rows == SERIES
+    assert here.lessons.baseline.facts == there.lessons.baseline.facts
+    assert here.lessons.baseline.baseline_id == there.lessons.baseline.baseline_id
+    assert here.lacks == there.lacks
 
 
 def test_the_risk_is_shared_once(tmp_path, address, small):

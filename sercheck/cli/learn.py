@@ -14,8 +14,18 @@ from sercheck.cli.say import say
 @click.argument("history", type=click.Path(), nargs=-1, required=True)
 @click.option("--store", envvar="SERCHECK_STORE", default=".sercheck", show_default=True, metavar="DIR|URL")
 @click.option("--no-keep", is_flag=True, help="Write nothing to store or archive.")
+@click.option("--engine", type=click.Choice(["local", "dask"]), default="local", show_default=True)
+@click.option("--scheduler", metavar="ADDRESS", help="A running Dask scheduler (default: processes on this machine).")
 @click.option("--format", "form", type=click.Choice(["text", "json"]), default="text", show_default=True)
-def command(rules: str, history: tuple[str, ...], store: str, no_keep: bool, form: str) -> None:
+def command(
+    rules: str,
+    history: tuple[str, ...],
+    store: str,
+    no_keep: bool,
+    engine: str,
+    scheduler: str | None,
+    form: str,
+) -> None:
     """Learn the baseline of the rule file RULES from HISTORY and fill the archive with its rows.
 
     HISTORY is files, globs or db:NAME?table=TABLE.
@@ -27,7 +37,7 @@ def command(rules: str, history: tuple[str, ...], store: str, no_keep: bool, for
     from sercheck.cli.lessons_text import facts, page
     from sercheck.taught import teach
 
-    taught = teach(rules, list(history), store, keep=not no_keep)
+    taught = teach(rules, list(history), store, keep=not no_keep, engine=engine, scheduler=scheduler)
     if form == "json":
         click.echo(json.dumps(facts(taught), allow_nan=False, ensure_ascii=False))
     else:
