@@ -97,7 +97,7 @@ def main(argv: list[str] | None = None) -> int:
     parser.add_argument("--workers", type=int, default=1)
     parser.add_argument("--list", action="store_true", help="print each fault, and each draft's notes")
     asked = parser.parse_args(argv)
-    print("                       rules note left   first: holds      later: holds      caught: first later kept  gate")
+    print(f"{'':23s}rules note left   first: holds      later: holds      caught: first later kept  gate", flush=True)
     kept: list[bool] = []
     for source in sources(asked.folder):
         if asked.feed and not any(part in source.name for part in asked.feed):

@@ -211,7 +211,7 @@ def test_the_command_line(tmp_path):
     """YAML on stdout and words on stderr; -o writes a whole file and overwrites none without --replace."""
     with gzip.open(tmp_path / "past.csv.gz", "wt") as file:
         hourly(6).to_csv(file, index=False)
-    plain = command("past.csv.gz", folder=tmp_path)
+    plain = command("past.csv.gz", "--workers", "1", folder=tmp_path)
     assert plain.returncode == 0, plain.stderr
     assert load_rules(plain.stdout).feed == "past"
     assert "drafted" in plain.stderr
@@ -220,10 +220,22 @@ def test_the_command_line(tmp_path):
     refused = command("past.csv.gz", "-o", "rules.yaml", folder=tmp_path)
     assert (refused.returncode, (tmp_path / "rules.yaml").read_text()) == (2, "mine\n")
     assert "--replace" in refused.stderr
-    written = command("past.csv.gz", "-o", "rules.yaml", "--replace", "--false-holds", "2 per 90D", folder=tmp_path)
+    written = command("past.csv.gz", "-o", "rules.yaml", "--replace", "--false-holds", "2 per 90D", "--no-rehearsal",
+                      "--workers", "1", folder=tmp_path)  # fmt: skip
     assert written.returncode == 0, written.stderr
     assert written.stdout == ""
     assert load_rules(tmp_path / "rules.yaml").false_holds.count == 2
+
+
+@pytest.mark.parametrize(
+    "wrong", [{"false_holds": "often"}, {"batch_every": "1min"}, {"batch_every": "x"}, {"batches": 0},
+              {"values": ["nope"]}, {"timezone": "Mars/Base"}, {"every": "17x"}],
+    ids=str,
+)  # fmt: skip
+def test_a_wrong_argument_is_one_sentence(wrong):
+    """What came and what was wanted, before anything is written."""
+    with pytest.raises(SercheckError, match=str(next(iter(wrong.values()))).strip("[]'")):
+        sercheck.draft(hourly(3), **wrong)
 
 
 def test_names_from_outside_cannot_break_the_file(tmp_path):

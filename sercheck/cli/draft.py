@@ -23,7 +23,7 @@ from sercheck.cli.say import folded, plain, say
 @click.option("--batch-every", metavar="OFFSET", help="How often a batch comes (default: a day, or a week of days).")
 @click.option("--false-holds", metavar="BUDGET", help="The alarm budget (default: 1 per 90D).")
 @click.option("--no-rehearsal", is_flag=True, help="Count no false holds: quick, and a promise of nothing.")
-@click.option("--batches", type=click.IntRange(min=1), default=365, show_default=True, help="Most batches rehearsed.")
+@click.option("--batches", type=click.IntRange(min=1), help="Most batches rehearsed (default: 365 or fewer).")
 @click.option("--workers", type=click.IntRange(min=1), help="Processes (default: all cores).")
 def command(
     history: tuple[str, ...],
@@ -37,7 +37,7 @@ def command(
     batch_every: str | None,
     false_holds: str | None,
     no_rehearsal: bool,
-    batches: int,
+    batches: int | None,
     workers: int | None,
 ) -> None:
     """Write a first rule file for the feed whose past is HISTORY (files or globs).

@@ -16,6 +16,11 @@ WEEKS_TOGETHER = 4
 """Batches that the autocorrelation of daily rows looks over: a week of them is too short."""
 LONG_WINDOW = 24
 """Rows that rules of monthly and rarer rows look over: whole years of months, and the least that a level takes."""
+ONLY_NOTE = {
+    "irregular": "It only notes: a feed without cadence is not rehearsed.",
+    "single": "It only notes: windows of so many rows take the feed for stationary, and real feeds are not.",
+}
+"""Why rules that compare with history only note, by kind of feed."""
 MOST_YEARS = 10
 """Years that a rule of a yearly cycle looks over at most (common practice)."""
 
@@ -40,11 +45,9 @@ def candidates(shape: Shape, figures: Figures) -> tuple[list[Entry], list[LeftOu
     ]
     if not shape.people:
         entries = _coarse(entries, figures)
-    if shape.kind == "irregular":
-        entries = [
-            replace(one, otherwise="note", why=(*one.why, "It only notes: a feed without cadence is not rehearsed."))
-            for one in entries
-        ]
+    why = ONLY_NOTE.get(shape.kind)
+    if why:
+        entries = [replace(one, otherwise="note", why=(*one.why, why)) if one.like_history else one for one in entries]
     return entries, left
 
 

@@ -173,6 +173,8 @@ def _outward(value: float, *, up: bool) -> float:
 
 
 def _length(seconds: float) -> str:
+    if seconds > 20 * UNITS["D"]:
+        return f"{math.ceil(seconds / UNITS['D'])}D"
     unit, size = next((u, s) for u, s in reversed(UNITS.items()) if seconds % s == 0 or s == min(UNITS.values()))
     return f"{max(round(seconds / size), 1)}{unit}"
 

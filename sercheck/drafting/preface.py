@@ -11,7 +11,7 @@ from dataclasses import dataclass
 from sercheck.drafting.figures import Figures
 from sercheck.drafting.shape import Shape
 from sercheck.drafting.text import VERBATIM
-from sercheck.drafting.trial import Trial
+from sercheck.drafting.trial import Trial, counted
 from sercheck.plain import without_secrets
 from sercheck.portrait.findings import Finding
 from sercheck.portrait.whole import Study
@@ -81,10 +81,10 @@ def hints(story: Story) -> list[str]:
         "tell: [desk]                    # whom to tell; SERCHECK_DESK_DESK holds the address",
         "runbook: docs/what-to-do.md     # a key of each rule: where to read what to do",
     ]
-    counted = story.figures.batches
-    if counted is not None and counted.silent:
-        days = ", ".join(counted.silent[-CLOSED:])
-        more = f" (the last {CLOSED} of {len(counted.silent)})" if len(counted.silent) > CLOSED else ""
+    silent = () if story.figures.batches is None else story.figures.batches.silent
+    if silent:
+        days = ", ".join(silent[-CLOSED:])
+        more = f" (the last {CLOSED} of {len(silent)})" if len(silent) > CLOSED else ""
         told.append(f"closed_days: [{days}]  # no series had a row{more}: keep those on which none was due")
     events = _events(story)
     if events:
@@ -136,16 +136,16 @@ def _rehearsal(story: Story) -> str:
         return "Not rehearsed: history is one batch."
     if not story.rehearsed:
         return (
-            f"Not rehearsed: {story.trial.told.batches} batches were judged to see which rules can decide; no false "
-            "hold was counted."
+            f"Not rehearsed: {counted(story.trial.told.batches, 'batch')} of history judged to see which rules can "
+            "decide, no false hold counted."
         )
     told = story.trial.told
     low, high = told.interval
     allowed = f" where the budget ({story.budget}) allows {told.expected:.2g}" if told.expected is not None else ""
     first = told.feed.began(told.replayed.healthy[0].batch)[:10]
     said = (
-        f"Rehearsed on the last {told.batches} batches (from {first} on, no faults put in): {told.false_holds} false "
-        f"holds{allowed} (exact 95 % interval {low:.2g} to {high:.2g})"
+        f"Rehearsed on the last {counted(told.batches, 'batch')} (from {first} on, no faults put in): "
+        f"{counted(told.false_holds, 'false hold')}{allowed} (exact 95 % interval {low:.2g} to {high:.2g})"
     )
     data = f"; held for missing or doubled rows of history itself: {len(told.by_data)}" if told.by_data else ""
     if story.within:
@@ -154,14 +154,14 @@ def _rehearsal(story: Story) -> str:
 
 
 def _short(story: Story) -> str:
-    counted, shape = story.figures.batches, story.shape
+    batches, shape = story.figures.batches, story.shape
     if shape.batch_every is None:
         return "Rules that compare with history only note. With a cadence (--every) it could be rehearsed."
-    have = 1 if counted is None else counted.count
+    have = 1 if batches is None else batches.count
     if have > shape.fewest:
         return ""
     return (
-        f"History holds {have} batch{'es' if have > 1 else ''} of {shape.batch_every}; more than {shape.fewest} are "
+        f"History holds {counted(have, 'batch')} of {shape.batch_every}; more than {shape.fewest} are "
         "needed before rules that compare with it may hold. Until then only exact rules hold; draft again with more."
     )
 

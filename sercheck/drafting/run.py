@@ -24,6 +24,7 @@ from sercheck.portrait.whole import named_index, study
 from sercheck.recent import BATCHES
 from sercheck.rehearsal.feed import LEAST_LEFT, Feed, read_feed
 from sercheck.rulebook import load_rules
+from sercheck.rulebook.lengths import allowed_alarms, cadence, mean_seconds
 from sercheck.serial.arrays import Ints
 
 if TYPE_CHECKING:
@@ -31,8 +32,11 @@ if TYPE_CHECKING:
 
     Given = str | Path | Sequence[str | Path] | pd.DataFrame
 
-MOST_BATCHES = 365
-"""Batches that are rehearsed, the newest ones: a year of days shows every season of the weather and every holiday."""
+MOST_BATCHES, LEAST_BATCHES = 365, 28
+"""Batches that are rehearsed, the newest ones: a year of days shows every season of the weather and every holiday; four
+weeks where the feed is so wide that more would take long (ours)."""
+MOST_CELLS = 1 << 19
+"""Values of the batches that are rehearsed, about (ours: a few minutes of one processor)."""
 PROBED = 7
 """Batches judged where nothing is rehearsed, to see which rules can decide (ours)."""
 LAST_PART = 1 / 3
@@ -73,7 +77,7 @@ def draft(
     batch_every: str | None = None,
     false_holds: str | None = None,
     rehearsal: bool = True,
-    batches: int = MOST_BATCHES,
+    batches: int | None = None,
     workers: int = 1,
     command: str = "",
     tell: Callable[[float, str], None] | None = None,
@@ -94,7 +98,7 @@ def draft(
         false_holds: the alarm budget; default ``1 per 90D`` (three years for monthly batches).
         rehearsal: rehearse all of ``batches``; without it one batch shows which rules can decide, and no false hold is
             counted.
-        batches: how many of the newest batches are rehearsed at most.
+        batches: how many of the newest batches are rehearsed at most; by default 365, fewer where the feed is wide.
         workers: processes; more than 1 want the caller's program guarded by ``if __name__ == "__main__"``.
         command: how it was called, for the file's head.
         tell: is told the share that is done of each step, and what is being done.
@@ -102,12 +106,18 @@ def draft(
     Raises:
         SercheckError: the history cannot be read, has no time or value column, or an argument is wrong.
     """
-    if batches < 1 or workers < 1:
+    if (batches is not None and batches < 1) or workers < 1:
         raise UsageError("draft", f"{batches} batches in {workers} processes", "positive numbers")
+    _must_read("--false-holds", allowed_alarms, false_holds)
+    _must_read("--batch-every", cadence, batch_every)
     history = named_index(history)
     seen = study(
         history, time=time, series=series, values=values, every=every, timezone=timezone, progress=tell
     )  # fmt: skip
+    step = mean_seconds(seen.layout.every)
+    if batch_every is not None and (step is None or (mean_seconds(batch_every) or 0) < 0.9 * step):
+        wanted = f"one step of {seen.layout.every} at least" if step else "none: the feed has no cadence"
+        raise UsageError("--batch-every", f"'{batch_every}'", wanted)
     shape = shape_of(seen, batch_every)
     budget = None if shape.batch_every is None else false_holds or budget_of(shape)
     source = open_feed(history, shape.layout)
@@ -122,7 +132,7 @@ def draft(
     if count <= shape.fewest:
         maker.only_note(count)
     if feed is not None:
-        maker.rehearse(_begins(feed, shape, batches if rehearsal else PROBED), many=rehearsed)
+        maker.rehearse(_begins(feed, shape, (batches or _most(shape)) if rehearsal else PROBED), many=rehearsed)
     story = Story(seen, shape, figures, budget, maker.trial, rehearsed, maker.within, command)
     text = written(shape, budget, head(story), maker.commented(), maker.left, hints(story))
     load_rules(text)
@@ -151,6 +161,20 @@ def _begins(feed: Feed, shape: Shape, most: int) -> str:
         first = max(int(count * (1 - LAST_PART)), 1)
     first = max(first, count - most)
     return _date(int(feed.axis.stamps[feed.edges[first, 0]]), shape.layout.timezone)
+
+
+def _must_read(place: str, parse: Callable[[str], object], given: str | None) -> None:
+    try:
+        if given is not None:
+            parse(given)
+    except ValueError as trouble:
+        raise UsageError(place, f"'{given}'", *trouble.args) from trouble
+
+
+def _most(shape: Shape) -> int:
+    """How many batches are rehearsed where nobody says."""
+    cells = shape.series * shape.batch_rows * len(shape.layout.values)
+    return int(np.clip(MOST_CELLS // max(cells, 1), LEAST_BATCHES, MOST_BATCHES))
 
 
 def _date(stamp: int, zone: str) -> str:

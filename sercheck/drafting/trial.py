@@ -151,7 +151,7 @@ def in_figures(trial: Trial, name: str, *, values: bool) -> list[str]:
     Args:
         trial: the rehearsal.
         name: the rule.
-        values: tell the values that were observed: they are what its bound comes from.
+        values: its bound comes from them: tell the values observed, and its share of the budget.
     """
     said: list[str] = []
     line = trial.lines.get(name)
@@ -166,17 +166,17 @@ def in_figures(trial: Trial, name: str, *, values: bool) -> list[str]:
     ]
     batches = trial.told.batches
     if usual and values:
-        said.append(f"History's last {_counted(batches, 'batch', 'batches')}: {'; '.join(usual)}.")
+        said.append(f"History's last {counted(batches, 'batch')}: {'; '.join(usual)}.")
     for column, one in seen.items():
         if OFTEN * one.records < one.undecided <= one.records:
             where = f" on {column}" if len(seen) > 1 and column else ""
             said.append(f"Undecided in {one.undecided / one.records:.0%} of its records{where}: {one.reason}")
-    if line.rule.false_alarm > 0 and batches > 1 and line.share >= 0.005:
+    if line.rule.false_alarm > 0 and values:
         verb = "held" if line.rule.otherwise == "hold" else "failed"
-        times = _counted(line.false_holds, "time", "times")
+        times = counted(line.false_holds, "time")
         said.append(f"It {verb} {times} where its risk allows {line.share:.2g}{_dates(trial.dates[name])}.")
     elif trial.dates[name]:
-        said.append(f"Failed in {_counted(len(trial.dates[name]), 'batch', 'batches')}{_dates(trial.dates[name])}.")
+        said.append(f"Failed in {counted(len(trial.dates[name]), 'batch')}{_dates(trial.dates[name])}.")
     return said
 
 
@@ -187,8 +187,9 @@ def _dates(dates: tuple[str, ...]) -> str:
     return f": {', '.join(dates[:DATES])}{more}"
 
 
-def _counted(many: int, one: str, several: str) -> str:
-    return f"{many} {one if many == 1 else several}"
+def counted(many: int, what: str) -> str:
+    """A number of things: 1 batch, 2 batches."""
+    return f"{many} {what if many == 1 else what + ('es' if what.endswith('ch') else 's')}"
 
 
 def _number(value: float) -> str:
