@@ -72,9 +72,11 @@ class SortedParquet:
     @cached_property
     def per_series(self) -> float:
         """Rows of a series, about: those of a first group over its series."""
-        key = self.layout.series
-        table = next(self._tables([self.groups[0]], list(key)))
-        return self.groups[0].rows / max(1, len(table.group_by(list(key)).aggregate([])))
+        key = list(self.layout.series)
+        table = next(self._tables([self.groups[0]], key))
+        # grouping loads a query engine and with it pandas, which one column does not need
+        found = table.column(0).unique() if len(key) == 1 else table.group_by(key).aggregate([])
+        return self.groups[0].rows / max(1, len(found))
 
     def some_stamps(self) -> Ints:
         """Stamps of the first, the middle and the last row group."""

@@ -79,19 +79,44 @@ def _lattice(x: Floats, width: int) -> Floats:
 
 def _lattice_with_gaps(x: Floats, seen: Bools, width: int) -> tuple[Floats, Floats]:
     """Reflection coefficients and stretch counts plus order; f and b are 0 where a value of theirs is missing."""
+    steps = x.shape[1]
     k = np.zeros((len(x), width))
-    weight = np.zeros((len(x), width))
+    weight = _stretches(seen, width) + np.arange(1, width + 1)
+    there = seen.astype(np.float64)
     f, b = x.copy(), x.copy()
-    whole = seen.copy()
+    held = np.empty_like(x)
     for m in range(1, width + 1):
-        whole = whole[:, 1:] & seen[:, : seen.shape[1] - m]
-        ahead, behind = f[:, 1:] * whole, b[:, :-1] * whole
+        ahead, behind, spare = f[:, m:], b[:, m - 1 : -1], held[:, m:]
+        # both are 0 outside their own stretches of m values: the two of m + 1 lack one end each
+        ahead *= there[:, : steps - m]
+        behind *= there[:, m:]
         power = np.einsum("ij,ij->i", ahead, ahead) + np.einsum("ij,ij->i", behind, behind)
         k[:, m - 1] = _ratio(2 * np.einsum("ij,ij->i", ahead, behind), power)
-        weight[:, m - 1] = whole.sum(axis=1) + m
         step = k[:, m - 1 : m]
-        f, b = ahead - step * behind, behind - step * ahead
+        np.multiply(ahead, step, out=spare)
+        np.subtract(behind, spare, out=spare)
+        behind *= step
+        ahead -= behind
+        b, held = held, b
     return k, weight
+
+
+def _stretches(seen: Bools, width: int) -> Floats:
+    """How many complete stretches of 2 .. width + 1 values each series has, shape (S, width)."""
+    series, steps = seen.shape
+    wide = np.zeros((series, steps + 2), dtype=np.int8)
+    wide[:, 1:-1] = seen
+    change = np.diff(wide, axis=1).ravel()
+    begin, end = np.flatnonzero(change == 1), np.flatnonzero(change == -1)
+    length = end - begin
+    # a run of L values holds L - m stretches of m + 1
+    most = np.minimum(length, width + 1)
+    place = (begin // (steps + 1)) * (width + 2) + most
+    runs = np.bincount(place, minlength=series * (width + 2)).reshape(series, width + 2)
+    beyond = np.bincount(place, weights=length - most, minlength=series * (width + 2)).reshape(series, width + 2)
+    longer = runs[:, ::-1].cumsum(axis=1)[:, ::-1]  # runs of at least so many values
+    count = longer[:, ::-1].cumsum(axis=1)[:, ::-1] + beyond[:, -1:]
+    return count[:, 2:].astype(np.float64)
 
 
 def _ratio(top: Floats, bottom: Floats) -> Floats:
