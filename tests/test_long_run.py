@@ -6,8 +6,9 @@ from pathlib import Path
 import numpy as np
 import pytest
 from naive import long_run as slow
-from processes import autoregressive
+from processes import autoregressive, make
 
+from sercheck.serial.echoed_run import echoed_long_run
 from sercheck.serial.effective_sizes import effective_size, effective_size_of, low_frequency_share
 from sercheck.serial.long_run import (
     autoregressive_long_run,
@@ -19,6 +20,7 @@ from sercheck.serial.long_run import (
     mean_contrast,
     trend_cosine_long_run,
 )
+from sercheck.serial.own_models import OwnModels
 
 REFERENCE = Path(__file__).parent / "reference"
 CLOSED = json.loads((REFERENCE / "closed_form.json").read_text(encoding="utf-8"))
@@ -137,3 +139,24 @@ def test_constant_has_no_effective_size():
     assert np.isnan(effective_size([[3.0] * 50, [np.nan] * 50])).all()
     assert np.isnan(effective_size(np.empty((2, 0)))).all()
     assert np.isnan(effective_size([1.0])).all()
+
+
+def test_a_cycle_that_evolves_is_in_the_long_run_variance():
+    """An undeclared cycle of 24 rows is found by its echo in a week of hours; without it the variance is far too small.
+
+    The long-run variance of (1 - .4 B)(1 - .6 B^24) x = e is 1/(.6 · .4)² = 17.4 (Berk 1974).
+    """
+    x = make("seasonal_ar", 31, 400, 168)
+    seen, near = echoed_long_run(OwnModels(x)), autoregressive_long_run(x)
+    assert abs(np.median(seen.variance) * 0.24**2 - 1) < 0.3
+    assert np.median(near.variance) * 0.24**2 < 0.3
+    assert (seen.df < 40).all()
+
+
+def test_a_series_without_an_echo_keeps_its_long_run_variance():
+    """For hardly a series of an autoregression does the search for echoes change anything; gaps do not matter."""
+    x = make("ar0.6; lost clusters", 32, 400, 336)
+    seen, plain = echoed_long_run(OwnModels(x)), autoregressive_long_run(x)
+    assert (seen.variance == plain.variance).mean() > 0.95
+    constant = echoed_long_run(OwnModels(np.ones((2, 100))))
+    assert not (constant.variance > 0).any()

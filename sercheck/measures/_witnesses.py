@@ -16,7 +16,8 @@ from sercheck.measures._past import ToUnit, ask_rows, ask_variety, cell, mean, m
 from sercheck.measures._window_models import own_models
 from sercheck.reference import Larger, Pivot
 from sercheck.serial.arrays import Floats
-from sercheck.serial.long_run import LongRun, corrected_long_run, cosine_long_run, longest_order
+from sercheck.serial.echoed_run import echoed_long_run
+from sercheck.serial.long_run import LongRun, cosine_long_run
 from sercheck.serial.own_models import OwnModels
 from sercheck.serial.season import phase_means
 
@@ -96,7 +97,7 @@ def mean_alone(panel: Panel, question: Question) -> Measurement:
     values, taken = own_cycles_out(panel)
     level = mean(panel.window / told.scale[:, None])
     models = OwnModels(values) if taken else own_models(panel).in_unit(told.scale)
-    first = corrected_long_run(models.burg(longest_order(values.shape[1])))
+    first = echoed_long_run(models)
     second = cosine_long_run(models.data)
     ask_alone(reasons, panel, question, first, "a level", FEWEST_STRONG)
     rows = np.maximum(told.n, 1)

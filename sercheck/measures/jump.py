@@ -65,7 +65,9 @@ from sercheck.serial.change_point import (
     self_normalized_quantile,
     self_normalized_tail,
 )
-from sercheck.serial.long_run import autoregressive_long_run, bridge_weights
+from sercheck.serial.echoed_run import echoed_long_run
+from sercheck.serial.long_run import bridge_weights
+from sercheck.serial.own_models import OwnModels
 from sercheck.serial.risk import t_quantile
 
 
@@ -203,7 +205,7 @@ def _literal(panel: Panel, question: Question) -> Measurement:
     found = most_likely_break(values)
     after = np.arange(values.shape[1]) >= np.where(found.place < 0, values.shape[1], found.place)[:, None]
     left = values - np.where(after, found.change[:, None], 0.0)
-    run = autoregressive_long_run(left)
+    run = echoed_long_run(OwnModels(left))
     ask_alone(reasons, panel, question, run, "a jump", FEWEST_STRONG, STRONG)
     reasons.add(np.isnan(found.change)[:, None], "the window is too short to place a jump in it")
     n, scale = np.maximum(told.n, 1), told.scale

@@ -8,7 +8,8 @@ cosine powers Λ_j² of history's scores, w_j = |Σ c_t exp(iω_j t)|², as over
 T = b̂/√V on (Σw)²/Σw² degrees of freedom.
 A literal bound asks two witnesses of the window alone, of whom the more careful counts: the residuals' mean square on
 B = round(.41 n^(2/3)) cosines orthogonal to level and line (Sun 2011), t on B degrees of freedom, and a long-run
-variance of a fitted autoregression (Burg 1975; Berk 1974), degrees of freedom after Satterthwaite (1946).
+variance of a fitted autoregression (Burg 1975; Berk 1974) that knows the echo of a cycle which evolves, degrees of
+freedom after Satterthwaite (1946).
 
 Fixed cycles (``seasons``) are taken out first where history, or a window without history, holds at least four of them.
 
@@ -54,7 +55,9 @@ from sercheck.measures._past import (
 from sercheck.measures._witnesses import ask_alone, sides, two_witnesses
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats
-from sercheck.serial.long_run import autoregressive_long_run, contrast_variance, trend_cosine_long_run
+from sercheck.serial.echoed_run import echoed_long_run
+from sercheck.serial.long_run import contrast_variance, trend_cosine_long_run
+from sercheck.serial.own_models import OwnModels
 from sercheck.serial.season import phase_means
 
 FEWEST_STRONG = 168
@@ -133,7 +136,7 @@ def _literal(panel: Panel, question: Question) -> Measurement:
     contrast = slope_contrast(values)
     at = _slope(values, contrast)
     left = _residuals(values, at)
-    first, second = autoregressive_long_run(left, trend=True), trend_cosine_long_run(left)
+    first, second = echoed_long_run(OwnModels(left), trend=True), trend_cosine_long_run(left)
     ask_alone(reasons, panel, question, first, "a trend", FEWEST_STRONG)
     squares = np.broadcast_to((contrast**2).sum(axis=1), at.shape)
     naive = np.sqrt(variance(left) * squares)
