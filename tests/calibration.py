@@ -252,13 +252,18 @@ def groups(processes: Iterable[str] = (), rows: Iterable[int] = ()) -> Iterator[
             yield Group(process, DAY, PAST)
 
 
-def table_of(some: Iterable[Group], replications: int, measures: Collection[str] = (), seed: int = 1) -> pd.DataFrame:
-    """The rated table of these groups, which are named on stderr as they come."""
-    parts = []
+def table_of(
+    some: Iterable[Group], replications: int, measures: Collection[str] = (), seed: int = 1, out: Path | None = None
+) -> pd.DataFrame:
+    """The rated table of these groups, which are named on stderr as they come; ``out`` always holds what is counted."""
+    table = pd.DataFrame()
     for group in some:
         print(f"{group.process}, {group.n} rows, {group.windows} windows of history", file=sys.stderr, flush=True)
-        parts.append(count(group, RISKS, replications, measures, seed))
-    return rated(pd.concat([part for part in parts if len(part)], ignore_index=True))
+        part = count(group, RISKS, replications, measures, seed)
+        table = pd.concat([table, rated(part)], ignore_index=True) if len(part) else table
+        if out and len(table):
+            table.to_parquet(out)
+    return table
 
 
 def missed(table: pd.DataFrame) -> str:
@@ -298,12 +303,10 @@ def main(arguments: list[str] | None = None) -> int:
     asked = reader.parse_args(arguments)
     if asked.power or asked.gaps or asked.page:
         return _others(asked)
-    table = table_of(groups(asked.processes, asked.n), asked.replications, asked.measure, asked.seed)
+    table = table_of(groups(asked.processes, asked.n), asked.replications, asked.measure, asked.seed, asked.out)
     if not asked.misses:
         print(as_text(table))
     print(missed(table))
-    if asked.out:
-        table.to_parquet(asked.out)
     return int((table["mark"] == "MISSES").any())
 
 

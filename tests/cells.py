@@ -238,9 +238,12 @@ QUESTIONS = {
     "repeats, share": _same("repeats", look="share"),
     "replay": _same("replay"),
     "count": Question(
+        lambda process: {"measure": "count", "per": "6h"}, lambda process, form, n: 6 * (1 - process.lost),
+        (BESIDE, LIKE), lambda process, form, n: bool(process.gaps), _three(OTHERS),
+    ),
+    "count, often": Question(
         lambda process: {"measure": "count", "per": "3h"}, lambda process, form, n: 3 * (1 - process.lost),
-        (ALONE, BESIDE, LIKE),
-        lambda process, form, n: bool(process.gaps) and (form != ALONE or n >= 288), _three(OTHERS),
+        (ALONE,), lambda process, form, n: bool(process.gaps) and n >= 288, _three(OTHERS),
     ),
     "completeness": Question(
         lambda process: {"measure": "completeness"}, forms=(LIKE,),
