@@ -248,3 +248,13 @@ def test_fit_finds_the_model():
     np.testing.assert_allclose(model.coefficients[:, :2].mean(axis=0), [1.5, -0.75], atol=0.01)
     np.testing.assert_allclose(model.variance.mean(), 1.0, atol=0.02)
     assert (model.order >= 2).all()
+
+
+def test_autocorrelations_of_models_do_not_depend_on_those_beside_them():
+    """To the last digit: a series is judged alike in whatever block it stands."""
+    rng = np.random.default_rng(9)
+    reflection = rng.uniform(-0.6, 0.6, (60, 30)) * (np.arange(30) < rng.integers(0, 31, (60, 1)))
+    rho, coefficients = module._autocorrelation(reflection, 200), step_up(reflection)
+    for rows in (slice(7, 8), slice(20, 25)):
+        np.testing.assert_array_equal(module._autocorrelation(reflection[rows], 200), rho[rows])
+        np.testing.assert_array_equal(step_up(reflection[rows]), coefficients[rows])

@@ -160,7 +160,13 @@ def _autocorrelation(reflection: Floats, lags: int) -> Floats:
 
 
 def _durbin_levinson(reflection: Floats, lags: int) -> Floats:
-    """ρ_0 .. ρ_lags, the lags in rows while they are computed: each step then works on whole rows of memory."""
+    """ρ_0 .. ρ_lags, the lags in rows while they are computed: each step then works on whole rows of memory.
+
+    Sums run from the farthest lag to the nearest, row after row, so that neither the zeros that pad a short model nor
+    the models beside it change the last digit.
+    """
+    if len(reflection) == 1:  # one column would be summed in another order
+        return _durbin_levinson(np.repeat(reflection, 2, axis=0), lags)[:1]
     series, width = reflection.shape
     rho = np.zeros((lags + 1, series))
     rho[0] = 1.0
@@ -171,7 +177,7 @@ def _durbin_levinson(reflection: Floats, lags: int) -> Floats:
     left = np.ones(series)
     for m in range(min(width, lags)):
         k = reflection[:, m]
-        rho[m + 1] = np.sum(a[:m] * rho[m:0:-1], axis=0) + k * left
+        rho[m + 1] = np.add.reduce(a[:m][::-1] * rho[1 : m + 1], axis=0) + k * left
         a[:m] -= k * a[:m][::-1]
         a[m] = k
         left *= 1 - k**2
