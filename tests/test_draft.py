@@ -130,13 +130,14 @@ def test_a_season_too_weak_to_be_missed_is_left_out_with_the_reason():
 
 
 def test_a_rule_that_holds_too_often_only_notes_and_shows_the_dates():
-    """Healthy days that one rule holds beyond its share move it to note, and the file keeps its budget."""
-    rows = hourly(70)
+    """A rule that holds healthy days beyond its share notes, on the column that made it, and the budget is kept."""
+    rows = hourly(70).assign(other=hourly(70, seed=5)["value"])
     values = rows["value"].to_numpy().copy()
     values[24 * 65 : 24 * 66] = np.random.default_rng(8).permutation(values[24 * 65 : 24 * 66])
     told = sercheck.draft(rows.assign(value=values), batches=7, false_holds="1 per 400D")
     noted = [rule.name for rule in load_rules(told.text).rules if rule.otherwise == "note" and rule.false_alarm > 0]
     assert noted
+    assert all(name.endswith("(value)") for name in noted)
     assert told.within is True
     assert "It only notes: rehearsed, it held" in told.text
     assert "(2024-03-06)" in told.text

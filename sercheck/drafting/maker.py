@@ -68,6 +68,9 @@ class Maker:
             self._let_note(noted)
             if not many and round_:
                 return
+        text = written(self.shape, self.budget, ["-"], self.entries, [], [])
+        self.trial = try_out(text, self.history, begins, self.workers, self.tell)
+        self.within = self.trial.within
 
     def _leave_out_the_silent(self) -> bool:
         """Take out what can decide next to nothing; True if anything went."""
@@ -92,7 +95,8 @@ class Maker:
 
     def _let_note(self, names: list[str]) -> None:
         assert self.trial is not None
-        for place, one in enumerate(self.entries):
+        entries: list[Entry] = []
+        for one in self.entries:
             if one.name in names:
                 line, dates = self.trial.lines[one.name], self.trial.dates[one.name]
                 why = (
@@ -100,7 +104,15 @@ class Maker:
                     f"{line.share:.2g} ({', '.join(dates[:6])}{' …' if len(dates) > 6 else ''}). If "
                     "those were events, name them closed_days and let it hold."
                 )
-                self.entries[place] = replace(one, otherwise="note", why=(*one.why, why))
+                noisy = _noisy(one, self.trial)
+                rest = tuple(column for column in one.columns if column not in noisy)
+                if rest:
+                    entries.append(replace(one, columns=rest))
+                name = f"{one.name} ({', '.join(noisy)})" if rest else one.name
+                entries.append(replace(one, name=name, columns=noisy, otherwise="note", why=(*one.why, why)))
+            else:
+                entries.append(one)
+        self.entries = entries
 
     def commented(self) -> list[Entry]:
         """The rules with what the rehearsal showed in their comments."""
@@ -110,3 +122,10 @@ class Maker:
         return [
             replace(one, why=(*one.why, *in_figures(trial, one.name, values=one.like_history))) for one in self.entries
         ]
+
+
+def _noisy(entry: Entry, trial: Trial) -> tuple[str, ...]:
+    """The value columns on which a rule failed as often as on half of the worst; the others may go on holding."""
+    failed = {column: told.failed for column, told in trial.seen.get(entry.name, {}).items()}
+    most = max(failed.values(), default=0)
+    return tuple(column for column in entry.columns if failed.get(column, 0) >= max(most / 2, 1)) or entry.columns

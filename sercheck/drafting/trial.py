@@ -39,12 +39,14 @@ class Seen:
         records: its records.
         undecided: those that it could not decide.
         reason: the commonest reason for that.
+        failed: batches in which it failed.
         usual: the observed values that lie 5 %, 50 % and 95 % up; None where nothing was observed.
     """
 
     records: int
     undecided: int
     reason: str
+    failed: int
     usual: tuple[float, float, float] | None
 
     @property
@@ -113,6 +115,8 @@ def try_out(
         told = rehearse(
             load_rules(text), history, begins=begins, tries=0, workers=workers, records=records, tell=tell
         )  # fmt: skip
+        if not told.replayed.finished:
+            raise KeyboardInterrupt  # a rehearsal keeps what is finished; a draft of half of it would promise too much
         seen = _seen(records)
     dates = {
         line.rule.name: tuple(
@@ -127,8 +131,9 @@ def try_out(
 def _seen(path: Path) -> dict[str, dict[str, Seen]]:
     import pyarrow.parquet as pq
 
-    wanted = ["rule", "column", "outcome", "reason", "observed"]
-    rules, columns, outcomes, reasons, observed = (part.to_pylist() for part in pq.read_table(path, columns=wanted))
+    wanted = ["rule", "column", "outcome", "reason", "observed", "batch"]
+    table = pq.read_table(path, columns=wanted)
+    rules, columns, outcomes, reasons, observed, batches = (table.column(name).to_pylist() for name in wanted)
     groups: dict[tuple[str, str], list[int]] = {}
     for row, key in enumerate(zip(rules, columns, strict=True)):
         groups.setdefault((key[0], key[1] or ""), []).append(row)
@@ -141,7 +146,9 @@ def _seen(path: Path) -> dict[str, dict[str, Seen]]:
         ], dtype=float)  # fmt: skip
         low, middle, high = np.quantile(decided, (0.05, 0.5, 0.95)).tolist() if len(decided) else (np.nan,) * 3
         usual = (low, middle, high) if len(decided) else None
-        seen.setdefault(rule, {})[column] = Seen(len(rows), len(undecided), common[0][0] if common else "", usual)
+        reason = common[0][0] if common else ""
+        failed = len({batches[row] for row in rows if outcomes[row] == "fail"})
+        seen.setdefault(rule, {})[column] = Seen(len(rows), len(undecided), reason, failed, usual)
     return seen
 
 
