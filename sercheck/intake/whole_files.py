@@ -84,7 +84,11 @@ def keys_of(path: Path, layout: Layout) -> set[str]:
     found: set[str] = set()
     with told(path), parquet_file(path, layout) as file:
         for number in range(file.num_row_groups):
-            table = file.read_row_group(number, columns=columns).group_by(columns).aggregate([])
-            parts = [to_names(table.column(name).combine_chunks(), f"{path}, column {name}") for name in columns]
+            table = file.read_row_group(number, columns=columns)
+            if len(columns) == 1:  # grouping loads a query engine, which one column does not need
+                once = [table.column(0).unique()]
+            else:
+                once = [column.combine_chunks() for column in table.group_by(columns).aggregate([]).columns]
+            parts = [to_names(keys, f"{path}, column {name}") for keys, name in zip(once, columns, strict=True)]
             found.update(join_names(parts)[0].tolist())
     return found
