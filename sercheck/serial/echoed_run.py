@@ -7,7 +7,7 @@ from dataclasses import replace
 import numpy as np
 
 from sercheck.serial.autoregression import STEEPEST, burg
-from sercheck.serial.far_lag import NEAR, with_far_lag
+from sercheck.serial.far_lag import NEAR
 from sercheck.serial.long_run import LongRun, corrected_long_run, longest_order
 from sercheck.serial.own_models import OwnModels
 
@@ -35,17 +35,17 @@ def echoed_long_run(models: OwnModels, trend: bool = False) -> LongRun:
     data = models.data
     order = longest_order(data.values.shape[1])
     run = corrected_long_run(models.burg(order), trend)
-    x = np.where(data.seen, data.values * data.scale[:, None] + data.mean[:, None], np.nan)
-    near = models.burg(min(order, NEAR))
-    told, _, echo = with_far_lag(x, near)
-    lags = np.where(echo > 0, told.order - near.order, 0)
+    far, echo = models.echoes(min(order, NEAR))
+    lags = np.where(echo > 0, far, 0)
     variance, df = run.variance.copy(), np.array(run.df)
     for lag in np.unique(lags[lags > 0]).tolist():
         rows = np.flatnonzero(lags == lag)
         phi = echo[rows]
-        y = x[rows, lag:] - phi[:, None] * x[rows, :-lag]
+        x = data.values[rows] * data.scale[rows, None] + data.mean[rows, None]
+        x[~data.seen[rows]] = np.nan
+        y = x[:, lag:] - phi[:, None] * x[:, :-lag]
         whole = corrected_long_run(burg(y, max_order=min(order, NEAR)), trend)
-        n = near.n[rows]
+        n = data.n[rows]
         phi = np.minimum(phi + (1 + 3 * phi) / n, STEEPEST)
         variance[rows] = whole.variance / (1 - phi) ** 2
         df[rows] = 2 / (2 / whole.df + 4 * (1 + phi) / ((1 - phi) * n))

@@ -27,11 +27,15 @@ class Alone:
         residuals: its innovations, prepared.
         wanders: no level that the series returns to: a root of the near model beyond ``ROOT``, or an echo that
             does not fade; shape (S,).
+        far: lag of its echo, 0 where there is none, shape (S,).
+        echo: Φ of the echo, 0 where there is none, shape (S,).
     """
 
     model: Autoregression
     residuals: Residuals
     wanders: Bools
+    far: Ints
+    echo: Floats
 
 
 class OwnModels:
@@ -45,6 +49,7 @@ class OwnModels:
         self.x = x
         self._reflected: Reflected | None = None
         self._alone: dict[int, Alone] = {}
+        self._like = self
 
     @cached_property
     def data(self) -> Centred:
@@ -56,6 +61,7 @@ class OwnModels:
         other = OwnModels(self.x)
         data = replace(self.data, scale=self.data.scale / unit, mean=self.data.mean / unit)
         other.data = data
+        other._like = self
         other._reflected = replace(self.reflected(largest_order(data.values.shape[1])), data=data)
         return other
 
@@ -78,6 +84,17 @@ class OwnModels:
             self._alone[wanted] = self._made(wanted)
         return self._alone[wanted]
 
+    def echoes(self, order: int) -> tuple[Ints, Floats]:
+        """Lag and Φ of the echo beside models of at most ``order`` (see ``Alone``)."""
+        if self._like is not self:  # neither depends on the unit
+            return self._like.echoes(order)
+        if order == min(largest_order(self.data.values.shape[1]), NEAR):
+            own = self.alone(1)
+            return own.far, own.echo
+        near = self.burg(order)
+        told, _, echo = with_far_lag(self.x, near)
+        return told.order - near.order, echo
+
     def _made(self, wanted: int) -> Alone:
         near = self.burg(wanted)
         like = next(iter(self._alone), None)
@@ -92,9 +109,10 @@ class OwnModels:
         if not len(rows):
             return replace(known, model=model)
         other = _told(self.x[rows], near.rows(rows))
-        wanders = known.wanders.copy()
-        wanders[rows] = other.wanders
-        return Alone(_with_rows(model, rows, other.model), known.residuals.changed(rows, other.residuals), wanders)
+        wanders, far, echo = known.wanders.copy(), known.far.copy(), known.echo.copy()
+        wanders[rows], far[rows], echo[rows] = other.wanders, other.far, other.echo
+        residuals = known.residuals.changed(rows, other.residuals)
+        return Alone(_with_rows(model, rows, other.model), residuals, wanders, far, echo)
 
 
 def alone(x: Floats, longest: int) -> Alone:
@@ -104,7 +122,9 @@ def alone(x: Floats, longest: int) -> Alone:
 
 def _told(x: Floats, near: Autoregression) -> Alone:
     model, e, echo = with_far_lag(x, near)
-    return Alone(model, Residuals(e, model.order, near.order + (echo > 0)), root_beyond(near, ROOT) | (echo > FOR_EVER))
+    residuals = Residuals(e, model.order, near.order + (echo > 0))
+    wanders = root_beyond(near, ROOT) | (echo > FOR_EVER)
+    return Alone(model, residuals, wanders, model.order - near.order, echo)
 
 
 def _with_rows(model: Autoregression, rows: Ints, other: Autoregression) -> Autoregression:
