@@ -129,7 +129,7 @@ class Residuals:
         self.seen = ~np.isnan(e)
         self.e = np.where(self.seen, e, 0.0)
         # the variances do not depend on the unit; a power of two keeps squares within reach of doubles
-        peak = np.max(np.abs(self.e), axis=1, initial=0.0)
+        peak = np.maximum(self.e.max(axis=1, initial=0.0), -self.e.min(axis=1, initial=0.0))
         self.e *= np.ldexp(1.0, -np.clip(np.frexp(peak)[1], -1021, 1022))[:, None]
         self.count = self.seen.sum(axis=1)
         self.order = order
