@@ -13,7 +13,7 @@ import os
 import sys
 from pathlib import Path
 
-from sqlalchemy import create_engine, text
+from sqlalchemy import NullPool, create_engine, text
 
 import sercheck
 
@@ -34,7 +34,7 @@ ON CONFLICT (substation, read_at) DO NOTHING
 
 def load(rules: str, file: str, address: str) -> sercheck.Verdict:
     """Load one file, or nothing of it."""
-    engine = create_engine(address)
+    engine = create_engine(address, poolclass=NullPool)  # closed at the end, whatever happened
     with engine.connect() as connection, connection.begin() as transaction:
         for statement in TABLES.split(";"):
             connection.execute(text(statement))
@@ -52,7 +52,6 @@ def load(rules: str, file: str, address: str) -> sercheck.Verdict:
             connection.execute(text(MOVE))
         else:
             transaction.rollback()
-    engine.dispose()
     return verdict
 
 

@@ -11,8 +11,10 @@ from pathlib import Path
 
 import pytest
 from sqlalchemy import create_engine, text
+from sqlalchemy.exc import DBAPIError, StatementError
 
 import sercheck
+from sercheck.taught import teach
 
 ROOT = Path(__file__).parents[1]
 RULES = ROOT / "rules" / "substation_heat.yaml"
@@ -28,10 +30,9 @@ def run(words: list[str], folder: Path, **settings: str) -> subprocess.Completed
 @pytest.fixture(scope="module")
 def learned(tmp_path_factory) -> Path:
     """A store that has learned the demo's history."""
-    folder = tmp_path_factory.mktemp("learned")
-    done = run(["sercheck", "learn", str(RULES), str(ROOT / "demo_data" / "history.csv.gz"), "--store", "st"], folder)
-    assert done.returncode == 0, done.stderr
-    return folder / "st"
+    store = tmp_path_factory.mktemp("learned") / "st"
+    teach(sercheck.load_rules(str(RULES)), ROOT / "demo_data" / "history.csv.gz", str(store))
+    return store
 
 
 def taught(learned: Path, folder: Path) -> str:
@@ -57,22 +58,30 @@ def warehouse(request, tmp_path):
     engine.dispose()
 
 
-def test_one_transaction_stages_judges_and_moves_or_undoes(warehouse, tmp_path):
+def test_one_transaction_stages_judges_and_moves_or_undoes(warehouse, tmp_path, monkeypatch):
     """A healthy file is in the table once however often it is loaded; a shuffled or broken one leaves no trace."""
     url, engine, before = warehouse
     program = [sys.executable, str(ROOT / "rules" / "load_in_one_transaction.py"), str(RULES)]
     settings = {"SERCHECK_SOURCE_WAREHOUSE": url, "SERCHECK_STORE": str(tmp_path / "st")}
+    monkeypatch.syspath_prepend(str(ROOT / "rules"))
+    monkeypatch.setenv("SERCHECK_STORE", settings["SERCHECK_STORE"])
+    import load_in_one_transaction
 
-    def loaded(name: str) -> tuple[int, int]:
-        done = run([*program, str(BATCHES / name)], tmp_path, **settings)
+    def new_rows() -> int:
         with engine.connect() as connection:
-            return done.returncode, connection.execute(text("SELECT count(*) FROM heat")).scalar() - before
+            return int(connection.execute(text("SELECT count(*) FROM heat")).scalar() or 0) - before
 
-    assert loaded("shuffled.csv") == (1, 0)
-    (tmp_path / "empty.csv").write_text("substation,read_at,kwh\n2026-01-19 00:00,a,5\n")
-    assert loaded(str(tmp_path / "empty.csv"))[1] == 0
-    for _ in range(2 if url.startswith("postgres") else 1):
-        assert loaded("healthy.csv") == (0, 288)
+    assert not load_in_one_transaction.load(str(RULES), str(BATCHES / "shuffled.csv"), url).released
+    assert new_rows() == 0
+    (tmp_path / "broken.csv").write_text("substation,read_at,kwh\n2026-01-19 00:00,a,5\n")
+    with pytest.raises((sercheck.SercheckError, DBAPIError, StatementError)):
+        load_in_one_transaction.load(str(RULES), str(tmp_path / "broken.csv"), url)
+    assert new_rows() == 0
+    assert load_in_one_transaction.load(str(RULES), str(BATCHES / "healthy.csv"), url).released
+    assert new_rows() == 288
+    name, status = ("healthy.csv", 0) if url.startswith("postgres") else ("shuffled.csv", 1)
+    assert run([*program, str(BATCHES / name)], tmp_path, **settings).returncode == status  # each was judged before
+    assert new_rows() == 288
 
 
 def test_rows_that_are_not_committed_are_judged(server):
