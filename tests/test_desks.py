@@ -171,6 +171,26 @@ def test_a_server_that_hangs_costs_a_bounded_time(ledger, monkeypatch, how):
         assert (message.state, message.uncertain) == ("undelivered", True)
 
 
+def test_no_address_is_among_the_arguments_of_a_process(ledger, monkeypatch):
+    """What the list of processes shows to every user of the machine has neither address nor text."""
+    shown: list[bytes] = []
+    plain = subprocess.Popen.communicate
+
+    def communicate(process, *args, **more):
+        shown.append(Path(f"/proc/{process.pid}/cmdline").read_bytes())
+        return plain(process, *args, **more)
+
+    monkeypatch.setattr(subprocess.Popen, "communicate", communicate)
+    with hook() as desk:
+        monkeypatch.setenv("SERCHECK_DESK_HEAT_DESK", f"{desk.address}?+X-Token=geheim")
+        assert tell(ledger, "heat-01", seconds=8) == ()
+        assert len(desk.received) == 1
+    (line,) = shown
+    assert line.endswith(b"sercheck.sending\0")
+    assert b"://" not in line
+    assert b"geheim" not in line
+
+
 def test_a_dead_desk_keeps_no_other_from_being_told(ledger, monkeypatch):
     """Desks are told side by side; what one does costs the other nothing."""
     held(ledger, 1, feed="b", desks=("dead-desk", "live.desk"))
