@@ -177,7 +177,10 @@ def test_no_address_is_among_the_arguments_of_a_process(ledger, monkeypatch):
     plain = subprocess.Popen.communicate
 
     def communicate(process, *args, **more):
-        shown.append(Path(f"/proc/{process.pid}/cmdline").read_bytes())
+        line, until = b"", time.monotonic() + 5
+        while not line and time.monotonic() < until:  # empty while the program is being put in place
+            line = Path(f"/proc/{process.pid}/cmdline").read_bytes()
+        shown.append(line)
         return plain(process, *args, **more)
 
     monkeypatch.setattr(subprocess.Popen, "communicate", communicate)
