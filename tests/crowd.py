@@ -4,7 +4,7 @@
 
 Every batch is judged by two processes, so half of all gates meet a judgement that is there or being stored. A batch's
 decision is known beforehand and its records (of up to 500 batches) from a judgement that is not kept; what the gates
-answer and what the ledger and the archive have in the end is compared with them.
+answer and what the ledger and the archive have in the end is compared with them, and the store is verified.
 """
 
 from __future__ import annotations
@@ -27,6 +27,7 @@ import pandas as pd
 import sercheck
 from sercheck.store.archive import Archive
 from sercheck.store.ledger import open_ledger
+from sercheck.verify import verify
 from tests.servers import databases
 
 RULES = """
@@ -157,6 +158,8 @@ def _compare(store: Path, ledger: str | None, tasks: list[Task], said: list[tupl
             assert found.pop(batch_id).last.decision == decision
             assert digest(records) == told, task
             assert states[task.feed].states[batch_id].what == decision, task
+        faults = verify(kept, store / "archive").faults
+        assert not faults, f"{len(faults)} faults, the first: {faults[0].sentence()}"
     assert len(found) == 2 * len(states), f"the ledger has {len(found)} batches that nobody asked for"
     for feed, log in states.items():
         wanted = 2 + sum(task.feed == feed for task in tasks)
