@@ -49,7 +49,7 @@ class OwnModels:
         self.x = x
         self._reflected: Reflected | None = None
         self._alone: dict[int, Alone] = {}
-        self._like = self
+        self._like: OwnModels | None = None
 
     @cached_property
     def data(self) -> Centred:
@@ -86,7 +86,7 @@ class OwnModels:
 
     def echoes(self, order: int) -> tuple[Ints, Floats]:
         """Lag and Φ of the echo beside models of at most ``order`` (see ``Alone``)."""
-        if self._like is not self:  # neither depends on the unit
+        if self._like is not None:  # neither depends on the unit
             return self._like.echoes(order)
         if order == min(largest_order(self.data.values.shape[1]), NEAR):
             own = self.alone(1)
