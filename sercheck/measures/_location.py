@@ -8,6 +8,7 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy import special
 
 from sercheck.grid import Panel
 from sercheck.measure import Measurement, Question, Reasons
@@ -133,10 +134,19 @@ def location_with_history(panel: Panel, question: Question, *, raw: bool) -> Mea
 
 
 def _literal(panel: Panel, law: _Law, bound: float) -> Pivot:
-    """The pivot about the author's number."""
+    """The pivot about the author's number, whose score history knows no better than it knows its own quantiles.
+
+    F(1 - F)/(N φ²) is the variance of a score (Bahadur 1966, for independent rows): next to nothing beside that of the
+    window's mean, unless neighbours compensate each other.
+    """
     value = bound / law.unit.scale - law.unit.offset
-    target = value if law.unit.grid is None else np.where(law.plain, value, scored(panel).of(value[:, None])[:, 0])
-    return law.about(target, np.full((len(value), 1), bound))
+    if law.unit.grid is None:
+        return law.about(value, np.full((len(value), 1), bound))
+    score = scored(panel).of(value[:, None])[:, 0]
+    below = special.ndtr(score)
+    error = below * (1 - below) * 2 * np.pi * np.exp(score**2) / np.maximum(past(panel).known, 1)
+    wider = replace(law, scale=np.where(law.plain, law.scale, np.sqrt(law.scale**2 + error)))
+    return wider.about(np.where(law.plain, value, score), np.full((len(value), 1), bound))
 
 
 def _beyond(panel: Panel, law: _Law, bounds: list[float], risk: float) -> Bools:

@@ -48,8 +48,9 @@ from sercheck.measures._past import NO_HISTORY, ask_history, ask_variety, past, 
 from sercheck.measures._witnesses import own_cycles_out
 from sercheck.reference import Pivot
 from sercheck.serial.arrays import Floats, Ints
-from sercheck.serial.autoregression import burg, innovations
+from sercheck.serial.autoregression import burg
 from sercheck.serial.cross_correlation import cross_correlation, robust_cross
+from sercheck.serial.far_lag import with_far_lag
 from sercheck.serial.lag_law import forward
 from sercheck.serial.window_t import window_t, windows
 
@@ -288,6 +289,6 @@ def _whitened(panel: Panel) -> Floats:
     def make() -> Floats:
         told = past(panel)
         values = told.window if told.seasons else own_cycles_out(panel)[0]
-        return innovations(values, burg(values))
+        return with_far_lag(values, burg(values))[1]  # a cycle that evolves echoes beyond the order
 
     return panel.remember("window innovations", make)
