@@ -10,6 +10,8 @@ A literal bound b: ln n_eff of a fitted autoregression, ln n - 2 Σ atanh k_m of
 estimate. Too high: the larger p of z after correction of the estimate's bias and of χ²_B for the cosines.
 
 Fixed cycles (``seasons``) are taken out first where history, or a window without history, holds at least four of them.
+A literal bound takes short memory for granted, and that no cycle evolves: the echo of one is beyond the model's reach,
+and nine windows of ten then look worth more than a true bound of 168 rows (``like: history`` holds its rate).
 
 Unit: observations; it may exceed n where neighbours compensate each other.
 Missing values take no part and are never closed up.
@@ -230,5 +232,5 @@ def _literal(panel: Panel, question: Question) -> Measurement:
         (upper, lower),
         n_eff=observed,
         method="autoregression and first cosines (Burg 1975; Lazarus, Lewis, Stock and Watson 2018)",
-        assumes="short memory" + taken_out(taken),
+        assumes="short memory, no cycle that evolves" + taken_out(taken),
     )

@@ -24,7 +24,8 @@ The sum of Ljung and Box (1978) decides nothing here: under changing variance it
 Variance, ``like: history``: the mean square of the innovations' normal scores (van der Waerden 1952) in history's,
 against a forecast from the last ninety batches, by itself and together with the six before. Where history is shorter,
 ln of it against history's windows, Student's t on m - 1 degrees of freedom. A literal bound is a ratio of the variances
-themselves, ln of which scatters as in history's windows. Smoothing brings the variance down, noise and shuffled rows
+themselves, ln of which scatters as in history's windows; of innovations with heavy tails, or whose variance changes,
+.03 then fail for too much of it at a risk of .01. Smoothing brings the variance down, noise and shuffled rows
 up.
 
 Fields: ``lags`` (10), ``fitted`` (parameters already fitted, for a column of residuals), ``look``.
@@ -333,7 +334,7 @@ def _ratio(panel: Panel, question: Question, *, scored: bool) -> Measurement:
         (upper, lower),
         n_eff=n_eff,
         method="log variance of the innovations against history's windows, Student's t",
-        assumes="stationary history" + without(told),
+        assumes="stationary history" + ("" if scored else ", light tails") + without(told),
     )
 
 
