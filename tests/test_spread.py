@@ -94,3 +94,13 @@ def test_calibrated_against_history(kind, n, past):
     honest, naive = alarms(Spread(), kind, n, past, series=1000, blocks=20)
     print("spread", kind, n, past, honest, naive)
     assert (honest[1:] <= np.array([0.015, 0.0026])).all()
+
+
+def test_a_declared_cycle_that_a_window_cannot_show_leaves_its_spread_undecided():
+    """Two weeks alone do not show a declared week, and its part of the spread would pass for noise."""
+    values = make("two seasons", 3, 20, 336)
+    stays, lengths = Stays("below", high=1.25), {"day": 24, "week": 168}
+    seen = look(Spread(), values, 0, stays, lengths=lengths, tails="light")
+    assert (seen.undecided >= 0).all()
+    assert any("week too few times" in reason for reason in seen.reasons)
+    assert (look(Spread(), values, 0, stays, lengths={"day": 24, "year": 8760}, tails="light").undecided < 0).all()

@@ -264,6 +264,17 @@ def _alone(panel: Panel, question: Question) -> Measurement:
         f"the window's own cycle of {', '.join(taken)} takes part of the spread with it, how much depends on how the "
         "cycle evolves: too small a spread then needs history (below alone can be judged)",
     )
+    lengths = panel.axis.lengths
+    left = [
+        name
+        for name, length in lengths.items()
+        if length <= told.steps and not any(lengths[each] % length == 0 for each in taken)
+    ]
+    reasons.add(
+        bool(left),
+        f"the window holds {', '.join(left)} too few times (fewer than four) to take the cycle out of the spread: "
+        "pass --history, or judge a longer window",
+    )
     rows = np.maximum(told.n, 2)
     models = OwnModels(values) if taken else own_models(panel)
     model, lags = models.alone(1).model, min(200, max(told.steps - 1, 0))
