@@ -112,7 +112,8 @@ def of_changes(replications: int, measures: Collection[str] = (), seed: int = 1)
         low, high = exact_interval(found, judged)
         rows.append({
             "question": change.question, "process": change.process, "asked": change.form, "n": n, "size": change.size,
-            "risk": RISK, "judged": judged, "found": found / max(judged, 1), "low": low, "high": high, "naive": naive,
+            "risk": RISK, "judged": judged, "found": found / max(judged, 1), "low": float(low), "high": float(high),
+            "naive": naive,
             "oracle": change.oracle,
         })  # fmt: skip
         print(f"{change.question}, {change.process}, {change.form}, {change.size}", file=sys.stderr, flush=True)
