@@ -70,6 +70,15 @@ KNOWN: tuple[Weak, ...] = (
         "fail at .05, of the answered .28", (168,),
     ),
     Weak(
+        ("level",), (BESIDE,), ("profile + AR .6, clusters lost",),
+        "a bound is about the hours that came: clusters of lost hours move what their level should be: .13/.05/.02",
+    ),
+    Weak(
+        ("count",), (LIKE,), ("white, clusters lost", "AR .6, clusters lost", "AR .9, clusters lost",
+                              "profile + AR .6, clusters lost"),
+        "hardly a window is answered (2 %): counts of history hardly ever change, and those few are the odd ones",
+    ),
+    Weak(
         ("innovations' variance",), (f"below {BESIDE}",), ("t3", "GARCH, AR .6"),
         "a ratio of variances under heavy tails or changing variance: .033 at .01; scores, by `like: history`, hold",
     ),
