@@ -58,11 +58,11 @@ class Standing:
 
 
 def standings(records: Records) -> list[Standing]:
-    """One standing for each rule, in the order of the records."""
+    """One standing for each rule, in the order of the records; records without a rule stand for none."""
     names = records["rule"]
     if len(records) and names.strides == (0,):
         return [_standing(str(names[0]), records)]
-    return [_standing(rule, records.take(names == rule)) for rule in dict.fromkeys(names.tolist())]
+    return [_standing(rule, records.take(names == rule)) for rule in dict.fromkeys(names.tolist()) if rule is not None]
 
 
 def _standing(rule: str, own: Records) -> Standing:

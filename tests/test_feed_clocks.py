@@ -60,7 +60,7 @@ def grids(monkeypatch) -> list:
         seen.append(grid)
         return measure_block(grid, run)
 
-    monkeypatch.setattr("sercheck.verdict.measure_block", looked)
+    monkeypatch.setattr("sercheck.blocks.measure_block", looked)
     return seen
 
 

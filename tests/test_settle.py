@@ -136,7 +136,7 @@ def test_its_steps_are_marked_for_what_must_not_learn_from_them(feed, monkeypatc
         grids.append(grid)
         return measure_block(grid, run)
 
-    monkeypatch.setattr("sercheck.verdict.measure_block", looked)
+    monkeypatch.setattr("sercheck.blocks.measure_block", looked)
     feed.gate(healthy(1))
     (grid,) = grids
     marked = np.flatnonzero(grid.axis.held)
@@ -184,7 +184,7 @@ def test_a_rule_that_held_rests_its_longer_look_for_seven_batches(feed, monkeypa
         asked.append(run.rests)
         return measure_block(grid, run)
 
-    monkeypatch.setattr("sercheck.verdict.measure_block", looked)
+    monkeypatch.setattr("sercheck.blocks.measure_block", looked)
     for day in range(1, 9):
         feed.gate(healthy(day))
     assert "steps as ever" in asked[0]

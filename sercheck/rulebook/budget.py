@@ -139,7 +139,8 @@ def explain(book: Rulebook) -> list[str]:
         apart = mean_seconds(book.batch_every or "")
         yearly = held * YEAR / apart if apart else 0.0
         said.append(
-            f"A healthy feed then has at most {count:.3g} false hold{'' if count == 1 else 's'} per {per} on average ({yearly:.3g} a year): "
+            f"A healthy feed then has at most {count:.3g} false hold{'' if count == 1 else 's'} per {per} on average "
+            f"({yearly:.3g} a year): "
             "a risk kept exactly still gives false holds when batches are many."
         )
     if any(isinstance(rule.window, int) or rule.window != "batch" for rule in book.rules):
