@@ -1,5 +1,6 @@
 """Settings for all tests: own store, and in continuous integration a skipped test is a failure."""
 
+import gc
 import os
 
 import pytest
@@ -22,3 +23,9 @@ def pytest_sessionfinish(session, exitstatus):
     if os.environ.get("SERCHECK_NO_SKIPS") and skipped and exitstatus == 0:
         reporter.write_line(f"{len(skipped)} tests were skipped although nothing may be missing here", red=True)
         session.exitstatus = pytest.ExitCode.TESTS_FAILED
+
+
+def pytest_collection_finish() -> None:
+    """Thousands of collected tests stay to the end: the garbage collector need not go through them again and again."""
+    gc.collect()
+    gc.freeze()

@@ -95,7 +95,7 @@ def test_holm_leaves_undecided_out():
 def test_series_share_only_among_their_lags():
     """``across: series`` gives every series the whole risk, shared among its lags."""
     rng = np.random.default_rng(4)
-    z = rng.normal(1.2, 1.2, (40, 3))
+    z = rng.normal(1.2, 1.2, (8, 3))
     (told,) = judge(rule_of(across=("series",)), [seen_of(z)])
     expected = [multipletests(t_tail(row, np.inf), 0.05, method="holm")[0] for row in z]
     np.testing.assert_array_equal(told.outcome == FAIL, np.array(expected))
