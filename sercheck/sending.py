@@ -77,7 +77,7 @@ def _sender(address: str, message_id: str) -> Apprise | None:
     if channel is None:
         return None
     if "format=" not in address:
-        channel.notify_format = "text"  # type: ignore[assignment]
+        channel.notify_format = "text"  # type: ignore[assignment]  # the library takes the word for its own constant
     sender = Apprise(asset=asset)
     return sender if sender.add(channel) else None
 

@@ -157,11 +157,11 @@ def run_chart(marks: tuple[Mark, ...], name: str) -> tuple[Drawing, str]:
 def _time_axis(axes: Axes, zone: ZoneInfo) -> None:
     from matplotlib.dates import AutoDateLocator, ConciseDateFormatter
 
-    locator = AutoDateLocator(tz=zone, minticks=2, maxticks=5)  # type: ignore[no-untyped-call]
+    locator = AutoDateLocator(tz=zone, minticks=2, maxticks=5)  # type: ignore[no-untyped-call]  # matplotlib's dates have no types
     axes.xaxis.set_major_locator(locator)
     formats = ["%Y", "%b %Y", "%-d %b", "%H:%M", "%H:%M", "%H:%M:%S"]
     axes.xaxis.set_major_formatter(
-        ConciseDateFormatter(  # type: ignore[no-untyped-call]
+        ConciseDateFormatter(  # type: ignore[no-untyped-call]  # nor have their formatters
             locator, tz=zone, show_offset=False, formats=formats,
             zero_formats=["%Y", "%b %Y", "%-d %b", "%-d %b", "%H:%M", "%H:%M"],
         )

@@ -148,7 +148,7 @@ class SortedParquet:
         bounds = [None, *(self.groups[cut].least for cut in self._cuts[:-1]), None]
         for low, cut, least, before in zip([0, *self._cuts], self._cuts, bounds, bounds[1:], strict=False):
             while low > 0 and self.groups[low - 1].most == least:  # its last rows belong to this block
-                low -= 1  # noqa: PLW2901
+                low -= 1  # noqa: PLW2901  the block begins earlier than its cut
             made.append(KeyRange(tuple(self.groups[low:cut]), self.layout, self.cadence, least, before))
         return made
 

@@ -58,6 +58,18 @@ def blocks(rows: Ints, size: int) -> list[Ints]:
     return [rows[first : first + size] for first in range(0, len(rows), size)]
 
 
+def _reflected(ahead: Floats, behind: Floats, spare: Floats) -> Floats:
+    """One order of the lattice in place: the coefficients; ``ahead`` goes on, ``spare`` becomes what is behind."""
+    power = np.einsum("ij,ij->i", ahead, ahead) + np.einsum("ij,ij->i", behind, behind)
+    k = _ratio(2 * np.einsum("ij,ij->i", ahead, behind), power)
+    step = k[:, None]
+    np.multiply(ahead, step, out=spare)
+    np.subtract(behind, spare, out=spare)
+    behind *= step
+    ahead -= behind
+    return k
+
+
 def _lattice(x: Floats, width: int) -> Floats:
     """Reflection coefficients of complete series."""
     k = np.zeros((len(x), width))
@@ -65,13 +77,7 @@ def _lattice(x: Floats, width: int) -> Floats:
     held = np.empty_like(x)
     for m in range(1, width + 1):
         ahead, behind, spare = f[:, m:], b[:, m - 1 : -1], held[:, m:]
-        power = np.einsum("ij,ij->i", ahead, ahead) + np.einsum("ij,ij->i", behind, behind)
-        k[:, m - 1] = _ratio(2 * np.einsum("ij,ij->i", ahead, behind), power)
-        step = k[:, m - 1 : m]
-        np.multiply(ahead, step, out=spare)
-        np.subtract(behind, spare, out=spare)
-        behind *= step
-        ahead -= behind
+        k[:, m - 1] = _reflected(ahead, behind, spare)
         # b of this order becomes the spare array, shifted by one step as the recursion wants it
         b, held = held, b
     return k
@@ -90,13 +96,7 @@ def _lattice_with_gaps(x: Floats, seen: Bools, width: int) -> tuple[Floats, Floa
         # both are 0 outside their own stretches of m values: the two of m + 1 lack one end each
         ahead *= there[:, : steps - m]
         behind *= there[:, m:]
-        power = np.einsum("ij,ij->i", ahead, ahead) + np.einsum("ij,ij->i", behind, behind)
-        k[:, m - 1] = _ratio(2 * np.einsum("ij,ij->i", ahead, behind), power)
-        step = k[:, m - 1 : m]
-        np.multiply(ahead, step, out=spare)
-        np.subtract(behind, spare, out=spare)
-        behind *= step
-        ahead -= behind
+        k[:, m - 1] = _reflected(ahead, behind, spare)
         b, held = held, b
     return k, weight
 
