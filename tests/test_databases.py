@@ -183,6 +183,25 @@ def test_a_window_is_asked_for_and_loses_nothing(server, monkeypatch, kind):
     assert window("db:w?table=t", layout, cadence, 0, 1) is None
 
 
+@pytest.mark.parametrize("number_first", [True, False])
+def test_a_window_loses_no_stamp_of_another_type(tmp_path, number_first):
+    """A SQLite column may hold numbers beside texts: a window asks for both."""
+    database = sqlite3.connect(tmp_path / "w.db")
+    database.execute("CREATE TABLE t (read_at, cm REAL)")
+    begin = int(pd.Timestamp("2026-01-01", tz="UTC").timestamp())
+    stamps = [begin + 3600 * k for k in range(240)]
+    mixed = [(str(stamp) if k % 3 == 0 else stamp, float(k)) for k, stamp in enumerate(stamps)]
+    mixed.sort(key=lambda row: isinstance(row[0], str) == number_first)
+    database.executemany("INSERT INTO t VALUES (?, ?)", mixed)
+    database.commit()
+    layout = Layout("read_at", (), ("cm",), "1h")
+    cadence = Cadence("1h", "UTC")
+    first, before = (10**9 * (begin + 3600 * k) for k in (100, 150))
+    found = window(sercheck.rows(database, table="t"), layout, cadence, first, before).rows()
+    assert sorted(found.values["cm"].tolist()) == list(range(100, 150))
+    database.close()
+
+
 def test_only_the_needed_columns_are_asked_for(tmp_path, monkeypatch):
     """A column that no rule needs may hold what cannot be read."""
     database = sqlite3.connect(tmp_path / "w.db")

@@ -20,6 +20,8 @@ SLACK = timedelta(days=2)
 """What a window is widened by where stamps have no offset or only a day: more than any two clocks differ (26 hours)."""
 _UNITS = (1, 1_000, 1_000_000, 1_000_000_000)
 """Epoch numbers are seconds, milliseconds, microseconds or nanoseconds."""
+_BEYOND = 2**63 - 1
+"""No stamp is as late; where a column may mix types (SQLite), a text is larger than any number and comes along."""
 _FIRST, _LAST = datetime(1678, 1, 1, tzinfo=UTC), datetime(2262, 1, 1, tzinfo=UTC)
 
 
@@ -70,7 +72,8 @@ class Statement:
             return or_(and_(time >= _bound(texts[0], ""), time < _bound(texts[1], "")), not_(time.like("____-__-__%")))
         if isinstance(example, int | float | Decimal) and not isinstance(example, bool) and not irregular:
             seconds = [int(moment.timestamp()) for moment in wide]
-            return or_(*(and_(time >= seconds[0] * unit, time < seconds[1] * unit) for unit in _UNITS))
+            inside = [and_(time >= seconds[0] * unit, time < seconds[1] * unit) for unit in _UNITS]
+            return or_(*inside, time >= _BEYOND)
         return None
 
 
