@@ -14,8 +14,8 @@ What counts is caught on the later days over what the first part promised, fault
 the rehearsal (fault, size, one series or all) promises its share, and the sum of the later shares of those that were
 promised is divided by the sum of what was promised. 80 % is asked for.
 
-Measured with ``--tries 1 --days 360`` (Seattle: ``--tries 2``, all days; airport: ``--days 250``); false holds of what the budget expects, on
-the first part and on the later one, and what was kept of the promise:
+Measured with ``--tries 1 --days 360`` (Seattle: ``--tries 2``, all days; airport: ``--days 250``); false
+holds of what the budget expects, on the first part and on the later one, and what was kept of the promise:
 
     seattle_temperature   3 of 1.6    6 of 1.4   1.00
     bike_rentals          0 of 1.6    0 of 1.4   0.95
